@@ -1,0 +1,1 @@
+"""What a solve hands out: values, measures, accuracy, files."""

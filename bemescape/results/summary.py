@@ -1,0 +1,103 @@
+"""The machine-readable answer, `summary.json`, as a model with a published JSON schema."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from pydantic import BaseModel, ConfigDict, Field
+
+__all__ = [
+    "Checks",
+    "MadeWith",
+    "RuleOfThumb",
+    "SlowRegion",
+    "Summary",
+    "WindowSummary",
+    "summary_schema",
+]
+
+
+class _Model(BaseModel):
+    model_config = ConfigDict(extra="forbid", frozen=True)
+
+
+class WindowSummary(_Model):
+    """One window and its part of all exits."""
+
+    name: str
+    area_um2: float = Field(gt=0, description="area of the window's panels")
+    share: float = Field(
+        description="part of all exits, start uniform in the volume; outflow * D / V, not normalised"
+    )
+    permeability_um_s: float | None = Field(default=None, description="null: perfectly absorbing")
+
+
+class SlowRegion(_Model):
+    """One connected part of the wall above the chosen level of time."""
+
+    area_um2: float = Field(gt=0)
+    mean_time_s: float = Field(description="area-weighted mean over the region of the time from there")
+    centre_um: tuple[float, float, float] = Field(
+        description="the panel of the region closest to its centroid"
+    )
+    distance_to_window_um: float = Field(
+        description="shortest path along the wall from the centre to a window"
+    )
+    nearest_window: str
+
+
+class RuleOfThumb(_Model):
+    """A textbook estimate beside the computed value."""
+
+    formula: str
+    mean_time_s: float
+
+
+class Checks(_Model):
+    """What the result proves of itself."""
+
+    balance: float = Field(description="outflow through all windows * D / V - 1")
+    crosscheck: dict[str, Any] | None = Field(
+        default=None, description="second opinion, where one was asked for"
+    )
+
+
+class MadeWith(_Model):
+    """What is needed to repeat the run."""
+
+    version: str
+    mesh_sha256: str
+    settings: dict[str, Any]
+
+
+class Summary(_Model):
+    """The answer of one solve; times in s, lengths in µm."""
+
+    name: str
+    mean_time_s: float = Field(description="mean escape time, start uniform in the volume")
+    relative_error: float = Field(description="estimated numerical error of mean_time_s, relative")
+    target_met: bool = Field(description="false where the panel budget ended the refinement above the target")
+    diffusion_um2_s: float
+    volume_um3: float
+    area_um2: float
+    windows: list[WindowSummary]
+    escape_time_sd_s: float | None = Field(default=None, description="standard deviation of the escape time")
+    start: dict[str, float] = Field(
+        default_factory=dict, description="name of a start point -> mean time from it, s"
+    )
+    slowest_time_s: float = Field(description="largest mean time from any place on the wall")
+    slow_regions: list[SlowRegion]
+    rule_of_thumb: RuleOfThumb
+    panels: int
+    iterations: int
+    wall_s: float = Field(description="duration of the run")
+    checks: Checks
+    notes: list[str] = Field(
+        default_factory=list, description="what a reader should know: healing, budget, units"
+    )
+    made_with: MadeWith
+
+
+def summary_schema() -> dict[str, Any]:
+    """JSON schema (draft 2020-12) of `summary.json`."""
+    return Summary.model_json_schema()

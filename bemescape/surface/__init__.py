@@ -1,0 +1,1 @@
+"""Reading, checking and healing closed surfaces."""

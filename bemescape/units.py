@@ -1,0 +1,172 @@
+"""Quantities with units: parsing what a person types and printing what a person reads.
+
+Inside the package everything is a plain float in µm, s, µm²/s and µm/s. A plain number given by a caller is
+taken to be in these units already.
+"""
+
+from __future__ import annotations
+
+import math
+from functools import lru_cache
+from typing import Any
+
+import pint
+
+from bemescape.errors import SettingsError
+
+__all__ = [
+    "Quantity",
+    "diffusion_um2_s",
+    "format_length",
+    "format_time",
+    "fraction",
+    "length_um",
+    "permeability_um_s",
+    "quantity",
+    "time_scale",
+    "unit_scale_um",
+]
+
+#: Anything that these functions accept as a quantity.
+Quantity = pint.Quantity[Any] | str | float
+
+
+@lru_cache(maxsize=1)
+def _registry() -> pint.UnitRegistry[Any]:
+    return pint.UnitRegistry(cache_folder=None)
+
+
+def quantity(value: float, unit: str) -> pint.Quantity[Any]:
+    """`value` in `unit` as a pint quantity.
+
+    >>> print(quantity(2.5, "s").to("ms"))
+    2500.0 millisecond
+    """
+    return _registry().Quantity(value, unit)
+
+
+def _magnitude(value: Quantity, unit: str, what: str, example: str) -> float:
+    if isinstance(value, bool):
+        raise SettingsError(f"{what} is {value}, not a quantity; write it like {example!r}")
+    if isinstance(value, int | float):
+        return float(value)
+    try:
+        parsed = _registry().Quantity(value) if isinstance(value, str) else _registry().Quantity(str(value))
+        # Text without a unit parses to a dimensionless quantity: refused, since its unit would be a guess.
+        return float(parsed.to(unit).magnitude)
+    except (pint.PintError, ValueError, TypeError, AttributeError, SyntaxError, ArithmeticError) as error:
+        raise SettingsError(
+            f"{what} {str(value)[:60]!r} is not a quantity in {unit}; write it like {example!r}"
+        ) from error
+    except Exception as error:
+        raise SettingsError(
+            f"{what} {str(value)[:60]!r} cannot be read; write it like {example!r}"
+        ) from error
+
+
+def _positive(number: float, what: str, unit: str) -> float:
+    if not (math.isfinite(number) and number > 0.0):
+        raise SettingsError(f"{what} is {number:g} {unit}; it must be a finite number above 0")
+    return number
+
+
+def length_um(value: Quantity, what: str = "length") -> float:
+    """Length in µm, above 0.
+
+    >>> length_um("60 nm")
+    0.06
+    """
+    number = _magnitude(value, "um", what, "60 nm")
+    return _positive(float(f"{number:.15g}"), what, "µm")
+
+
+def diffusion_um2_s(value: Quantity) -> float:
+    """Diffusion coefficient in µm²/s, above 0.
+
+    >>> diffusion_um2_s("2e-7 cm^2/s")
+    20.0
+    """
+    number = _magnitude(value, "um^2/s", "diffusion coefficient", "20 um^2/s")
+    return _positive(float(f"{number:.15g}"), "diffusion coefficient", "µm²/s")
+
+
+def permeability_um_s(value: Quantity | None) -> float:
+    """Permeability in µm/s, above 0; infinite (perfectly absorbing) for None, "inf" or infinity.
+
+    >>> permeability_um_s("1 mm/s"), permeability_um_s(None)
+    (1000.0, inf)
+    """
+    if value is None or (isinstance(value, str) and value.strip().lower() in {"inf", "infinite"}):
+        return math.inf
+    if isinstance(value, float) and value == math.inf:
+        return math.inf
+    number = _magnitude(value, "um/s", "permeability", "10 um/s")
+    return _positive(float(f"{number:.15g}"), "permeability", "µm/s")
+
+
+def fraction(value: Quantity, what: str = "fraction") -> float:
+    """A dimensionless number between 0 and 1, such as "0.5 %" or 0.005.
+
+    >>> fraction("0.5 %")
+    0.005
+    """
+    if isinstance(value, str) and value.strip().endswith("%"):
+        try:
+            number = float(value.strip()[:-1]) / 100.0
+        except ValueError as error:
+            raise SettingsError(
+                f"{what} {value[:60]!r} is not a percentage; write it like '0.5 %'"
+            ) from error
+    else:
+        number = _magnitude(value, "", what, "0.5 %")
+    if not 0.0 < number < 1.0:
+        raise SettingsError(f"{what} is {number:g}; it must lie between 0 and 1 (0 % and 100 %)")
+    return number
+
+
+def unit_scale_um(unit: Quantity) -> float:
+    """µm per unit of a file, from a name ("nm") or a length ("4 nm", for voxel units).
+
+    >>> unit_scale_um("nm"), unit_scale_um("4 nm")
+    (0.001, 0.004)
+    """
+    if isinstance(unit, int | float):
+        return length_um(unit, "unit of the file")
+    return length_um(unit, "unit of the file")
+
+
+_TIME_UNITS = ((1.0, "s"), (1e-3, "ms"), (1e-6, "µs"), (1e-9, "ns"))
+
+
+def time_scale(seconds: float) -> tuple[float, str]:
+    """Factor and name of the unit in which a time of this size reads best.
+
+    >>> time_scale(0.012)
+    (0.001, 'ms')
+    """
+    size = abs(seconds)
+    for factor, name in _TIME_UNITS:
+        if size >= factor:
+            return factor, name
+    return _TIME_UNITS[-1] if size > 0.0 else _TIME_UNITS[0]
+
+
+def format_time(seconds: float, digits: int = 4) -> str:
+    """A time as text in s, ms, µs or ns.
+
+    >>> format_time(0.01234567)
+    '12.35 ms'
+    """
+    factor, name = time_scale(seconds)
+    return f"{seconds / factor:.{digits}g} {name}"
+
+
+def format_length(micrometres: float, digits: int = 3) -> str:
+    """A length as text in µm or nm.
+
+    >>> format_length(0.06)
+    '60 nm'
+    """
+    if 0.0 < abs(micrometres) < 1.0:
+        return f"{micrometres * 1e3:.{digits}g} nm"
+    return f"{micrometres:.{digits}g} µm"

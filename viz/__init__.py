@@ -1,0 +1,1 @@
+"""Pictures of a result: scenes, the desktop window and the report."""
