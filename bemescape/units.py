@@ -7,9 +7,12 @@ taken to be in these units already.
 from __future__ import annotations
 
 import math
+import numbers
+import re
 from functools import lru_cache
 from typing import Any
 
+import numpy as np
 import pint
 
 from bemescape.errors import SettingsError
@@ -45,23 +48,54 @@ def quantity(value: float, unit: str) -> pint.Quantity[Any]:
     return _registry().Quantity(value, unit)
 
 
-def _magnitude(value: Quantity, unit: str, what: str, example: str) -> float:
-    if isinstance(value, bool):
+# What a person may type: at most one number, then a product of units with small whole exponents. Anything
+# else is refused before pint sees it: pint would read "1,5 nm" as 15 nm and "1 2 nm" as 2 nm, and would work
+# on "9**9**9 nm" for ever.
+_LONGEST_TEXT = 60
+_NUMBER = r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?"
+_FACTOR = r"[A-Za-zµμÅ_]+(?:(?:\^|\*\*)?-?\d{1,2}|⁻?[¹²³⁴-⁹])?"
+_TEXT = re.compile(
+    rf"(?P<number>{_NUMBER})?\s*(?P<unit>{_FACTOR}(?:\s*[*/·]\s*{_FACTOR}|\s+{_FACTOR})*)?", re.ASCII
+)
+_BARE_EXPONENT = re.compile(r"(?<=[A-Za-zµμÅ])(?=-?\d)")
+
+
+def _parsed(text: str, *, bare_unit: bool) -> pint.Quantity[Any]:
+    """Text as a quantity; ValueError where it does not follow the grammar above."""
+    text = text.strip()
+    match = _TEXT.fullmatch(text) if len(text) <= _LONGEST_TEXT else None
+    if match is None or (match["number"] is None and not bare_unit):
+        raise ValueError(text)
+    unit = _BARE_EXPONENT.sub("^", match["unit"] or "").replace("·", "*")
+    return quantity(float(match["number"] or 1.0), unit)
+
+
+def _magnitude(value: object, unit: str, what: str, example: str, *, bare_unit: bool = False) -> float:
+    if isinstance(value, bool | np.bool_):
         raise SettingsError(f"{what} is {value}, not a quantity; write it like {example!r}")
-    if isinstance(value, int | float):
-        return float(value)
     try:
-        parsed = _registry().Quantity(value) if isinstance(value, str) else _registry().Quantity(str(value))
-        # Text without a unit parses to a dimensionless quantity: refused, since its unit would be a guess.
-        return float(parsed.to(unit).magnitude)
-    except (pint.PintError, ValueError, TypeError, AttributeError, SyntaxError, ArithmeticError) as error:
+        if isinstance(value, numbers.Real):
+            return float(value)
+        if isinstance(value, str):
+            parsed = _parsed(value, bare_unit=bare_unit)
+        elif isinstance(value, pint.Quantity):
+            # Rebuilt, since a quantity of another registry cannot be converted by this one.
+            parsed = quantity(float(value.magnitude), f"{value.units:D}")
+        else:
+            raise TypeError(type(value).__name__)
+        # A quantity without a unit is dimensionless and refused here: its unit would be a guess.
+        # Fifteen digits: 60 nm is 0.06 µm, not 0.060000000000000005.
+        return float(f"{float(parsed.to(unit).magnitude):.15g}")
+    except (pint.PintError, ValueError, TypeError, AttributeError, ArithmeticError) as error:
+        kind = f"quantity in {unit}" if unit else "plain number or percentage"
         raise SettingsError(
-            f"{what} {str(value)[:60]!r} is not a quantity in {unit}; write it like {example!r}"
+            f"{what} {_shortened(value)} is not a {kind}; write it like {example!r}"
         ) from error
-    except Exception as error:
-        raise SettingsError(
-            f"{what} {str(value)[:60]!r} cannot be read; write it like {example!r}"
-        ) from error
+
+
+def _shortened(value: object) -> str:
+    text = repr(value)
+    return text if len(text) <= _LONGEST_TEXT else f"{text[:40]}..."
 
 
 def _positive(number: float, what: str, unit: str) -> float:
@@ -77,7 +111,7 @@ def length_um(value: Quantity, what: str = "length") -> float:
     0.06
     """
     number = _magnitude(value, "um", what, "60 nm")
-    return _positive(float(f"{number:.15g}"), what, "µm")
+    return _positive(number, what, "µm")
 
 
 def diffusion_um2_s(value: Quantity) -> float:
@@ -87,7 +121,7 @@ def diffusion_um2_s(value: Quantity) -> float:
     20.0
     """
     number = _magnitude(value, "um^2/s", "diffusion coefficient", "20 um^2/s")
-    return _positive(float(f"{number:.15g}"), "diffusion coefficient", "µm²/s")
+    return _positive(number, "diffusion coefficient", "µm²/s")
 
 
 def permeability_um_s(value: Quantity | None) -> float:
@@ -101,7 +135,7 @@ def permeability_um_s(value: Quantity | None) -> float:
     if isinstance(value, float) and value == math.inf:
         return math.inf
     number = _magnitude(value, "um/s", "permeability", "10 um/s")
-    return _positive(float(f"{number:.15g}"), "permeability", "µm/s")
+    return _positive(number, "permeability", "µm/s")
 
 
 def fraction(value: Quantity, what: str = "fraction") -> float:
@@ -110,15 +144,9 @@ def fraction(value: Quantity, what: str = "fraction") -> float:
     >>> fraction("0.5 %")
     0.005
     """
-    if isinstance(value, str) and value.strip().endswith("%"):
-        try:
-            number = float(value.strip()[:-1]) / 100.0
-        except ValueError as error:
-            raise SettingsError(
-                f"{what} {value[:60]!r} is not a percentage; write it like '0.5 %'"
-            ) from error
-    else:
-        number = _magnitude(value, "", what, "0.5 %")
+    if isinstance(value, str) and value.rstrip().endswith("%"):
+        value = f"{value.rstrip()[:-1].rstrip()} percent"
+    number = _magnitude(value, "", what, "0.5 %")
     if not 0.0 < number < 1.0:
         raise SettingsError(f"{what} is {number:g}; it must lie between 0 and 1 (0 % and 100 %)")
     return number
@@ -130,9 +158,8 @@ def unit_scale_um(unit: Quantity) -> float:
     >>> unit_scale_um("nm"), unit_scale_um("4 nm")
     (0.001, 0.004)
     """
-    if isinstance(unit, int | float):
-        return length_um(unit, "unit of the file")
-    return length_um(unit, "unit of the file")
+    number = _magnitude(unit, "um", "unit of the file", "nm", bare_unit=True)
+    return _positive(number, "unit of the file", "µm")
 
 
 _TIME_UNITS = ((1.0, "s"), (1e-3, "ms"), (1e-6, "µs"), (1e-9, "ns"))
