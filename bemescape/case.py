@@ -1,0 +1,546 @@
+"""The case file: one surface, its windows and the motion inside, as TOML.
+
+The file is checked as a whole before anything is computed. Each refusal names the file, the place in it, the
+value and the remedy; an unknown key names the nearest known one.
+"""
+
+from __future__ import annotations
+
+import difflib
+import math
+import tomllib
+from collections import Counter
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any, Literal, Self, get_args
+
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    ValidationError,
+    WithJsonSchema,
+    model_validator,
+)
+
+from bemescape.errors import SettingsError
+from bemescape.progress import Progress, silent
+from bemescape.units import diffusion_um2_s, fraction, length_um, permeability_um_s, unit_scale_um
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+
+    from bemescape.results.result import EscapeResult
+    from bemescape.surface.surface import Surface
+    from bemescape.windows.window import Window
+
+__all__ = ["Case", "CaseDocument", "case_schema", "parse_case", "read_case"]
+
+#: A case file is a page of text; what is larger is another kind of file, or an attack on the reader.
+LARGEST_CASE_BYTES = 256 * 1024
+LONGEST_NAME = 60
+#: Reading a dotted key takes memory as the square of its parts; a real line has a few dots, most in numbers.
+MOST_DOTS_IN_A_LINE = 200
+
+
+def _text_with_unit(parse: Callable[[Any], float]) -> BeforeValidator:
+    def check(value: Any) -> float:
+        if isinstance(value, int | float) and not isinstance(value, bool) and value != math.inf:
+            raise SettingsError(f"is the plain number {value:g}; give it with its unit, in quotes")
+        return parse(value)
+
+    return BeforeValidator(check)
+
+
+def _checked_unit(value: Any) -> str | tuple[str, ...]:
+    parts = value if isinstance(value, list | tuple) else (value,)
+    if len(parts) not in (1, 3) or not all(isinstance(part, str) for part in parts):
+        raise SettingsError(f'is {_shortened(value)}; write "nm", "4 nm" or ["4 nm", "4 nm", "40 nm"]')
+    for part in parts:
+        unit_scale_um(part)
+    return value if isinstance(value, str) else tuple(parts)
+
+
+def _checked_name(value: str) -> str:
+    if not value.strip() or len(value) > LONGEST_NAME or not value.isprintable():
+        raise SettingsError(
+            f"is {_shortened(value)}; a name has 1 to {LONGEST_NAME} printable characters, like 'neck'"
+        )
+    return value
+
+
+def _checked_file(value: str) -> str:
+    if not value.strip() or not value.isprintable():
+        raise SettingsError(f"is {_shortened(value)}; give the path of a mesh file, like 'bouton.ply'")
+    return value
+
+
+def _quantity_schema(example: str) -> WithJsonSchema:
+    return WithJsonSchema({"type": "string", "description": "number with unit", "examples": [example]})
+
+
+_Number = Annotated[float, Field(strict=True, allow_inf_nan=False)]
+_Position = Annotated[tuple[_Number, _Number, _Number], Field(examples=[[100.0, 0.0, -620.0]])]
+_Name = Annotated[str, Field(strict=True, examples=["neck"]), AfterValidator(_checked_name)]
+_FileName = Annotated[str, Field(strict=True, examples=["bouton.ply"]), AfterValidator(_checked_file)]
+_Unit = Annotated[
+    str | tuple[str, ...],
+    BeforeValidator(_checked_unit),
+    WithJsonSchema(
+        {
+            "oneOf": [
+                {"type": "string"},
+                {"type": "array", "items": {"type": "string"}, "minItems": 3, "maxItems": 3},
+            ],
+            "description": "length of one unit of the mesh file, or of its three axes",
+            "examples": ["nm", ["4 nm", "4 nm", "40 nm"]],
+        }
+    ),
+]
+_Diffusion = Annotated[float, _text_with_unit(diffusion_um2_s), _quantity_schema("20 um^2/s")]
+_Radius = Annotated[float, _text_with_unit(lambda v: length_um(v, "radius")), _quantity_schema("60 nm")]
+_Permeability = Annotated[float, _text_with_unit(permeability_um_s), _quantity_schema("10 um/s")]
+_Target = Annotated[
+    float,
+    BeforeValidator(lambda value: fraction(value, "target")),
+    WithJsonSchema({"type": ["string", "number"], "examples": ["0.5 %", 0.005], "default": "0.5 %"}),
+]
+
+
+class _Section(BaseModel):
+    model_config = ConfigDict(extra="forbid", frozen=True)
+
+
+class SurfaceSection(_Section):
+    """The mesh file; its path is relative to the case file."""
+
+    file: _FileName
+    unit: _Unit = Field(examples=["nm"])
+    heal: Literal["none", "auto", "rebuild"] = Field(default="auto", examples=["auto"])
+
+
+class MotionSection(_Section):
+    """How the molecule moves."""
+
+    diffusion_um2_s: _Diffusion = Field(alias="diffusion", examples=["20 um^2/s"])
+
+
+class DiscSection(_Section):
+    """The wall within a straight-line distance of a point."""
+
+    centre: _Position = Field(description="in units of the mesh file", examples=[[100.0, 0.0, -620.0]])
+    radius_um: _Radius = Field(alias="radius", examples=["60 nm"])
+
+
+class LabelsSection(_Section):
+    """The faces with one value in an array of the mesh file."""
+
+    array: str = Field(strict=True, min_length=1, examples=["label"])
+    value: _Number = Field(examples=[1])
+
+
+class WindowSection(_Section):
+    """One opening: a name, one kind, and a permeability where it is not perfectly absorbing."""
+
+    name: _Name
+    disc: DiscSection | None = None
+    labels: LabelsSection | None = None
+    permeability_um_s: _Permeability = Field(default=math.inf, alias="permeability", examples=["10 um/s"])
+
+    @model_validator(mode="after")
+    def _has_one_kind(self) -> Self:
+        given = [kind for kind in WINDOW_KINDS if getattr(self, kind) is not None]
+        if len(given) != 1:
+            raise SettingsError(
+                f"has {' and '.join(given) if given else 'no kind'}; "
+                f"a window has exactly one of {' or '.join(WINDOW_KINDS)}"
+            )
+        return self
+
+
+#: Keys of a `[[window]]` that say which part of the wall it takes.
+WINDOW_KINDS = ("disc", "labels")
+
+
+class AccuracySection(_Section):
+    """How good the answer must be, and how much it may cost."""
+
+    target: _Target = Field(default=0.005, examples=["0.5 %"])
+    max_panels: int | None = Field(default=None, strict=True, ge=100, le=10_000_000, examples=[60000])
+
+
+class StartSection(_Section):
+    """Places from which the time is wanted beside the mean."""
+
+    points: dict[_Name, _Position] = Field(default_factory=dict, description="in units of the mesh file")
+
+
+class CaseDocument(_Section):
+    """The content of a case file."""
+
+    surface: SurfaceSection
+    motion: MotionSection
+    window: tuple[WindowSection, ...]
+    accuracy: AccuracySection = AccuracySection()
+    start: StartSection = StartSection()
+
+    @model_validator(mode="after")
+    def _windows_are_distinct(self) -> Self:
+        if not self.window:
+            raise SettingsError("has no [[window]]; nothing can leave, so add at least one")
+        name, count = Counter(window.name for window in self.window).most_common(1)[0]
+        if count > 1:
+            raise SettingsError(f"has {count} windows named {name!r}; give each its own name")
+        return self
+
+
+def case_schema() -> dict[str, Any]:
+    """JSON schema (draft 2020-12) of a case file, for editors that check TOML."""
+    return CaseDocument.model_json_schema()
+
+
+@dataclass(frozen=True)
+class Case:
+    """A checked case.
+
+    Attributes
+    ----------
+    name : str
+        The file's name without its ending.
+    folder : Path
+        What the mesh file's path is relative to.
+    document : CaseDocument
+        What the file says, quantities in µm, s, µm²/s and µm/s; positions still in units of the mesh file.
+    """
+
+    name: str
+    folder: Path
+    document: CaseDocument
+
+    @property
+    def surface_path(self) -> Path:
+        """The mesh file."""
+        return self.folder / self.document.surface.file
+
+    def with_accuracy(self, *, target: float | None = None, max_panels: int | None = None) -> Case:
+        """The same case with another target (relative error) or panel budget; None keeps the file's.
+
+        Raises
+        ------
+        SettingsError
+            The target does not lie between 0 and 1, or the budget between 100 and ten million panels.
+        """
+        changes = {
+            key: value for key, value in (("target", target), ("max_panels", max_panels)) if value is not None
+        }
+        before = self.document.accuracy.model_dump()
+        try:
+            accuracy = AccuracySection.model_validate(before | changes)
+        except ValidationError as error:
+            raise SettingsError(_sentence(error, {"accuracy": changes}, root=("accuracy",))) from error
+        return replace(self, document=self.document.model_copy(update={"accuracy": accuracy}))
+
+    def load_surface(self, progress: Progress = silent) -> Surface:
+        """Read, check and heal the mesh file.
+
+        Raises
+        ------
+        SettingsError
+            The mesh file does not exist.
+        SurfaceError
+            It cannot be read, or cannot be healed into a closed surface.
+        """
+        section = self.document.surface
+        if not self.surface_path.is_file():
+            raise SettingsError(
+                f"case {self.name!r}: [surface] file is {section.file!r}, but there is no file "
+                f"{self.surface_path}; the path is relative to the case file"
+            )
+        from bemescape.surface import read_surface
+
+        return read_surface(self.surface_path, unit=section.unit, heal=section.heal, progress=progress)
+
+    def windows_for(self, surface: Surface) -> tuple[Window, ...]:
+        """The windows with positions in µm, by the surface's units."""
+        from bemescape.windows.window import Disc, Labels, Window
+
+        windows = []
+        for section in self.document.window:
+            shape: Disc | Labels
+            if section.disc is not None:
+                shape = Disc(_scaled(section.disc.centre, surface), section.disc.radius_um)
+            elif section.labels is not None:
+                shape = Labels(section.labels.array, section.labels.value)
+            else:
+                raise SettingsError(f"window {section.name!r} has no kind")
+            windows.append(Window(section.name, shape, section.permeability_um_s))
+        return tuple(windows)
+
+    def start_um(self, surface: Surface) -> dict[str, tuple[float, float, float]]:
+        """The named start points, (3,) in µm."""
+        return {name: _scaled(point, surface) for name, point in self.document.start.points.items()}
+
+    def solve(self, progress: Progress = silent) -> EscapeResult:
+        """Load the surface and solve.
+
+        Raises
+        ------
+        EscapeError
+            As `load_surface` and `bemescape.escape.solve_escape`.
+        """
+        from bemescape.escape import SolverSettings, solve_escape
+
+        surface = self.load_surface(progress)
+        accuracy = self.document.accuracy
+        settings = SolverSettings()
+        if accuracy.max_panels is not None:
+            settings = replace(settings, max_panels=accuracy.max_panels)
+        return solve_escape(
+            surface,
+            self.windows_for(surface),
+            self.document.motion.diffusion_um2_s,
+            target=accuracy.target,
+            start=self.start_um(surface) or None,
+            name=self.name,
+            settings=settings,
+            progress=progress,
+        )
+
+
+def _scaled(position: Sequence[float], surface: Surface) -> tuple[float, float, float]:
+    x, y, z = (float(value * scale) for value, scale in zip(position, surface.unit_um, strict=True))
+    return x, y, z
+
+
+def read_case(path: str | Path) -> Case:
+    """Read and check a case file.
+
+    Raises
+    ------
+    SettingsError
+        There is no such file, it is not TOML, or a line of it is wrong; the message names the place.
+    """
+    path = Path(path)
+    try:
+        if path.is_dir():
+            raise SettingsError(f"{path} is a folder; give the case file in it")
+        if not path.is_file():
+            raise SettingsError(f"there is no case file {_shown(path)}; check the path")
+        with path.open("rb") as stream:
+            content = stream.read(LARGEST_CASE_BYTES + 1)
+    except (OSError, ValueError) as error:
+        if isinstance(error, SettingsError):
+            raise
+        reason = getattr(error, "strerror", None) or str(error)
+        raise SettingsError(f"case file {_shown(path)} cannot be read: {reason}") from error
+    if len(content) > LARGEST_CASE_BYTES:
+        raise SettingsError(
+            f"{path} is larger than {LARGEST_CASE_BYTES // 1024} kB, so it is no case file; "
+            "give the TOML file that names the mesh"
+        )
+    try:
+        text = content.decode("utf-8-sig")
+    except UnicodeDecodeError as error:
+        raise SettingsError(
+            f"{path} is not a text file (byte {error.start} is not UTF-8); "
+            "give the TOML file that names the mesh"
+        ) from error
+    for number, line in enumerate(text.splitlines(), start=1):
+        if line.count(".") > MOST_DOTS_IN_A_LINE and not line.lstrip().startswith("#"):
+            raise SettingsError(
+                f"{path} line {number} has {line.count('.')} dots (limit {MOST_DOTS_IN_A_LINE}); "
+                "write one entry per line"
+            )
+    try:
+        table = tomllib.loads(text)
+    except RecursionError as error:
+        raise SettingsError(f"{path}: the values are nested too deeply to be a case") from error
+    except tomllib.TOMLDecodeError as error:
+        raise SettingsError(f"{path} is not valid TOML: {' '.join(str(error).split())[:200]}") from error
+    except ValueError as error:
+        # Python itself refuses whole numbers of thousands of digits.
+        raise SettingsError(f"{path} holds a number with too many digits to read; shorten it") from error
+    return parse_case(table, folder=path.parent, name=path.stem, source=str(path))
+
+
+def _shown(path: Path) -> str:
+    text = str(path)
+    return text if text.isprintable() and len(text) <= 300 else f"{text[:100]!r}..."
+
+
+def parse_case(table: Mapping[str, Any], *, folder: str | Path, name: str, source: str | None = None) -> Case:
+    """Check the content of a case file that is already parsed.
+
+    Parameters
+    ----------
+    table : mapping
+        The tables of the file, as `tomllib` gives them.
+    folder : path
+        What the mesh file's path is relative to.
+    name : str
+        Name of the case.
+    source : str, optional
+        What to call the file in a message; by default the name.
+
+    Raises
+    ------
+    SettingsError
+        An entry is wrong, missing or unknown; the message names its place and the remedy.
+    """
+    try:
+        document = CaseDocument.model_validate(dict(table))
+    except ValidationError as error:
+        raise SettingsError(f"{source or name}: {_sentence(error, table)}") from error
+    except RecursionError as error:
+        raise SettingsError(f"{source or name}: the values are nested too deeply to be a case") from error
+    return Case(name, Path(folder), document)
+
+
+# From pydantic's list of errors to one sentence. The first error decides: an unknown key before all others,
+# since a misspelt key is also a missing one.
+
+
+def _sentence(error: ValidationError, table: Mapping[str, Any], root: tuple[str, ...] = ()) -> str:
+    items = error.errors(include_url=False)
+    first = min(items, key=lambda item: item["type"] != "extra_forbidden")
+    location = root + first["loc"]
+    if location and location[-1] == "[key]":
+        location = (*location[:-2], "name")
+    if first["type"] in {"missing", "too_long"} and location and isinstance(location[-1], int):
+        location = location[:-1]
+    more = f" ({len(items) - 1} more error{'s' * (len(items) > 2)})" if len(items) > 1 else ""
+    return f"{_place(location, table)}{_complaint(first, location)}{more}"
+
+
+def _complaint(item: Any, location: tuple[int | str, ...]) -> str:
+    kind, value = item["type"], item["input"]
+    example = _example(location)
+    if kind == "extra_forbidden":
+        return _unknown(location)
+    if kind == "value_error":
+        key = next((str(part) for part in reversed(location) if isinstance(part, str)), "")
+        message = str(item["ctx"]["error"]).removeprefix(f"{key} ")
+        joint = " " if message.startswith(("is ", "has ", "'")) else ": "
+        return f"{joint}{message}"
+    if kind in {"tuple_type", "list_type"} and location == ("window",):
+        return f" is {_shortened(value)}; each window is a table of its own, headed by [[window]]"
+    if kind in {"tuple_type", "too_long"} or (kind == "missing" and isinstance(value, list | tuple)):
+        return f" is {_shortened(value)}; it should be a list of three numbers, like [100.0, 0.0, -620.0]"
+    if kind == "missing":
+        return f" is missing; {example or 'add it'}"
+    if kind in {"model_type", "dict_type"}:
+        return f" is {_shortened(value)}; it should be a table; {example}"
+    wanted = item["msg"].replace("Input should", "it should")
+    return f" is {_shortened(value)}; {wanted[0].lower()}{wanted[1:]}" + (f"; {example}" if example else "")
+
+
+def _place(location: tuple[int | str, ...], table: Mapping[str, Any]) -> str:
+    """Where in the file: `[motion] diffusion`, `[[window]] 'neck' disc.radius`."""
+    if not location:
+        return "the case"
+    head, rest = str(location[0]), location[1:]
+    if head == "window":
+        if not rest:
+            return "[[window]]"
+        number, *keys = rest
+        entry: Any = None
+        windows = table.get("window")
+        if isinstance(windows, list | tuple) and isinstance(number, int) and number < len(windows):
+            entry = windows[number]
+        name = entry.get("name") if isinstance(entry, Mapping) else None
+        known = isinstance(name, str) and 0 < len(name) <= LONGEST_NAME and name.isprintable()
+        label = repr(name) if known else f"number {number + 1}" if isinstance(number, int) else str(number)
+        return " ".join(["[[window]]", label, _dotted(keys)]).rstrip()
+    if not rest:
+        # A misplaced plain key at the top reads as what it is, a table's name in brackets.
+        value = table.get(head)
+        return (
+            _shortened_key(head)
+            if head in table and not isinstance(value, Mapping)
+            else f"[{_shortened_key(head)}]"
+        )
+    return f"[{_shortened_key(head)}] {_dotted(rest)}"
+
+
+def _dotted(keys: Sequence[int | str]) -> str:
+    text = ""
+    for key in keys:
+        text += f"[{key}]" if isinstance(key, int) else f".{_shortened_key(key)}"
+    return text.removeprefix(".")
+
+
+def _unknown(location: tuple[int | str, ...]) -> str:
+    key, known = str(location[-1]), list(_known_keys(location[:-1]))
+    near = difflib.get_close_matches(key[:LONGEST_NAME], known, n=1, cutoff=0.6)
+    if near:
+        return f" is not known; did you mean {near[0]!r}?"
+    homes = [name for name in _fields_of(CaseDocument) if key in _known_keys((name,))]
+    if homes:
+        return f" is not known here; it belongs in {' or '.join(_brackets(name) for name in homes)}"
+    return f" is not known; known here: {', '.join(known)}"
+
+
+def _fields_of(model: type[BaseModel]) -> dict[str, Any]:
+    return {field.alias or name: field for name, field in model.model_fields.items()}
+
+
+def _field_at(location: Sequence[int | str]) -> tuple[Any, type[BaseModel] | None]:
+    """The field at a place of the case file and the model of its content, as far as there are any."""
+    field: Any = None
+    model: type[BaseModel] | None = CaseDocument
+    for key in location:
+        if isinstance(key, int):
+            continue
+        field = _fields_of(model).get(key) if model is not None else None
+        model = _model_in(field.annotation) if field is not None else None
+    return field, model
+
+
+def _model_in(annotation: Any) -> type[BaseModel] | None:
+    if isinstance(annotation, type) and issubclass(annotation, BaseModel):
+        return annotation
+    return next((model for part in get_args(annotation) if (model := _model_in(part)) is not None), None)
+
+
+def _known_keys(location: Sequence[int | str]) -> Sequence[str]:
+    _, model = _field_at(location)
+    return list(_fields_of(model)) if model is not None else []
+
+
+def _example(location: tuple[int | str, ...]) -> str:
+    field, model = _field_at(location)
+    if field is None:
+        return ""
+    key = str(next(part for part in reversed(location) if isinstance(part, str)))
+    if field.examples:
+        example = field.examples[0]
+        return f"write {key} = {_toml(example)}"
+    if model is not None:
+        return f"{_brackets(key)} takes {', '.join(_fields_of(model))}"
+    return ""
+
+
+def _brackets(key: str) -> str:
+    return "[[window]]" if key == "window" else f"[{key}]"
+
+
+def _toml(value: Any) -> str:
+    return f'"{value}"' if isinstance(value, str) else str(value)
+
+
+def _shortened(value: Any) -> str:
+    if isinstance(value, Mapping):
+        return "a table"
+    if isinstance(value, list | tuple) and len(value) > 6:
+        return f"a list of {len(value)}"
+    if isinstance(value, int) and not isinstance(value, bool) and abs(value) >= 10**18:
+        return "a number of more than 18 digits"
+    text = repr(value)
+    return text if len(text) <= LONGEST_NAME else f"{text[:40]}..."
+
+
+def _shortened_key(key: str) -> str:
+    return key if len(key) <= LONGEST_NAME and key.isprintable() else f"{key[:40]!r}..."
