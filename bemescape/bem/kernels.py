@@ -1,0 +1,107 @@
+"""Closed-form integrals over one flat triangle: scalars in, scalars out, nothing checked.
+
+Corners are given relative to the target, in µm. The results lack the factor 1/4π of Green's function, which the
+callers apply once.
+"""
+
+from __future__ import annotations
+
+import math
+
+from numba import njit
+
+__all__ = ["panel_integrals", "self_mean_inverse_distance", "spread_inverse", "spread_lifted"]
+
+_TINY = 1e-300
+
+
+@njit(cache=True, inline="always", error_model="numpy")
+def _edge_log(length, from_start, from_end):
+    """ln((R₁ + R₂ + L)/(R₁ + R₂ − L)): the potential of a unit line charge on an edge of length L."""
+    total = from_start + from_end
+    return math.log((total + length) / (total - length + 1e-16 * total + _TINY))
+
+
+@njit(cache=True, error_model="numpy")
+def panel_integrals(ax, ay, az, bx, by, bz, cx, cy, cz, nx, ny, nz):
+    """∫ 1/r dS and the signed solid angle Ω = ∫ h/r³ dS of a flat triangle, seen from the origin.
+
+    h = y·n is the height of the panel's plane above the target: Ω is positive when the target lies behind the
+    panel (on the side away from the normal (nx, ny, nz)). In the plane of the panel Ω is 0: on the panel itself
+    that is the mean of the two one-sided limits ±2π, which is what a boundary integral wants. On an edge or a
+    corner the potential is still finite and correct to rounding.
+
+    Sources: Ω, van Oosterom & Strackee (1983), doi:10.1109/TBME.1983.325207; ∫ 1/r = Σ t·ln(…) − hΩ over the
+    edges, with t the in-plane distance to the edge, Wilton et al. (1984), doi:10.1109/TAP.1984.1143304.
+    """
+    ra = math.sqrt(ax * ax + ay * ay + az * az)
+    rb = math.sqrt(bx * bx + by * by + bz * bz)
+    rc = math.sqrt(cx * cx + cy * cy + cz * cz)
+    height = ax * nx + ay * ny + az * nz
+
+    triple = ax * (by * cz - bz * cy) + ay * (bz * cx - bx * cz) + az * (bx * cy - by * cx)
+    ab = ax * bx + ay * by + az * bz
+    bc = bx * cx + by * cy + bz * cz
+    ca = cx * ax + cy * ay + cz * az
+    below = ra * rb * rc + ab * rc + bc * ra + ca * rb
+    # In the plane, `triple` is rounding noise around 0 and would pick one of the limits ±2π at random.
+    size = ra * rb * rc
+    angle = 2.0 * math.atan2(triple, below) if abs(triple) > 1e-14 * size else 0.0
+
+    potential = -height * angle
+
+    ex, ey, ez = bx - ax, by - ay, bz - az
+    length = math.sqrt(ex * ex + ey * ey + ez * ez)
+    t = (ax * (ey * nz - ez * ny) + ay * (ez * nx - ex * nz) + az * (ex * ny - ey * nx)) / length
+    potential += t * _edge_log(length, ra, rb)
+
+    ex, ey, ez = cx - bx, cy - by, cz - bz
+    length = math.sqrt(ex * ex + ey * ey + ez * ez)
+    t = (bx * (ey * nz - ez * ny) + by * (ez * nx - ex * nz) + bz * (ex * ny - ey * nx)) / length
+    potential += t * _edge_log(length, rb, rc)
+
+    ex, ey, ez = ax - cx, ay - cy, az - cz
+    length = math.sqrt(ex * ex + ey * ey + ez * ez)
+    t = (cx * (ey * nz - ez * ny) + cy * (ez * nx - ex * nz) + cz * (ex * ny - ey * nx)) / length
+    potential += t * _edge_log(length, rc, ra)
+    return potential, angle
+
+
+@njit(cache=True, error_model="numpy")
+def self_mean_inverse_distance(a, b, c, area):
+    """(1/A) ∫∫ 1/|x−y| dS dS over one triangle with edge lengths a, b, c: A·(−4/3) Σ ln(1 − l/p)/l.
+
+    p is half the perimeter. Source: Eibert & Hansen (1995), doi:10.1109/8.475946, the constant-constant case.
+    """
+    p = 0.5 * (a + b + c)
+    total = math.log(1.0 - a / p) / a + math.log(1.0 - b / p) / b + math.log(1.0 - c / p) / c
+    return -4.0 / 3.0 * area * total
+
+
+@njit(cache=True, inline="always", error_model="numpy")
+def spread_inverse(ht, hs, spread_target, spread_source, inverse):
+    """Mean of 1/|x − y| over two panels whose centroids are 1/inverse apart, to second order in their size.
+
+    A panel's second moment is taken as isotropic in its plane, spread·(I − n nᵀ); since 1/r is harmonic its
+    in-plane Laplacian is −∂²/∂n², hence 1/r·[1 + spread/(2r²)·(1 − 3h²/r²)] per panel, with d from source to
+    target, hs = n_source·d and ht = n_target·d. Without it every neighbour in a flat stretch of wall is
+    underrated, and the error falls only with the panel size, not with its square.
+    """
+    inverse2 = inverse * inverse
+    return inverse + (inverse2 * inverse) / 2 * (
+        spread_target * (1 - 3 * ht * ht * inverse2) + spread_source * (1 - 3 * hs * hs * inverse2)
+    )
+
+
+@njit(cache=True, inline="always", error_model="numpy")
+def spread_lifted(ht, hs, tilt, spread_target, spread_source, inverse):
+    """Mean of n_source·(x − y)/|x − y| over two panels, as `spread_inverse`; tilt = n_target·n_source.
+
+    Over the source the height is constant; over the target ½ spread (Δ − ∂²/∂n_target²) acts on hs/r, which is
+    not harmonic: Δ(hs/r) = −2 hs/r³.
+    """
+    inverse2 = inverse * inverse
+    return hs * inverse + (inverse2 * inverse) / 2 * (
+        spread_target * (2 * tilt * ht - hs - 3 * hs * ht * ht * inverse2)
+        + spread_source * hs * (1 - 3 * hs * hs * inverse2)
+    )
