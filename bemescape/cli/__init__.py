@@ -1,1 +1,1 @@
-"""The shell commands, one file each."""
+"""The shell: one file per command."""

@@ -1,0 +1,120 @@
+"""`bemescape solve CASE`: from a case file to numbers, pictures and a report."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from bemescape.errors import SettingsError
+
+if TYPE_CHECKING:
+    from bemescape.results.result import EscapeResult
+
+__all__ = ["solve"]
+
+
+def solve(
+    case: Annotated[Path, typer.Argument(help="Case file (TOML).")],
+    *,
+    out: Annotated[
+        Path | None,
+        typer.Option(
+            help="Folder for the results. Default: one named after the case, in the current folder."
+        ),
+    ] = None,
+    target: Annotated[
+        str | None,
+        typer.Option(help='Relative error wanted, like "0.5 %" or 0.005; replaces that of the case.'),
+    ] = None,
+    max_panels: Annotated[
+        int | None, typer.Option(help="Panels at which refinement ends; replaces that of the case.")
+    ] = None,
+    pictures: Annotated[
+        bool, typer.Option("--pictures/--no-pictures", help="Render pictures and report.html.")
+    ] = True,
+    json: Annotated[
+        bool, typer.Option("--json", help="Print the content of summary.json, alone, on stdout.")
+    ] = False,
+    quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress on stderr.")] = False,
+) -> int:
+    """Compute the mean escape time, the share of each window and the slow regions of one case.
+
+    Exit code 0: done; 1: solved and saved, but the target for the error was not met within the panel
+    budget, or the solve failed its own checks and nothing is saved; 2: wrong input; 130: stopped by Ctrl-C.
+    """
+    from bemescape.case import read_case
+    from bemescape.cli.progress import reporting
+    from bemescape.progress import ProgressEvent
+    from bemescape.results.store import add_pictures, save_result
+    from bemescape.units import fraction
+
+    wanted = None if target is None else fraction(_number_or_text(target), "--target")
+    problem = read_case(case).with_accuracy(target=wanted, max_panels=max_panels)
+    folder = Path(problem.name) if out is None else out
+    _refuse_foreign_folder(folder)
+    saved = False
+    try:
+        with reporting(quiet=quiet) as progress:
+            result = problem.solve(progress)
+            progress(ProgressEvent("saving", None, str(folder)))
+            save_result(result, folder, pictures=False)
+            saved = True
+            if pictures:
+                progress(ProgressEvent("drawing", None, "pictures and report"))
+                add_pictures(result, folder)
+    except KeyboardInterrupt:
+        what = f"the numbers are in {folder}, the pictures are missing" if saved else "nothing was written"
+        typer.echo(f"bemescape: stopped; {what}", err=True)
+        return 130
+    _print_answer(result, folder, json=json)
+    return 0 if result.target_met else 1
+
+
+def _number_or_text(text: str) -> str | float:
+    try:
+        return float(text)
+    except ValueError:
+        return text
+
+
+def _refuse_foreign_folder(folder: Path) -> None:
+    """Before the work, not after it: results go into a new or empty folder, or replace earlier results."""
+    from bemescape.results.store import STAGING, is_result_folder
+
+    try:
+        if folder.exists() and not folder.is_dir():
+            raise SettingsError(f"{folder} is a file, not a folder; give another one with --out")
+        if not folder.exists() or is_result_folder(folder):
+            return
+        others = [entry.name for entry in folder.iterdir() if not entry.name.startswith(STAGING)]
+    except (OSError, ValueError) as error:
+        if isinstance(error, SettingsError):
+            raise
+        raise SettingsError(
+            f"folder {str(folder)[:200]!r} cannot be used: {error}; give another one"
+        ) from error
+    if others:
+        raise SettingsError(
+            f"folder {folder} holds other files ({sorted(others)[0]!r}, for one) and no earlier result; "
+            "give a new or empty folder with --out"
+        )
+
+
+def _print_answer(result: EscapeResult, folder: Path, *, json: bool) -> None:
+    from bemescape.cli.answer import CAUTION, percent, summary_lines
+
+    if json:
+        typer.echo(result.summary.model_dump_json(indent=2))
+    else:
+        files = ", ".join(sorted(entry.name for entry in folder.iterdir() if not entry.name.startswith(".")))
+        lines = [*summary_lines(result.summary), f"  files           {folder}: {files}", "", CAUTION]
+        typer.echo("\n".join(lines))
+    if not result.target_met:
+        typer.echo(
+            f"bemescape: the target {percent(result.target)} was not met: the estimated error is "
+            f"{percent(result.relative_error)} at {len(result.faces)} panels; the results are saved; raise "
+            "--max-panels or accept the error with a larger --target",
+            err=True,
+        )
