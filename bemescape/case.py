@@ -291,9 +291,9 @@ class Case:
         EscapeError
             As `load_surface` and `bemescape.escape.solve_escape`.
         """
+        surface = self.load_surface(progress)
         from bemescape.escape import SolverSettings, solve_escape
 
-        surface = self.load_surface(progress)
         accuracy = self.document.accuracy
         settings = SolverSettings()
         if accuracy.max_panels is not None:

@@ -7,7 +7,6 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
-from bemescape.cli.answer import print_json
 from bemescape.errors import SettingsError, SurfaceError
 
 if TYPE_CHECKING:
@@ -37,6 +36,7 @@ def check(
             "--unit is missing: mesh files carry no unit, so give the length of one file unit, "
             'like --unit nm or --unit "4 nm, 4 nm, 40 nm"'
         )
+    from bemescape.cli.answer import print_json
     from bemescape.cli.progress import reporting
     from bemescape.surface.heal import heal_surface
     from bemescape.surface.read import read_unhealed

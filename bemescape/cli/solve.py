@@ -29,7 +29,8 @@ def solve(
         typer.Option(help='Relative error wanted, like "0.5 %" or 0.005; replaces that of the case.'),
     ] = None,
     max_panels: Annotated[
-        int | None, typer.Option(help="Panels at which refinement ends; replaces that of the case.")
+        str | None,
+        typer.Option(metavar="<int>", help="Panels at which refinement ends; replaces that of the case."),
     ] = None,
     pictures: Annotated[
         bool, typer.Option("--pictures/--no-pictures", help="Render pictures and report.html.")
@@ -50,8 +51,10 @@ def solve(
     from bemescape.results.store import add_pictures, save_result
     from bemescape.units import fraction
 
-    wanted = None if target is None else fraction(_number_or_text(target), "--target")
-    problem = read_case(case).with_accuracy(target=wanted, max_panels=max_panels)
+    problem = read_case(case).with_accuracy(
+        target=None if target is None else fraction(_number_or_text(target), "--target"),
+        max_panels=None if max_panels is None else _whole_number(max_panels, "--max-panels"),
+    )
     folder = Path(problem.name) if out is None else out
     _refuse_foreign_folder(folder)
     saved = False
@@ -77,6 +80,12 @@ def _number_or_text(text: str) -> str | float:
         return float(text)
     except ValueError:
         return text
+
+
+def _whole_number(text: str, option: str) -> int:
+    if not (text.isascii() and text.isdigit() and len(text) < 10):
+        raise SettingsError(f"{option} is {text[:40]!r}; give a whole number, like 60000")
+    return int(text)
 
 
 def _refuse_foreign_folder(folder: Path) -> None:
