@@ -7,11 +7,11 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from bemescape.surface.measure import face_volumes
+from bemescape.surface.measure import face_volumes, sums
 from bemescape.surface.nesting import nesting_depths
 from bemescape.surface.repairs import Repair
 from bemescape.surface.surface import triangle_areas_normals
-from bemescape.surface.topology import Edges, border_loops
+from bemescape.surface.topology import border_loops
 from bemescape.surface.working import Working
 from bemescape.units import format_length
 
@@ -29,41 +29,44 @@ Ints = NDArray[np.int64]
 
 #: A separate closed body below this share of the whole volume is debris of the segmentation...
 DEBRIS_SHARE = 1e-3
-#: ...but a closed part inside another is an obstacle, and a small vesicle is no debris: only specks are dropped.
+#: ...but a closed part inside another is an obstacle, and a small vesicle is no debris: only specks are
+#: dropped.
 SPECK_SHARE = 1e-7
 #: An open part below this share of the whole area is a scrap; together they may not exceed the second number.
 SCRAP_SHARE, SCRAPS_SHARE = 0.01, 0.05
-#: A hole is closed if its lid is at most this share of its part's area and lies this flat (spread over radius).
+#: A hole is closed if its lid is at most this share of its part's area and lies this flat (spread over
+#: radius).
 HOLE_SHARE, HOLE_FLATNESS = 0.05, 0.35
-#: A hole of three or four edges lacks one face or two: there the lid may be larger, and any lid is as good as another
-#: where it is below the second number.
+#: A hole of three or four edges lacks one face or two: there the lid may be larger, and any lid is as good
+#: as another where it is below the second number.
 FACE_HOLE_SHARE, TINY_HOLE_SHARE = 0.15, 1e-3
 
 
 def drop_open_scraps(mesh: Working) -> list[Repair]:
     """Drop small open parts, one repair for each, unless they are a considerable share of the whole."""
-    edges = Edges.of(mesh.faces)
+    edges = mesh.edges
     count, part = edges.parts()
     is_open = np.zeros(count, dtype=bool)
     is_open[part[edges.order[edges.starts[edges.counts == 1]] // 3]] = True
-    area = np.bincount(part, weights=mesh.areas, minlength=count)
+    area = sums(part, mesh.areas, count)
     total = float(area.sum())
     scrap = is_open & (area < SCRAP_SHARE * total)
     scrap[int(area.argmax())] = False
     if not scrap.any() or area[scrap].sum() > SCRAPS_SHARE * total:
         return []
-    volume = np.zeros(count)
-    return _dropped(mesh, part, scrap, area, volume, "open scrap")
+    # An open scrap has no inside, so nothing is taken from the volume.
+    return _dropped(mesh, part, scrap, area, np.zeros(count), "open scrap")
 
 
 def drop_closed_debris(mesh: Working) -> list[Repair]:
     """Drop closed parts that are a tiny share of the volume, one repair for each."""
-    edges = Edges.of(mesh.faces)
+    edges = mesh.edges
     count, part = edges.parts()
     if count < 2:
         return []
-    volume = np.abs(_part_volumes(mesh, part, count))
-    area = np.bincount(part, weights=mesh.areas, minlength=count)
+    signed = _part_volumes(mesh, part, count)
+    volume = np.abs(signed)
+    area = sums(part, mesh.areas, count)
     whole = np.ones(count, dtype=bool)
     whole[part[edges.order[edges.starts[edges.counts != 2]] // 3]] = False
     share = volume / max(float(volume.max()), np.finfo(float).tiny)
@@ -72,33 +75,90 @@ def drop_closed_debris(mesh: Working) -> list[Repair]:
     small = whole & (share < DEBRIS_SHARE)
     if small.any():
         depth = nesting_depths(mesh.vertices, mesh.faces, np.where(whole[part], part, -1), count)
-    debris = specks | (small & (depth % 2 == 0))
-    return _dropped(mesh, part, debris, area, volume, "closed part")
+    debris = specks | (small & ((depth % 2 == 0) | (depth < 0)))
+    return _dropped(mesh, part, debris, area, signed, "closed part")
 
 
 def _dropped(
     mesh: Working, part: Ints, drop: NDArray[np.bool_], area: Floats, volume: Floats, what: str
 ) -> list[Repair]:
-    repairs = []
-    all_area, all_volume = float(area.sum()), float(volume.sum())
+    all_area, all_volume = float(area.sum()), float(np.abs(volume).sum())
     middle = mesh.vertices[mesh.faces].mean(axis=1)
-    alive = np.ones(len(part), dtype=bool)
+    left = mesh.keeping(~drop[part])
     order = np.argsort(part, kind="stable")
     bounds = np.searchsorted(part[order], np.arange(len(drop) + 1))
+    repairs = []
     for k in np.flatnonzero(drop):
         members = order[bounds[k] : bounds[k + 1]]
-        alive[members] = False
         where = ", ".join(f"{value:.4g}" for value in middle[members].mean(axis=0))
-        share = f"{volume[k] / all_volume:.2g} of the volume, " if all_volume > 0.0 else ""
-        detail = f"{what} of {len(members)} faces around ({where}) µm: {share}{area[k] / all_area:.2g} of the area"
-        repairs.append(Repair(mesh.keeping(alive), 1, detail, mesh.face_source[members]))
+        share = f"{abs(volume[k]) / all_volume:.2g} of the volume, " if all_volume > 0.0 else ""
+        detail = (
+            f"{what} of {len(members)} faces around ({where}) µm: {share}{area[k] / all_area:.2g} of the area"
+        )
+        repairs.append(Repair(left, 1, detail, mesh.face_source[members], -float(volume[k]), -float(area[k])))
     return repairs
 
 
 def _part_volumes(mesh: Working, part: Ints, count: int) -> Floats:
-    return np.bincount(
-        part, weights=face_volumes(mesh.vertices, mesh.faces, mesh.origin), minlength=count
+    return sums(part, face_volumes(mesh.vertices, mesh.faces, mesh.origin), count)
+
+
+def close_holes(mesh: Working) -> list[Repair]:
+    """Close holes that are small and nearly flat, one repair for each; larger ones are left open.
+
+    Three or four edges take one or two triangles; longer rims take a fan around their middle, or are cut
+    into triangles by ear clipping where a fan would fold over.
+    """
+    edges = mesh.edges
+    rim = edges.open_half_edges
+    if not len(rim):
+        return []
+    count, part = edges.parts()
+    area = sums(part, mesh.areas, count)
+    # A lid's edges run against those of the faces around the hole.
+    loops = border_loops(edges.head[rim], edges.tail[rim])
+    face_at = {(int(edges.head[h]), int(edges.tail[h])): int(h) // 3 for h in rim}
+    lids: list[_Lid] = []
+    notes: list[tuple[str, Ints]] = []
+    for ring in loops:
+        sides = list(zip(ring.tolist(), np.roll(ring, -1).tolist(), strict=True))
+        if len(ring) < 3 or any(side not in face_at for side in sides):
+            continue
+        hole = _measured(mesh, ring)
+        neighbours = np.array([face_at[side] for side in sides])
+        share = hole.area / area[part[neighbours[0]]]
+        limit = FACE_HOLE_SHARE if len(ring) <= 4 else HOLE_SHARE
+        flat = len(ring) == 3 or hole.spread <= HOLE_FLATNESS * hole.radius
+        tiny = len(ring) == 4 and share < TINY_HOLE_SHARE
+        if share > limit or not (flat or tiny):
+            continue
+        lid = _lid(mesh, hole, neighbours, len(mesh.vertices) + sum(len(made.middle) for made in lids))
+        if lid is None:
+            continue
+        lids.append(lid)
+        where = ", ".join(f"{value:.4g}" for value in hole.centre)
+        detail = (
+            f"hole of {len(ring)} edges around ({where}) µm, {format_length(2.0 * hole.radius)} across, "
+            f"{share:.2g} of its part's area"
+        )
+        notes.append((detail, mesh.face_source[neighbours]))
+    if not lids:
+        return []
+    closed = mesh.adding(
+        np.concatenate([lid.middle for lid in lids]), np.concatenate([lid.middle_source for lid in lids])
     )
+    closed = closed.with_faces(
+        np.concatenate([mesh.faces, *(lid.faces for lid in lids)]),
+        np.concatenate([mesh.face_source, *(lid.source for lid in lids)]),
+    )
+    repairs = []
+    for lid, (detail, faces) in zip(lids, notes, strict=True):
+        # The volume of a mesh with a hole is that with a fan in the hole, so only what departs from the
+        # fan counts.
+        added = float(triangle_areas_normals(closed.vertices, lid.faces)[0].sum())
+        beyond = float(face_volumes(closed.vertices, lid.faces, lid.hole.centre).sum())
+        repairs.append(Repair(closed, 1, detail, faces, beyond, added))
+    return repairs
 
 
 @dataclass(frozen=True)
@@ -110,45 +170,13 @@ class _Hole:
     spread: float
 
 
-def close_holes(mesh: Working) -> list[Repair]:
-    """Close holes that are small and nearly flat, one repair for each; larger ones are left open.
-
-    Three or four edges take one or two triangles; longer rims take a fan around their middle, or are cut into triangles
-    by ear clipping where a fan would fold over.
-    """
-    edges = Edges.of(mesh.faces)
-    rim = edges.open_half_edges
-    if not len(rim):
-        return []
-    count, part = edges.parts()
-    area = np.bincount(part, weights=mesh.areas, minlength=count)
-    # A lid's edges run against those of the faces around the hole.
-    loops = border_loops(edges.head[rim], edges.tail[rim])
-    face_at = {(int(edges.head[h]), int(edges.tail[h])): int(h) // 3 for h in rim}
-    repairs = []
-    for ring in loops:
-        sides = list(zip(ring.tolist(), np.roll(ring, -1).tolist(), strict=True))
-        if len(ring) < 3 or any(side not in face_at for side in sides):
-            continue
-        hole = _measured(mesh, ring)
-        limit = FACE_HOLE_SHARE if len(ring) <= 4 else HOLE_SHARE
-        neighbours = [face_at[side] for side in sides]
-        share = hole.area / area[part[neighbours[0]]]
-        flat = len(ring) == 3 or hole.spread <= HOLE_FLATNESS * hole.radius
-        tiny = len(ring) == 4 and share < TINY_HOLE_SHARE
-        if share > limit or not (flat or tiny):
-            continue
-        closed = _lidded(mesh, hole, neighbours)
-        if closed is None:
-            continue
-        where = ", ".join(f"{value:.4g}" for value in hole.centre)
-        detail = (
-            f"hole of {len(ring)} edges around ({where}) µm, {format_length(2.0 * hole.radius)} across, "
-            f"{share:.2g} of its part's area"
-        )
-        repairs.append(Repair(closed, 1, detail, mesh.face_source[neighbours]))
-        mesh = closed
-    return repairs
+@dataclass(frozen=True)
+class _Lid:
+    hole: _Hole
+    faces: Ints
+    source: Ints
+    middle: Floats
+    middle_source: Ints
 
 
 def _measured(mesh: Working, ring: Ints) -> _Hole:
@@ -163,33 +191,29 @@ def _measured(mesh: Working, ring: Ints) -> _Hole:
     return _Hole(ring, centre, max(area, float(lids)), radius, float(np.abs(heights).max()))
 
 
-def _lidded(mesh: Working, hole: _Hole, neighbours: list[int]) -> Working | None:
+def _lid(mesh: Working, hole: _Hole, neighbours: Ints, next_vertex: int) -> _Lid | None:
+    """Triangles that close the hole, with the data of the faces beside it; None if they fold over."""
     ring, size = hole.ring, len(hole.ring)
     points = mesh.vertices[ring]
     source = mesh.face_source[neighbours]
+    nothing = np.zeros((0, 3)), np.zeros(0, np.int64)
     if size == 3:
-        lid, owner = np.array([[0, 1, 2]]), np.array([0])
-    elif size == 4:
+        return _Lid(hole, ring[None], source[:1], *nothing)
+    if size == 4:
         # The diagonal that folds less.
         ways = (np.array([[0, 1, 2], [0, 2, 3]]), np.array([[1, 2, 3], [1, 3, 0]]))
-        lid = max(ways, key=lambda way: _least_agreement(points, way))
-        owner = np.array([0, 2])
-    else:
-        around = np.arange(size)
-        fan = np.stack([around, np.roll(around, -1), np.full(size, size)], axis=1)
-        if _least_agreement(np.vstack([points, hole.centre]), fan) > 0.0:
-            grown = mesh.adding(hole.centre[None], mesh.vertex_source[ring[:1]])
-            numbers = np.r_[ring, len(mesh.vertices)]
-            return grown.with_faces(
-                np.concatenate([mesh.faces, numbers[fan]]), np.concatenate([mesh.face_source, source])
-            )
-        lid = _ears(points)
-        owner = lid[:, 0]
-        if len(lid) != size - 2 or _least_agreement(points, lid) <= 0.0:
-            return None
-    return mesh.with_faces(
-        np.concatenate([mesh.faces, ring[lid]]), np.concatenate([mesh.face_source, source[owner]])
-    )
+        best = max(ways, key=lambda way: _least_agreement(points, way))
+        return _Lid(hole, ring[best], source[[0, 2]], *nothing)
+    around = np.arange(size)
+    fan = np.stack([around, np.roll(around, -1), np.full(size, size)], axis=1)
+    if _least_agreement(np.vstack([points, hole.centre]), fan) > 0.0:
+        return _Lid(
+            hole, np.r_[ring, next_vertex][fan], source, hole.centre[None], mesh.vertex_source[ring[:1]]
+        )
+    ears = _ears(points)
+    if len(ears) != size - 2 or _least_agreement(points, ears) <= 0.0:
+        return None
+    return _Lid(hole, ring[ears], source[ears[:, 0]], *nothing)
 
 
 def _least_agreement(points: Floats, triangles: Ints) -> float:
@@ -211,7 +235,7 @@ def _ears(points: Floats) -> Ints:
 
 def turn_outward(mesh: Working) -> Repair | None:
     """Turn closed parts so that normals leave the diffusing volume: outwards, or into an obstacle."""
-    edges = Edges.of(mesh.faces)
+    edges = mesh.edges
     count, part = edges.parts()
     depth = nesting_depths(mesh.vertices, mesh.faces, part, count)
     volume = _part_volumes(mesh, part, count)

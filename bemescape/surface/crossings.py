@@ -27,17 +27,19 @@ class Crossings:
 
 
 def find_crossings(vertices: Floats, faces: Ints) -> Crossings:
-    """Pairs of faces without a common corner position, one of which has an edge that passes through the other.
+    """Pairs of faces without a common vertex, one of which has an edge that passes through the other.
 
-    Faces that only touch, or overlap within one plane, are not counted. Near pairs are found by sorting triangles
-    into the cells of a grid; each pair is compared once, in the cell where their boxes begin to overlap.
+    Faces that only touch, or overlap within one plane, are not counted. Near pairs are found by sorting
+    triangles into the cells of a grid; each pair is compared once, in the cell where their boxes begin to
+    overlap.
     """
     none = np.zeros((0, 2), dtype=np.int64)
     if len(faces) > CROSSING_FACES_LIMIT:
         return Crossings(none, complete=False)
     corners = vertices[faces]
     low, high = corners.min(axis=1), corners.max(axis=1)
-    # Cells about as large as a typical triangle: smaller ones repeat it in too many, larger ones pair too much.
+    # Cells about as large as a typical triangle: smaller ones repeat it in too many, larger ones pair too
+    # much.
     cell = max(float(np.percentile((high - low).max(axis=1), 90)), float((high - low).max()) / 64.0)
     if not cell > 0.0:
         return Crossings(none, complete=True)
@@ -86,7 +88,7 @@ def find_crossings(vertices: Floats, faces: Ints) -> Crossings:
 
 
 def _cross(one: Floats, two: Floats) -> NDArray[np.bool_]:
-    """Whether triangles (k, 3, 3) cross: an edge of one has its ends on both sides of the other and passes within."""
+    """Whether an edge of one triangle (k, 3, 3) passes through the other."""
     return _pierces(one, two) | _pierces(two, one)
 
 

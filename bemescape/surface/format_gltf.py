@@ -1,7 +1,7 @@
 """GLB and glTF files, through trimesh.
 
-Only positions and triangles are handed on: a file keeps no pictures, cameras or animations on its way in, and every
-count is compared with the size of its buffer before anything is allocated.
+Only positions and triangles are handed on: a file keeps no pictures, cameras or animations on its way in,
+and every count is compared with the size of its buffer before anything is allocated.
 """
 
 from __future__ import annotations
@@ -11,7 +11,7 @@ import binascii
 import io
 import json
 from pathlib import Path
-from typing import Any
+from typing import Any, TypeGuard
 
 import numpy as np
 
@@ -41,7 +41,9 @@ def read_glb(data: bytes, name: str) -> Polygons:
         raise SurfaceError(f"{name} is not a glTF 2 binary file; export it again as glTF 2.0")
     length = int.from_bytes(data[8:12], "little")
     if length != len(data):
-        raise SurfaceError(f"{name}: the header announces {length} bytes, but the file has {len(data)}; it is cut short")
+        raise SurfaceError(
+            f"{name}: the header announces {length} bytes, but the file has {len(data)}; it is cut short"
+        )
     chunks: dict[int, bytes] = {}
     at = 12
     while at + 8 <= len(data):
@@ -54,7 +56,9 @@ def read_glb(data: bytes, name: str) -> Polygons:
     document = _document(chunks.get(_JSON_CHUNK, b""), name)
     buffers = _items(document, "buffers", name)
     if len(buffers) != 1 or "uri" in buffers[0]:
-        raise SurfaceError(f"{name} keeps its data in {len(buffers)} buffers or in other files; export it as one GLB")
+        raise SurfaceError(
+            f"{name} keeps its data in {len(buffers)} buffers or in other files; export it as one GLB"
+        )
     return _polygons(document, [chunks.get(_BINARY_CHUNK, b"")], name)
 
 
@@ -75,7 +79,9 @@ def _document(data: bytes, name: str) -> dict[str, Any]:
     try:
         document = json.loads(data)
     except (ValueError, RecursionError) as error:
-        raise SurfaceError(f"{name}: its JSON part cannot be read ({str(error)[:80]}); the file is damaged") from error
+        raise SurfaceError(
+            f"{name}: its JSON part cannot be read ({str(error)[:80]}); the file is damaged"
+        ) from error
     if not isinstance(document, dict):
         raise SurfaceError(f"{name}: its JSON part is not a glTF document")
     needed = document.get("extensionsRequired")
@@ -99,7 +105,9 @@ def _buffer(entry: dict[str, Any], name: str, folder: Path) -> bytes:
         try:
             return base64.b64decode(uri.partition(",")[2], validate=True)
         except binascii.Error as error:
-            raise SurfaceError(f"{name}: a buffer inside the file is not base64; the file is damaged") from error
+            raise SurfaceError(
+                f"{name}: a buffer inside the file is not base64; the file is damaged"
+            ) from error
     if Path(uri).name != uri or "\\" in uri or ":" in uri:
         raise SurfaceError(f"{name}: its data lie at {uri[:80]!r}; only files in the same folder are read")
     path = folder / uri
@@ -110,7 +118,7 @@ def _buffer(entry: dict[str, Any], name: str, folder: Path) -> bytes:
         return stream.read(size)
 
 
-def _count(value: object) -> bool:
+def _count(value: object) -> TypeGuard[int]:
     return isinstance(value, int) and not isinstance(value, bool) and value >= 0
 
 
@@ -131,9 +139,18 @@ def _polygons(document: dict[str, Any], blobs: list[bytes], name: str) -> Polygo
         )
         mesh = scene.to_mesh()
     # Whatever remains wrong inside (a reference to a node that is not there) shows as one of these.
-    except (ValueError, KeyError, IndexError, TypeError, AttributeError, RecursionError, OverflowError) as error:
+    except (
+        ValueError,
+        KeyError,
+        IndexError,
+        TypeError,
+        AttributeError,
+        RecursionError,
+        OverflowError,
+    ) as error:
         raise SurfaceError(
-            f"{name}: its parts do not fit together ({type(error).__name__}: {str(error)[:80]}); the file is damaged"
+            f"{name}: its parts do not fit together ({type(error).__name__}: {str(error)[:80]}); the file "
+            f"is damaged"
         ) from error
     return Polygons.of_triangles(np.array(mesh.vertices, np.float64), np.array(mesh.faces, np.int64))
 
@@ -152,39 +169,46 @@ def _check_views(document: dict[str, Any], sizes: list[int], name: str) -> None:
     for k, view in enumerate(views):
         buffer, start, length = view.get("buffer"), view.get("byteOffset", 0), view.get("byteLength")
         stride = view.get("byteStride", 0)
-        if not (_count(buffer) and _count(start) and _count(length) and _count(stride)) or buffer >= len(sizes):
+        if not (_count(buffer) and _count(start) and _count(length) and _count(stride)) or buffer >= len(
+            sizes
+        ):
             raise SurfaceError(f"{name}: bufferView {k} is not complete; the file is damaged")
         if start + length > sizes[buffer]:
-            raise SurfaceError(f"{name}: bufferView {k} ends at byte {start + length} of {sizes[buffer]}; cut short")
+            raise SurfaceError(
+                f"{name}: bufferView {k} ends at byte {start + length} of {sizes[buffer]}; cut short"
+            )
     for k, accessor in enumerate(_items(document, "accessors", name)):
-        view, start, count = accessor.get("bufferView"), accessor.get("byteOffset", 0), accessor.get("count")
-        bytes_each = _COMPONENT_BYTES.get(accessor.get("componentType", 0), 0) * _TYPE_WIDTH.get(
-            str(accessor.get("type")), 0
+        number, start, count = (
+            accessor.get("bufferView"),
+            accessor.get("byteOffset", 0),
+            accessor.get("count"),
         )
-        if not (_count(view) and _count(start) and _count(count)) or view >= len(views) or not bytes_each:
+        kind, shape = accessor.get("componentType"), str(accessor.get("type"))
+        bytes_each = _COMPONENT_BYTES.get(kind, 0) * _TYPE_WIDTH.get(shape, 0) if _count(kind) else 0
+        if not (_count(number) and _count(start) and _count(count)) or number >= len(views) or not bytes_each:
             raise SurfaceError(f"{name}: accessor {k} is not complete or sparse; export the file again")
-        stride = views[view].get("byteStride") or bytes_each
-        if count and start + stride * (count - 1) + bytes_each > views[view]["byteLength"]:
+        stride = views[number].get("byteStride") or bytes_each
+        if count and start + stride * (count - 1) + bytes_each > views[number]["byteLength"]:
             raise SurfaceError(f"{name}: accessor {k} announces {count} entries, more than its buffer holds")
 
 
 def _slim(document: dict[str, Any], name: str) -> dict[str, Any]:
     """The document without anything but positions, triangles and where they are."""
     accessors = _items(document, "accessors", name)
-    used: set[int] = set()
     meshes = []
     for k, mesh in enumerate(_items(document, "meshes", name)):
-        primitives = []
+        primitives: list[dict[str, Any]] = []
         for primitive in _items(mesh, "primitives", name):
             attributes = primitive.get("attributes")
             position = attributes.get("POSITION") if isinstance(attributes, dict) else None
             indices = primitive.get("indices")
             if primitive.get("mode", _TRIANGLES) != _TRIANGLES:
-                raise SurfaceError(f"{name}: mesh {k} is drawn as points, lines or strips; export it as triangles")
-            wanted = [position] if indices is None else [position, indices]
+                raise SurfaceError(
+                    f"{name}: mesh {k} is drawn as points, lines or strips; export it as triangles"
+                )
+            wanted: list[Any] = [position] if indices is None else [position, indices]
             if not all(_count(entry) and entry < len(accessors) for entry in wanted):
                 raise SurfaceError(f"{name}: mesh {k} names positions or corners that the file does not hold")
-            used.update(wanted)
             kept: dict[str, Any] = {"attributes": {"POSITION": position}, "mode": _TRIANGLES}
             if indices is not None:
                 kept["indices"] = indices
@@ -234,5 +258,6 @@ def _check_tree(nodes: list[dict[str, Any]], mesh_count: int, name: str) -> None
             break
     if max(parents, default=0) > 1 or seen != len(nodes) or seen > _NODE_LIMIT:
         raise SurfaceError(
-            f"{name}: its {len(nodes)} nodes do not form a tree of at most {_NODE_LIMIT}; export it as one mesh"
+            f"{name}: its {len(nodes)} nodes do not form a tree of at most {_NODE_LIMIT}; export it as one "
+            f"mesh"
         )

@@ -1,7 +1,7 @@
 """OBJ and OFF files.
 
-Read here rather than by trimesh, which takes files that end early without a word, and regroups the faces of an OBJ
-file by material so that face numbers in messages would mean nothing.
+Read here rather than by trimesh, which takes files that end early without a word, and regroups the faces
+of an OBJ file by material so that face numbers in messages would mean nothing.
 """
 
 from __future__ import annotations
@@ -18,8 +18,8 @@ __all__ = ["read_obj", "read_off"]
 
 #: Statements of the OBJ format that say nothing about the shape.
 _OBJ_IGNORED = {
-    "vn", "vt", "vp", "g", "o", "s", "l", "p", "usemtl", "mtllib", "mg", "bevel", "c_interp", "d_interp", "lod",
-    "maplib", "usemap", "shadow_obj", "trace_obj", "cstype", "deg",
+    "vn", "vt", "vp", "g", "o", "s", "l", "p", "usemtl", "mtllib", "mg", "bevel", "c_interp", "d_interp",
+    "lod", "maplib", "usemap", "shadow_obj", "trace_obj", "cstype", "deg",
 }  # fmt: skip
 _SLASHES = re.compile(r"/\S*")
 
@@ -44,9 +44,13 @@ def read_obj(data: bytes, name: str) -> Polygons:
             rings.append(_SLASHES.sub("", rest))
             known.append(len(positions))
         elif word not in _OBJ_IGNORED:
-            raise SurfaceError(f"{name}: line {number}, {line[:40]!r}, is not an OBJ statement; the file is damaged")
+            raise SurfaceError(
+                f"{name}: line {number}, {line[:40]!r}, is not an OBJ statement; the file is damaged"
+            )
     if not positions or not rings:
-        raise SurfaceError(f"{name} holds {len(positions)} vertices and {len(rings)} faces; was it exported as points?")
+        raise SurfaceError(
+            f"{name} holds {len(positions)} vertices and {len(rings)} faces; was it exported as points?"
+        )
     vertices = loaded_rows(positions, "a vertex line", name, columns=(0, 1, 2))
     sizes, corners = _rings(rings, name)
     if (corners == 0).any():
@@ -67,7 +71,9 @@ def read_off(data: bytes, name: str) -> Polygons:
     lines = list(significant_lines(decode_text(data, name)))
     head = re.fullmatch(r"(C?N?OFF)\s*(.*)", lines[0][1]) if lines else None
     if head is None:
-        raise SurfaceError(f"{name} does not begin with OFF, COFF or NOFF; the file is damaged or of another format")
+        raise SurfaceError(
+            f"{name} does not begin with OFF, COFF or NOFF; the file is damaged or of another format"
+        )
     rows = [line for _, line in lines[1:]]
     counts = head.group(2) or (rows.pop(0) if rows else "")
     numbers = re.fullmatch(r"(\d{1,18})\s+(\d{1,18})(\s+\d{1,18})?", counts)
@@ -76,18 +82,23 @@ def read_off(data: bytes, name: str) -> Polygons:
     vertex_count, face_count = int(numbers.group(1)), int(numbers.group(2))
     if len(rows) != vertex_count + face_count:
         raise SurfaceError(
-            f"{name}: the header announces {vertex_count} vertices and {face_count} faces, but {len(rows)} lines "
+            f"{name}: the header announces {vertex_count} vertices and {face_count} faces, but {len(rows)} "
+            f"lines "
             "follow; the file is cut short or its header is wrong"
         )
     if not vertex_count or not face_count:
-        raise SurfaceError(f"{name} holds {vertex_count} vertices and {face_count} faces; was it exported as points?")
+        raise SurfaceError(
+            f"{name} holds {vertex_count} vertices and {face_count} faces; was it exported as points?"
+        )
     vertices = loaded_rows(rows[:vertex_count], "a vertex line", name, columns=(0, 1, 2))
     rings = []
     for face, row in enumerate(rows[vertex_count:]):
         words = row.split()
         size = int(words[0]) if words[0].isascii() and words[0].isdigit() and len(words[0]) < 10 else -1
         if not 0 < size < len(words):
-            raise SurfaceError(f"{name}: face {face}, {row[:40]!r}, does not hold the corners it counts", faces=(face,))
+            raise SurfaceError(
+                f"{name}: face {face}, {row[:40]!r}, does not hold the corners it counts", faces=(face,)
+            )
         rings.append(" ".join(words[1 : size + 1]))
     sizes, corners = _rings(rings, name)
     return Polygons(vertices, sizes, corners)
@@ -103,7 +114,8 @@ def _rings(rings: list[str], name: str) -> tuple[NDArray[np.int64], NDArray[np.i
         for face, ring in enumerate(words):
             if not all(re.fullmatch(r"-?\d{1,18}", word) for word in ring):
                 raise SurfaceError(
-                    f"{name}: face {face}, {' '.join(ring)[:40]!r}, does not name its corners by whole numbers",
+                    f"{name}: face {face}, {' '.join(ring)[:40]!r}, does not name its corners by whole "
+                    f"numbers",
                     faces=(face,),
                 ) from error
         raise SurfaceError(f"{name}: the faces do not name their corners by whole numbers") from error

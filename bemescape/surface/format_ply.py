@@ -88,10 +88,13 @@ def _header(data: bytes, name: str) -> tuple[list[_Element], str, int]:
         elif words[0] == "property" and elements:
             elements[-1] = _with_property(elements[-1], words, byte_order(layout), f"{name}, line {number}")
         else:
-            raise SurfaceError(f"{name}: line {number} of the PLY header, {' '.join(words)[:60]!r}, means nothing")
+            raise SurfaceError(
+                f"{name}: line {number} of the PLY header, {' '.join(words)[:60]!r}, means nothing"
+            )
     if layout not in {"ascii", "binary_little_endian", "binary_big_endian"}:
         raise SurfaceError(
-            f"{name}: the PLY format is {layout!r}; it must be ascii, binary_little_endian or binary_big_endian"
+            f"{name}: the PLY format is {layout!r}; it must be ascii, binary_little_endian or "
+            f"binary_big_endian"
         )
     return elements, layout, stop
 
@@ -210,9 +213,11 @@ def _cast(values: NDArray[np.float64], dtype: np.dtype[np.generic], what: str) -
     if dtype.kind == "f":
         return values.astype(dtype if dtype.itemsize == 8 else np.float64)
     whole = np.isfinite(values) & (values == np.round(values))
-    limits = np.iinfo(dtype)
+    limits = np.iinfo(dtype.str)
     if not (whole & (values >= limits.min) & (values <= limits.max)).all():
-        raise SurfaceError(f"{what} holds numbers that do not fit its type, {dtype.name}; the file is damaged")
+        raise SurfaceError(
+            f"{what} holds numbers that do not fit its type, {dtype.name}; the file is damaged"
+        )
     return values.astype(dtype)
 
 
@@ -263,7 +268,9 @@ def _binary_columns(element: _Element, body: memoryview, name: str) -> tuple[_Co
             if not (table[str(k)] == size).all():
                 return _walk(element, body, name)
         elif shape:
-            columns[label] = _Lists(np.full(element.count, shape[0], np.int64), _native(table[str(k)].reshape(-1)))
+            columns[label] = _Lists(
+                np.full(element.count, shape[0], np.int64), _native(table[str(k)].reshape(-1))
+            )
         else:
             columns[label] = _native(table[str(k)])
     return columns, element.count * record.itemsize
@@ -279,10 +286,9 @@ def _walk(element: _Element, body: memoryview, name: str) -> tuple[_Columns, int
             width = prop.dtype.itemsize
             if prop.count_dtype is not None:
                 count_width = prop.count_dtype.itemsize
-                order = "big" if prop.count_dtype.byteorder == ">" else "little"
-                size = int.from_bytes(
-                    body[at : at + count_width], order, signed=prop.count_dtype.kind == "i"
-                )
+                if at + count_width > len(body):
+                    raise _too_short(element, name, f"the data end within entry {entry}")
+                size = int(np.frombuffer(body, prop.count_dtype, 1, at)[0])
                 if size < 0:
                     raise SurfaceError(f"{name}: {element.name} {entry} has a list of {size} items")
                 at += count_width

@@ -24,7 +24,9 @@ def looks_like_binary_stl(data: bytes) -> bool:
 
 
 def read_stl(data: bytes, name: str) -> Polygons:
-    """Triangles of an STL file; corners at equal positions become one vertex, as the format cannot share them.
+    """Triangles of an STL file; corners at equal positions become one vertex.
+
+    The format cannot say that triangles share a corner, so nothing is lost by that.
 
     Raises
     ------
@@ -40,12 +42,15 @@ def read_stl(data: bytes, name: str) -> Polygons:
     else:
         claimed = int.from_bytes(data[80:84], "little") if len(data) >= _HEADER else 0
         raise SurfaceError(
-            f"{name}: the header announces {claimed} triangles, which take {_HEADER + _RECORD * claimed} bytes, but the "
+            f"{name}: the header announces {claimed} triangles, which take {_HEADER + _RECORD * claimed} "
+            f"bytes, but the "
             f"file has {len(data)}; it is cut short or not STL"
         )
     loaded = trimesh.load(io.BytesIO(content), file_type="stl", process=False)
     if not isinstance(loaded, trimesh.Trimesh) or len(loaded.faces) != expected:
-        raise SurfaceError(f"{name}: {expected} triangles were announced but not all can be read; export it again")
+        raise SurfaceError(
+            f"{name}: {expected} triangles were announced but not all can be read; export it again"
+        )
     soup = np.asarray(loaded.vertices, np.float64) + 0.0  # -0.0 and 0.0 are one position
     vertices, corners = np.unique(soup, axis=0, return_inverse=True)
     return Polygons.of_triangles(vertices, corners.reshape(-1)[np.asarray(loaded.faces, np.int64)])
@@ -68,7 +73,8 @@ def _checked_text(text: str, name: str) -> tuple[bytes, int]:
         # NaN and Inf do not match the pattern either: such a corner is no position.
         if word != expected[step] or (word == "vertex" and _CORNER.fullmatch(line) is None):
             raise SurfaceError(
-                f"{name}: line {number}, {line[:60]!r}, should be {expected[step]!r} with finite numbers; the file is "
+                f"{name}: line {number}, {line[:60]!r}, should be {expected[step]!r} with finite numbers; "
+                f"the file is "
                 "damaged"
             )
         kept.append(line)

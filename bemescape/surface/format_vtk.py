@@ -22,10 +22,11 @@ _LEGACY_COUNTS = re.compile(
     re.MULTILINE,
 )
 _LEGACY_ARRAY = re.compile(
-    rb"^\S+[ \t]+(\d+)[ \t]+(\d+)[ \t]+(?:bit|char|unsigned_\w+|short|int|long|vtk\w+|float|double|string)\s*$",
+    rb"^\S+[ \t]+(\d+)[ \t]+(\d+)[ \t]+"
+    rb"(?:bit|char|unsigned_\w+|short|int|long|vtk\w+|float|double|string)\s*$",
     re.MULTILINE,
 )
-_XML_COUNT = re.compile(rb'\b(Number\w*|RangeM\w+|offset|header_type)\s*=\s*"([^"]*)"')
+_XML_COUNT = re.compile(rb'\b(Number\w*)\s*=\s*"([^"]*)"')
 #: zlib cannot pack data tighter than this, so a larger count in a compressed file is wrong.
 _PACKING_LIMIT = 1032
 #: Limits of the reading process: bytes of address space (VTK's libraries alone take a third of it), seconds.
@@ -49,7 +50,8 @@ def read_vtk_legacy(path: Path, data: bytes, name: str) -> Polygons:
         raise SurfaceError(f"{name}: the VTK header names no DATASET; the file is damaged or cut short")
     if kind.group(1).upper() != b"POLYDATA":
         raise SurfaceError(
-            f"{name} holds a {kind.group(1).decode('ascii', 'replace')[:40]}, not a surface; extract the surface as "
+            f"{name} holds a {kind.group(1).decode('ascii', 'replace')[:40]}, not a surface; extract the "
+            f"surface as "
             "POLYDATA first"
         )
     for match in _LEGACY_COUNTS.finditer(data):
@@ -68,7 +70,8 @@ def read_vtp(path: Path, data: bytes, name: str) -> Polygons:
     Raises
     ------
     SurfaceError
-        Another kind of data set, counts larger than the file can hold, or anything that VTK itself objects to.
+        Another kind of data set, counts larger than the file can hold, or anything that VTK itself objects
+        to.
     """
     head = data[:65536]
     kind = re.search(rb'<VTKFile[^>]*\btype\s*=\s*"(\w+)"', head)
@@ -76,21 +79,23 @@ def read_vtp(path: Path, data: bytes, name: str) -> Polygons:
         found = kind.group(1).decode("ascii", "replace")[:40] if kind else "unnamed data set"
         raise SurfaceError(f"{name} holds a {found}, not PolyData; extract the surface first")
     if b"<!DOCTYPE" in head or b"<!ENTITY" in head:
-        raise SurfaceError(f"{name} declares its own XML entities, which mesh files never need; it is not read")
+        raise SurfaceError(
+            f"{name} declares its own XML entities, which mesh files never need; it is not read"
+        )
     if b"</VTKFile>" not in data[-4096:]:
         raise SurfaceError(f"{name} does not end with </VTKFile>; the file is cut short")
     for match in _XML_COUNT.finditer(data):
-        if match.group(1).startswith(b"Number"):
-            if not match.group(2).isdigit():
-                raise SurfaceError(f"{name}: {match.group(0)[:60].decode('ascii', 'replace')} is not a count")
-            _refuse_large(match.group(2), len(data) * _PACKING_LIMIT, match.group(1), name)
+        if not match.group(2).isdigit():
+            raise SurfaceError(f"{name}: {match.group(0)[:60].decode('ascii', 'replace')} is not a count")
+        _refuse_large(match.group(2), len(data) * _PACKING_LIMIT, match.group(1), name)
     return _polygons(path, data, name, "vtp")
 
 
 def _refuse_large(count: bytes, limit: int, word: bytes, name: str) -> None:
     if len(count) > 18 or not 0 <= int(count) <= limit:
         raise SurfaceError(
-            f"{name}: {word.decode('ascii', 'replace')} announces {count[:30].decode()} entries, more than the file can "
+            f"{name}: {word.decode('ascii', 'replace')} announces {count[:30].decode()} entries, more than "
+            f"the file can "
             "hold; it is cut short or its header is wrong"
         )
 
@@ -120,7 +125,8 @@ def _polygons(path: Path, data: bytes, name: str, kind: str) -> Polygons:
         with np.load(target, allow_pickle=False) as arrays:
             found: dict[str, Array] = {key: arrays[key] for key in arrays.files}
     points, offsets, corners = (found.pop(key) for key in ("points", "offsets", "corners"))
-    sizes = np.diff(offsets.astype(np.int64))
+    ends = offsets.astype(np.int64)
+    sizes = ends[1:] - ends[:-1]
     if (sizes < 0).any() or sizes.sum() != len(corners):
         raise SurfaceError(f"{name}: the sizes of its polygons do not add up; the file is damaged")
     vertices = points.astype(np.float64).reshape(-1, 3)

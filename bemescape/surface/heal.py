@@ -46,8 +46,8 @@ class Change:
     count : int
         How many things were changed.
     volume_change_um3, area_change_um2 : float
-        After minus before. Where the mesh was not closed before, its volume is that of the cone from the middle of the
-        bounding box.
+        After minus before; the volume of a mesh with holes is measured as if each were closed by a fan
+        around its middle.
     detail : str
         What and where, in words.
     faces : tuple of int
@@ -103,9 +103,10 @@ def heal_surface(
     surface : Surface
         As from `read_unhealed`, or made in memory.
     mode : "auto", "none" or "rebuild"
-        "none" changes nothing and refuses what cannot be solved. "auto" joins equal vertices, drops doubled and flat
-        faces and debris, splits non-manifold edges and vertices, closes small holes and orients outwards. "rebuild" is
-        the last resort: a new surface around what is inside, from a signed distance on voxels.
+        "none" changes nothing and refuses what cannot be solved. "auto" joins equal vertices, drops "
+            "doubled and flat
+        faces and debris, splits non-manifold edges and vertices, closes small holes and orients outwards.
+        "rebuild" is the last resort: a new surface around what is inside, from a signed distance on voxels.
     voxel : length, optional
         Voxel size for "rebuild"; chosen from the mesh if not given.
     progress : callable
@@ -149,6 +150,8 @@ def heal_surface(
         _tidy(log)
         _orient_closed_parts(log)
         log.apply("rebuilt surface", [rebuilt(log.mesh, surface.name, voxel_um, progress)])
+        log.apply("separated sheets", [separate_sheets(log.mesh, borders=True)])
+        log.apply("dropped part", drop_closed_debris(log.mesh))
         log.apply("turned parts", [turn_outward(log.mesh)])
     if not log.changes:
         return surface
@@ -158,7 +161,9 @@ def heal_surface(
 def _finished(surface: Surface, before: HealthReport, log: _Log, mode: Literal["auto", "rebuild"]) -> Surface:
     mesh = log.mesh.without_unused_vertices()
     if not len(mesh.faces):
-        raise SurfaceError(f"{surface.name}: nothing closed is left after dropping faces without area or partner")
+        raise SurfaceError(
+            f"{surface.name}: nothing closed is left after dropping faces without area or partner"
+        )
     after = check_surface(mesh.vertices, mesh.faces)
     if not after.ok:
         remedy = "try heal='rebuild'" if mode == "auto" else "repair it in a mesh editor"
@@ -192,7 +197,9 @@ def _refusal(
         remedy += " or close it in a mesh editor; an open sheet has no inside"
     others = [error.kind for error in errors if error is not worst]
     also = f" (also: {', '.join(others)})" if others else ""
-    return SurfaceError(f"{name} is not a closed surface: {worst.message}{where}{also}; {remedy}", faces=faces)
+    return SurfaceError(
+        f"{name} is not a closed surface: {worst.message}{where}{also}; {remedy}", faces=faces
+    )
 
 
 class _Log:
@@ -203,7 +210,7 @@ class _Log:
         self.changes: list[Change] = []
 
     def apply(self, kind: str, repairs: Iterable[Repair | None]) -> bool:
-        """Take over the meshes of the repairs, each of which builds on the one before; whether there were any."""
+        """Take over the meshes of the repairs, each built on the one before; whether there were any."""
         done = [repair for repair in repairs if repair is not None]
         for repair in done[:_SINGLE]:
             self._add(kind, repair)
@@ -211,18 +218,26 @@ class _Log:
             rest = done[_SINGLE:]
             faces = np.concatenate([repair.faces for repair in rest])
             detail = f"{len(rest)} more of the same kind"
-            self._add(kind, Repair(rest[-1].mesh, sum(repair.count for repair in rest), detail, faces))
+            volumes = sum(repair.volume_change or 0.0 for repair in rest)
+            areas = sum(repair.area_change or 0.0 for repair in rest)
+            self._add(
+                kind,
+                Repair(rest[-1].mesh, sum(repair.count for repair in rest), detail, faces, volumes, areas),
+            )
         return bool(done)
 
     def _add(self, kind: str, repair: Repair) -> None:
-        volume, area = self.mesh.volume, float(self.mesh.areas.sum())
+        volume, area = repair.volume_change, repair.area_change
+        if volume is None or area is None:
+            volume = repair.mesh.volume - self.mesh.volume
+            area = float(repair.mesh.areas.sum() - self.mesh.areas.sum())
         self.mesh = repair.mesh
         self.changes.append(
             Change(
                 kind=kind,
                 count=repair.count,
-                volume_change_um3=self.mesh.volume - volume,
-                area_change_um2=float(self.mesh.areas.sum()) - area,
+                volume_change_um3=volume,
+                area_change_um2=area,
                 detail=repair.detail,
                 faces=tuple(int(face) for face in repair.faces[:_LISTED]),
             )
@@ -264,9 +279,9 @@ def _repair(log: _Log, *, already_fine: bool) -> None:
     log.apply("separated sheets", [separate_sheets(log.mesh, borders=False)])
     log.apply("dropped part", drop_open_scraps(log.mesh))
     if log.apply("closed hole", close_holes(log.mesh)):
-        # A lid may repeat a face that was left over beside the hole.
+        # A lid may repeat a face that was left over beside the hole, or be flat itself.
         log.apply("dropped doubled faces", [drop_doubled_faces(log.mesh)])
+        log.apply("removed flat faces", [remove_flat_faces(log.mesh)])
     log.apply("separated sheets", [separate_sheets(log.mesh, borders=True)])
-    log.apply("removed flat faces", [remove_flat_faces(log.mesh)])
     log.apply("dropped part", drop_closed_debris(log.mesh))
     log.apply("turned parts", [turn_outward(log.mesh)])

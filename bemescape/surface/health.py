@@ -17,6 +17,7 @@ from bemescape.surface.measure import (
     equal_rows,
     face_volumes,
     radius_ratios,
+    sums,
     triangle_keys,
 )
 from bemescape.surface.nesting import nesting_depths
@@ -70,8 +71,8 @@ class Finding:
 class Part:
     """Faces that hang together by edges.
 
-    `depth` counts the closed parts around it and `handles` the holes through it (0 a ball, 1 a ring); both are None
-    where the part is not closed. `volume_um3` is negative for a part whose faces look inwards.
+    `depth` counts the closed parts around it and `handles` the holes through it (0 a ball, 1 a ring); both
+    are None where the part is not closed. `volume_um3` is negative for a part whose faces look inwards.
     """
 
     faces: int
@@ -106,8 +107,9 @@ class Spread:
 class HealthReport:
     """State of a mesh; lengths in µm.
 
-    `parts` and `loops` list the largest ones only; `part_count` and `loop_count` are complete. `handles` is the total
-    over closed parts. `crossing_faces` is None where the search was given up because the mesh is too large.
+    `parts` and `loops` list the largest ones only; `part_count` and `loop_count` are complete. `handles`
+    is the total over closed parts. `crossing_faces` is None where the search was given up because the mesh
+    is too large.
     """
 
     vertices: int
@@ -157,8 +159,10 @@ class HealthReport:
         return [
             f"{self.faces} faces, {self.vertices} vertices: {state}, {parts}, {self.handles} handles",
             f"volume {self.volume_um3:.5g} µm³, area {self.area_um2:.5g} µm², box {size}",
-            f"edges {format_length(edge.smallest)} to {format_length(edge.largest)}, median {format_length(edge.median)}; "
-            f"triangle quality (1 is equilateral) lowest {quality.smallest:.2g}, 5 % below {quality.low:.2g}, "
+            f"edges {format_length(edge.smallest)} to {format_length(edge.largest)}, median "
+            f"{format_length(edge.median)}; "
+            f"triangle quality (1 is equilateral) lowest {quality.smallest:.2g}, 5 % below "
+            f"{quality.low:.2g}, "
             f"median {quality.median:.2g}",
             *(f"{finding.severity}: {finding.message}" for finding in self.findings),
         ]
@@ -181,7 +185,9 @@ def check_surface(vertices: Floats, faces: Ints, *, crossings: bool = True) -> H
     HealthReport
         `.ok` tells whether the mesh is one or several closed, well-oriented shells.
     """
-    return _Examination(np.asarray(vertices, np.float64), np.asarray(faces, np.int64)).report(crossings=crossings)
+    return _Examination(np.asarray(vertices, np.float64), np.asarray(faces, np.int64)).report(
+        crossings=crossings
+    )
 
 
 def _triple(values: Floats) -> tuple[float, float, float]:
@@ -239,13 +245,20 @@ class _Examination:
         self.note("unused vertices", "note", unused, f"{unused} vertices belong to no face")
         if edges.open_half_edges.size:
             self.note(
-                "equal vertices", "note", equal, f"{equal} vertices repeat the position of another; welding may close gaps"
+                "equal vertices",
+                "note",
+                equal,
+                f"{equal} vertices repeat the position of another; welding may close gaps",
             )
         quality = radius_ratios(self.areas, self.lengths)
         thin = np.flatnonzero(quality < _THIN)
         thin = thin[np.argsort(quality[thin])]
         self.note(
-            "thin triangles", "note", len(thin), f"{len(thin)} triangles are needles (quality below {_THIN})", thin
+            "thin triangles",
+            "note",
+            len(thin),
+            f"{len(thin)} triangles are needles (quality below {_THIN})",
+            thin,
         )
         self._size(box)
         return HealthReport(
@@ -286,8 +299,8 @@ class _Examination:
         count, line = linked_groups(len(ends), place[: len(rim)], place[len(rim) :])
         line = line[place[: len(rim)]]
         size = np.bincount(line, minlength=count)
-        length = np.bincount(line, weights=np.linalg.norm(b - a, axis=1), minlength=count)
-        middle = np.stack([np.bincount(line, weights=0.5 * (a + b)[:, k], minlength=count) for k in range(3)], axis=1)
+        length = sums(line, np.linalg.norm(b - a, axis=1), count)
+        middle = sums(line, 0.5 * (a + b), count)
         loops = [
             BorderLoop(int(size[k]), float(length[k]), _triple(middle[k] / size[k]))
             for k in np.argsort(-length, kind="stable")
@@ -299,7 +312,8 @@ class _Examination:
                 "open edges",
                 "error",
                 len(rim),
-                f"{len(rim)} open edges around {len(loops)} holes; the longest rim has {longest.edges} edges, "
+                f"{len(rim)} open edges around {len(loops)} holes; the longest rim has {longest.edges} "
+                f"edges, "
                 f"{format_length(longest.length_um)}, around ({where}) µm",
                 rim // 3,
                 0.5 * (a + b),
@@ -316,7 +330,8 @@ class _Examination:
             "crowded edges",
             "error",
             len(crowded),
-            f"{len(crowded)} edges are shared by more than two faces (non-manifold), as where voxels touch along an edge",
+            f"{len(crowded)} edges are shared by more than two faces (non-manifold), as where voxels touch "
+            f"along an edge",
             listed,
             middles,
         )
@@ -343,7 +358,9 @@ class _Examination:
         keys = triangle_keys(self.faces)
         doubled = np.flatnonzero(np.bincount(keys)[keys] > 1)
         extra = len(keys) - (int(keys.max(initial=-1)) + 1)
-        self.note("doubled faces", "error", extra, f"{extra} faces repeat the corners of another face", doubled)
+        self.note(
+            "doubled faces", "error", extra, f"{extra} faces repeat the corners of another face", doubled
+        )
         limit = ZERO_ALTITUDE * box_diagonal(self.vertices)
         zero = np.flatnonzero(altitudes(self.areas, self.lengths) <= limit)
         self.note("zero-area faces", "error", len(zero), f"{len(zero)} faces have no area", zero)
@@ -369,12 +386,9 @@ class _Examination:
         depth[whole] = nesting_depths(vertices, faces, closed_number[part], int(whole.sum()))
         centre = vertices[faces].mean(axis=1)
         size = np.bincount(part, minlength=count)
-        area = np.bincount(part, weights=self.areas, minlength=count)
-        volume = np.bincount(
-            part, weights=face_volumes(vertices, faces, vertices.mean(axis=0)), minlength=count
-        )
-        middle = np.stack([np.bincount(part, weights=centre[:, k], minlength=count) for k in range(3)], axis=1)
-        middle /= np.maximum(size, 1)[:, None]
+        area = sums(part, self.areas, count)
+        volume = sums(part, face_volumes(vertices, faces, vertices.mean(axis=0)), count)
+        middle = sums(part, centre, count) / np.maximum(size, 1)[:, None]
         _, first_corner = np.unique(fans, return_index=True)
         fan_count = np.bincount(part[first_corner // 3], minlength=count)
         edge_count = np.bincount(part[edges.order[edges.starts] // 3], minlength=count)
@@ -427,12 +441,17 @@ class _Examination:
         outer = int((depth % 2 == 0)[whole & (depth >= 0)].sum())
         unknown = int((whole & (depth < 0)).sum())
         self.note(
-            "obstacles", "note", inner, f"{inner} closed parts lie inside another: obstacles that molecules go around",
+            "obstacles", "note", inner, f"{inner} closed parts lie inside another: obstacles that molecules "
+                f"go around",
             np.flatnonzero(((depth % 2 == 1) & (depth >= 0))[part])[:_LISTED],
         )  # fmt: skip
         if outer > 1:
             self.note(
-                "separate bodies", "note", outer, f"{outer} separate bodies: each needs a window of its own", ()
+                "separate bodies",
+                "note",
+                outer,
+                f"{outer} separate bodies: each needs a window of its own",
+                (),
             )
         self.note(
             "unplaced parts", "error", unknown,
@@ -464,7 +483,8 @@ class _Examination:
             "crossing faces",
             "warning",
             len(within),
-            f"{len(within)} faces cross other faces of the same part; the volume there is counted twice or lost",
+            f"{len(within)} faces cross other faces of the same part; the volume there is counted twice or "
+            f"lost",
             within,
         )
         return len(np.unique(found.pairs))

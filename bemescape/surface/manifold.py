@@ -5,19 +5,20 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from bemescape.surface.measure import face_volumes
+from bemescape.surface.measure import face_volumes, sums
 from bemescape.surface.repairs import Repair
 from bemescape.surface.topology import Edges, corner_fans, oriented_signs
 from bemescape.surface.working import Working
 
 __all__ = ["agree_orientation", "separate_sheets"]
 
+Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 
 def agree_orientation(mesh: Working) -> Repair | None:
-    """Turn faces around so that neighbours look to the same side; the majority of each piece stays as it is."""
-    edges = Edges.of(mesh.faces)
+    """Turn faces around so that neighbours look to the same side; the majority of each piece stays."""
+    edges = mesh.edges
     links, opposed = edges.pairs, edges.same_way
     turns = _turns_around_crowded_edges(mesh, edges)
     alternate = [np.stack([turn, np.roll(turn, -1)], axis=1) for turn in turns if len(turn) % 2 == 0]
@@ -41,13 +42,14 @@ def agree_orientation(mesh: Working) -> Repair | None:
 
 
 def separate_sheets(mesh: Working, *, borders: bool) -> Repair | None:
-    """Give each sheet its own vertices along shared edges and at shared vertices; no point of the surface moves.
+    """Give each sheet its own vertices along shared edges and at shared vertices.
 
-    Faces around a crowded edge are sorted by angle and joined in pairs across the wedges that the solid fills, so that
-    bodies which merely touch come apart. A face that finds no partner is left with an open edge. With `borders` False,
-    vertices where the rims of holes touch stay whole, so that each hole can be closed by itself.
+    No point of the surface moves. Faces around a crowded edge are sorted by angle and joined in pairs across
+    the wedges that the solid fills, so that bodies which merely touch come apart. A face that finds no
+    partner is left with an open edge. With `borders` False, vertices where the rims of holes touch stay
+    whole, so that each hole can be closed by itself.
     """
-    edges = Edges.of(mesh.faces)
+    edges = mesh.edges
     matched, crowded = _matched_pairs(mesh, edges)
     pairs = np.concatenate([edges.pairs, matched])
     count, fan = corner_fans(edges, pairs)
@@ -70,14 +72,17 @@ def separate_sheets(mesh: Working, *, borders: bool) -> Repair | None:
     split, halved = _halve_still_shared(split, matched)
     added = len(split.vertices) - len(mesh.vertices)
     touched = np.unique(np.concatenate([matched.reshape(-1) // 3, np.flatnonzero(extra[fan]) // 3]))
-    detail = f"{crowded} edges of more than two faces and {int(extra.sum())} vertices were split, {added} vertices added"
+    detail = (
+        f"{crowded} edges of more than two faces and {int(extra.sum())} vertices were split, "
+        f"{added} vertices added"
+    )
     if halved:
         detail += f" ({halved} of them half-way along an edge)"
     return Repair(split, max(crowded, int(extra.sum())), detail, mesh.face_source[touched])
 
 
 def _turns_around_crowded_edges(mesh: Working, edges: Edges) -> list[Ints]:
-    """Half-edges of each crowded edge, counter-clockwise seen against its direction from lower to higher vertex."""
+    """Half-edges of each crowded edge, counter-clockwise about its direction (lower to higher)."""
     turns = []
     for edge in edges.crowded:
         half = edges.half_edges(int(edge))
@@ -99,15 +104,17 @@ def _matched_pairs(mesh: Working, edges: Edges) -> tuple[Ints, int]:
     turns = _turns_around_crowded_edges(mesh, edges)
     if not turns:
         return np.zeros((0, 2), dtype=np.int64), 0
-    # Whether a part looks outwards is told by the sign of its volume; for pairing only, nothing is turned. Pieces between
-    # crowded edges are not closed and have no volume of their own, so parts are joined by any shared edge.
+    # Whether a part looks outwards is told by the sign of its volume; for pairing only, nothing is turned.
+    # Pieces between crowded edges are not closed and have no volume of their own, so parts are joined by
+    # any shared edge.
     _, joined = edges.parts()
-    volume = np.bincount(joined, weights=face_volumes(mesh.vertices, mesh.faces, mesh.origin))
+    volume = sums(joined, face_volumes(mesh.vertices, mesh.faces, mesh.origin), int(joined.max()) + 1)
     outward = volume[joined] >= 0.0
     pairs = []
     for turn in turns:
         low = np.minimum(edges.tail[turn[0]], edges.head[turn[0]])
-        # A face that runs up the edge and looks outwards has the solid on its clockwise side, one that runs down on the other.
+        # A face that runs up the edge and looks outwards has the solid on its clockwise side, one that
+        # runs down on the other.
         closing = (edges.tail[turn] == low) == outward[turn // 3]
         waiting: list[int] = []
         late: list[int] = []
@@ -125,20 +132,22 @@ def _matched_pairs(mesh: Working, edges: Edges) -> tuple[Ints, int]:
 
 
 def _halve_still_shared(mesh: Working, pairs: Ints) -> tuple[Working, int]:
-    """Cut pairs of faces at the middle of an edge that still has more than two faces after splitting its ends.
+    """Cut pairs of faces at the middle of an edge that still has more than two faces.
 
-    That happens where the sheets hang together around both ends of the edge, so that no vertex could be split.
+    That happens where the sheets hang together around both ends of the edge, so that no vertex could be
+    split.
     """
     halved = 0
     partner = dict(pairs.tolist()) | {b: a for a, b in pairs.tolist()}
     while True:
-        edges = Edges.of(mesh.faces)
+        edges = mesh.edges
         todo = [int(h) for edge in edges.crowded for h in edges.half_edges(int(edge)) if int(h) in partner]
         used: set[int] = set()
         faces, source = mesh.faces.copy(), mesh.face_source.copy()
         more_faces: list[list[int]] = []
         more_source: list[int] = []
-        middles, middle_source = [], []
+        middles: list[Floats] = []
+        middle_source: list[int] = []
         for half in todo:
             other = partner.get(half, -1)
             if other < 0 or half // 3 in used or other // 3 in used or half // 3 == other // 3:
@@ -150,7 +159,7 @@ def _halve_still_shared(mesh: Working, pairs: Ints) -> tuple[Working, int]:
             middle_source.append(int(mesh.vertex_source[ends[0]]))
             for h in (half, other):
                 face, k = divmod(h, 3)
-                a, b, c = (int(mesh.faces[face, (k + step) % 3]) for step in range(3))
+                b, c = (int(mesh.faces[face, (k + step) % 3]) for step in (1, 2))
                 # The face keeps its other two edges in place, so that waiting pairs on them stay valid.
                 faces[face, (k + 1) % 3] = middle
                 more_faces.append([middle, b, c])

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -12,6 +14,7 @@ __all__ = [
     "equal_rows",
     "face_volumes",
     "radius_ratios",
+    "sums",
     "triangle_keys",
 ]
 
@@ -41,7 +44,8 @@ def edge_lengths(vertices: Floats, faces: Ints) -> Floats:
 def altitudes(areas: Floats, lengths: Floats) -> Floats:
     """Smallest altitude (m,) in µm: twice the area over the longest edge, 0 for a point."""
     longest = lengths.max(axis=1)
-    return np.divide(2.0 * areas, longest, out=np.zeros_like(areas), where=longest > 0.0)
+    heights: Floats = np.divide(2.0 * areas, longest, out=np.zeros_like(areas), where=longest > 0.0)
+    return heights
 
 
 def radius_ratios(areas: Floats, lengths: Floats) -> Floats:
@@ -52,7 +56,15 @@ def radius_ratios(areas: Floats, lengths: Floats) -> Floats:
     half = 0.5 * lengths.sum(axis=1)
     below = half * lengths.prod(axis=1)
     ratios = np.divide(8.0 * areas**2, below, out=np.zeros_like(areas), where=below > 0.0)
-    return np.minimum(ratios, 1.0)
+    capped: Floats = np.minimum(ratios, 1.0)
+    return capped
+
+
+def sums(group: Ints, values: NDArray[Any], count: int) -> Floats:
+    """Sum of `values` (k,) or (k, d) over each of `count` groups: (count,) or (count, d)."""
+    if values.ndim == 1:
+        return np.asarray(np.bincount(group, weights=values, minlength=count), dtype=np.float64)
+    return np.stack([sums(group, column, count) for column in values.T], axis=1)
 
 
 def equal_rows(rows: NDArray[np.generic]) -> Ints:

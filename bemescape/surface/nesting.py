@@ -13,7 +13,8 @@ Ints = NDArray[np.int64]
 #: With more parts than this, depths are not determined: such a mesh is debris, not a cell.
 PARTS_LIMIT = 3000
 
-#: A linear map of no simple angle (containment survives it), so that rays hit no edge of a voxel-aligned mesh head-on.
+#: A linear map of no simple angle (containment survives it), so that rays hit no edge of a voxel-aligned
+#: mesh head-on.
 _TURN = np.array(
     [
         [0.8170416, -0.4253718, 0.3894183],
@@ -24,11 +25,12 @@ _TURN = np.array(
 
 
 def nesting_depths(vertices: Floats, faces: Ints, part: Ints, count: int) -> Ints:
-    """Number of other closed parts that contain each part (count,); -1 where there are more than `PARTS_LIMIT`.
+    """Number of other closed parts that contain each part (count,).
 
-    `part` (m,) numbers the part of each face; faces of open parts carry -1. A part is placed by rays from the middles of
-    its largest faces: it lies inside a part whose surface the ray crosses an odd number of times. Parts that cross one
-    another have no depth; what is returned for them follows the majority of three rays.
+    All are -1 where there are more than `PARTS_LIMIT`. `part` (m,) numbers the part of each face; faces of
+    open parts carry -1. A part is placed by rays from the middles of its largest faces: it lies inside a
+    part whose surface the ray crosses an odd number of times. Parts that cross one another have no depth;
+    what is returned for them follows the majority of three rays.
     """
     if count > PARTS_LIMIT:
         return np.full(count, -1, dtype=np.int64)
@@ -42,9 +44,7 @@ def nesting_depths(vertices: Floats, faces: Ints, part: Ints, count: int) -> Int
     box_high = np.full((count, 3), -np.inf)
     np.minimum.at(box_low, owner, low)
     np.maximum.at(box_high, owner, high)
-    sizes = np.linalg.norm(
-        np.cross(corners[:, 1] - corners[:, 0], corners[:, 2] - corners[:, 0]), axis=1
-    )
+    sizes = np.linalg.norm(np.cross(corners[:, 1] - corners[:, 0], corners[:, 2] - corners[:, 0]), axis=1)
     by_part = np.lexsort((-sizes, owner))
     begin = np.searchsorted(owner[by_part], np.arange(count + 1))
     depths = np.zeros(count, dtype=np.int64)
@@ -82,4 +82,5 @@ def _ray_hits(point: Floats, corners: Floats) -> NDArray[np.bool_]:
     normal = np.cross(b - a, c - a)
     # Height of the plane over the point: n·a / n_z.
     height = np.einsum("ij,ij->i", normal, a)
-    return hit & (height * normal[:, 2] > 0.0)
+    above: NDArray[np.bool_] = hit & (height * normal[:, 2] > 0.0)
+    return above

@@ -102,7 +102,9 @@ def loaded_rows(
         return np.loadtxt(rows, dtype=np.float64, comments=None, ndmin=2, usecols=columns)
     except (ValueError, IndexError, OverflowError) as error:
         reason = str(error).split(";")[0].split("\n")[0][:120]
-        raise SurfaceError(f"{name}: {what} cannot be read as numbers ({reason}); export the file again") from error
+        raise SurfaceError(
+            f"{name}: {what} cannot be read as numbers ({reason}); export the file again"
+        ) from error
 
 
 def triangulated(polygons: Polygons, name: str) -> Triangles:
@@ -116,7 +118,8 @@ def triangulated(polygons: Polygons, name: str) -> Triangles:
     vertices, sizes, corners = polygons.vertices, polygons.sizes, polygons.corners
     if len(vertices) == 0 or len(sizes) == 0:
         raise SurfaceError(
-            f"{name} holds {len(vertices)} vertices and {len(sizes)} faces; a surface needs at least 4 of each: "
+            f"{name} holds {len(vertices)} vertices and {len(sizes)} faces; a surface needs at least 4 of "
+            f"each: "
             "was it exported as points or lines?"
         )
     _refuse_bad_numbers(polygons, name)
@@ -136,13 +139,15 @@ def _refuse_bad_numbers(polygons: Polygons, name: str) -> None:
     if len(bad):
         position = ", ".join(f"{value:g}" for value in vertices[bad[0]])
         raise SurfaceError(
-            f"{name}: {len(bad)} of {len(vertices)} vertices are not finite positions, the first is number {bad[0]} "
+            f"{name}: {len(bad)} of {len(vertices)} vertices are not finite positions, the first is number "
+            f"{bad[0]} "
             f"at ({position}); export the mesh again without them"
         )
     short = np.flatnonzero(sizes < 3)
     if len(short):
         raise SurfaceError(
-            f"{name}: face {short[0]} has {sizes[short[0]]} corners, at least 3 are needed ({len(short)} such faces)",
+            f"{name}: face {short[0]} has {sizes[short[0]]} corners, at least 3 are needed ({len(short)} "
+            f"such faces)",
             faces=tuple(int(k) for k in short[:24]),
         )
     wrong = np.flatnonzero((corners < 0) | (corners >= len(vertices)))
@@ -156,7 +161,10 @@ def _refuse_bad_numbers(polygons: Polygons, name: str) -> None:
 
 
 def _cut(
-    vertices: NDArray[np.float64], sizes: NDArray[np.int64], starts: NDArray[np.int64], corners: NDArray[np.int64]
+    vertices: NDArray[np.float64],
+    sizes: NDArray[np.int64],
+    starts: NDArray[np.int64],
+    corners: NDArray[np.int64],
 ) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
     """Triangles (m, 3) and the polygon of each; concave polygons are cut by ear clipping (VTK)."""
     import pyvista
@@ -164,9 +172,7 @@ def _cut(
     pieces = [corners[starts[sizes == 3][:, None] + np.arange(3)]]
     parents = [np.flatnonzero(sizes == 3)]
     many = np.flatnonzero(sizes > 3)
-    packed = np.concatenate(
-        [np.r_[sizes[k], corners[starts[k] : starts[k] + sizes[k]]] for k in many]
-    )
+    packed = np.concatenate([np.r_[sizes[k], corners[starts[k] : starts[k] + sizes[k]]] for k in many])
     mesh = pyvista.PolyData(vertices, packed)
     mesh.cell_data["polygon"] = many
     cut = mesh.triangulate()

@@ -120,7 +120,8 @@ def file_unit_um(unit: Quantity | Sequence[Quantity] | None) -> NDArray[np.float
     """
     if unit is None or (isinstance(unit, str) and not unit.strip()):
         raise SettingsError(
-            "mesh files carry no unit: say what one unit of the file is, for example unit='nm', '4 nm' for voxels or "
+            "mesh files carry no unit: say what one unit of the file is, for example unit='nm', '4 nm' for "
+            "voxels or "
             "('4 nm', '4 nm', '40 nm') for each axis"
         )
     if isinstance(unit, Sequence) and not isinstance(unit, str):
@@ -141,7 +142,8 @@ def _content(path: Path) -> bytes:
         size = path.stat().st_size
         if size > FILE_LIMIT_BYTES:
             raise SurfaceError(
-                f"{path.name} has {size / 1e6:.0f} MB (limit {FILE_LIMIT_BYTES / 1e6:.0f} MB); reduce the number of "
+                f"{path.name} has {size / 1e6:.0f} MB (limit {FILE_LIMIT_BYTES / 1e6:.0f} MB); reduce the "
+                f"number of "
                 "triangles, or save it as binary PLY"
             )
         data = path.read_bytes()
@@ -160,13 +162,17 @@ def _checked_kind(path: Path, data: bytes) -> str:
         known = ", ".join(_FORMATS)
         hint = f"; its content looks like {looks}" if looks else ""
         raise SurfaceError(f"{path.name} does not end in one of {known}{hint}: rename or convert it")
-    # STL, OBJ and OFF have no safe mark: only a content that is surely something else speaks against the ending.
+    # STL, OBJ and OFF have no safe mark: only a content that is surely something else speaks against the
+    # ending.
     if looks is not None and looks != ending:
         raise SurfaceError(
-            f"{path.name} ends in {path.suffix} but its content looks like {looks}; rename it or export it again"
+            f"{path.name} ends in {path.suffix} but its content looks like {looks}; rename it or export it "
+            f"again"
         )
     if looks is None and ending in {"PLY", "GLB", "VTP", "VTK", "glTF"}:
-        raise SurfaceError(f"{path.name} does not begin as a {ending} file does; the file is damaged or mislabelled")
+        raise SurfaceError(
+            f"{path.name} does not begin as a {ending} file does; the file is damaged or mislabelled"
+        )
     return ending
 
 

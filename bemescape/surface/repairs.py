@@ -1,4 +1,4 @@
-"""Repairs of single kinds of damage: each takes a mesh and returns a changed copy, or None where nothing was wrong."""
+"""Repairs of single kinds of damage: a mesh in, a changed copy out, or None where nothing was wrong."""
 
 from __future__ import annotations
 
@@ -25,24 +25,32 @@ __all__ = [
 
 Ints = NDArray[np.int64]
 
-#: Vertices on open edges closer than this part of the bounding box's diagonal are one (rounding of text files)...
+#: Vertices on open edges closer than this part of the bounding box's diagonal are one (rounding of text
+#: files)...
 _WELD_NEAR = (1e-9, 1e-7, 1e-6)
 #: ...unless that would swallow an edge: the distance stays below this part of the shortest open edge.
 _WELD_EDGE_SHARE = 0.2
-#: A flat face that cannot be turned away is pulled together only where its shortest edge is below this part of the
-#: diagonal, so that the shape does not move.
+#: A flat face that cannot be turned away is pulled together only where its shortest edge is below this
+#: part of the diagonal, so that the shape does not move.
 _PULL = 1e-6
 _PASSES = 12
 
 
 @dataclass(frozen=True)
 class Repair:
-    """A changed mesh and what was changed: `faces` are numbers of the original mesh."""
+    """A changed mesh and what was changed.
+
+    `faces` are numbers of the original mesh. Several repairs made at once share the mesh with all of them
+    done and carry their own `volume_change` (µm³) and `area_change` (µm²); otherwise these follow from the
+    meshes before and after.
+    """
 
     mesh: Working
     count: int
     detail: str
     faces: Ints
+    volume_change: float | None = None
+    area_change: float | None = None
 
 
 def drop_unused_vertices(mesh: Working) -> Repair | None:
@@ -57,7 +65,8 @@ def drop_unused_vertices(mesh: Working) -> Repair | None:
 def weld_equal_vertices(mesh: Working) -> Repair | None:
     """Make vertices on open edges one where their positions are equal.
 
-    Vertices away from open edges stay apart: equal positions there are sheets that touch and were told apart on purpose.
+    Vertices away from open edges stay apart: equal positions there are sheets that touch and were told
+    apart on purpose.
     """
     rim = _rim_vertices(mesh)
     if not len(rim):
@@ -72,7 +81,7 @@ def weld_near_vertices(mesh: Working) -> Repair | None:
         rim = _rim_vertices(mesh)
         if not len(rim):
             return None
-        edges = Edges.of(mesh.faces)
+        edges = mesh.edges
         ends = mesh.vertices[edges.ends[edges.counts == 1]]
         lengths = np.linalg.norm(ends[:, 0] - ends[:, 1], axis=1)
         shortest = float(lengths[lengths > 0.0].min(initial=np.inf))
@@ -87,7 +96,7 @@ def weld_near_vertices(mesh: Working) -> Repair | None:
 
 
 def _rim_vertices(mesh: Working) -> Ints:
-    edges = Edges.of(mesh.faces)
+    edges = mesh.edges
     return np.unique(edges.ends[edges.counts == 1])
 
 
@@ -120,9 +129,9 @@ def drop_collapsed_faces(mesh: Working) -> Repair | None:
 def drop_doubled_faces(mesh: Working) -> Repair | None:
     """Keep one of faces with the same corners, or none where they are a wall inside the volume.
 
-    Doubled faces that hang together are judged as one sheet by what else meets at its border: one other face at each
-    border edge means that the sheet belongs to the surface; two mean that it divides a volume (as where cells of a
-    segmentation were joined).
+    Doubled faces that hang together are judged as one sheet by what else meets at its border: one other
+    face at each border edge means that the sheet belongs to the surface; two mean that it divides a volume
+    (as where cells of a segmentation were joined).
     """
     keys = triangle_keys(mesh.faces)
     _, first = np.unique(keys, return_index=True)
@@ -156,9 +165,10 @@ def drop_doubled_faces(mesh: Working) -> Repair | None:
 def remove_flat_faces(mesh: Working) -> Repair | None:
     """Remove faces without area and leave no crack.
 
-    A flat face whose longest edge has a neighbour is turned away: the middle corner, which lies on that edge, becomes a
-    corner of the neighbour, which is cut in two; no point of the surface moves. What cannot be turned is pulled
-    together along its shortest edge, if that is short enough not to move the shape.
+    A flat face whose longest edge has a neighbour is turned away: the middle corner, which lies on that
+    edge, becomes a corner of the neighbour, which is cut in two; no point of the surface moves. What
+    cannot be turned is pulled together along its shortest edge, if that is short enough not to move the
+    shape.
     """
     count = 0
     touched: list[Ints] = []
@@ -172,24 +182,30 @@ def remove_flat_faces(mesh: Working) -> Repair | None:
         touched.append(mesh.face_source[flat])
         count = max(count, len(flat))
         short = lengths[flat].min(axis=1) <= ZERO_ALTITUDE * mesh.diagonal
-        turned, done = _turned_away(mesh, flat[~short], bad, lengths)
+        turned, done = _turned_away(mesh, flat[~short], bad, lengths, into_existing=False)
         turned_count += done
         if done == 0:
             turned, done = _pulled_together(mesh, flat, lengths)
             pulled_count += done
         if done == 0:
+            # The new edge doubles another one; the sheets along it are told apart afterwards.
+            turned, done = _turned_away(mesh, flat[~short], bad, lengths, into_existing=True)
+            turned_count += done
+        if done == 0:
             break
         mesh = turned
     if not turned_count and not pulled_count:
         return None
-    detail = f"{turned_count} flat faces were turned away and {pulled_count} pulled together along a short edge"
+    detail = (
+        f"{turned_count} flat faces were turned away and {pulled_count} pulled together along a short edge"
+    )
     return Repair(mesh, count, detail, np.unique(np.concatenate(touched)))
 
 
 def _turned_away(
-    mesh: Working, flat: Ints, bad: NDArray[np.bool_], lengths: NDArray[np.float64]
+    mesh: Working, flat: Ints, bad: NDArray[np.bool_], lengths: NDArray[np.float64], *, into_existing: bool
 ) -> tuple[Working, int]:
-    edges = Edges.of(mesh.faces)
+    edges = mesh.edges
     twin = np.full(3 * len(mesh.faces), -1, dtype=np.int64)
     agreeing = edges.pairs[~edges.same_way]
     twin[agreeing[:, 0]], twin[agreeing[:, 1]] = agreeing[:, 1], agreeing[:, 0]
@@ -210,7 +226,9 @@ def _turned_away(
     _, alone = np.unique(new, return_index=True)
     free = np.zeros(len(new), dtype=bool)
     free[alone] = True
-    free &= ~np.isin(new, known) & (c != d)
+    free &= c != d
+    if not into_existing:
+        free &= ~np.isin(new, known)
     flat, other, a, b, c, d = (array[free] for array in (flat, other, a, b, c, d))
     faces, source = mesh.faces.copy(), mesh.face_source.copy()
     faces[flat] = np.stack([a, d, c], axis=1)

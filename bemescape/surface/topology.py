@@ -1,7 +1,7 @@
 """How triangles hang together: edges, parts, fans of faces around a vertex, border loops, orientation.
 
-Everything here is array work on faces (m, 3); positions play no part. Half-edge k of face f is number 3 f + k and runs
-from corner k to corner k+1.
+Everything here is array work on faces (m, 3); positions play no part. Half-edge k of face f is number 3 f
++ k and runs from corner k to corner k+1.
 """
 
 from __future__ import annotations
@@ -86,12 +86,14 @@ class Edges:
     def pairs(self) -> Ints:
         """The two half-edges of each edge that has exactly two (p, 2)."""
         first = self.starts[self.counts == 2]
-        return np.stack([self.order[first], self.order[first + 1]], axis=1)
+        pairs: Ints = np.stack([self.order[first], self.order[first + 1]], axis=1)
+        return pairs
 
     @cached_property
     def open_half_edges(self) -> Ints:
         """Half-edges that are alone on their edge."""
-        return self.order[self.starts[self.counts == 1]]
+        alone: Ints = self.order[self.starts[self.counts == 1]]
+        return alone
 
     @cached_property
     def crowded(self) -> Ints:
@@ -101,7 +103,8 @@ class Edges:
     @cached_property
     def same_way(self) -> Bools:
         """Whether both half-edges of each pair run the same way (p,), so that the two faces disagree."""
-        return self.tail[self.pairs[:, 0]] == self.tail[self.pairs[:, 1]]
+        same: Bools = self.tail[self.pairs[:, 0]] == self.tail[self.pairs[:, 1]]
+        return same
 
     def half_edges(self, edge: int) -> Ints:
         """Half-edges of one edge."""
@@ -118,7 +121,8 @@ class Edges:
 def corner_fans(edges: Edges, pairs: Ints) -> tuple[int, Ints]:
     """Fans of faces around each vertex, joined only through the half-edge `pairs` (p, 2).
 
-    Returns the number of fans and the fan of each face corner (3m,). A vertex with more than one fan is not manifold.
+    Returns the number of fans and the fan of each face corner (3m,). A vertex with more than one fan is
+    not manifold.
     """
     one, two = pairs[:, 0], pairs[:, 1]
     after_one, after_two = _next(one), _next(two)
@@ -134,7 +138,7 @@ def _next(half_edge: Ints) -> Ints:
 
 
 def oriented_signs(count: int, a: Ints, b: Ints, opposed: Bools) -> tuple[NDArray[np.int8], Ints, Ints]:
-    """Signs +1 or -1 of `count` faces so that linked faces agree, keeping most faces of each group as they are.
+    """Signs +1 or -1 of `count` faces so that linked faces agree, most of each group staying +1.
 
     `opposed` tells which links (a, b) join faces that now disagree.
 
@@ -149,8 +153,8 @@ def oriented_signs(count: int, a: Ints, b: Ints, opposed: Bools) -> tuple[NDArra
 
     Notes
     -----
-    Each face is doubled into a kept and a turned copy; links join copies that agree. The two copies of a face end up
-    in one component exactly where the surface is one-sided.
+    Each face is doubled into a kept and a turned copy; links join copies that agree. The two copies of a
+    face end up in one component exactly where the surface is one-sided.
     """
     if not opposed.any():
         _, group = linked_groups(count, a, b)
@@ -174,8 +178,8 @@ def oriented_signs(count: int, a: Ints, b: Ints, opposed: Bools) -> tuple[NDArra
 def border_loops(tails: Ints, heads: Ints) -> list[Ints]:
     """Closed loops of directed border edges, as vertex numbers in order, none of them touching itself.
 
-    A walk that comes back to a vertex it has passed cuts off the loop between, so that holes which share a vertex are told
-    apart. Edges that lead nowhere are left out.
+    A walk that comes back to a vertex it has passed cuts off the loop between, so that holes which share a
+    vertex are told apart. Edges that lead nowhere are left out.
     """
     leaving: dict[int, list[int]] = {}
     for tail, head in zip(tails.tolist(), heads.tolist(), strict=True):

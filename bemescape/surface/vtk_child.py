@@ -1,9 +1,10 @@
 """Reads one VTK file in a process of its own; started by `format_vtk`, never imported.
 
-VTK's readers trust what a file says about itself: a damaged one can end the whole process or fill the memory. Here
-that ends only the child. It imports nothing of the package, so it starts quickly.
+VTK's readers trust what a file says about itself: a damaged one can end the whole process or fill the
+memory. Here that ends only the child. It imports nothing of the package, so it starts quickly.
 
-Arguments: the kind ("vtp" or "vtk"), the file, the .npz to write, the limit of memory in bytes. Objections of VTK go
+Arguments: the kind ("vtp" or "vtk"), the file, the .npz to write, the limit of memory in bytes. Objections "
+    "of VTK go
 to stderr, where the parent reads them.
 """
 
@@ -11,6 +12,7 @@ from __future__ import annotations
 
 import os
 import sys
+from typing import Any
 
 os.environ["OPENBLAS_NUM_THREADS"] = "1"  # every idle thread would count against the limit of memory
 
@@ -26,7 +28,7 @@ def _limit_memory(limit: int) -> None:
     resource.setrlimit(resource.RLIMIT_AS, (limit, limit))
 
 
-def _numbers(attributes: object, prefix: str) -> dict[str, np.ndarray]:
+def _numbers(attributes: Any, prefix: str) -> dict[str, Any]:
     kept = {}
     for k in range(attributes.GetNumberOfArrays()):
         array = attributes.GetArray(k)  # None for text
@@ -60,14 +62,14 @@ def main(kind: str, source: str, target: str, limit: int) -> int:
     faces = {
         key: array[first : first + count] for key, array in _numbers(mesh.GetCellData(), "face ").items()
     }
-    np.savez(
-        target,
-        points=vtk_to_numpy(mesh.GetPoints().GetData()),
-        offsets=vtk_to_numpy(polygons.GetOffsetsArray()),
-        corners=vtk_to_numpy(polygons.GetConnectivityArray()),
+    found: dict[str, Any] = {
+        "points": vtk_to_numpy(mesh.GetPoints().GetData()),
+        "offsets": vtk_to_numpy(polygons.GetOffsetsArray()),
+        "corners": vtk_to_numpy(polygons.GetConnectivityArray()),
         **faces,
         **_numbers(mesh.GetPointData(), "vertex "),
-    )
+    }
+    np.savez(target, **found)
     return 0
 
 
