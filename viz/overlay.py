@@ -260,7 +260,7 @@ class Overlay:
             hide = label.kind in self._off or (self._hidden and self._hidden(label.place, to_eye))
             actor.SetVisibility(not hide)
             if not hide:
-                shown.append((actor, self._display(label.place)))
+                shown.append((actor, self.pixel(label.place)))
         # Text stays clear of the title, the scale bar, the colour bar, the places and other text.
         room = (0.015 * width, 0.10 * height, (_BAR_LEFT - 0.045) * width, height - 4.0 * font)
         taken = [_box(anchor, (font, font), "centre") for _, anchor in shown]
@@ -275,7 +275,8 @@ class Overlay:
             leaders.append([anchor, spot])
         _set_segments(self._leaders, np.array(leaders).reshape(-1, 2, 2))
 
-    def _display(self, place: Floats) -> Floats:
+    def pixel(self, place: Floats) -> Floats:
+        """Where `place` (3,) in µm lies in the picture: pixels from the lower left corner."""
         self._renderer.SetWorldPoint(*place, 1.0)
         self._renderer.WorldToDisplay()
         x, y, _ = self._renderer.GetDisplayPoint()

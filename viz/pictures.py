@@ -6,6 +6,8 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, get_args
 
+from matplotlib.image import imsave
+
 from bemescape.errors import SettingsError
 
 from .plots import convergence_figure, spread_figure
@@ -144,7 +146,7 @@ class _writing:
 def _shoot(plotter: pv.Plotter, path: Path) -> Path:
     try:
         with _writing(path):
-            plotter.screenshot(path)
+            imsave(path, plotter.screenshot(return_img=True), format="png")
     finally:
         plotter.close()
     return path

@@ -46,7 +46,7 @@ _CAPTIONS = {
         True,
     ),
     "spread.png": (
-        ("How the time is spread over the area of the wall, and against the distance to the nearest window."),
+        "How the time is spread over the area of the wall, and against the distance to the nearest window.",
         True,
     ),
 }
@@ -295,9 +295,10 @@ def _rule_of_thumb(summary: Summary) -> str:
         "<h2>Beside the rule of thumb</h2>"
         + _table(("", "mean escape time", "ratio"), rows)
         + "<p>The rule is for small, round, perfectly absorbing windows, far apart on a smooth roundish "
-        "wall, with a the radius of the disc that has the window's area. A neck, a constriction, a permeable or "
-        "crowded window makes the computed time longer; a window that is a large part of the wall, or an "
-        "elongated one, makes it shorter. A ratio far from 1 is the effect of the shape, not an error.</p>"
+        "wall, with a the radius of the disc that has the window's area. A neck, a constriction, a "
+        "permeable or crowded window makes the computed time longer; a window that is a large part of the "
+        "wall, or an elongated one, makes it shorter. A ratio far from 1 is the effect of the shape, not "
+        "an error.</p>"
     )
 
 

@@ -63,6 +63,7 @@ __all__ = [
     "paint_time",
     "scene_parts",
     "wall_scene",
+    "window_colours",
     "windows_scene",
 ]
 
@@ -149,6 +150,8 @@ class Scene:
 
     def skin(self, panels: NDArray[np.int64]) -> pv.PolyData:
         """The chosen panels as a mesh with corners of their own; cell array `panel` holds their numbers."""
+        if not len(panels):
+            return pv.PolyData()
         corners = self.result.vertices[self.result.faces[panels]].reshape(-1, 3)
         cells = np.column_stack([np.full(len(panels), 3), np.arange(3 * len(panels)).reshape(-1, 3)])
         mesh = pv.PolyData(corners, faces=cells.ravel())
@@ -241,20 +244,20 @@ def scene_parts(
     result = scene.result
     keep = keep or (lambda mesh: mesh)
     scale = time_colours(result, mode)
-    wall = scene.skin(np.flatnonzero(result.panel_window < 0))
-    wall.point_data["time"] = scene.corner_times_s[wall.cell_data["panel"]].ravel()
-    paint_time(wall, scale)
-    opening = scene.skin(np.flatnonzero(result.panel_window >= 0))
-    opening.cell_data["colour"] = (
-        map_colours(density_scale(result), result.panel_exit_density_per_um2[opening.cell_data["panel"]])
-        if windows == "density"
-        else np.tile(np.array(pv.Color(WINDOW).int_rgb, dtype=np.uint8), (opening.n_cells, 1))
-    )
-    for name, mesh in (("wall", wall), ("windows", opening)):
-        scene.actors[name] = _present(_add_skin(plotter, keep(mesh)))
+    scene.actors = {"wall": [], "windows": [], "slow": []}
+    wall = np.flatnonzero(result.panel_window < 0)
+    if len(wall):
+        skin = scene.skin(wall)
+        skin.point_data["time"] = scene.corner_times_s[wall].ravel()
+        paint_time(skin, scale)
+        scene.actors["wall"] = _present(_add_skin(plotter, keep(skin)))
+    opening = np.flatnonzero(result.panel_window >= 0)
+    if len(opening):
+        skin = scene.skin(opening)
+        skin.cell_data["colour"] = window_colours(result, opening, density=windows == "density")
+        scene.actors["windows"] = _present(_add_skin(plotter, keep(skin)))
     rims = border_edges(result.faces, result.panel_window)
     scene.actors["rims"] = _present(_add_lines(plotter, keep(_lines(result.vertices[rims])), INK, 3.5))
-    scene.actors["slow"] = []
     if slow:
         outline = keep(_lines(scene.slow_outline))
         scene.actors["slow"] += _present(_add_lines(plotter, outline, OUTLINE, 4.0))
@@ -268,6 +271,13 @@ def scene_parts(
 def _present(actor: Any) -> list[Any]:
     """The actor of a part, or nothing where the part is empty."""
     return [] if actor is None else [actor]
+
+
+def window_colours(result: EscapeResult, panels: NDArray[np.int64], *, density: bool) -> NDArray[np.uint8]:
+    """Colours (k, 3) of window panels: by exit density, or all in the flat colour of windows."""
+    if density:
+        return map_colours(density_scale(result), result.panel_exit_density_per_um2[panels])
+    return np.tile(np.array(pv.Color(WINDOW).int_rgb, dtype=np.uint8), (len(panels), 1))
 
 
 def paint_time(mesh: pv.PolyData, scale: ColourScale) -> None:
@@ -582,13 +592,13 @@ def _close_up(plotter: pv.Plotter, scene: Scene, number: int, scale: ColourScale
         view, reach = standard_view(result, "front"), np.inf
     around = _connected_within(result, panels, middle, reach)
     opening = scene.skin(around[result.panel_window[around] == number])
-    opening.cell_data["colour"] = map_colours(
-        scale, result.panel_exit_density_per_um2[opening.cell_data["panel"]]
-    )
+    opening.cell_data["colour"] = window_colours(result, opening.cell_data["panel"], density=True)
     _add_skin(plotter, opening, _NO_SHADING)
-    rest = scene.skin(around[result.panel_window[around] != number])
-    rest.cell_data["colour"] = np.full((rest.n_cells, 3), 232, dtype=np.uint8)
-    _add_skin(plotter, _within(rest, middle, reach))
+    beside = around[result.panel_window[around] != number]
+    if len(beside):
+        rest = scene.skin(beside)
+        rest.cell_data["colour"] = np.full((rest.n_cells, 3), 232, dtype=np.uint8)
+        _add_skin(plotter, _within(rest, middle, reach))
     rims = border_edges(result.faces, (result.panel_window == number).astype(np.int64))
     _add_lines(plotter, _lines(result.vertices[rims]), INK, 3.0)
     framed = result.vertices

@@ -15,8 +15,8 @@ from bemescape.units import format_length, format_time
 
 from .cutaway import CutPlane, cut_plane
 from .overlay import FONT_FILE, safe_text
-from .scales import INK, WINDOW, density_scale, map_colours, time_colours
-from .scenes import Scene, add_section, display_missing, look_from, paint_time, wall_scene
+from .scales import INK, density_scale, time_colours
+from .scenes import Scene, add_section, display_missing, look_from, paint_time, wall_scene, window_colours
 from .shapes import ViewName, standard_view
 
 if TYPE_CHECKING:
@@ -143,18 +143,14 @@ class DesktopWindow:
         for actor in self.scene.actors["windows"]:
             mesh = actor.mapper.dataset
             panels = np.asarray(mesh.cell_data["panel"])
-            flat = np.tile(np.array(pv.Color(WINDOW).int_rgb, dtype=np.uint8), (len(panels), 1))
-            scale = density_scale(self._result)
-            density = map_colours(scale, self._result.panel_exit_density_per_um2[panels])
-            mesh.cell_data["colour"][:] = density if self._density else flat
-            mesh.Modified()
-            if self._density:
-                self.overlay.set_note(
-                    f"windows: exit density, dark to bright {scale.low:.3g} to {scale.high:.3g} "
-                    f"{scale.label} (logarithmic)"
-                )
-            else:
-                self.overlay.set_note(self._first_note)
+            mesh.cell_data["colour"][:] = window_colours(self._result, panels, density=self._density)
+            mesh.cell_data["colour"].VTKObject.Modified()
+        scale = density_scale(self._result)
+        self.overlay.set_note(
+            f"windows: {scale.label}, dark {scale.low:.3g} to bright {scale.high:.3g}, logarithmic"
+            if self._density
+            else self._first_note
+        )
         self.plotter.render()
 
     def toggle_cut(self) -> None:
@@ -281,9 +277,13 @@ class DesktopWindow:
         for actor in self.scene.actors.pop("section", []):
             self.plotter.remove_actor(actor, reset_camera=False, render=False)
 
-    def _mark(self, place: Floats) -> None:
+    def _unmark(self) -> None:
         if self._marker is not None:
             self.plotter.remove_actor(self._marker, reset_camera=False, render=False)
+            self._marker = None
+
+    def _mark(self, place: Floats) -> None:
+        self._unmark()
         ball = pv.Sphere(radius=0.006 * self.scene.size_um, center=place)
         self._marker = self.plotter.add_mesh(
             ball, color="#ffffff", show_edges=False, reset_camera=False, silhouette=False, pickable=False

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 from dataclasses import dataclass
 from functools import cached_property
 
@@ -64,8 +65,10 @@ class PaintedResult(EscapeResult):
         _, part = connected_components(graph, directed=False)
         regions = PaintedRegions()
         regions.panel_region = np.full(size, -1)
-        regions.level_s = float(self.panel_time_s[slow].min())
+        regions.level_s = float(self.panel_time_s[slow].min(initial=np.inf))
         regions.wall_fraction = wall_fraction
+        if not slow.any():
+            return regions
         mouth = self.panel_centroids[self.panel_window == 0].mean(axis=0)
         for label in np.unique(part[slow]):
             panels = np.flatnonzero(slow & (part == label))
@@ -138,6 +141,16 @@ def spine_mesh(step=0.035):
     return np.asarray(mesh.vertices), np.asarray(mesh.faces, dtype=np.int64)
 
 
+@pytest.fixture(scope="session")
+def make_ball():
+    return ball
+
+
+@pytest.fixture(scope="session")
+def make_spine():
+    return painted
+
+
 def painted(name="spine 12", step=0.035, names=("neck", "side pore"), **changes):
     vertices, faces = spine_mesh(step)
     centroids = vertices[faces].mean(axis=1)
@@ -185,6 +198,30 @@ def painted(name="spine 12", step=0.035, names=("neck", "side pore"), **changes)
         "notes": ("1 debris part was dropped",),
         "settings": {"target": 0.005, "panel_budget": 100000},
         "mesh_sha256": "ab" * 32,
+    }
+    return PaintedResult(**(values | changes))
+
+
+def ball(subdivisions=3, cap=0.5, **changes):
+    """A ball of radius 1 µm around the origin; panels within the angle `cap` of +z are a window."""
+    sphere = trimesh.creation.icosphere(subdivisions=subdivisions)
+    vertices, faces = np.asarray(sphere.vertices), np.asarray(sphere.faces, dtype=np.int64)
+    centroids = vertices[faces].mean(axis=1)
+    angle = np.arccos(centroids[:, 2] / np.linalg.norm(centroids, axis=1))
+    window = np.where(angle < cap, 0, -1)
+    areas = sphere.area_faces
+    area = float(areas[window == 0].sum())
+    result = painted()
+    values = {field.name: getattr(result, field.name) for field in dataclasses.fields(result)}
+    values |= {
+        "name": "ball",
+        "vertices": vertices,
+        "faces": faces,
+        "parent_face": np.arange(len(faces)),
+        "panel_window": window,
+        "panel_time_s": np.where(window == 0, 0.0, 0.01 + 0.002 * (1.0 - centroids[:, 2])),
+        "panel_exit_density_per_um2": np.where(window == 0, 1.0 / area, 0.0),
+        "windows": (WindowResult("cap", area, 1.0),),
     }
     return PaintedResult(**(values | changes))
 
