@@ -7,7 +7,6 @@ from __future__ import annotations
 
 import contextlib
 import io
-import os
 import sys
 from collections.abc import Sequence
 from typing import Annotated
@@ -81,17 +80,12 @@ def main(argv: Sequence[str] | None = None) -> int:
     command = typer.main.get_command(app)
     try:
         code = command.main(arguments, prog_name="bemescape", standalone_mode=False)
-        sys.stdout.flush()
     except EscapeError as error:
         _complain(str(error))
         return 1 if isinstance(error, ConvergenceError | AccuracyError) else 2
     except (KeyboardInterrupt, typer.Abort):
         _complain("stopped; nothing was written")
         return STOPPED
-    except BrokenPipeError:
-        # The reader of the output has left; a second failure at interpreter exit would print a traceback.
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        return 1
     except _CommandLineError as error:
         _complain(_usage_sentence(error, arguments))
         return 2

@@ -81,8 +81,10 @@ def test_wrong_input_as_a_process_is_exit_code_2_without_a_traceback(workplace):
 
 
 def test_a_terminal_without_greek_letters_gets_an_answer(workplace):
-    done = run("check", "cases/ball.ply", "--unit", "nm", cwd=workplace, PYTHONIOENCODING="ascii")
+    (workplace / "Σ.ply").write_bytes((workplace / "cases" / "ball.ply").read_bytes())
+    done = run("check", "Σ.ply", "--unit", "nm", cwd=workplace, PYTHONIOENCODING="latin-1")
     assert done.returncode == 0
+    assert done.stdout.startswith(rb"\u03a3.ply")
     assert b"can be solved as it is" in done.stdout
 
 
@@ -151,7 +153,8 @@ def test_on_a_terminal_progress_is_a_live_line_that_is_cleared(workplace):
     answer, _ = process.communicate(timeout=60)
     assert process.returncode == 0
     assert b"healing" in printed
-    assert b"\x1b[2K" in printed  # erased
+    assert b"healing" not in printed.rsplit(b"\x1b[2K", 1)[1]  # erased, and nothing after it
+    assert printed.rstrip().endswith(b"\x1b[2K"), printed[-200:]
     assert b"\x1b" not in answer
 
 

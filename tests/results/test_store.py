@@ -167,9 +167,14 @@ def test_a_failure_while_writing_leaves_the_earlier_result_whole(result, folder,
     assert {path.name: path.read_bytes() for path in folder.iterdir()} == before
 
 
-def test_a_failure_while_moving_leaves_no_summary(result, folder, monkeypatch):
+@pytest.mark.parametrize("stuck", ["result.npz", "surface.vtp", "summary.json"])
+def test_a_failure_while_moving_leaves_no_summary(result, folder, monkeypatch, stuck):
+    replace = store.os.replace
+
     def fail(source, target):
-        raise OSError(5, "Input/output error")
+        if target.name == stuck:
+            raise OSError(5, "Input/output error")
+        replace(source, target)
 
     monkeypatch.setattr(store.os, "replace", fail)
     with pytest.raises(SettingsError, match="Input/output error"):
