@@ -1,1 +1,80 @@
-"""Escape times of diffusing molecules from measured 3D shapes, by boundary elements."""
+"""Escape times of diffusing molecules from measured 3D shapes, by boundary elements.
+
+>>> import bemescape
+>>> bemescape.Window.disc("pore", centre=(0, 0, 1), radius="50 nm").name
+'pore'
+"""
+
+from __future__ import annotations
+
+import importlib
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from bemescape.case import Case, read_case
+    from bemescape.errors import (
+        AccuracyError,
+        ConvergenceError,
+        EscapeError,
+        SettingsError,
+        SurfaceError,
+        WindowError,
+    )
+    from bemescape.escape import SolverSettings, solve_escape
+    from bemescape.progress import ProgressEvent
+    from bemescape.results.result import EscapeResult
+    from bemescape.results.summary import summary_schema
+    from bemescape.surface import Surface, check_surface, heal_surface, read_surface
+    from bemescape.version import __version__
+    from bemescape.windows.window import Window
+
+#: Public name -> the module that holds it; loaded on first use, so that `bemescape --help` answers at once.
+_HOME = {
+    "AccuracyError": "bemescape.errors",
+    "Case": "bemescape.case",
+    "ConvergenceError": "bemescape.errors",
+    "EscapeError": "bemescape.errors",
+    "EscapeResult": "bemescape.results.result",
+    "ProgressEvent": "bemescape.progress",
+    "SettingsError": "bemescape.errors",
+    "SolverSettings": "bemescape.escape",
+    "Surface": "bemescape.surface",
+    "SurfaceError": "bemescape.errors",
+    "Window": "bemescape.windows.window",
+    "WindowError": "bemescape.errors",
+    "__version__": "bemescape.version",
+    "check_surface": "bemescape.surface",
+    "heal_surface": "bemescape.surface",
+    "read_case": "bemescape.case",
+    "read_surface": "bemescape.surface",
+    "solve_escape": "bemescape.escape",
+    "summary_schema": "bemescape.results.summary",
+}
+
+__all__ = [
+    "AccuracyError",
+    "Case",
+    "ConvergenceError",
+    "EscapeError",
+    "EscapeResult",
+    "ProgressEvent",
+    "SettingsError",
+    "SolverSettings",
+    "Surface",
+    "SurfaceError",
+    "Window",
+    "WindowError",
+    "__version__",
+    "check_surface",
+    "heal_surface",
+    "read_case",
+    "read_surface",
+    "solve_escape",
+    "summary_schema",
+]
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _HOME:
+        raise AttributeError(f"module 'bemescape' has no attribute {name!r}")
+    return getattr(importlib.import_module(_HOME[name]), name)

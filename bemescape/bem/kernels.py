@@ -8,11 +8,21 @@ from __future__ import annotations
 
 import math
 
+import numpy as np
 from numba import njit
 
-__all__ = ["panel_integrals", "self_mean_inverse_distance", "spread_inverse", "spread_lifted"]
+__all__ = [
+    "panel_integrals",
+    "self_mean_inverse_distance",
+    "spread_dipole",
+    "spread_inverse",
+    "spread_lifted",
+]
 
 _TINY = 1e-300
+
+# Single-precision constants keep a single-precision loop in single precision, and are exact in a double one.
+_HALF, _ONE, _TWO, _THREE, _SIX, _NINE, _FIFTEEN = (np.float32(x) for x in (0.5, 1, 2, 3, 6, 9, 15))
 
 
 @njit(cache=True, inline="always", error_model="numpy")
@@ -88,8 +98,9 @@ def spread_inverse(ht, hs, spread_target, spread_source, inverse):
     underrated, and the error falls only with the panel size, not with its square.
     """
     inverse2 = inverse * inverse
-    return inverse + (inverse2 * inverse) / 2 * (
-        spread_target * (1 - 3 * ht * ht * inverse2) + spread_source * (1 - 3 * hs * hs * inverse2)
+    return inverse + _HALF * inverse2 * inverse * (
+        spread_target * (_ONE - _THREE * ht * ht * inverse2)
+        + spread_source * (_ONE - _THREE * hs * hs * inverse2)
     )
 
 
@@ -101,7 +112,22 @@ def spread_lifted(ht, hs, tilt, spread_target, spread_source, inverse):
     not harmonic: Δ(hs/r) = −2 hs/r³.
     """
     inverse2 = inverse * inverse
-    return hs * inverse + (inverse2 * inverse) / 2 * (
-        spread_target * (2 * tilt * ht - hs - 3 * hs * ht * ht * inverse2)
-        + spread_source * hs * (1 - 3 * hs * hs * inverse2)
+    return hs * inverse + _HALF * inverse2 * inverse * (
+        spread_target * (_TWO * tilt * ht - hs - _THREE * hs * ht * ht * inverse2)
+        + spread_source * hs * (_ONE - _THREE * hs * hs * inverse2)
+    )
+
+
+@njit(cache=True, inline="always", error_model="numpy")
+def spread_dipole(ht, hs, tilt, spread_target, spread_source, inverse):
+    """Mean of n_source·(x − y)/|x − y|³ over two panels, as `spread_inverse`: harmonic in x and in y."""
+    inverse2 = inverse * inverse
+    return (inverse2 * inverse) * (
+        hs
+        + _HALF
+        * inverse2
+        * (
+            spread_source * hs * (_NINE - _FIFTEEN * hs * hs * inverse2)
+            + spread_target * (_SIX * tilt * ht + _THREE * hs - _FIFTEEN * hs * ht * ht * inverse2)
+        )
     )

@@ -14,7 +14,13 @@ import numpy as np
 from numba import njit, prange
 from numpy.typing import NDArray
 
-from bemescape.bem.kernels import panel_integrals, self_mean_inverse_distance, spread_inverse, spread_lifted
+from bemescape.bem.kernels import (
+    panel_integrals,
+    self_mean_inverse_distance,
+    spread_dipole,
+    spread_inverse,
+    spread_lifted,
+)
 from bemescape.bem.panels import Panels
 
 __all__ = ["NearField", "build_near_field"]
@@ -198,8 +204,8 @@ def _fill_rows(
                     + normals[i, 2] * normals[j, 2]
                 )
                 far_v = areas[j] * spread_inverse(ht, hs, spread[i], spread[j], inverse)
+                far_d = areas[j] * spread_dipole(ht, hs, tilt, spread[i], spread[j], inverse)
                 far_h = -areas[j] * spread_lifted(ht, hs, tilt, spread[i], spread[j], inverse)
-                far_d = areas[j] * hs * inverse * inverse * inverse
                 column[first[i] + k] = j
                 double[first[i] + k] = (d - far_d) / _FOUR_PI
                 volume[i] += 0.5 * (h - far_h) / _FOUR_PI

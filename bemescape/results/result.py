@@ -114,6 +114,12 @@ class EscapeResult:
         """Centroids (m, 3) in µm."""
         return np.asarray(self.vertices[self.faces].mean(axis=1))
 
+    @cached_property
+    def volume_um3(self) -> float:
+        """Volume of the compartment in µm³ (divergence theorem)."""
+        heights = np.einsum("ij,ij->i", self.panel_centroids - self.vertices.mean(axis=0), self.panel_normals)
+        return float((self.panel_areas_um2 * heights).sum() / 3.0)
+
     @property
     def mean_time(self) -> pint.Quantity[Any]:
         """Mean escape time as a quantity in seconds."""

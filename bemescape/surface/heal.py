@@ -32,7 +32,7 @@ __all__ = ["Change", "HealReport", "heal_surface"]
 
 _LISTED = 24
 #: Changes of one kind beyond this number are summed up in a last one.
-_SINGLE = 40
+_SINGLE = 200
 
 
 @dataclass(frozen=True)
@@ -153,7 +153,7 @@ def heal_surface(
         log.apply("separated sheets", [separate_sheets(log.mesh, borders=True)])
         log.apply("dropped part", drop_closed_debris(log.mesh))
         log.apply("turned parts", [turn_outward(log.mesh)])
-    if not log.changes:
+    if not log.changes and before.ok:
         return surface
     return _finished(surface, before, log, mode)
 

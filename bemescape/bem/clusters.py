@@ -1,0 +1,59 @@
+"""Clusters of panels whose constants carry the slow modes of a branched shape."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.sparse import coo_matrix, csr_matrix
+from scipy.sparse.csgraph import connected_components, dijkstra
+
+__all__ = ["wall_clusters"]
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+
+def wall_clusters(
+    centroids: Floats, neighbours: Ints, is_window: NDArray[np.bool_], *, wanted: int = 100
+) -> Ints:
+    """Cluster number (m,) of each wall panel, −1 in none: slices of the wall between equal distances to the windows.
+
+    Distances run along the wall, so the slices of a branched shape are connected pieces of its branches: along a
+    neck a slice is a ring, and u changes little within it.
+
+    Parameters
+    ----------
+    centroids : (m, 3) float64
+    neighbours : (e, 2) int64
+        Pairs of panels that share an edge.
+    is_window : (m,) bool
+    wanted : int
+        About this many clusters.
+    """
+    m = len(centroids)
+    none = np.full(m, -1)
+    if is_window.all():
+        return none
+    length = np.linalg.norm(centroids[neighbours[:, 0]] - centroids[neighbours[:, 1]], axis=1)
+    graph = csr_matrix(coo_matrix((np.maximum(length, 1e-300), neighbours.T), shape=(m, m)))
+    distance = dijkstra(graph, directed=False, indices=np.flatnonzero(is_window), min_only=True)
+    # A shell without a window (an obstacle) is sliced by height instead.
+    apart = ~np.isfinite(distance)
+    distance[apart] = centroids[apart, 2] - centroids[apart, 2].min(initial=0.0)
+    slices = max(2, wanted // 4)
+    for _ in range(8):
+        band = np.floor(distance / (distance.max() * (1.0 + 1e-9)) * slices).astype(np.int64)
+        band[is_window] = -1
+        same = band[neighbours[:, 0]] == band[neighbours[:, 1]]
+        pairs = neighbours[same]
+        joined = coo_matrix((np.ones(len(pairs)), pairs.T), shape=(m, m))
+        label = connected_components(joined, directed=False)[1]
+        label = np.where(is_window, -1, label)
+        numbers, size = np.unique(label[label >= 0], return_counts=True)
+        kept = numbers[size >= max(4, m // (20 * wanted))]
+        if wanted // 2 <= len(kept) or len(kept) > wanted:
+            break
+        slices *= 2
+    number = np.full(int(label.max()) + 1, -1)
+    number[kept] = np.arange(len(kept))
+    return np.where(label >= 0, number[label], -1)
