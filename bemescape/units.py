@@ -86,7 +86,7 @@ def _magnitude(value: object, unit: str, what: str, example: str, *, bare_unit: 
         # A quantity without a unit is dimensionless and refused here: its unit would be a guess.
         # Fifteen digits: 60 nm is 0.06 µm, not 0.060000000000000005.
         return float(f"{float(parsed.to(unit).magnitude):.15g}")
-    except (pint.PintError, ValueError, TypeError, AttributeError, ArithmeticError) as error:
+    except (pint.PintError, ValueError, TypeError, AttributeError, ArithmeticError, LookupError) as error:
         kind = f"quantity in {unit}" if unit else "plain number or percentage"
         raise SettingsError(
             f"{what} {_shortened(value)} is not a {kind}; write it like {example!r}"

@@ -80,6 +80,7 @@ def test_one_diffusion_coefficient_in_many_spellings(text):
         "9**9**9 nm",
         "1 nm**9**9**9",
         "1 nm^99",
+        "0 A^0",
         "__class__",
         "1 nm.__class__",
         "(" * 5000 + "1 nm" + ")" * 5000,

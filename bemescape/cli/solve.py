@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
@@ -95,14 +96,18 @@ def _refuse_foreign_folder(folder: Path) -> None:
     try:
         if folder.exists() and not folder.is_dir():
             raise SettingsError(f"{folder} is a file, not a folder; give another one with --out")
+        ground = next((path for path in (folder, *folder.parents) if path.exists()), Path())
+        if not (ground.is_dir() and os.access(ground, os.W_OK)):
+            raise SettingsError(f"no folder can be made in {ground}; give another one with --out")
         if not folder.exists() or is_result_folder(folder):
             return
         others = [entry.name for entry in folder.iterdir() if not entry.name.startswith(STAGING)]
     except (OSError, ValueError) as error:
         if isinstance(error, SettingsError):
             raise
+        reason = getattr(error, "strerror", None) or "no such name can exist"
         raise SettingsError(
-            f"folder {str(folder)[:200]!r} cannot be used: {error}; give another one"
+            f"folder {str(folder)[:200]!r} cannot be used: {reason}; give another one with --out"
         ) from error
     if others:
         raise SettingsError(

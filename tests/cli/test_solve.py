@@ -127,12 +127,24 @@ def test_a_folder_of_other_things_is_refused_before_the_solve(workplace, painted
     assert main(RUN) == 2
     assert "folder ball holds other files ('thesis.tex', for one)" in capsys.readouterr().err
     assert painted.case is None
+
+
+@pytest.mark.parametrize(
+    ("out", "sentence"),
+    [
+        ("file", "file is a file, not a folder"),
+        ("file/below/it", "no folder can be made in file"),
+        ("x" * 5000, "cannot be used"),
+    ],
+    ids=["file", "below a file", "long"],
+)
+def test_a_folder_that_cannot_be_is_refused_before_the_solve(workplace, painted, capsys, out, sentence):
     (workplace / "file").write_text("")
-    assert main([*RUN, "--out", "file"]) == 2
-    assert "file is a file, not a folder" in capsys.readouterr().err
-    assert main([*RUN, "--out", "file/below"]) == 2
-    assert painted.case is None or "cannot be" in capsys.readouterr().err
-    assert main([*RUN, "--out", "x" * 5000]) == 2
+    assert main([*RUN, "-q", "--out", out]) == 2
+    error = capsys.readouterr().err
+    assert sentence in error
+    assert len(error) < 500
+    assert painted.case is None
 
 
 def test_an_empty_folder_and_an_earlier_result_are_used(workplace, painted):

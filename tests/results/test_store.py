@@ -13,7 +13,9 @@ import pyvista
 import trimesh
 
 from bemescape.errors import SettingsError
+from bemescape.escape import solve_escape
 from bemescape.results import store
+from bemescape.results.measures import summarise
 from bemescape.results.result import EscapeResult, WindowResult
 from bemescape.results.store import is_result_folder, load_result, save_result
 from bemescape.results.summary import (
@@ -26,6 +28,7 @@ from bemescape.results.summary import (
     summary_schema,
 )
 from bemescape.surface import Surface, heal_surface
+from bemescape.windows.window import Window
 
 ARRAYS = ("vertices", "faces", "parent_face", "panel_window", "panel_time_s", "panel_exit_density_per_um2")
 
@@ -258,3 +261,19 @@ def test_files_of_two_results_in_one_folder_are_refused(folder):
     (folder / "summary.json").write_text(json.dumps(content))
     with pytest.raises(SettingsError, match="mixes files of two results"):
         load_result(folder)
+
+
+def test_a_real_result_answers_after_loading_as_before(tmp_path):
+    ball = trimesh.creation.icosphere(2, 0.5)
+    solved = solve_escape(
+        Surface(ball.vertices, ball.faces, name="ball"),
+        [Window.disc("pore", centre=(0.0, 0.0, 0.5), radius="200 nm")],
+        "20 um^2/s",
+        target=0.2,
+    )
+    loaded = EscapeResult.load(solved.save(tmp_path / "ball", pictures=False))
+    inside = [[0.0, 0.0, 0.0], [0.1, -0.2, 0.3]]
+    # The same arrays go through the same code, so nothing may differ.
+    np.testing.assert_array_equal(loaded.time_at(inside), solved.time_at(inside))
+    assert loaded.summary == summarise(loaded) == solved.summary
+    assert repr(loaded) == repr(solved)
