@@ -14,6 +14,7 @@ from typing import Annotated
 import typer
 
 from bemescape.cli.check import check
+from bemescape.cli.progress import Stopped
 from bemescape.cli.solve import solve
 from bemescape.cli.view import view
 from bemescape.errors import AccuracyError, ConvergenceError, EscapeError
@@ -83,12 +84,16 @@ def main(argv: Sequence[str] | None = None) -> int:
     except EscapeError as error:
         _complain(str(error))
         return 1 if isinstance(error, ConvergenceError | AccuracyError) else 2
-    except (KeyboardInterrupt, typer.Abort):
-        _complain("stopped; nothing was written")
+    except Stopped as stop:
+        _complain(f"stopped; {stop}")
         return STOPPED
+    except (KeyboardInterrupt, typer.Abort):
+        code = STOPPED
     except _CommandLineError as error:
         _complain(_usage_sentence(error, arguments))
         return 2
+    if code == STOPPED:  # also what typer makes of Ctrl-C
+        _complain("stopped; nothing was written")
     return code if isinstance(code, int) else 0
 
 

@@ -11,10 +11,14 @@ import typer
 
 from bemescape.progress import Progress, ProgressEvent, silent
 
-__all__ = ["reporting"]
+__all__ = ["Stopped", "reporting"]
 
 #: Plain output repeats a stage that is still running after this many seconds.
 REPEAT_S = 10.0
+
+
+class Stopped(Exception):
+    """Ctrl-C after something was saved; the message says what."""
 
 
 @contextmanager

@@ -47,7 +47,7 @@ def solve(
     budget, or the solve failed its own checks and nothing is saved; 2: wrong input; 130: stopped by Ctrl-C.
     """
     from bemescape.case import read_case
-    from bemescape.cli.progress import reporting
+    from bemescape.cli.progress import Stopped, reporting
     from bemescape.progress import ProgressEvent
     from bemescape.results.store import add_pictures, save_result
     from bemescape.units import fraction
@@ -68,10 +68,10 @@ def solve(
             if pictures:
                 progress(ProgressEvent("drawing", None, "pictures and report"))
                 add_pictures(result, folder)
-    except KeyboardInterrupt:
-        what = f"the numbers are in {folder}, the pictures are missing" if saved else "nothing was written"
-        typer.echo(f"bemescape: stopped; {what}", err=True)
-        return 130
+    except KeyboardInterrupt as stop:
+        if saved:
+            raise Stopped(f"the numbers are in {folder}, the pictures are missing") from stop
+        raise
     _print_answer(result, folder, json=json)
     return 0 if result.target_met else 1
 

@@ -70,3 +70,12 @@ def test_wrong_input_is_told_in_one_line_on_stderr(workplace, capsys, arguments,
     assert sentence in printed.err
     assert printed.err.startswith("bemescape: ")
     assert printed.err.count("\n") == 1
+
+
+def test_stopping_says_that_nothing_was_written(workplace, capsys, monkeypatch):
+    def stop(*_, **__):
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr("bemescape.surface.read.read_unhealed", stop)
+    assert main(["check", "cases/ball.ply", "--unit", "nm"]) == 130
+    assert capsys.readouterr().err.strip() == "bemescape: stopped; nothing was written"
