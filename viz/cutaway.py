@@ -21,6 +21,7 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 _TILT_DEGREES = 22.0
+_FEW_WINDOWS = 4
 
 
 @dataclass(frozen=True)
@@ -61,29 +62,47 @@ class Section:
 
 
 def cut_plane(result: EscapeResult) -> CutPlane:
-    """The plane through the middle that holds the longest axis and the window with the largest share."""
+    """A plane through the middle of the shape that shows the way out.
+
+    It holds the window with the largest share, and the second largest where there are two to four windows;
+    else, or where those three points lie in a line, the longest axis of the shape.
+    """
     centre, (longest, middle, shortest) = principal_axes(result.panel_centroids, result.panel_areas_um2)
+    arms = [_unit(place - centre) for place in _largest_windows(result)]
+    second = arms[1:] if len(result.windows) <= _FEW_WINDOWS else []
     normal = shortest
-    if result.windows:
-        largest = max(range(len(result.windows)), key=lambda number: result.windows[number].share)
-        panels = result.panel_window == largest
-        if panels.any():
-            place = np.average(result.panel_centroids[panels], axis=0, weights=result.panel_areas_um2[panels])
-            across = np.cross(longest, place - centre)
-            # A window near the longest axis does not fix the plane: rounding would.
-            if np.linalg.norm(across) > 0.1 * np.linalg.norm(place - centre):
-                normal = across / np.linalg.norm(across)
+    for other in (*second, longest):
+        across = np.cross(arms[0], other) if arms else np.zeros(3)
+        # Nearly in a line, the points do not fix the plane: rounding would.
+        if np.linalg.norm(across) > 0.25:
+            normal = _unit(across)
+            break
     # The sign follows the front view, so that the same side faces the eye in both pictures.
     if normal @ shortest < 0.0:
         normal = -normal
-    up = np.cross(normal, longest)
-    if up @ middle < 0.0:
-        up = -up
-    return CutPlane(centre, normal, up / np.linalg.norm(up))
+    along = longest if abs(longest @ normal) < 0.7 else middle
+    up = _unit(np.cross(normal, along))
+    return CutPlane(centre, normal, up if up @ middle >= 0.0 else -up)
+
+
+def _largest_windows(result: EscapeResult) -> list[Floats]:
+    """Middles of the windows with the two largest shares."""
+    order = sorted(range(len(result.windows)), key=lambda number: -result.windows[number].share)
+    places = []
+    for number in order[:2]:
+        panels = result.panel_window == number
+        if panels.any():
+            weights = result.panel_areas_um2[panels]
+            places.append(np.average(result.panel_centroids[panels], axis=0, weights=weights))
+    return places
+
+
+def _unit(vector: Floats) -> Floats:
+    return np.asarray(vector / max(float(np.linalg.norm(vector)), 1e-300))
 
 
 def section(
-    result: EscapeResult, plane: CutPlane, corner_times_s: Floats, *, max_points: int = 8000
+    result: EscapeResult, plane: CutPlane, corner_times_s: Floats, *, max_points: int = 6000
 ) -> Section | None:
     """The section of the diffusing volume with `plane`, or None where the plane misses it.
 

@@ -69,6 +69,8 @@ class Overlay:
         Drawn where their place is in sight.
     hidden : callable or None
         (place, direction to the eye) -> True where the shape hides the place.
+    corner : str
+        Lines in the lower right corner.
     size : float
         Text height as part of the picture's height.
     """
@@ -82,6 +84,7 @@ class Overlay:
         scale: ColourScale | None = None,
         labels: Sequence[Label] = (),
         hidden: Callable[[Floats, Floats], bool] | None = None,
+        corner: str = "",
         size: float = 0.021,
     ) -> None:
         self._renderer: Any = plotter.renderer
@@ -89,6 +92,8 @@ class Overlay:
         self._size = size
         self._title = self._text(title)
         self._note = self._text(note)
+        self._corner = self._text(corner)
+        self._corner.GetTextProperty().SetLineSpacing(1.05)
         self._scale: ColourScale | None = None
         self._bar_parts: list[Any] = []
         self._tick_texts: list[tuple[Any, float]] = []
@@ -143,6 +148,10 @@ class Overlay:
         """Replace the line under the title."""
         self._note.SetInput(note)
 
+    def toggle_corner(self) -> None:
+        """Show or hide the lines in the corner."""
+        self._corner.SetVisibility(not self._corner.GetVisibility())
+
     def show_labels(self, kind: str, *, shown: bool) -> None:
         """Show or hide the labels of one kind."""
         (self._off.discard if shown else self._off.add)(kind)
@@ -185,6 +194,14 @@ class Overlay:
         font = max(9, round(self._size * height))
         self._place(self._title, 0.025 * width, height - 0.4 * font, font + 2, vertical="top")
         self._place(self._note, 0.025 * width, height - 2.3 * font, round(0.85 * font), vertical="top")
+        self._place(
+            self._corner,
+            0.99 * width,
+            0.015 * height,
+            round(0.72 * font),
+            horizontal="right",
+            vertical="bottom",
+        )
         self._draw_ruler(width, height, font)
         if self._scale is not None:
             self._draw_bar(self._scale, width, height, font)
@@ -217,7 +234,15 @@ class Overlay:
         )
 
     def _draw_bar(self, scale: ColourScale, width: float, height: float, font: int) -> None:
-        left, bottom, top = _BAR_LEFT * width, _BAR_BOTTOM * height, _BAR_TOP * height
+        bottom, top = _BAR_BOTTOM * height, _BAR_TOP * height
+        widest = 0.0
+        for text, _ in self._tick_texts:
+            text.GetTextProperty().SetFontSize(font)
+            size = [0.0, 0.0]
+            text.GetSize(self._renderer, size)
+            widest = max(widest, size[0])
+        # A narrow picture still shows the numbers whole.
+        left = min(_BAR_LEFT * width, width - widest - 1.8 * font)
         right = left + 0.9 * font
         count = 128
         y = np.linspace(bottom, top, count + 1)

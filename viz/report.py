@@ -254,7 +254,9 @@ def _slow_regions(result: EscapeResult, summary: Summary) -> str:
             f"{region.area_um2:.3g}",
             format_time(region.mean_time_s),
             ", ".join(f"{value:.3f}" for value in region.centre_um),
-            format_length(region.distance_to_window_um),
+            format_length(region.distance_to_window_um)
+            if math.isfinite(region.distance_to_window_um)
+            else "none along the wall",
             region.nearest_window,
         )
         for number, region in enumerate(summary.slow_regions, start=1)

@@ -143,19 +143,24 @@ def time_colours(result: EscapeResult, mode: Literal["linear", "log"] = "linear"
 
 
 def density_scale(result: EscapeResult) -> ColourScale:
-    """The logarithmic scale of the exit density on the windows of `result`."""
+    """The logarithmic scale of the exit density on the windows of `result`.
+
+    It spans all but the outermost 0.5 % of the windows' area at either end: the density grows without bound
+    towards a rim, so its largest value only tells how fine the panels are.
+    """
     label = "exits per µm² (part of all)"
-    values = result.panel_exit_density_per_um2[result.panel_window >= 0]
-    values = values[values > 0.0]
+    inside = (result.panel_window >= 0) & (result.panel_exit_density_per_um2 > 0.0)
+    values = result.panel_exit_density_per_um2[inside]
     if not len(values):
         return ColourScale(0.1, 1.0, 1.0, label, log=True, map_name=DENSITY_MAP_NAME)
-    high = float(values.max())
-    low = max(float(values.min()), high * 10.0**-_LOG_DECADES)
-    if low > 0.5 * high:
-        low = 0.5 * high
-    return ColourScale(
-        low, high, 1.0, label, log=True, clipped=float(values.min()) < low, map_name=DENSITY_MAP_NAME
-    )
+    order = np.argsort(values)
+    part = np.cumsum(result.panel_areas_um2[inside][order])
+    low, high = values[order][
+        np.minimum(np.searchsorted(part, np.array([0.005, 0.995]) * part[-1]), len(values) - 1)
+    ]
+    low = max(min(float(low), 0.5 * float(high)), float(high) * 10.0**-_LOG_DECADES)
+    clipped = float(values.min()) < low
+    return ColourScale(low, float(high), 1.0, label, log=True, clipped=clipped, map_name=DENSITY_MAP_NAME)
 
 
 def round_ticks(low: float, high: float, *, log: bool = False, wanted: int = 6) -> tuple[float, ...]:

@@ -50,7 +50,6 @@ from .shapes import (
 
 if TYPE_CHECKING:
     from bemescape.results.measures import SlowRegions
-
     from bemescape.results.result import EscapeResult
 
 __all__ = [
@@ -75,7 +74,7 @@ _MOST_WINDOW_LABELS = 12
 _MOST_SLOW_LABELS = 3
 _MOST_CLOSE_UPS = 6
 # Colours have to be read against the bar, so shading may only darken them a little.
-_LIGHT = {"ambient": 0.42, "diffuse": 0.62, "specular": 0.0}
+_LIGHT = {"ambient": 0.55, "diffuse": 0.48, "specular": 0.0}
 _NO_SHADING = {"ambient": 1.0, "diffuse": 0.0, "specular": 0.0}
 _PLAIN: dict[str, Any] = {
     "smooth_shading": False,
@@ -200,8 +199,16 @@ def new_plotter(
     """A plotter in the look of this package."""
     with quiet_renderer():
         plotter = pv.Plotter(
-            off_screen=off_screen, window_size=list(size), shape=shape, border=False, title=title
+            off_screen=off_screen,
+            window_size=list(size),
+            shape=shape,
+            border=False,
+            title=title,
+            lighting="none",
         )
+    for renderer in plotter.renderers:
+        # One lamp beside the eye: no side of the shape lies in the dark, and its form still shows.
+        renderer.add_light(pv.Light(position=(-0.15, 0.25, 1.0), light_type="camera light"))
     plotter.set_background(BACKGROUND, all_renderers=True)
     plotter.enable_anti_aliasing("msaa", multi_samples=8)
     return plotter
@@ -323,7 +330,7 @@ def _add_lines(plotter: pv.Plotter, mesh: pv.PolyData, colour: str, width: float
     actor = plotter.add_mesh(mesh, color=colour, line_width=width, lighting=False, reset_camera=False)
     # The lines lie in the wall: pulled towards the eye they win against it at every zoom.
     actor.mapper.SetResolveCoincidentTopologyToPolygonOffset()
-    actor.mapper.SetRelativeCoincidentTopologyLineOffsetParameters(0.0, -8.0)
+    actor.mapper.SetRelativeCoincidentTopologyLineOffsetParameters(-1.0, -80.0)
     return actor
 
 
@@ -392,6 +399,7 @@ def wall_scene(
     size: tuple[int, int] = (1600, 1200),
     off_screen: bool = True,
     scene: Scene | None = None,
+    corner: str = "",
 ) -> pv.Plotter:
     """The mean escape time on the wall, seen along a principal axis of the shape.
 
@@ -413,6 +421,8 @@ def wall_scene(
         Draw without a window.
     scene : Scene or None
         Arrays from an earlier picture of the same result, to save the work.
+    corner : str
+        Lines written in the lower right corner.
 
     Returns
     -------
@@ -430,6 +440,7 @@ def wall_scene(
         scale=scale,
         labels=_labels(scene, slow=slow),
         hidden=scene.hidden,
+        corner=corner,
     )
     return plotter
 
@@ -448,7 +459,7 @@ def cutaway_scene(
     mode: ScaleMode = "linear",
     size: tuple[int, int] = (1600, 1200),
     off_screen: bool = True,
-    max_points: int = 8000,
+    max_points: int = 6000,
     scene: Scene | None = None,
 ) -> pv.Plotter:
     """The shape cut open, with the mean escape time inside on the section, in the colours of the wall.
@@ -488,7 +499,7 @@ def cutaway_scene(
         note="cut-away: time inside, on a plane through the middle · thin lines: equal time · "
         "light blue: windows",
         scale=scale,
-        labels=[label for label in _labels(scene, slow=False) if _behind(label, plane, scene)],
+        labels=_cut_labels(scene, plane),
     )
     return plotter
 
@@ -499,10 +510,19 @@ def _clipped(mesh: pv.PolyData, plane: CutPlane) -> pv.PolyData:
     return mesh.clip(normal=plane.normal, origin=plane.origin, invert=True)
 
 
-def _behind(label: Label, plane: CutPlane, scene: Scene) -> bool:
-    """True where the labelled place is left after the cut, within reach of the section."""
-    height = float((label.place - plane.origin) @ plane.normal)
-    return abs(height) < 0.05 * scene.size_um
+def _cut_labels(scene: Scene, plane: CutPlane) -> list[Label]:
+    """Labels of the windows that the plane cuts, at what is left of them."""
+    result = scene.result
+    height = (result.panel_centroids - plane.origin) @ plane.normal
+    labels = []
+    for number, window in enumerate(result.windows):
+        kept = np.flatnonzero((result.panel_window == number) & (height < 0.0))
+        if len(kept) and (height[result.panel_window == number] >= 0.0).any():
+            edge = kept[height[kept] > -0.02 * scene.size_um]
+            if len(edge):
+                place, _ = _middle_of(result, edge)
+                labels.append(Label(safe_text(window.name, 24), place))
+    return labels if len(labels) <= _MOST_WINDOW_LABELS else []
 
 
 def add_section(
@@ -532,8 +552,13 @@ def add_section(
     )
     ticks = [tick for tick in scale.ticks if scale.low < tick < scale.high]
     levels = mesh.contour(ticks, scalars="time") if ticks else pv.PolyData()
+    # Just in front of the section, which would swallow half of each line.
+    lift = 1e-3 * scene.size_um * plane.normal
+    border = _lines(cut.edges + lift)
+    if levels.n_points:
+        levels.points = levels.points + lift
     scene.actors["section"] += _present(_add_lines(plotter, levels, "#ffffff", 1.2))
-    scene.actors["section"] += _present(_add_lines(plotter, _lines(cut.edges), INK, 2.5))
+    scene.actors["section"] += _present(_add_lines(plotter, border, INK, 2.5))
 
 
 def windows_scene(
@@ -601,10 +626,11 @@ def _close_up(plotter: pv.Plotter, scene: Scene, number: int, scale: ColourScale
         _add_skin(plotter, _within(rest, middle, reach))
     rims = border_edges(result.faces, (result.panel_window == number).astype(np.int64))
     _add_lines(plotter, _lines(result.vertices[rims]), INK, 3.0)
-    framed = result.vertices
+    framed = corners
     if np.isfinite(reach):
         framed = middle + reach * np.stack([view.up, -view.up, view.right, -view.right])
     look_from(plotter, framed, view)
+    plotter.camera.SetParallelScale(1.15 * plotter.camera.GetParallelScale())
     radius = (window.area_um2 / np.pi) ** 0.5
     Overlay(
         plotter,

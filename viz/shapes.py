@@ -208,11 +208,17 @@ def _window_side(result: EscapeResult, axis: Floats) -> Floats:
 
 
 def dashes(path: Floats, dash: float) -> Floats:
-    """Pieces (k, 2, 3) of a polyline (p, 3): dashes of length `dash` with equal gaps."""
+    """Segments (k, 2, 3) of a polyline (p, 3), drawn as dashes of about length `dash` with equal gaps.
+
+    A dash follows the bends of the path: a chord would dive under a convex wall.
+    """
     steps = np.linalg.norm(np.diff(path, axis=0), axis=1)
     along = np.concatenate([[0.0], np.cumsum(steps)])
     if along[-1] <= 0.0:
         return np.zeros((0, 2, 3))
+    # An odd number of pieces: the path begins and ends with a dash.
     marks = np.linspace(0.0, along[-1], 2 * max(1, round(along[-1] / dash / 2.0)))
-    points = np.column_stack([np.interp(marks, along, path[:, axis]) for axis in range(3)])
-    return points.reshape(-1, 2, 3)
+    stops = np.unique(np.concatenate([marks, along]))
+    points = np.column_stack([np.interp(stops, along, path[:, axis]) for axis in range(3)])
+    drawn = np.searchsorted(marks, 0.5 * (stops[1:] + stops[:-1])) % 2 == 1
+    return np.stack([points[:-1], points[1:]], axis=1)[drawn]

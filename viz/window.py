@@ -14,8 +14,8 @@ from bemescape.errors import SettingsError
 from bemescape.units import format_length, format_time
 
 from .cutaway import CutPlane, cut_plane
-from .overlay import FONT_FILE, safe_text
-from .scales import INK, density_scale, time_colours
+from .overlay import safe_text
+from .scales import density_scale, time_colours
 from .scenes import Scene, add_section, display_missing, look_from, paint_time, wall_scene, window_colours
 from .shapes import ViewName, standard_view
 
@@ -97,7 +97,9 @@ class DesktopWindow:
         size: tuple[int, int] = (1400, 1000),
     ) -> None:
         self.scene = Scene(result)
-        self.plotter = wall_scene(result, view, size=size, off_screen=off_screen, scene=self.scene)
+        self.plotter = wall_scene(
+            result, view, size=size, off_screen=off_screen, scene=self.scene, corner=KEYS
+        )
         self._result = result
         self._mode: str = "linear"
         self._density = False
@@ -106,9 +108,6 @@ class DesktopWindow:
         self._marker: Any = None
         self._pressed = (0, 0)
         self._first_note = self.overlay.note
-        self._help = self.plotter.add_text(
-            KEYS, position="lower_right", font_size=7, color=INK, font_file=FONT_FILE
-        )
         self._listen()
 
     @property
@@ -186,7 +185,7 @@ class DesktopWindow:
 
     def toggle_help(self) -> None:
         """Show or hide the list of keys."""
-        self._help.SetVisibility(not self._help.GetVisibility())
+        self.overlay.toggle_corner()
         self.plotter.render()
 
     # -- what clicks do ---------------------------------------------------------------------------------

@@ -123,3 +123,12 @@ def test_logarithmic_ticks_are_at_least_two(low, high):
     ticks = round_ticks(low, high, log=True)
     assert 2 <= len(ticks) <= 12
     assert all(low <= tick <= high for tick in ticks)
+
+
+def test_one_tiny_panel_at_a_rim_does_not_stretch_the_scale_of_exit_density(make_ball):
+    ball = make_ball(subdivisions=4)
+    density = ball.panel_exit_density_per_um2.copy()
+    usual = density.max()
+    density[np.flatnonzero(ball.panel_window == 0)[0]] = 1e4 * usual
+    scale = density_scale(dataclasses.replace(ball, panel_exit_density_per_um2=density))
+    assert scale.high == pytest.approx(usual)
