@@ -126,13 +126,18 @@ class Overlay:
             self._renderer.RemoveViewProp(actor)
         self._scale = scale
         self._tick_texts = [(self._text(scale.text(tick)), tick) for tick in scale.ticks]
-        if scale.clipped:
-            self._tick_texts = [
-                (text, tick)
-                for text, tick in self._tick_texts
-                if float(scale.position(np.array([tick]))[0]) > 0.04
-            ]
-            self._tick_texts.append((self._text(f"≤ {scale.text(float(f'{scale.low:.3g}'))}"), scale.low))
+        ends = [(scale.low, "≤")] if scale.clipped else []
+        ends += [(scale.high, "≥")] if scale.clipped_above else []
+        for end, sign in ends:
+            place = float(scale.position(np.array([end]))[0])
+            kept = []
+            for text, tick in self._tick_texts:
+                if abs(float(scale.position(np.array([tick]))[0]) - place) > 0.04:
+                    kept.append((text, tick))
+                else:
+                    self._renderer.RemoveViewProp(text)
+            label = self._text(f"{sign} {scale.text(float(f'{end:.3g}'))}")
+            self._tick_texts = [*kept, (label, end)]
         self._strip = self._polygons()
         self._tick_lines = self._lines(width=1.5)
         self._bar_title = self._text(scale.label)
@@ -224,14 +229,11 @@ class Overlay:
         segments += [[[end, y - tick], [end, y + tick]] for end in (left, right)]
         _set_segments(self._ruler, np.array(segments))
         self._ruler_text.SetInput(format_length(self.ruler_um))
-        self._place(
-            self._ruler_text,
-            0.5 * (left + right),
-            y + 0.55 * font,
-            font,
-            horizontal="centre",
-            vertical="bottom",
-        )
+        self._ruler_text.GetTextProperty().SetFontSize(font)
+        size = [0.0, 0.0]
+        self._ruler_text.GetSize(self._renderer, size)
+        middle = max(0.5 * (left + right), 0.5 * size[0] + 0.3 * font)
+        self._place(self._ruler_text, middle, y + 0.55 * font, font, horizontal="centre", vertical="bottom")
 
     def _draw_bar(self, scale: ColourScale, width: float, height: float, font: int) -> None:
         bottom, top = _BAR_BOTTOM * height, _BAR_TOP * height

@@ -297,10 +297,9 @@ def _rule_of_thumb(summary: Summary) -> str:
         "<h2>Beside the rule of thumb</h2>"
         + _table(("", "mean escape time", "ratio"), rows)
         + "<p>The rule is for small, round, perfectly absorbing windows, far apart on a smooth roundish "
-        "wall, with a the radius of the disc that has the window's area. A neck, a constriction, a "
-        "permeable or crowded window makes the computed time longer; a window that is a large part of the "
-        "wall, or an elongated one, makes it shorter. A ratio far from 1 is the effect of the shape, not "
-        "an error.</p>"
+        "wall; each window counts as a disc of its area. A neck, a constriction, a permeable or crowded "
+        "window makes the computed time longer; a window that is a large part of the wall, or an elongated "
+        "one, makes it shorter. A ratio far from 1 is the effect of the shape, not an error.</p>"
     )
 
 
@@ -375,8 +374,9 @@ def _origin(summary: Summary) -> str:
     checksum = made.mesh_sha256 or "none: the surface was made in memory"
     return (
         "<h2>How to repeat this</h2>"
-        f"<p>Made with bemescape {escape(made.version)}. With the same version, the mesh file of the "
-        "checksum below and these settings, the numbers come out the same to rounding:</p>"
+        f"<p>Made with bemescape {escape(made.version)}. With the same version, the case file (windows, "
+        "diffusion coefficient), the mesh file of the checksum below and these settings, the numbers come "
+        "out the same to rounding:</p>"
         "<pre>bemescape solve CASE.toml --out FOLDER</pre>"
         f"<p>SHA-256 of the mesh file: <code>{escape(checksum)}</code></p>"
         f"<h3>Settings</h3><pre>{escape(settings)}</pre>"

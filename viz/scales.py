@@ -66,8 +66,8 @@ class ColourScale:
         Title of the colour bar, with the printed unit.
     log : bool
         Logarithmic between the ends.
-    clipped : bool
-        Smaller values exist and are drawn in the first colour.
+    clipped, clipped_above : bool
+        Smaller or larger values exist and are drawn in the first or the last colour.
     map_name : str
         Name of the matplotlib map.
     """
@@ -78,6 +78,7 @@ class ColourScale:
     label: str
     log: bool = False
     clipped: bool = False
+    clipped_above: bool = False
     map_name: str = MAP_NAME
 
     def position(self, values: Floats) -> Floats:
@@ -159,8 +160,16 @@ def density_scale(result: EscapeResult) -> ColourScale:
         np.minimum(np.searchsorted(part, np.array([0.005, 0.995]) * part[-1]), len(values) - 1)
     ]
     low = max(min(float(low), 0.5 * float(high)), float(high) * 10.0**-_LOG_DECADES)
-    clipped = float(values.min()) < low
-    return ColourScale(low, float(high), 1.0, label, log=True, clipped=clipped, map_name=DENSITY_MAP_NAME)
+    return ColourScale(
+        low,
+        float(high),
+        1.0,
+        label,
+        log=True,
+        clipped=float(values.min()) < low,
+        clipped_above=float(values.max()) > high,
+        map_name=DENSITY_MAP_NAME,
+    )
 
 
 def round_ticks(low: float, high: float, *, log: bool = False, wanted: int = 6) -> tuple[float, ...]:

@@ -360,8 +360,11 @@ def _middle_of(result: EscapeResult, panels: NDArray[np.int64]) -> tuple[Floats,
     return result.panel_centroids[nearest], normal / max(float(np.linalg.norm(normal)), 1e-300)
 
 
-def look_from(plotter: pv.Plotter, points: Floats, view: View) -> None:
-    """Parallel projection along `view`; `points` (p, 3) fill the part of the picture meant for the shape."""
+def look_from(plotter: pv.Plotter, points: Floats, view: View, *, narrower: float = 0.0) -> None:
+    """Parallel projection along `view`; `points` (p, 3) fill the part of the picture meant for the shape.
+
+    `narrower` leaves this part of the width to a colour bar whose numbers need more room.
+    """
     width, height = plotter.renderer.GetSize()
     across, along, deep = points @ view.right, points @ view.up, points @ view.towards
     middle = (
@@ -370,6 +373,7 @@ def look_from(plotter: pv.Plotter, points: Floats, view: View) -> None:
         + 0.5 * (deep.min() + deep.max()) * view.towards
     )
     left, bottom, right, top = SHAPE_FRAME
+    right -= narrower
     half = 0.5 * max(
         float(np.ptp(along)) / (top - bottom), float(np.ptp(across)) / (right - left) * height / width
     )
@@ -629,8 +633,8 @@ def _close_up(plotter: pv.Plotter, scene: Scene, number: int, scale: ColourScale
     framed = corners
     if np.isfinite(reach):
         framed = middle + reach * np.stack([view.up, -view.up, view.right, -view.right])
-    look_from(plotter, framed, view)
-    plotter.camera.SetParallelScale(1.15 * plotter.camera.GetParallelScale())
+    width, height = plotter.renderer.GetSize()
+    look_from(plotter, framed, view, narrower=0.09 * height / width)
     radius = (window.area_um2 / np.pi) ** 0.5
     Overlay(
         plotter,

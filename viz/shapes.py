@@ -221,4 +221,4 @@ def dashes(path: Floats, dash: float) -> Floats:
     stops = np.unique(np.concatenate([marks, along]))
     points = np.column_stack([np.interp(stops, along, path[:, axis]) for axis in range(3)])
     drawn = np.searchsorted(marks, 0.5 * (stops[1:] + stops[:-1])) % 2 == 1
-    return np.stack([points[:-1], points[1:]], axis=1)[drawn]
+    return np.asarray(np.stack([points[:-1], points[1:]], axis=1)[drawn])

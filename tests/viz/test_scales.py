@@ -132,3 +132,5 @@ def test_one_tiny_panel_at_a_rim_does_not_stretch_the_scale_of_exit_density(make
     density[np.flatnonzero(ball.panel_window == 0)[0]] = 1e4 * usual
     scale = density_scale(dataclasses.replace(ball, panel_exit_density_per_um2=density))
     assert scale.high == pytest.approx(usual)
+    assert scale.clipped_above
+    assert not scale.clipped
