@@ -126,7 +126,10 @@ def close_holes(mesh: Working) -> list[Repair]:
             continue
         hole = _measured(mesh, ring)
         neighbours = np.array([face_at[side] for side in sides])
-        share = hole.area / area[part[neighbours[0]]]
+        whole = float(area[part[neighbours[0]]])
+        if not whole > 0.0:
+            continue
+        share = hole.area / whole
         limit = FACE_HOLE_SHARE if len(ring) <= 4 else HOLE_SHARE
         flat = len(ring) == 3 or hole.spread <= HOLE_FLATNESS * hole.radius
         tiny = len(ring) == 4 and share < TINY_HOLE_SHARE

@@ -111,6 +111,7 @@ def _pierces(edges: Floats, target: Floats) -> NDArray[np.bool_]:
         for u, v in ((a, b), (b, c), (c, a)):
             turns.append(np.einsum("ij,ij->i", direction, np.cross(u[rows] - p[rows], v[rows] - p[rows])))
         turn = np.stack(turns, axis=1)
+        # Through an edge of the other triangle counts as through it.
         margin = 1e-12 * np.abs(turn).max(axis=1, keepdims=True)
-        result[rows] |= (turn > margin).all(axis=1) | (turn < -margin).all(axis=1)
+        result[rows] |= (turn >= -margin).all(axis=1) | (turn <= margin).all(axis=1)
     return result

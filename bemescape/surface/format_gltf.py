@@ -16,7 +16,7 @@ from typing import Any, TypeGuard
 import numpy as np
 
 from bemescape.errors import SurfaceError
-from bemescape.surface.polygons import Polygons
+from bemescape.surface.polygons import Polygons, decode_text
 
 __all__ = ["read_glb", "read_gltf"]
 
@@ -76,8 +76,9 @@ def read_gltf(data: bytes, name: str, folder: Path) -> Polygons:
 
 
 def _document(data: bytes, name: str) -> dict[str, Any]:
+    text = decode_text(data, name)
     try:
-        document = json.loads(data)
+        document = json.loads(text)
     except (ValueError, RecursionError) as error:
         raise SurfaceError(
             f"{name}: its JSON part cannot be read ({str(error)[:80]}); the file is damaged"

@@ -9,10 +9,9 @@ from __future__ import annotations
 import re
 
 import numpy as np
-from numpy.typing import NDArray
 
 from bemescape.errors import SurfaceError
-from bemescape.surface.polygons import Polygons, decode_text, loaded_rows, significant_lines
+from bemescape.surface.polygons import Polygons, decode_text, loaded_rings, loaded_rows, significant_lines
 
 __all__ = ["read_obj", "read_off"]
 
@@ -21,6 +20,12 @@ _OBJ_IGNORED = {
     "vn", "vt", "vp", "g", "o", "s", "l", "p", "usemtl", "mtllib", "mg", "bevel", "c_interp", "d_interp",
     "lod", "maplib", "usemap", "shadow_obj", "trace_obj", "cstype", "deg",
 }  # fmt: skip
+_OBJ_STRANGE = re.compile(
+    r"^(?![ \t\r]*(?:$|#|(?:v|f|" + "|".join(sorted(_OBJ_IGNORED)) + r")(?:[ \t\r]|$)))", re.MULTILINE
+)
+_OBJ_POSITION = re.compile(r"^[ \t]*v[ \t]([^#\r\n]*)", re.MULTILINE)
+_OBJ_FACE = re.compile(r"^[ \t]*f[ \t]([^#\r\n]*)", re.MULTILINE)
+_OBJ_FACE_START = re.compile(r"^[ \t]*f[ \t]", re.MULTILINE)
 _SLASHES = re.compile(r"/\S*")
 
 
@@ -32,32 +37,35 @@ def read_obj(data: bytes, name: str) -> Polygons:
     SurfaceError
         A line is not OBJ, or a face does not name its corners by whole numbers.
     """
-    text = decode_text(data, name).replace("\\\r\n", " ").replace("\\\n", " ")
-    positions: list[str] = []
-    rings: list[str] = []
-    known: list[int] = []  # vertices declared so far: negative numbers count back from there
-    for number, line in significant_lines(text):
-        word, _, rest = line.partition(" ") if " " in line else line.partition("\t")
-        if word == "v":
-            positions.append(rest)
-        elif word == "f":
-            rings.append(_SLASHES.sub("", rest))
-            known.append(len(positions))
-        elif word not in _OBJ_IGNORED:
-            raise SurfaceError(
-                f"{name}: line {number}, {line[:40]!r}, is not an OBJ statement; the file is damaged"
-            )
+    text = decode_text(data, name)
+    if "\\" in text:
+        text = text.replace("\\\r\n", " ").replace("\\\n", " ")
+    strange = _OBJ_STRANGE.search(text)
+    if strange:
+        number = text.count("\n", 0, strange.start()) + 1
+        line = text[strange.start() :].split("\n", 1)[0].strip()
+        raise SurfaceError(
+            f"{name}: line {number}, {line[:40]!r}, is not an OBJ statement; the file is damaged"
+        )
+    positions = _OBJ_POSITION.findall(text)
+    rings = _OBJ_FACE.findall(text)
     if not positions or not rings:
         raise SurfaceError(
             f"{name} holds {len(positions)} vertices and {len(rings)} faces; was it exported as points?"
         )
     vertices = loaded_rows(positions, "a vertex line", name, columns=(0, 1, 2))
-    sizes, corners = _rings(rings, name)
+    if "/" in text:
+        rings = [_SLASHES.sub("", ring) for ring in rings]
+    sizes, corners = loaded_rings(rings, name)
     if (corners == 0).any():
         face = int(np.searchsorted(np.cumsum(sizes), np.flatnonzero(corners == 0)[0], side="right"))
         raise SurfaceError(f"{name}: face {face} names vertex 0, but OBJ files count from 1", faces=(face,))
-    back = np.repeat(np.array(known, np.int64), sizes)
-    return Polygons(vertices, sizes, np.where(corners < 0, back + corners, corners - 1))
+    if (corners < 0).any():
+        # Negative numbers count back from the last vertex before the face.
+        known = np.array([len(_OBJ_POSITION.findall(part)) for part in _OBJ_FACE_START.split(text)[:-1]])
+        corners = np.where(corners < 0, np.repeat(np.cumsum(known), sizes) + corners, corners - 1)
+        return Polygons(vertices, sizes, corners)
+    return Polygons(vertices, sizes, corners - 1)
 
 
 def read_off(data: bytes, name: str) -> Polygons:
@@ -100,23 +108,5 @@ def read_off(data: bytes, name: str) -> Polygons:
                 f"{name}: face {face}, {row[:40]!r}, does not hold the corners it counts", faces=(face,)
             )
         rings.append(" ".join(words[1 : size + 1]))
-    sizes, corners = _rings(rings, name)
+    sizes, corners = loaded_rings(rings, name)
     return Polygons(vertices, sizes, corners)
-
-
-def _rings(rings: list[str], name: str) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-    """Sizes and corner numbers of faces given as text, one face a row."""
-    words = [ring.split() for ring in rings]
-    sizes = np.fromiter(map(len, words), np.int64, len(words))
-    try:
-        corners = np.array([word for ring in words for word in ring], dtype=np.int64)
-    except (ValueError, OverflowError) as error:
-        for face, ring in enumerate(words):
-            if not all(re.fullmatch(r"-?\d{1,18}", word) for word in ring):
-                raise SurfaceError(
-                    f"{name}: face {face}, {' '.join(ring)[:40]!r}, does not name its corners by whole "
-                    f"numbers",
-                    faces=(face,),
-                ) from error
-        raise SurfaceError(f"{name}: the faces do not name their corners by whole numbers") from error
-    return sizes, corners

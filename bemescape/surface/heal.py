@@ -115,7 +115,8 @@ def heal_surface(
     Returns
     -------
     Surface
-        The same object where nothing had to be changed; otherwise a copy whose `.healing` lists every change.
+        The same mesh, with `.health` filled in, where nothing had to be changed; otherwise a copy whose
+        `.healing` lists every change.
 
     Raises
     ------
@@ -131,11 +132,11 @@ def heal_surface(
     voxel_um = None if voxel is None else length_um(voxel, "voxel size")
     if not len(surface.faces) or not len(surface.vertices):
         raise SurfaceError(f"{surface.name} has no faces, so there is nothing to heal")
-    if surface.health is None:
-        surface = replace(surface, health=check_surface(surface.vertices, surface.faces))
-    before = surface.health
-    if before is None:  # for the type checker: set just above
-        raise SurfaceError(f"{surface.name} was not examined")
+    # What an earlier healing left is the state to start from, not what was read.
+    before = surface.healing.after if surface.healing else surface.health
+    if before is None:
+        before = check_surface(surface.vertices, surface.faces)
+        surface = replace(surface, health=before)
     if mode == "none":
         if not before.ok:
             raise _refusal(surface.name, before, "heal='auto' may repair it")

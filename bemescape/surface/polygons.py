@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import io
+import re
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 
@@ -10,9 +12,26 @@ from numpy.typing import NDArray
 
 from bemescape.errors import SurfaceError
 
-__all__ = ["Polygons", "Triangles", "decode_text", "loaded_rows", "significant_lines", "triangulated"]
+__all__ = [
+    "LARGEST",
+    "Polygons",
+    "Triangles",
+    "decode_text",
+    "loaded_rings",
+    "loaded_rows",
+    "significant_lines",
+    "triangulated",
+]
 
 Array = NDArray[np.generic]
+
+_WHOLE = re.compile(r"[\s\d-]*")
+#: Longer text is refused: taken apart, it would need more than ten times as much memory.
+TEXT_LIMIT_BYTES = 80_000_000
+#: Surfaces of more faces are refused: neither the checks nor the solve are made for them.
+FACES_LIMIT = 1_000_000
+#: Coordinates beyond this are damage, whatever the unit.
+LARGEST = 1e30
 
 
 @dataclass(frozen=True)
@@ -66,8 +85,13 @@ def decode_text(data: bytes, name: str) -> str:
     Raises
     ------
     SurfaceError
-        UTF-16 or binary content.
+        UTF-16 or binary content, or too much of it.
     """
+    if len(data) > TEXT_LIMIT_BYTES:
+        raise SurfaceError(
+            f"{name} holds {len(data) / 1e6:.0f} MB of text (limit {TEXT_LIMIT_BYTES / 1e6:.0f} MB); "
+            "save it as binary PLY, or with fewer triangles"
+        )
     if data[:2] in (b"\xff\xfe", b"\xfe\xff"):
         raise SurfaceError(f"{name} is UTF-16 text, which mesh files never are; save it again as plain UTF-8")
     zero = data.find(b"\0")
@@ -82,7 +106,7 @@ def decode_text(data: bytes, name: str) -> str:
 
 def significant_lines(text: str) -> Iterator[tuple[int, str]]:
     """Number (from 1) and text of each line that holds more than blanks and comments."""
-    for number, line in enumerate(text.splitlines(), start=1):
+    for number, line in enumerate(io.StringIO(text), start=1):
         kept = line.split("#", 1)[0].strip()
         if kept:
             yield number, kept
@@ -107,6 +131,32 @@ def loaded_rows(
         ) from error
 
 
+def loaded_rings(rings: Sequence[str], name: str) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """Sizes (p,) and corner numbers of faces given as text, one face a row.
+
+    Raises
+    ------
+    SurfaceError
+        A row holds anything but whole numbers.
+    """
+    sizes = np.fromiter((len(ring.split()) for ring in rings), np.int64, len(rings))
+    corners = np.empty(int(sizes.sum()), np.int64)
+    starts = np.cumsum(sizes) - sizes
+    for size in np.unique(sizes[sizes > 0]):
+        chosen = np.flatnonzero(sizes == size).tolist()
+        rows = rings if len(chosen) == len(rings) else [rings[k] for k in chosen]
+        try:
+            block = np.loadtxt(rows, dtype=np.int64, comments=None, ndmin=2)
+        except (ValueError, OverflowError) as error:
+            wrong = next((k for k in chosen if not _WHOLE.fullmatch(rings[k])), chosen[0])
+            raise SurfaceError(
+                f"{name}: face {wrong}, {rings[wrong][:40]!r}, does not name its corners by whole numbers",
+                faces=(int(wrong),),
+            ) from error
+        corners[starts[chosen][:, None] + np.arange(size)] = block
+    return sizes, corners
+
+
 def triangulated(polygons: Polygons, name: str) -> Triangles:
     """Triangles of the polygons, in the order of the file; a polygon's arrays go to each of its triangles.
 
@@ -122,6 +172,11 @@ def triangulated(polygons: Polygons, name: str) -> Triangles:
             f"each: "
             "was it exported as points or lines?"
         )
+    if len(corners) - 2 * len(sizes) > FACES_LIMIT:
+        raise SurfaceError(
+            f"{name} makes {len(corners) - 2 * len(sizes)} triangles (limit {FACES_LIMIT}); reduce their "
+            "number, for instance by quadric decimation, or make the surface from larger voxels"
+        )
     _refuse_bad_numbers(polygons, name)
     starts = np.cumsum(sizes) - sizes
     if (sizes == 3).all():
@@ -134,8 +189,8 @@ def triangulated(polygons: Polygons, name: str) -> Triangles:
 
 def _refuse_bad_numbers(polygons: Polygons, name: str) -> None:
     vertices, sizes, corners = polygons.vertices, polygons.sizes, polygons.corners
-    # Squares of coordinates must stay finite too: areas and volumes are made of products of three.
-    bad = np.flatnonzero(~(np.abs(vertices) < 1e90).all(axis=1))
+    # Powers of coordinates must stay finite too: the quality of triangles is made of products of six.
+    bad = np.flatnonzero(~(np.abs(vertices) < LARGEST).all(axis=1))
     if len(bad):
         position = ", ".join(f"{value:g}" for value in vertices[bad[0]])
         raise SurfaceError(

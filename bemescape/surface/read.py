@@ -20,14 +20,14 @@ from bemescape.surface.format_stl import looks_like_binary_stl, read_stl
 from bemescape.surface.format_vtk import read_vtk_legacy, read_vtp
 from bemescape.surface.heal import heal_surface
 from bemescape.surface.health import check_surface
-from bemescape.surface.polygons import Polygons, triangulated
+from bemescape.surface.polygons import LARGEST, Polygons, triangulated
 from bemescape.surface.surface import Surface
 from bemescape.units import Quantity, unit_scale_um
 
 __all__ = ["FILE_LIMIT_BYTES", "file_unit_um", "read_surface", "read_unhealed"]
 
-#: Larger files are refused: a surface of a million triangles fits, and so does everything read along the way.
-FILE_LIMIT_BYTES = 300_000_000
+#: Larger files are refused: a surface of a million triangles fits, as text only just.
+FILE_LIMIT_BYTES = 150_000_000
 
 _FORMATS = {
     ".ply": "PLY", ".stl": "STL", ".obj": "OBJ", ".off": "OFF", ".glb": "GLB", ".gltf": "glTF", ".vtp": "VTP",
@@ -91,7 +91,7 @@ def read_unhealed(
     mesh = triangulated(_parsed(kind, path, data), name)
     progress(ProgressEvent("checking", None, f"{len(mesh.faces)} faces"))
     vertices = mesh.vertices * scale
-    if not (np.abs(vertices) < 1e90).all():
+    if not (np.abs(vertices) < LARGEST).all():
         raise SurfaceError(f"{name}: positions times the unit leave the range of numbers; is the unit right?")
     return Surface(
         vertices=vertices,

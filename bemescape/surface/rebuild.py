@@ -18,6 +18,7 @@ from bemescape.errors import SettingsError, SurfaceError
 from bemescape.progress import Progress, ProgressEvent
 from bemescape.surface.measure import edge_lengths, equal_rows
 from bemescape.surface.repairs import Repair
+from bemescape.surface.winding import winding_numbers
 from bemescape.surface.working import Working
 from bemescape.units import format_length
 
@@ -32,6 +33,8 @@ _BRICK = 16
 _SURFACE_VOXELS, _MOST_SURFACE_VOXELS = 100_000, 1_000_000
 #: Grid nodes in all bricks.
 _MOST_NODES = 60_000_000
+#: Solid angles that may be summed up for nodes whose side is in doubt: about half a minute.
+_MOST_ANGLES = 3_000_000_000
 #: Field values are kept off zero by this part of a voxel: a surface through a node itself makes needles.
 _OFF_ZERO = 0.05
 #: Points sampled on each surface for the distance between them.
@@ -273,14 +276,14 @@ class _Crossings:
         sign = np.where(total > 0.0, 1, -1)[order]
         return cls(axis, keys[order], np.r_[0, np.cumsum(sign)], height, int(grid.shape[v]))
 
-    def winding(self, nodes: Ints) -> Ints:
-        """Winding numbers (k,) seen along the axis plus those seen against it."""
+    def winding(self, nodes: Ints) -> tuple[Ints, Ints]:
+        """Winding numbers (k,) counted along the axis and against it; a hole makes them differ."""
         u, v = (self.axis + 1) % 3, (self.axis + 2) % 3
         line = (nodes[:, u] * self.width + nodes[:, v]) * self.height
         before = self.passed[np.searchsorted(self.keys, line)]
         here = self.passed[np.searchsorted(self.keys, line + nodes[:, self.axis])]
         after = self.passed[np.searchsorted(self.keys, line + self.height - 1.0)]
-        return (after - here) - (here - before)
+        return after - here, before - here
 
 
 def _zero_surface(
@@ -291,11 +294,22 @@ def _zero_surface(
     side = _BRICK + 1
     local = np.stack(np.meshgrid(*[np.arange(side)] * 3, indexing="ij"), axis=-1).reshape(-1, 3)
     signs = np.empty((len(bricks), side, side, side), dtype=np.int8)
+    doubtful: list[Ints] = []
+    places: list[Ints] = []
     for start in range(0, len(bricks), 256):
         nodes = (bricks[start : start + 256, None] + local).reshape(-1, 3)
-        winding = sum(lines.winding(nodes) for lines in crossings)
-        # Six directions: inside where they see more than half a turn on average.
-        signs[start : start + 256] = np.where(winding > 3, 1, -1).reshape(-1, side, side, side)
+        seen = np.stack([count for lines in crossings for count in lines.winding(nodes)])
+        # Six directions: inside where they see more than half a turn on average. Where they do not agree,
+        # that is a first guess.
+        inside = seen.sum(axis=0) > 3
+        signs[start : start + 256] = np.where(inside, 1, -1).reshape(-1, side, side, side)
+        doubtful.append(nodes[(seen != seen[0]).any(axis=0)])
+        places.append(start * side**3 + np.flatnonzero((seen != seen[0]).any(axis=0)))
+    nodes, place = np.concatenate(doubtful), np.concatenate(places)
+    if 0 < len(nodes) * len(mesh.faces) <= _MOST_ANGLES:
+        progress(ProgressEvent("rebuilding", 0.4, f"{len(nodes)} doubtful nodes"))
+        exact = winding_numbers(grid.origin + nodes * grid.voxel, mesh.vertices[mesh.faces])
+        signs.reshape(-1)[place] = np.where(exact > 0.5, 1, -1)
     flat = signs.reshape(len(bricks), -1)
     mixed = flat.max(axis=1) != flat.min(axis=1)
     bricks, signs = bricks[mixed], signs[mixed]
@@ -310,8 +324,8 @@ def _zero_surface(
         changes[tuple(first)] |= differs
         changes[tuple(second)] |= differs
     progress(ProgressEvent("rebuilding", 0.5, f"{int(changes.sum())} distances"))
-    place = np.argwhere(changes)
-    nodes = bricks[place[:, 0]] + place[:, 1:]
+    spots = np.argwhere(changes)
+    nodes = bricks[spots[:, 0]] + spots[:, 1:]
     # Nodes on the sides of bricks belong to several: they must get one and the same value.
     group = equal_rows(nodes)
     _, first_node = np.unique(group, return_index=True)

@@ -77,10 +77,12 @@ def weld_equal_vertices(mesh: Working) -> Repair | None:
 
 def weld_near_vertices(mesh: Working) -> Repair | None:
     """Make vertices on open edges one where they differ by rounding only."""
+    start, count = mesh, 0
+    touched: list[Ints] = []
     for share in _WELD_NEAR:
         rim = _rim_vertices(mesh)
         if not len(rim):
-            return None
+            break
         edges = mesh.edges
         ends = mesh.vertices[edges.ends[edges.counts == 1]]
         lengths = np.linalg.norm(ends[:, 0] - ends[:, 1], axis=1)
@@ -89,10 +91,14 @@ def weld_near_vertices(mesh: Working) -> Repair | None:
         near = cKDTree(mesh.vertices[rim]).query_pairs(distance, output_type="ndarray")
         if len(near):
             _, group = linked_groups(len(rim), near[:, 0], near[:, 1])
-            repair = _welded(mesh, rim, group, f"closer than {share:g} of the bounding box")
+            repair = _welded(mesh, rim, group, "")
             if repair is not None:
-                return repair
-    return None
+                mesh, count = repair.mesh, count + repair.count
+                touched.append(repair.faces)
+    if mesh is start:
+        return None
+    detail = f"{count} vertices that differed from another by rounding only were joined to it"
+    return Repair(mesh, count, detail, np.unique(np.concatenate(touched)))
 
 
 def _rim_vertices(mesh: Working) -> Ints:
