@@ -175,6 +175,11 @@ def test_any_name_is_drawn_as_one_plain_line(text, make_spine):
     assert (title < 0.5).any()
 
 
+def test_dollar_signs_are_not_taken_for_a_formula():
+    # The renderer draws "\\$" as a plain dollar sign, and what stands between two bare ones as mathematics.
+    assert safe_text("$x^2$") == "\\$x^2\\$"
+
+
 def test_one_picture_is_rendered_with_and_without_cut(spine, tmp_path):
     whole = render_png(spine, tmp_path / "a.png", view="top", size=SIZE)
     cut = render_png(spine, tmp_path / "b.PNG", cut=True, size=SIZE)

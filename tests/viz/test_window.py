@@ -176,3 +176,11 @@ def test_the_scale_bar_follows_the_zoom(window):
     before = window.overlay.ruler_um
     window.plotter.camera.Zoom(10.0)
     assert window.overlay.ruler_um == pytest.approx(before / 10.0, rel=1e-9)
+
+
+def test_a_click_on_an_outline_reads_the_wall_under_it(window):
+    towards = standard_view(window.scene.result, "front").towards
+    middles = window.scene.slow_outline.mean(axis=1)
+    in_sight = [place for place in middles if not window.scene.hidden(place, towards)]
+    for place in in_sight[:: max(1, len(in_sight) // 8)]:
+        assert window.click(*pixel(window, place)).startswith("wall, ")
