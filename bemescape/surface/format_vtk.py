@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import re
 import subprocess
 import sys
@@ -111,6 +112,8 @@ def _polygons(path: Path, data: bytes, name: str, kind: str) -> Polygons:
                 capture_output=True,
                 timeout=_SECONDS + len(data) / _BYTES_PER_SECOND,
                 check=False,
+                # Every idle thread of a numeric library would count against the limit of memory.
+                env={**os.environ, "OPENBLAS_NUM_THREADS": "1"},
             )
         except subprocess.TimeoutExpired as error:
             raise SurfaceError(

@@ -3,18 +3,14 @@
 VTK's readers trust what a file says about itself: a damaged one can end the whole process or fill the
 memory. Here that ends only the child. It imports nothing of the package, so it starts quickly.
 
-Arguments: the kind ("vtp" or "vtk"), the file, the .npz to write, the limit of memory in bytes. Objections "
-    "of VTK go
-to stderr, where the parent reads them.
+Arguments: the kind ("vtp" or "vtk"), the file, the .npz to write, the limit of memory in bytes. Objections
+of VTK go to stderr, where the parent reads them.
 """
 
 from __future__ import annotations
 
-import os
 import sys
 from typing import Any
-
-os.environ["OPENBLAS_NUM_THREADS"] = "1"  # every idle thread would count against the limit of memory
 
 import numpy as np
 from vtkmodules.util.numpy_support import vtk_to_numpy

@@ -239,9 +239,10 @@ def test_files_beyond_the_limits_are_refused_with_a_way_out(shapes, write, monke
         ("bemescape.surface.polygons.TEXT_LIMIT_BYTES", r"MB of text.*binary PLY"),
         ("bemescape.surface.polygons.FACES_LIMIT", r"makes 1280 triangles \(limit 1000\)"),
     ):
-        with monkeypatch.context() as patch, pytest.raises(SurfaceError, match=reason):
+        with monkeypatch.context() as patch:
             patch.setattr(limit, 1000)
-            read_surface(path, unit="um")
+            with pytest.raises(SurfaceError, match=reason):
+                read_surface(path, unit="um")
 
 
 def test_refusing_prints_nothing(shapes, write, capfd):
