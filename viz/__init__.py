@@ -9,9 +9,10 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from .closeups import windows_scene
     from .pictures import render_png, save_pictures
     from .report import write_report
-    from .scenes import cutaway_scene, wall_scene, windows_scene
+    from .scenes import cutaway_scene, wall_scene
     from .window import open_window
 
 __all__ = [
@@ -30,7 +31,7 @@ _HOME = {
     "render_png": "pictures",
     "save_pictures": "pictures",
     "wall_scene": "scenes",
-    "windows_scene": "scenes",
+    "windows_scene": "closeups",
     "write_report": "report",
 }
 

@@ -10,8 +10,10 @@ from matplotlib.image import imsave
 
 from bemescape.errors import SettingsError
 
+from .closeups import windows_scene
+from .parts import Scene
 from .plots import convergence_figure, spread_figure
-from .scenes import Scene, cutaway_scene, wall_scene, windows_scene
+from .scenes import cutaway_scene, wall_scene
 from .shapes import ViewName
 
 if TYPE_CHECKING:

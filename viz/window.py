@@ -15,8 +15,9 @@ from bemescape.units import format_length, format_time
 
 from .cutaway import CutPlane, cut_plane
 from .overlay import safe_text
+from .parts import Scene, display_missing, look_from, paint_time, window_colours
 from .scales import density_scale, time_colours
-from .scenes import Scene, add_section, display_missing, look_from, paint_time, wall_scene, window_colours
+from .scenes import add_section, wall_scene
 from .shapes import ViewName, standard_view
 
 if TYPE_CHECKING:

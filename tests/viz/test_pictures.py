@@ -8,7 +8,7 @@ import pytest
 import trimesh
 from bemescape.viz import cutaway_scene, render_png, save_pictures, wall_scene, windows_scene
 from bemescape.viz.overlay import safe_text
-from bemescape.viz.scenes import Scene
+from bemescape.viz.parts import Scene
 from bemescape.viz.shapes import standard_view
 from matplotlib import colormaps
 from matplotlib.colors import rgb_to_hsv
@@ -204,7 +204,7 @@ def test_refusals_say_what_to_do(spine, tmp_path):
 def test_pictures_need_no_display_and_say_nothing_on_stderr():
     code = (
         "import pyvista as pv\n"
-        "from bemescape.viz.scenes import new_plotter\n"
+        "from bemescape.viz.parts import new_plotter\n"
         "plotter = new_plotter(off_screen=True, size=(300, 200))\n"
         "plotter.add_mesh(pv.Sphere())\n"
         "image = plotter.screenshot(return_img=True)\n"
