@@ -287,7 +287,7 @@ def paint_time(mesh: pv.PolyData, scale: ColourScale) -> None:
 
 
 def add_skin(plotter: pv.Plotter, mesh: pv.PolyData, light: dict[str, float] | None = None) -> Any:
-    """Draw `mesh`, which has an array `position` (time on the scale) or `colour` (RGB); None where it is empty."""
+    """Draw `mesh`: array `position` (time on the scale) or `colour` (RGB); None where it is empty."""
     look: dict[str, Any] = (
         {"scalars": "position", "cmap": MAP_NAME, "clim": (0.0, 1.0), "interpolate_before_map": True}
         if "position" in mesh.point_data
