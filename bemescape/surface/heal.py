@@ -103,10 +103,10 @@ def heal_surface(
     surface : Surface
         As from `read_unhealed`, or made in memory.
     mode : "auto", "none" or "rebuild"
-        "none" changes nothing and refuses what cannot be solved. "auto" joins equal vertices, drops "
-            "doubled and flat
-        faces and debris, splits non-manifold edges and vertices, closes small holes and orients outwards.
-        "rebuild" is the last resort: a new surface around what is inside, from a signed distance on voxels.
+        "none" changes nothing and refuses what cannot be solved. "auto" joins equal vertices, drops doubled
+        and flat faces and debris, splits non-manifold edges and vertices, closes small holes and orients
+        outwards. "rebuild" is the last resort: a new surface around what is inside, from a signed distance
+        on voxels.
     voxel : length, optional
         Voxel size for "rebuild"; chosen from the mesh if not given.
     progress : callable
@@ -150,6 +150,9 @@ def heal_surface(
 
         _tidy(log)
         _orient_closed_parts(log)
+        # Holes that are closed beforehand need no guess about the side on which a voxel lies.
+        log.apply("separated sheets", [separate_sheets(log.mesh, borders=False)])
+        log.apply("closed hole", close_holes(log.mesh))
         log.apply("rebuilt surface", [rebuilt(log.mesh, surface.name, voxel_um, progress)])
         log.apply("separated sheets", [separate_sheets(log.mesh, borders=True)])
         log.apply("dropped part", drop_closed_debris(log.mesh))
