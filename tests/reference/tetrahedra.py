@@ -177,8 +177,8 @@ def refined_at_rims(mesh: Tetrahedra, halvings: int, growth: float = 0.5) -> Tet
     parent = _polydata(mesh.points, old).find_closest_cell(points[new].mean(axis=1))
     facets = tuple(new[window[parent] == k] for k in range(len(mesh.window_facets)))
     target = points.copy()
-    for rim, window_facets in zip(mesh.rims, facets, strict=True):
-        edges = _open_edges(window_facets)
+    for k, rim in enumerate(mesh.rims):
+        edges = _open_edges(facets[k])
         length = np.linalg.norm(points[edges[:, 0]] - points[edges[:, 1]], axis=1)
         fresh = edges >= len(mesh.points)
         target[edges[fresh]] = _onto_rim(
