@@ -34,7 +34,7 @@ _WALL_REST, _WALL_ERROR = 0.7, 0.8
 #: The mean time is off by about twice what the windows' outflow is off by (measured on boxes and balls).
 _BALANCE_ERROR = 2.0
 #: Below this no estimate is believed: single-precision sums and the iteration's tolerance.
-_FLOOR = 1e-4
+_FLOOR = 2e-4
 
 
 @dataclass(frozen=True)

@@ -1,0 +1,130 @@
+"""Exact and published values, each with its source or derivation. D = 1 unless it is an argument.
+
+Conventions: `mean` is the volume average of the escape time; caps on the unit ball have the half-angle eps, so a
+disc window of chord radius 2 sin(eps/2).
+"""
+
+import numpy as np
+
+
+def prism_mean(length, diffusion=1.0, permeability=np.inf):
+    """L²/(3D) + L/κ, one end open: elementary, u = (L² − x²)/(2D) + L/κ."""
+    return length**2 / (3.0 * diffusion) + length / permeability
+
+
+def prism_far_end(length, diffusion=1.0):
+    """L²/(2D): u at the closed end."""
+    return length**2 / (2.0 * diffusion)
+
+
+def absorbing_ball_mean(radius, diffusion=1.0, permeability=np.inf):
+    """R²/(15D) + R/(3κ): average of u = (R² − r²)/(6D) + R/(3κ), since r² averages to 3R²/5."""
+    return radius**2 / (15.0 * diffusion) + radius / (3.0 * permeability)
+
+
+def ball_centre_minus_mean(radius, diffusion=1.0):
+    """R²/(10D) whatever the windows: u + r²/(6D) is harmonic, so its centre value is its average."""
+    return radius**2 / (10.0 * diffusion)
+
+
+def shell_mean_inner_open(a, b):
+    """Spherical shell a < r < b, inner wall absorbing, outer closed: integrated by hand from the radial solution."""
+    return (b - a) ** 2 * (a**3 + 3 * a**2 * b + 6 * a * b**2 + 5 * b**3) / (15 * a * (a**2 + a * b + b**2))
+
+
+def shell_mean_outer_open(a, b):
+    """The same with the outer wall absorbing and the inner one an obstacle."""
+    return (b - a) ** 2 * (5 * a**3 + 6 * a**2 * b + 3 * a * b**2 + b**3) / (15 * b * (a**2 + a * b + b**2))
+
+
+def strip_mean(half_angle):
+    """Cylinder R = 1, lateral strip |φ| < eps open: 1/8 − ln sin(eps/2).
+
+    Closed formula for a gate of any size on a disc: Caginalp & Chen (2012), doi:10.1007/s00205-011-0455-6;
+    the average re-derived.
+    """
+    return 0.125 - np.log(np.sin(half_angle / 2.0))
+
+
+def strip_opposite_wall(half_angle):
+    """Time from the wall opposite the strip: arccosh(1/sin(eps/2))."""
+    return float(np.arccosh(1.0 / np.sin(half_angle / 2.0)))
+
+
+def cap_mean(eps, points=400):
+    """Unit ball with one absorbing cap, by Collins' dual-series method (Collins 1961, doi:10.1112/S0025579300001406).
+
+    u = (1 − r²)/6 + a₀ + Σ aₙ rⁿ Pₙ leads to the second-kind equation on [0, eps]
+
+        π h(t) + ½ ∫ h(s) [k(t+s) + k(t−s)] ds = 2 (a₀ + 2/3) cos(t/2),   ∫ h cos(t/2) dt = 2/3,
+        k(x) = −cos(x/2) ln(2 sin(x/2)) − sin(x/2) (π − x)/2  for x > 0, even,
+
+    solved by Nyström on Gauss–Legendre panels graded to t = eps with the logarithm of k integrated exactly on each
+    panel by subtraction. Returns a₀ + 1/15.
+    """
+    panels = 1.0 - 0.5 ** np.arange(0, 14)
+    edges = eps * np.concatenate([panels, [1.0]])
+    order = max(8, points // len(edges))
+    nodes, weights = np.polynomial.legendre.leggauss(order)
+    t = np.concatenate([0.5 * (b - a) * nodes + 0.5 * (a + b) for a, b in zip(edges[:-1], edges[1:], strict=True)])
+    w = np.concatenate([0.5 * (b - a) * weights for a, b in zip(edges[:-1], edges[1:], strict=True)])
+
+    def smooth(x):
+        """k without its logarithm ln|x|, times cos: finite at 0."""
+        x = np.abs(x)
+        ratio = np.where(x > 1e-12, 2.0 * np.sin(x / 2.0) / np.maximum(x, 1e-300), 1.0)
+        return -np.cos(x / 2.0) * np.log(ratio) - np.sin(x / 2.0) * (np.pi - x) / 2.0
+
+    def log_integral(x):
+        """∫₀^eps ln|x − s| ds."""
+        up, down = eps - x, x
+
+        def part(y):
+            return np.where(y > 0.0, y * (np.log(np.maximum(y, 1e-300)) - 1.0), 0.0)
+
+        return part(up) + part(down)
+
+    difference = np.abs(t[:, None] - t[None])
+    log = np.where(difference > 0.0, np.log(np.maximum(difference, 1e-300)), 0.0)
+    cosine = np.cos(difference / 2.0)
+    kernel = (smooth(difference) - cosine * log) * w
+    # Subtraction: ∫ cos·ln|t−s| h(s) = Σ w cos·ln (h_s − h_t) + h_t ∫ cos·ln, with ∫(1 − cos) ln smooth.
+    whole = log_integral(t) + ((cosine - 1.0) * log) @ w
+    kernel[np.diag_indices(len(t))] += -whole + (cosine * log) @ w
+    total = t[:, None] + t[None]
+    kernel += (smooth(total) - np.cos(total / 2.0) * np.log(total)) * w
+    matrix = np.pi * np.eye(len(t)) + 0.5 * kernel
+    h = np.linalg.solve(matrix, 2.0 * np.cos(t / 2.0))
+    scale = (2.0 / 3.0) / (w @ (h * np.cos(t / 2.0)))
+    return scale - 2.0 / 3.0 + 1.0 / 15.0
+
+
+#: cap_mean to 12 digits, by the same equation on panels graded to the end singularity until two grids agreed to
+#: 1e-12, and confirmed to 1e-10 by a first-kind equation with the sphere's surface Neumann function.
+CAP_MEAN = {
+    0.05: 21.6071576062,
+    0.1: 10.90026780762,
+    0.2: 5.426881311052,
+    0.5: 1.972025502625,
+    1.0: 0.7183925858575,
+}
+#: Time from the wall point opposite the cap, from the same solution.
+CAP_ANTIPODE = {0.1: 11.39728525842, 0.2: 5.92178780637, 0.5: 2.451883377238}
+#: u on the axis at height z (cap around +z), eps = 0.5, from the same solution.
+CAP_AXIS_05 = {0.5: 1.3424776371, -0.5: 2.3713788929, 0.9: 0.267341569}
+
+#: Two equal caps: (eps, angle between the centres) -> mean. Spectral solution with the sphere's closed-form Neumann
+#: function, antipodal pairs also by dual series to 1e-12; the three-term formula of Cheviakov, Ward & Straube (2010,
+#: doi:10.1137/100782620) agrees within its own error.
+TWO_EQUAL_CAPS = {(0.1, 0.25): 6.84388629, (0.2, np.pi): 2.467394318503, (0.1, np.pi): 5.201974474248}
+#: Two unequal antipodal caps (0.1, 0.2): mean and the share of the smaller; dual series, 12 digits.
+UNEQUAL_CAPS_MEAN, UNEQUAL_CAPS_SHARE = 3.402154331544, 0.3419518369677
+
+#: Unit cube, square window of side s on one face: mean = 1/3 + window resistance. Piecewise constant Galerkin,
+#: graded and extrapolated to ~1e-6, cross-checked by cosine modes to 2e-5.
+CUBE_CENTRED_WINDOW = {0.1: 4.053400, 0.4: 0.824235}
+#: The same window in a corner of the face (by images: a centred window of side 2s in a 2 × 2 × 1 box).
+CUBE_CORNER_WINDOW = {0.1: 7.778242, 0.4: 1.317342}
+#: Unit cube with a centred square neck, side 0.4, length 0.5, open at the far end: average over head and neck, and
+#: over the head alone. Galerkin ~1e-6, mode cross-check 1e-5.
+NECK_ALL, NECK_HEAD = 3.943980, 4.127853
