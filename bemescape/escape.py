@@ -5,6 +5,7 @@ from __future__ import annotations
 import time
 from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -180,7 +181,7 @@ def solve_escape(
         levels=tuple(levels),
         start=_start_times(best, points, d),
         notes=tuple(notes),
-        settings={**asdict(settings), "target": wanted},
+        settings={**asdict(settings), "target": wanted, "surface": surface.name, "windows": _window_settings(windows)},
         mesh_sha256=surface.sha256,
         health=surface.health,
         healing=surface.healing,
@@ -271,6 +272,16 @@ def _packed(placement: Placement, solution: _Solution, estimate: Estimate, d: fl
         levels=(),
         wall_s=0.0,
     )
+
+
+def _window_settings(windows: Sequence[Window]) -> list[dict[str, Any]]:
+    """Windows as they were asked for, in plain values: what is needed to repeat the run."""
+    rows = []
+    for window in windows:
+        kappa = window.permeability_um_s
+        row = {"name": window.name, **asdict(window.shape), "permeability_um_s": kappa if np.isfinite(kappa) else None}
+        rows.append(row)
+    return rows
 
 
 def _check_surface(surface: Surface) -> None:

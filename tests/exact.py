@@ -4,6 +4,8 @@ Conventions: `mean` is the volume average of the escape time; caps on the unit b
 disc window of chord radius 2 sin(eps/2).
 """
 
+import itertools
+
 import numpy as np
 
 
@@ -66,8 +68,8 @@ def cap_mean(eps, points=400):
     edges = eps * np.concatenate([panels, [1.0]])
     order = max(8, points // len(edges))
     nodes, weights = np.polynomial.legendre.leggauss(order)
-    t = np.concatenate([0.5 * (b - a) * nodes + 0.5 * (a + b) for a, b in zip(edges[:-1], edges[1:], strict=True)])
-    w = np.concatenate([0.5 * (b - a) * weights for a, b in zip(edges[:-1], edges[1:], strict=True)])
+    t = np.concatenate([0.5 * (b - a) * nodes + 0.5 * (a + b) for a, b in itertools.pairwise(edges)])
+    w = np.concatenate([0.5 * (b - a) * weights for a, b in itertools.pairwise(edges)])
 
     def smooth(x):
         """k without its logarithm ln|x|, times cos: finite at 0."""

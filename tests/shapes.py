@@ -1,5 +1,7 @@
 """Bodies with exact answers, as surfaces in µm. Balls and cylinders are rescaled to the volume of the true body."""
 
+import itertools
+
 import numpy as np
 import trimesh
 
@@ -20,8 +22,8 @@ def from_quads(quads, labels=None):
 def _patch(u, v, place, *, flip, skip=None):
     """Quads of a flat grid u × v; `place(u, v)` gives the point; cells with `skip(mid_u, mid_v)` are left out."""
     quads = []
-    for a, b in zip(u[:-1], u[1:], strict=True):
-        for c, d in zip(v[:-1], v[1:], strict=True):
+    for a, b in itertools.pairwise(u):
+        for c, d in itertools.pairwise(v):
             if skip is not None and skip(0.5 * (a + b), 0.5 * (c + d)):
                 continue
             corners = [place(a, c), place(b, c), place(b, d), place(a, d)]
@@ -41,9 +43,8 @@ def box(size=(1.0, 1.0, 1.0), cells=8, *, label=None):
             point[first], point[second], point[axis] = a, b, height
             return point
 
-        quads += _patch(grids[first], grids[second], lambda a, b: place(a, b, height=0.0), flip=True)
-        top = size[axis]
-        quads += _patch(grids[first], grids[second], lambda a, b: place(a, b, height=top), flip=False)
+        quads += _patch(grids[first], grids[second], place, flip=True)
+        quads += _patch(grids[first], grids[second], lambda a, b, top=size[axis]: place(a, b, height=top), flip=False)
     quads = np.array(quads)
     labels = None if label is None else [label(quad.mean(axis=0)) for quad in quads]
     return from_quads(quads, labels)
@@ -109,13 +110,13 @@ def cylinder_with_strip(half_angle=0.5, height=1.0, *, around=96, cells=6, rings
     triangles, labels = [], []
     for k in range(len(phi)):
         a, b = circle[k], circle[(k + 1) % len(phi)]
-        for low, high in zip(z[:-1], z[1:], strict=True):
+        for low, high in itertools.pairwise(z):
             c00, c10, c11, c01 = (*a, low), (*b, low), (*b, high), (*a, high)
             triangles += [(c00, c10, c11), (c00, c11, c01)]
             labels += [int(k < in_strip)] * 2
         for end, up in ((0.0, False), (height, True)):
             radii = np.linspace(0.0, 1.0, rings + 1)
-            for inner, outer in zip(radii[:-1], radii[1:], strict=True):
+            for inner, outer in itertools.pairwise(radii):
                 p, q = (*(inner * a), end), (*(inner * b), end)
                 r, s = (*(outer * b), end), (*(outer * a), end)
                 pieces = [(p, s, r)] if inner == 0.0 else [(p, s, r), (p, r, q)]

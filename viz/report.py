@@ -12,6 +12,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from bemescape.errors import SettingsError
+from bemescape.results.summary import CAUTION
 from bemescape.units import format_length, format_time, time_scale
 
 from .page import PAGE
@@ -21,9 +22,8 @@ if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
     from bemescape.results.summary import Summary
 
-__all__ = ["CAUTION", "LOCAL_RULES", "write_report"]
+__all__ = ["LOCAL_RULES", "write_report"]
 
-CAUTION = "Research tool. Times scale with D and the segmentation; not for clinical or dosing decisions."
 LOCAL_RULES = "Follow local rules and licensed practice."
 
 # What each picture shows, in the order of the report; wide ones take both columns.

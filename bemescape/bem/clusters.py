@@ -13,9 +13,7 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 
-def wall_clusters(
-    centroids: Floats, neighbours: Ints, is_window: NDArray[np.bool_], *, wanted: int = 100
-) -> Ints:
+def wall_clusters(centroids: Floats, neighbours: Ints, is_window: NDArray[np.bool_], *, wanted: int = 100) -> Ints:
     """Cluster number (m,) of each wall panel, −1 in none: slices of the wall between equal distances to the windows.
 
     Distances run along the wall, so the slices of a branched shape are connected pieces of its branches: along a

@@ -16,13 +16,21 @@ import numpy as np
 from numba import njit, prange
 from numpy.typing import NDArray
 
-from bemescape.bem.kernels import spread_dipole, spread_inverse, spread_lifted
+from bemescape.bem.kernels import (
+    spread_dipole,
+    spread_distance,
+    spread_inverse,
+    spread_lifted,
+    spread_lifted_distance,
+)
 from bemescape.bem.panels import Panels
 
 __all__ = [
     "Targets",
     "cluster_double_layer",
+    "distance_layer",
     "double_layer",
+    "lifted_distance_layer",
     "lifted_single_layer",
     "panel_targets",
     "point_targets",
@@ -57,14 +65,14 @@ def point_targets(points: Floats) -> Targets:
 
 
 # The kinds of kernel, as compile-time constants of the one loop below.
-_SINGLE, _LIFTED, _DOUBLE = 1, 2, 3
+_SINGLE, _LIFTED, _DOUBLE, _DISTANCE, _LIFTED_DISTANCE = 1, 2, 3, 4, 5
 
 
 def _pass(kind):
     """A compiled loop over all pairs for one kind of kernel (a closure constant, so nothing branches inside)."""
 
     @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
-    def run(points, point_normals, point_spread, sources, normals, spread, softening2, strength, out):
+    def run(points, point_normals, point_spread, sources, normals, spread, strength, out):
         n = len(sources)
         one = np.float32(1.0)
         for tile in prange((len(points) + _TILE - 1) // _TILE):
@@ -80,8 +88,7 @@ def _pass(kind):
                 np.empty(_BLOCK, np.float32),
                 np.empty(_BLOCK, np.float32),
             )
-            soft, wide = np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32)
-            weight = np.empty(_BLOCK, np.float32)
+            wide, weight = np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32)
             for block in range(0, n, _BLOCK):
                 size = min(_BLOCK, n - block)
                 for k in range(size):
@@ -90,7 +97,7 @@ def _pass(kind):
                     sy[k] = np.float32(sources[j, 1] - cy)
                     sz[k] = np.float32(sources[j, 2] - cz)
                     nx[k], ny[k], nz[k] = normals[j, 0], normals[j, 1], normals[j, 2]
-                    soft[k], wide[k], weight[k] = softening2[j], spread[j], strength[j]
+                    wide[k], weight[k] = spread[j], strength[j]
                 for i in range(begin, end):
                     x = np.float32(points[i, 0] - cx)
                     y = np.float32(points[i, 1] - cy)
@@ -102,15 +109,21 @@ def _pass(kind):
                     total = np.float32(0.0)
                     for k in range(size):
                         dx, dy, dz = x - sx[k], y - sy[k], z - sz[k]
-                        inverse = one / np.sqrt(dx * dx + dy * dy + dz * dz + soft[k])
+                        inverse = one / np.sqrt(dx * dx + dy * dy + dz * dz + wide[k])
                         hs = nx[k] * dx + ny[k] * dy + nz[k] * dz
                         ht = px * dx + py * dy + pz * dz
                         if kind == _SINGLE:
                             total += weight[k] * spread_inverse(ht, hs, mine, wide[k], inverse)
+                        elif kind == _DISTANCE:
+                            total += weight[k] * spread_distance(ht, hs, mine, wide[k], inverse)
                         else:
                             tilt = px * nx[k] + py * ny[k] + pz * nz[k]
                             if kind == _LIFTED:
                                 total -= weight[k] * spread_lifted(ht, hs, tilt, mine, wide[k], inverse)
+                            elif kind == _LIFTED_DISTANCE:
+                                total -= weight[k] * spread_lifted_distance(
+                                    ht, hs, tilt, mine, wide[k], inverse
+                                )
                             else:
                                 total += weight[k] * spread_dipole(ht, hs, tilt, mine, wide[k], inverse)
                     out[i] += total
@@ -121,6 +134,8 @@ def _pass(kind):
 _single_pass = _pass(_SINGLE)
 _lifted_pass = _pass(_LIFTED)
 _double_pass = _pass(_DOUBLE)
+_distance_pass = _pass(_DISTANCE)
+_lifted_distance_pass = _pass(_LIFTED_DISTANCE)
 
 
 def _summed(run: Callable[..., None], at: Targets, panels: Panels, used: Ints, density: Floats) -> Floats:
@@ -128,7 +143,7 @@ def _summed(run: Callable[..., None], at: Targets, panels: Panels, used: Ints, d
     strength = panels.areas[used] * density / _FOUR_PI
     run(
         at.points, at.normals, at.spread, panels.centroids[used], panels.normals[used], panels.spread[used],
-        panels.softening2[used], strength, out,
+        strength, out,
     )  # fmt: skip
     return out
 
@@ -148,10 +163,18 @@ def double_layer(at: Targets, panels: Panels, used: Ints, density: Floats) -> Fl
     return _summed(_double_pass, at, panels, used, density)
 
 
+def distance_layer(at: Targets, panels: Panels, used: Ints, density: Floats) -> Floats:
+    """Σ density_j ∫_j r/4π over the panels `used` (k,), density (k,); r is the distance from the target."""
+    return _summed(_distance_pass, at, panels, used, density)
+
+
+def lifted_distance_layer(at: Targets, panels: Panels, used: Ints, density: Floats) -> Floats:
+    """Σ density_j h_j ∫_j r/4π with h_j as in `lifted_single_layer`."""
+    return _summed(_lifted_distance_pass, at, panels, used, density)
+
+
 @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
-def _clusters(
-    points, point_normals, point_spread, sources, normals, spread, softening2, strength, first, out
-):
+def _clusters(points, point_normals, point_spread, sources, normals, spread, strength, first, out):
     n = len(sources)
     one = np.float32(1.0)
     for tile in prange((len(points) + _TILE - 1) // _TILE):
@@ -174,7 +197,7 @@ def _clusters(
                 total = np.float32(0.0)
                 for k in range(first[cluster], first[cluster + 1]):
                     dx, dy, dz = x - sx[k], y - sy[k], z - sz[k]
-                    inverse = one / np.sqrt(dx * dx + dy * dy + dz * dz + softening2[k])
+                    inverse = one / np.sqrt(dx * dx + dy * dy + dz * dz + spread[k])
                     hs = normals[0, k] * dx + normals[1, k] * dy + normals[2, k] * dz
                     ht = px * dx + py * dy + pz * dz
                     tilt = px * normals[0, k] + py * normals[1, k] + pz * normals[2, k]
@@ -192,6 +215,6 @@ def cluster_double_layer(at: Targets, panels: Panels, used: Ints, first: Ints) -
     _clusters(
         at.points, at.normals, at.spread, panels.centroids[used],
         np.ascontiguousarray(panels.normals[used].T, single), panels.spread[used].astype(single),
-        panels.softening2[used].astype(single), (panels.areas[used] / _FOUR_PI).astype(single), first, out,
+        (panels.areas[used] / _FOUR_PI).astype(single), first, out,
     )  # fmt: skip
     return out.astype(np.float64)

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from bemescape.bem.kernels import panel_integrals, spread_dipole, spread_inverse, spread_lifted
 from bemescape.bem.panels import Panels
 
-__all__ = ["FieldValues", "field_at"]
+__all__ = ["FieldValues", "field_at", "triangle_distance"]
 
 Floats = NDArray[np.float64]
 
@@ -44,7 +44,7 @@ class FieldValues:
 
 
 @njit(cache=True, error_model="numpy")
-def _triangle_distance(x, y, z, corners, j):
+def triangle_distance(x, y, z, corners, j):
     """Distance from a point to a triangle: in its plane's prism the height, else the nearest edge."""
     best = np.inf
     inside = True
@@ -75,9 +75,7 @@ def _triangle_distance(x, y, z, corners, j):
 
 
 @njit(cache=True, parallel=True, error_model="numpy")
-def _sums(
-    points, corners, centroids, normals, areas, radii, spread, u, q, source, value, winding, gap, nearest
-):
+def _sums(points, corners, centroids, normals, areas, radii, spread, u, q, source, value, winding, gap, nearest):
     m = len(areas)
     for i in prange(len(points)):
         x, y, z = points[i, 0], points[i, 1], points[i, 2]
@@ -97,9 +95,9 @@ def _sums(
                     normals[j, 0], normals[j, 1], normals[j, 2],
                 )  # fmt: skip
                 lifted = -hs * one
-                distance = _triangle_distance(x, y, z, corners, j)
+                distance = triangle_distance(x, y, z, corners, j)
             else:
-                inverse = 1.0 / math.sqrt(square)
+                inverse = 1.0 / math.sqrt(square + spread[j])
                 one = areas[j] * spread_inverse(0.0, hs, 0.0, spread[j], inverse)
                 lifted = -areas[j] * spread_lifted(0.0, hs, 0.0, 0.0, spread[j], inverse)
                 angle = -areas[j] * spread_dipole(0.0, hs, 0.0, 0.0, spread[j], inverse)
@@ -115,7 +113,7 @@ def _sums(
 
 
 def field_at(panels: Panels, u: Floats, q: Floats, source: float, points: Floats) -> FieldValues:
-    """u = source·∫_Ω G + V q − K u at points (p, 3), for Δu = −source with u and q = ∂u/∂n (m,) on the panels.
+    """U = source·∫_Ω G + V q − K u at points (p, 3), for Δu = −source with u and q = ∂u/∂n (m,) on the panels.
 
     A constant is taken out of u before summing and put back afterwards, so that the small error of the far solid
     angles does not multiply the whole of u.

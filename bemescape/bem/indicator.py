@@ -27,12 +27,10 @@ def coarse_panels(
     weight = np.repeat(area, 3)
     total = np.bincount(faces.ravel(), weights=weight, minlength=len(vertices))
     at_vertex = np.bincount(faces.ravel(), weights=weight * np.repeat(u, 3), minlength=len(vertices))
-    at_vertex /= np.maximum(total, 1e-300)
+    at_vertex = at_vertex / np.maximum(total, 1e-300)
     # Gradient of the linear function through the three corner values.
     opposite = corners[:, [2, 0, 1]] - corners[:, [1, 2, 0]]
-    gradient = (
-        np.einsum("ik,ikx->ix", at_vertex[faces], np.cross(normal[:, None], opposite)) / double[:, None]
-    )
+    gradient = np.einsum("ik,ikx->ix", at_vertex[faces], np.cross(normal[:, None], opposite)) / double[:, None]
     share = area**1.5 * np.einsum("ij,ij->i", gradient, gradient)
     share[is_window] = 0.0
     order = np.argsort(-share)

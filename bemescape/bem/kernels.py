@@ -15,21 +15,27 @@ __all__ = [
     "panel_integrals",
     "self_mean_inverse_distance",
     "spread_dipole",
+    "spread_distance",
     "spread_inverse",
     "spread_lifted",
+    "spread_lifted_distance",
 ]
 
 _TINY = 1e-300
 
 # Single-precision constants keep a single-precision loop in single precision, and are exact in a double one.
-_HALF, _ONE, _TWO, _THREE, _SIX, _NINE, _FIFTEEN = (np.float32(x) for x in (0.5, 1, 2, 3, 6, 9, 15))
+_HALF, _ONE, _TWO, _THREE, _SIX, _TWELVE, _FIFTEEN = (np.float32(x) for x in (0.5, 1, 2, 3, 6, 12, 15))
 
 
 @njit(cache=True, inline="always", error_model="numpy")
 def _edge_log(length, from_start, from_end):
-    """ln((R₁ + R₂ + L)/(R₁ + R₂ − L)): the potential of a unit line charge on an edge of length L."""
+    """ln((R₁ + R₂ + L)/(R₁ + R₂ − L)): the potential of a unit line charge on an edge of length L.
+
+    On the edge itself R₁ + R₂ − L is rounding noise of either sign; the logarithm is multiplied by the distance to
+    the edge there, so any small positive number serves.
+    """
     total = from_start + from_end
-    return math.log((total + length) / (total - length + 1e-16 * total + _TINY))
+    return math.log((total + length) / (max(total - length, 1e-15 * total) + _TINY))
 
 
 @njit(cache=True, error_model="numpy")
@@ -90,17 +96,20 @@ def self_mean_inverse_distance(a, b, c, area):
 
 @njit(cache=True, inline="always", error_model="numpy")
 def spread_inverse(ht, hs, spread_target, spread_source, inverse):
-    """Mean of 1/|x − y| over two panels whose centroids are 1/inverse apart, to second order in their size.
+    """Mean of 1/|x − y| over two panels, to second order in their size, from their centroids.
+
+    With d from source to target centroid, r = |d|, hs = n_source·d and ht = n_target·d. `inverse` is 1/ρ with
+    ρ² = r² + spread_source: that keeps close pairs, which the near field replaces, at the size of their neighbours,
+    so that nothing is lost when single-precision sums are corrected by them; its own effect at a distance,
+    −spread_source/(2r³), is put back here.
 
     A panel's second moment is taken as isotropic in its plane, spread·(I − n nᵀ); since 1/r is harmonic its
-    in-plane Laplacian is −∂²/∂n², hence 1/r·[1 + spread/(2r²)·(1 − 3h²/r²)] per panel, with d from source to
-    target, hs = n_source·d and ht = n_target·d. Without it every neighbour in a flat stretch of wall is
-    underrated, and the error falls only with the panel size, not with its square.
+    in-plane Laplacian is −∂²/∂n², hence spread/(2r³)·(1 − 3h²/r²) for each panel. Without it every neighbour in a
+    flat stretch of wall is underrated, and the error falls only with the panel size, not with its square.
     """
     inverse2 = inverse * inverse
     return inverse + _HALF * inverse2 * inverse * (
-        spread_target * (_ONE - _THREE * ht * ht * inverse2)
-        + spread_source * (_ONE - _THREE * hs * hs * inverse2)
+        spread_target * (_ONE - _THREE * ht * ht * inverse2) + spread_source * (_TWO - _THREE * hs * hs * inverse2)
     )
 
 
@@ -114,7 +123,7 @@ def spread_lifted(ht, hs, tilt, spread_target, spread_source, inverse):
     inverse2 = inverse * inverse
     return hs * inverse + _HALF * inverse2 * inverse * (
         spread_target * (_TWO * tilt * ht - hs - _THREE * hs * ht * ht * inverse2)
-        + spread_source * hs * (_ONE - _THREE * hs * hs * inverse2)
+        + spread_source * hs * (_TWO - _THREE * hs * hs * inverse2)
     )
 
 
@@ -127,7 +136,26 @@ def spread_dipole(ht, hs, tilt, spread_target, spread_source, inverse):
         + _HALF
         * inverse2
         * (
-            spread_source * hs * (_NINE - _FIFTEEN * hs * hs * inverse2)
+            spread_source * hs * (_TWELVE - _FIFTEEN * hs * hs * inverse2)
             + spread_target * (_SIX * tilt * ht + _THREE * hs - _FIFTEEN * hs * ht * ht * inverse2)
         )
+    )
+
+
+@njit(cache=True, inline="always", error_model="numpy")
+def spread_distance(ht, hs, spread_target, spread_source, inverse):
+    """Mean of |x − y| over two panels, as `spread_inverse`; in a plane at height h, Δr = 1/r + h²/r³."""
+    inverse2 = inverse * inverse
+    return _ONE / inverse + _HALF * inverse * (
+        spread_target * (_ONE + ht * ht * inverse2) + spread_source * (_ONE + hs * hs * inverse2)
+    )
+
+
+@njit(cache=True, inline="always", error_model="numpy")
+def spread_lifted_distance(ht, hs, tilt, spread_target, spread_source, inverse):
+    """Mean of n_source·(x − y) |x − y| over two panels, as `spread_lifted`; in space Δ(hs r) = 4 hs/r."""
+    inverse2 = inverse * inverse
+    return hs / inverse + _HALF * inverse * (
+        spread_target * (_THREE * hs - _TWO * tilt * ht + hs * ht * ht * inverse2)
+        + spread_source * hs * (_ONE + hs * hs * inverse2)
     )

@@ -164,7 +164,8 @@ def _three_by_three(points, sources, normals, areas, j):
 
 @njit(cache=True, parallel=True, error_model="numpy")
 def _fill_rows(
-    corners, centroids, normals, areas, radii, softening2, spread, three_points, close_points, close_weights, close_first, is_window,
+    corners, centroids, normals, areas, radii, spread, three_points,
+    close_points, close_weights, close_first, is_window,
     tree_first, tree_last, low, high, reach, exact, fine, close,
     first, column, double, window_first, window_column, single, volume,
 ):  # fmt: skip
@@ -187,22 +188,16 @@ def _fill_rows(
                     v, d, h = self_mean_inverse_distance(a, b, c, areas[i]), 0.0, 0.0
                 elif distance < close * radii[i] + radii[j]:
                     rule = slice(close_first[i], close_first[i + 1])
-                    v, d, h = _exact_pair(
-                        close_points[rule], close_weights[rule], corners, centroids, normals, j
-                    )
+                    v, d, h = _exact_pair(close_points[rule], close_weights[rule], corners, centroids, normals, j)
                 elif distance < exact * max(radii[i], radii[j]):
                     v, d, h = _exact_pair(three_points[i], thirds, corners, centroids, normals, j)
                 else:
                     v, d, h = _three_by_three(three_points[i], three_points[j], normals, areas, j)
                 # What the far field does with this pair, to be taken back.
-                inverse = 1.0 / math.sqrt(distance * distance + softening2[j])
+                inverse = 1.0 / math.sqrt(distance * distance + spread[j])
                 hs = normals[j, 0] * dx + normals[j, 1] * dy + normals[j, 2] * dz
                 ht = normals[i, 0] * dx + normals[i, 1] * dy + normals[i, 2] * dz
-                tilt = (
-                    normals[i, 0] * normals[j, 0]
-                    + normals[i, 1] * normals[j, 1]
-                    + normals[i, 2] * normals[j, 2]
-                )
+                tilt = normals[i, 0] * normals[j, 0] + normals[i, 1] * normals[j, 1] + normals[i, 2] * normals[j, 2]
                 far_v = areas[j] * spread_inverse(ht, hs, spread[i], spread[j], inverse)
                 far_d = areas[j] * spread_dipole(ht, hs, tilt, spread[i], spread[j], inverse)
                 far_h = -areas[j] * spread_lifted(ht, hs, tilt, spread[i], spread[j], inverse)
@@ -238,8 +233,7 @@ def build_near_field(
         np.zeros(len(panels)),
     )
     _fill_rows(
-        panels.corners, panels.centroids, panels.normals, panels.areas, panels.radii, panels.softening2,
-        panels.spread,
+        panels.corners, panels.centroids, panels.normals, panels.areas, panels.radii, panels.spread,
         panels.three_points, panels.close_points,
         panels.close_weights, panels.close_first, is_window, *tree, exact, fine, close,
         near.first, near.column, near.double, near.window_first, near.window_column, near.single, near.volume,

@@ -67,13 +67,13 @@ class EscapeOperator:
     def single(self, q_window: Floats) -> Floats:
         """V q on all panels, for q (w,) on the window panels."""
         far = single_layer(panel_targets(self.panels), self.panels, np.flatnonzero(self.is_window), q_window)
-        return far + self.near_single @ q_window.astype(np.float32)
+        return np.asarray(far + self.near_single @ q_window.astype(np.float32))
 
     def half_plus_double(self, u: Floats) -> Floats:
         """(½ + K) u on all panels, for u (m,)."""
         used = np.flatnonzero(u)
         far = double_layer(panel_targets(self.panels), self.panels, used, u[used])
-        return far + self.near_double @ u.astype(np.float32) + self.diagonal * u
+        return np.asarray(far + self.near_double @ u.astype(np.float32) + self.diagonal * u)
 
     def half_plus_double_of_clusters(self, cluster_of: Ints, count: int) -> Floats:
         """(½ + K) Z, (m, count), for the indicator functions Z of clusters of panels (−1: in none)."""
@@ -82,9 +82,7 @@ class EscapeOperator:
         used = used[np.argsort(cluster_of[used], kind="stable")]
         first = np.searchsorted(cluster_of[used], np.arange(count + 1))
         image = cluster_double_layer(panel_targets(p), p, used, first)
-        indicator = csr_matrix(
-            (np.ones(len(used), np.float32), (used, cluster_of[used])), shape=(len(p), count)
-        )
+        indicator = csr_matrix((np.ones(len(used), np.float32), (used, cluster_of[used])), shape=(len(p), count))
         image += (self.near_double @ indicator).toarray()
         image[used, cluster_of[used]] += self.diagonal[used]
         return image

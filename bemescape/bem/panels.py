@@ -10,17 +10,13 @@ from scipy.special import roots_jacobi, roots_legendre
 
 from bemescape.bem.tree import BoxTree, build_box_tree, morton_order
 
-__all__ = ["SOFTENING", "THREE_POINT", "Panels", "make_panels"]
+__all__ = ["THREE_POINT", "Panels", "make_panels"]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 #: Barycentric points of the three-point rule, weights 1/3 each: exact for quadratics (Strang & Fix 1973).
 THREE_POINT = np.array([[2 / 3, 1 / 6, 1 / 6], [1 / 6, 2 / 3, 1 / 6], [1 / 6, 1 / 6, 2 / 3]])
-
-#: Softening length of the far kernel, squared, in panel areas: its effect at the edge of the near field is
-#: softening²/(2·distance²), below 1e-4.
-SOFTENING = 1e-3
 
 #: The rule for touching panels has this number squared of points on each part. The potential of a neighbour is
 #: continuous across the common edge but its slope is not bounded there; three points leave an error that falls
@@ -44,10 +40,9 @@ class Panels:
         Normals point out of the volume.
     areas, radii : (m,) float64
         Radius: largest distance from the centroid to a corner.
-    softening2 : (m,) float64
-        Squared softening length of the far kernel, in µm².
     spread : (m,) float64
         Half the trace of the second moment tensor about the centroid, per area: (a² + b² + c²)/72.
+        Also the squared softening length of the far kernels.
     three_points : (m, 3, 3) float64
         Quadrature points of equal weight for averages over a panel.
     close_points : (p, 3) float64, close_weights : (p,) float64, close_first : (m + 1,) int64
@@ -63,7 +58,6 @@ class Panels:
     normals: Floats
     areas: Floats
     radii: Floats
-    softening2: Floats
     spread: Floats
     three_points: Floats
     close_points: Floats
@@ -136,7 +130,6 @@ def make_panels(corners: Floats) -> Panels:
         normals=cross / double[:, None],
         areas=areas,
         radii=radii,
-        softening2=SOFTENING * areas,
         # (a² + b² + c²)/36 is the polar second moment of a triangle per area; common practice.
         spread=((corners - centroids[:, None]) ** 2).sum(axis=(1, 2)) / 24.0,
         three_points=np.einsum("qk,tkx->tqx", THREE_POINT, corners),

@@ -13,7 +13,7 @@ from bemescape.bem.kernels import spread_inverse
 from bemescape.bem.operator import EscapeOperator
 from bemescape.errors import ConvergenceError
 
-__all__ = ["BoundarySolution", "solve_boundary"]
+__all__ = ["BoundarySolution", "BoundarySolver", "solve_boundary"]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -54,7 +54,7 @@ def _dense_single(operator: EscapeOperator, chosen: Ints, members: Ints) -> Floa
     panels = operator.panels
     index = chosen[members]
     gap = panels.centroids[index, None] - panels.centroids[None, index]
-    inverse = 1.0 / np.sqrt(np.einsum("ijk,ijk->ij", gap, gap) + panels.softening2[index])
+    inverse = 1.0 / np.sqrt(np.einsum("ijk,ijk->ij", gap, gap) + panels.spread[index])
     height_target = np.einsum("ijk,ik->ij", gap, panels.normals[index])
     height_source = np.einsum("ijk,jk->ij", gap, panels.normals[index])
     spread = panels.spread[index]
@@ -63,6 +63,157 @@ def _dense_single(operator: EscapeOperator, chosen: Ints, members: Ints) -> Floa
     block += operator.near_single[index][:, members].toarray()
     block[np.diag_indices(len(index))] += 0.5 * operator.resistance[index]
     return np.asarray(block)
+
+
+class BoundarySolver:
+    """The equation ½u + K u − V q = right of one operator, prepared for any number of right-hand sides.
+
+    GMRES on the panels' equations, preconditioned from the right by q = −V_ww⁻¹ r per window, then
+    u = 2 (r + V q) on the wall. Slow modes (nearly constant u in compartments joined by necks) are taken out
+    beforehand: with Z the indicators of `cluster_of`, the residual is minimised over span(Z) + Krylov space
+    (de Sturler 1996, doi:10.1016/0377-0427(94)00123-5, with a fixed outer space). The dense blocks and the outer
+    space are made once.
+
+    Parameters
+    ----------
+    operator : EscapeOperator
+    cluster_of : (m,) int64, optional
+        Cluster of each wall panel, −1 for none.
+    tolerance : float
+        Residual relative to the right-hand side, in the area-weighted norm.
+    most_iterations : int
+    """
+
+    def __init__(
+        self,
+        operator: EscapeOperator,
+        *,
+        cluster_of: Ints | None = None,
+        tolerance: float = 1e-7,
+        most_iterations: int = 200,
+    ) -> None:
+        panels = operator.panels
+        self.operator = operator
+        self.tolerance = tolerance
+        self.most_iterations = most_iterations
+        self._root = np.sqrt(panels.areas / panels.areas.sum())
+        self._blocks = _WindowBlocks(operator)
+        # Outer space: C = A Z with orthonormal columns (area-weighted).
+        if cluster_of is not None and cluster_of.max() >= 0:
+            count = int(cluster_of.max()) + 1
+            image = self._root[:, None] * operator.half_plus_double_of_clusters(cluster_of, count)
+            self._outer, self._triangle = qr(image, mode="economic")
+            self._cluster_of = cluster_of
+        else:
+            self._outer, self._triangle = np.zeros((len(panels), 0)), np.zeros((0, 0))
+            self._cluster_of = np.full(len(panels), -1)
+
+    def solve(
+        self,
+        right: Floats,
+        *,
+        given: Floats | None = None,
+        tell: Callable[[int, float], None] = lambda _iteration, _residual: None,
+    ) -> BoundarySolution:
+        """Solve ½u + K u − V q = right with u = given − ρq on the windows and q = 0 on the wall.
+
+        Parameters
+        ----------
+        right : (m,) float64
+            Averages over the panels.
+        given : (m,) float64, optional
+            Known part of u, zero on the wall; zero everywhere by default.
+        tell : callable
+            Called with the iteration and the relative residual.
+
+        Raises
+        ------
+        ConvergenceError
+            The residual is above the tolerance after the most iterations allowed.
+        """
+        if given is None:
+            return self._solved(right, tell)
+        rest = self._solved(right - self.operator.half_plus_double(given), tell)
+        return BoundarySolution(rest.u + given, rest.q, rest.residuals)
+
+    def _precondition(self, residual: Floats) -> tuple[Floats, Floats, Floats]:
+        """From a residual to (u, q on windows, and V q which the operator would compute again)."""
+        window = self.operator.is_window
+        q = -self._blocks.solve(residual[window])
+        v_q = self.operator.single(q)
+        u = 2.0 * (residual + v_q)
+        u[window] = -self.operator.resistance[window] * q
+        return u, q, v_q
+
+    def _solved(self, right: Floats, tell: Callable[[int, float], None]) -> BoundarySolution:
+        operator, root, outer = self.operator, self._root, self._outer
+        window = operator.is_window
+        most_iterations = self.most_iterations
+        scale = float(np.linalg.norm(root * right))
+        if scale == 0.0:
+            return BoundarySolution(np.zeros(len(right)), np.zeros(len(right)), ())
+        start = outer.T @ (root * right)
+        residual = root * right - outer @ start
+        beta = float(np.linalg.norm(residual))
+
+        basis = [residual / beta]
+        steps: list[tuple[Floats, Floats]] = []
+        outer_parts: list[Floats] = []
+        hessenberg = np.zeros((most_iterations + 1, most_iterations))
+        givens = np.zeros((most_iterations, 2))
+        rotated = np.zeros(most_iterations + 1)
+        rotated[0] = beta
+        residuals: list[float] = []
+        k = 0
+        while beta / scale > self.tolerance:
+            if k == most_iterations:
+                raise ConvergenceError(
+                    f"the iteration reached a residual of {residuals[-1]:.1e} after {k} iterations "
+                    f"(limit {self.tolerance:.0e}); the surface may have panels of very bad shape: try heal='rebuild'",
+                    residuals=tuple(residuals),
+                )
+            u, q, v_q = self._precondition(basis[k] / root)
+            steps.append((u, q))
+            new = root * (operator.half_plus_double(u) - v_q)
+            part = outer.T @ new
+            outer_parts.append(part)
+            new -= outer @ part
+            column = hessenberg[:, k]
+            for _ in range(2):  # twice: single-precision products leave the first pass not quite orthogonal
+                for j in range(k + 1):
+                    overlap = float(basis[j] @ new)
+                    column[j] += overlap
+                    new -= overlap * basis[j]
+            column[k + 1] = np.linalg.norm(new)
+            basis.append(new / max(column[k + 1], 1e-300))
+            for j in range(k):
+                c, s = givens[j]
+                column[j], column[j + 1] = c * column[j] + s * column[j + 1], -s * column[j] + c * column[j + 1]
+            length = float(np.hypot(column[k], column[k + 1]))
+            givens[k] = column[k] / length, column[k + 1] / length
+            column[k], column[k + 1] = length, 0.0
+            rotated[k + 1] = -givens[k, 1] * rotated[k]
+            rotated[k] *= givens[k, 0]
+            k += 1
+            beta = abs(float(rotated[k]))
+            residuals.append(beta / scale)
+            tell(k, beta / scale)
+
+        weights = solve_triangular(hessenberg[:k, :k], rotated[:k]) if k else np.zeros(0)
+        u = np.zeros(len(right))
+        q_window = np.zeros(int(window.sum()))
+        outer_weights = start
+        for weight, (u_step, q_step), part in zip(weights, steps, outer_parts, strict=True):
+            u += weight * u_step
+            q_window += weight * q_step
+            outer_weights = outer_weights - weight * part
+        if len(self._triangle):
+            in_cluster = self._cluster_of >= 0
+            level = solve_triangular(self._triangle, outer_weights)
+            u[in_cluster] += level[self._cluster_of[in_cluster]]
+        q = np.zeros(len(right))
+        q[window] = q_window
+        return BoundarySolution(u, q, tuple(residuals))
 
 
 def solve_boundary(
@@ -74,122 +225,8 @@ def solve_boundary(
     cluster_of: Ints | None = None,
     tell: Callable[[int, float], None] = lambda _iteration, _residual: None,
 ) -> BoundarySolution:
-    """Solve ½u + K u − V q = right with u = −ρq on the windows and q = 0 on the wall.
-
-    GMRES on the panels' equations, preconditioned from the right by q = −V_ww⁻¹ r per window, then
-    u = 2 (r + V q) on the wall. Slow modes (nearly constant u in compartments joined by necks) are taken out
-    beforehand: with Z the indicators of `cluster_of`, the residual is minimised over span(Z) + Krylov space
-    (de Sturler 1996, doi:10.1016/0377-0427(94)00123-5, with a fixed outer space).
-
-    Parameters
-    ----------
-    operator : EscapeOperator
-    right : (m,) float64
-        Averages over the panels, µm² for D = 1.
-    tolerance : float
-        Residual relative to `right`, in the area-weighted norm.
-    most_iterations : int
-    cluster_of : (m,) int64, optional
-        Cluster of each wall panel, −1 for none.
-    tell : callable
-        Called with the iteration and the relative residual.
-
-    Raises
-    ------
-    ConvergenceError
-        The residual is above `tolerance` after `most_iterations`.
-    """
-    panels = operator.panels
-    window = operator.is_window
-    wall = ~window
-    resistance = operator.resistance
-    partly = bool((resistance > 0.0).any())
-    root = np.sqrt(panels.areas / panels.areas.sum())
-    blocks = _WindowBlocks(operator)
-
-    def precondition(residual: Floats) -> tuple[Floats, Floats, Floats]:
-        """From a residual to (u, q on windows, and V q which the operator would compute again)."""
-        q = -blocks.solve(residual[window])
-        v_q = operator.single(q)
-        u = np.zeros_like(residual)
-        u[wall] = 2.0 * (residual + v_q)[wall]
-        if partly:
-            u[window] = -resistance[window] * q
-        return u, q, v_q
-
-    def image(u: Floats, v_q: Floats) -> Floats:
-        return operator.half_plus_double(u) - v_q
-
-    # Outer space: C = A Z with orthonormal columns (area-weighted).
-    if cluster_of is not None and cluster_of.max() >= 0:
-        count = int(cluster_of.max()) + 1
-        image_z = root[:, None] * operator.half_plus_double_of_clusters(cluster_of, count)
-        outer, triangle = qr(image_z, mode="economic")
-    else:
-        cluster_of = np.full(len(panels), -1)
-        outer, triangle = np.zeros((len(panels), 0)), np.zeros((0, 0))
-
-    scale = float(np.linalg.norm(root * right))
-    if scale == 0.0:
-        return BoundarySolution(np.zeros(len(panels)), np.zeros(len(panels)), ())
-    start = outer.T @ (root * right)
-    residual = root * right - outer @ start
-    beta = float(np.linalg.norm(residual))
-
-    basis = [residual / beta]
-    steps: list[tuple[Floats, Floats]] = []
-    outer_parts: list[Floats] = []
-    hessenberg = np.zeros((most_iterations + 1, most_iterations))
-    givens = np.zeros((most_iterations, 2))
-    rotated = np.zeros(most_iterations + 1)
-    rotated[0] = beta
-    residuals: list[float] = []
-    k = 0
-    while beta / scale > tolerance:
-        if k == most_iterations:
-            raise ConvergenceError(
-                f"the iteration reached a residual of {residuals[-1]:.1e} after {k} iterations "
-                f"(limit {tolerance:.0e}); the surface may have panels of very bad shape: try heal='rebuild'",
-                residuals=tuple(residuals),
-            )
-        u, q, v_q = precondition(basis[k] / root)
-        steps.append((u, q))
-        new = root * image(u, v_q)
-        part = outer.T @ new
-        outer_parts.append(part)
-        new -= outer @ part
-        column = hessenberg[:, k]
-        for _ in range(2):  # twice: single-precision products leave the first pass not quite orthogonal
-            for j in range(k + 1):
-                overlap = float(basis[j] @ new)
-                column[j] += overlap
-                new -= overlap * basis[j]
-        column[k + 1] = np.linalg.norm(new)
-        basis.append(new / max(column[k + 1], 1e-300))
-        for j in range(k):
-            c, s = givens[j]
-            column[j], column[j + 1] = c * column[j] + s * column[j + 1], -s * column[j] + c * column[j + 1]
-        length = float(np.hypot(column[k], column[k + 1]))
-        givens[k] = column[k] / length, column[k + 1] / length
-        column[k], column[k + 1] = length, 0.0
-        rotated[k + 1] = -givens[k, 1] * rotated[k]
-        rotated[k] *= givens[k, 0]
-        k += 1
-        beta = abs(float(rotated[k]))
-        residuals.append(beta / scale)
-        tell(k, beta / scale)
-
-    weights = solve_triangular(hessenberg[:k, :k], rotated[:k]) if k else np.zeros(0)
-    u = np.zeros(len(panels))
-    q_window = np.zeros(int(window.sum()))
-    outer_weights = start
-    for weight, (u_step, q_step), part in zip(weights, steps, outer_parts, strict=True):
-        u += weight * u_step
-        q_window += weight * q_step
-        outer_weights = outer_weights - weight * part
-    if len(triangle):
-        in_cluster = cluster_of >= 0
-        u[in_cluster] += solve_triangular(triangle, outer_weights)[cluster_of[in_cluster]]
-    q = np.zeros(len(panels))
-    q[window] = q_window
-    return BoundarySolution(u, q, tuple(residuals))
+    """Solve for one right-hand side; see `BoundarySolver`."""
+    solver = BoundarySolver(
+        operator, cluster_of=cluster_of, tolerance=tolerance, most_iterations=most_iterations
+    )
+    return solver.solve(right, tell=tell)

@@ -34,9 +34,7 @@ def _morton_codes(cells):
     codes = np.empty(len(cells), np.uint64)
     for i in range(len(cells)):
         codes[i] = (
-            _spread(cells[i, 0])
-            | (_spread(cells[i, 1]) << np.uint64(1))
-            | (_spread(cells[i, 2]) << np.uint64(2))
+            _spread(cells[i, 0]) | (_spread(cells[i, 1]) << np.uint64(1)) | (_spread(cells[i, 2]) << np.uint64(2))
         )
     return codes
 

@@ -14,9 +14,8 @@ from bemescape.units import format_length, format_time
 if TYPE_CHECKING:
     from bemescape.results.summary import Summary
 
-__all__ = ["CAUTION", "print_json", "summary_lines"]
+__all__ = ["print_json", "summary_lines"]
 
-CAUTION = "Research tool. Times scale with D and the segmentation; not for clinical or dosing decisions."
 _MOST_SLOW_REGIONS = 5
 
 

@@ -117,7 +117,8 @@ def _refuse_foreign_folder(folder: Path) -> None:
 
 
 def _print_answer(result: EscapeResult, folder: Path, *, json: bool) -> None:
-    from bemescape.cli.answer import CAUTION, percent, summary_lines
+    from bemescape.cli.answer import percent, summary_lines
+    from bemescape.results.summary import CAUTION
 
     if json:
         typer.echo(result.summary.model_dump_json(indent=2))

@@ -231,7 +231,7 @@ def rule_of_thumb(volume_um3: float, window_areas_um2: Floats, diffusion_um2_s: 
     """
     radii = np.sqrt(window_areas_um2 / np.pi)
     return RuleOfThumb(
-        formula="V / (4 D sum of sqrt(A_i/pi))",
+        formula="V / (4 D Σ √(A/π))",
         mean_time_s=float(volume_um3 / (4.0 * diffusion_um2_s * radii.sum())),
     )
 

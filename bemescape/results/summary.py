@@ -7,6 +7,7 @@ from typing import Any
 from pydantic import BaseModel, ConfigDict, Field
 
 __all__ = [
+    "CAUTION",
     "Checks",
     "MadeWith",
     "RuleOfThumb",
@@ -15,6 +16,10 @@ __all__ = [
     "WindowSummary",
     "summary_schema",
 ]
+
+
+#: Stands in every report and on every answer a person reads.
+CAUTION = "Research tool. Times scale with D and the segmentation; not for clinical or dosing decisions."
 
 
 class _Model(BaseModel):

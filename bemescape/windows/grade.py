@@ -27,6 +27,11 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 
+#: A crossing closer to a vertex than this part of the edge uses the vertex: rims stay exact, lines beside them may
+#: give way to avoid needless slivers (but the innermost crosses its edges at 1/8).
+_RIM_SNAP, _LAYER_SNAP = 0.005, 0.06
+
+
 @dataclass(frozen=True)
 class Fineness:
     """How fine the panels are.
@@ -124,13 +129,15 @@ def graded(
     mesh = Mesh(surface.vertices, surface.faces, np.arange(len(surface.faces)))
     size_at = _panel_size(surface, patches, fineness, limits)
     mesh = bisected_to_size(mesh, size_at, most_faces=most_faces)
-    for patch in patches:
+    window_of = np.full(len(mesh.faces), -1)
+    for number, patch in enumerate(patches):
         if patch.disc is not None:
-            mesh = _rim_cut(mesh, patch)
-    window_of = _assigned(mesh, placement)
-    layered = _layered(
-        Mesh(mesh.vertices, mesh.faces, np.arange(len(mesh.faces))), window_of, patches, fineness
-    )
+            mesh, window_of, members = _rim_cut(mesh, window_of, patch)
+        else:
+            members = np.isin(mesh.parent, patch.faces)
+        _refuse_overlap(mesh, window_of, members, patch, patches)
+        window_of[members] = number
+    layered = _layered(Mesh(mesh.vertices, mesh.faces, np.arange(len(mesh.faces))), window_of, patches, fineness)
     return GradedMesh(layered.vertices, layered.faces, mesh.parent[layered.parent], window_of[layered.parent])
 
 
@@ -148,9 +155,7 @@ def _panel_size(
     def size_at(points: Floats) -> Floats:
         size = np.full(len(points), largest)
         for patch in patches:
-            size = np.minimum(
-                size, _rim_size(patch, fineness) + fineness.growth * patch.distance_to_rim(points)
-            )
+            size = np.minimum(size, _rim_size(patch, fineness) + fineness.growth * patch.distance_to_rim(points))
         for limit in limits:
             size = np.minimum(size, limit(points))
         return size
@@ -158,11 +163,11 @@ def _panel_size(
     return size_at
 
 
-def _rim_cut(mesh: Mesh, patch: Patch) -> Mesh:
-    """Cut along the sphere of a disc, on the sheet of its centre only."""
+def _rim_cut(mesh: Mesh, window_of: Ints, patch: Patch) -> tuple[Mesh, Ints, NDArray[np.bool_]]:
+    """Cut along the sphere of a disc, on the sheet of its centre only; also the faces (m,) of the window."""
     disc = patch.disc
     if disc is None:
-        return mesh
+        raise ValueError("only discs are cut")
     centre = np.asarray(disc.centre_um)
 
     def distance(points: Floats) -> Floats:
@@ -177,50 +182,35 @@ def _rim_cut(mesh: Mesh, patch: Patch) -> Mesh:
         )
     kept = connected_vertices(mesh, inside, patch.touchdown_um)
     value[inside & ~kept] = np.inf  # another sheet inside the ball stays wall
-    cut, _ = cut_along_level(mesh, value, disc.radius_um, snap=0.02, refine=distance)
-    return cut
+    numbered = Mesh(mesh.vertices, mesh.faces, np.arange(len(mesh.faces)))
+    cut, value = cut_along_level(numbered, value, disc.radius_um, snap=_RIM_SNAP, refine=distance)
+    offset = value[cut.faces] - disc.radius_um
+    # A face with all three corners on the rim itself goes by its middle.
+    middle = distance(cut.vertices[cut.faces].mean(axis=1)) < disc.radius_um
+    within = (offset <= 0.0).all(axis=1) & ((offset < 0.0).any(axis=1) | middle)
+    members = _connected_faces(cut, within, patch.touchdown_um)
+    return Mesh(cut.vertices, cut.faces, mesh.parent[cut.parent]), window_of[cut.parent], members
 
 
-def _assigned(mesh: Mesh, placement: Placement) -> Ints:
-    """Window number of each face (m,), −1 on the wall."""
-    window_of = np.full(len(mesh.faces), -1)
-    for number, patch in enumerate(placement.patches):
-        if patch.disc is not None:
-            centre, radius = np.asarray(patch.disc.centre_um), patch.disc.radius_um
-            value = np.linalg.norm(mesh.vertices - centre, axis=1)
-            # The rim's own vertices were snapped from up to 2 % of an edge away.
-            loose = radius + 0.03 * _longest_edge_near(mesh, value, radius)
-            middle = np.linalg.norm(mesh.vertices[mesh.faces].mean(axis=1) - centre, axis=1)
-            in_ball = (value[mesh.faces] <= loose).all(axis=1) & (middle < radius)
-            members = _connected_faces(mesh, in_ball, patch.touchdown_um)
-        else:
-            members = np.isin(mesh.parent, patch.faces)
-        taken = members & (window_of >= 0)
-        if taken.any():
-            other = placement.patches[int(window_of[np.flatnonzero(taken)[0]])]
-            place = mesh.vertices[mesh.faces[taken]].mean(axis=(0, 1))
-            gap = float(np.linalg.norm(np.asarray(patch.touchdown_um) - np.asarray(other.touchdown_um)))
-            raise WindowError(
-                f"windows {other.name!r} and {patch.name!r} overlap near ({place[0]:.4g}, {place[1]:.4g}, "
-                f"{place[2]:.4g}) µm: their middles are {gap:.4g} µm apart; move one, shrink one, or join them"
-            )
-        if not members.any():
-            raise WindowError(
-                f"window {patch.name!r} has no panel of its own; it is smaller than the panels can be made here"
-            )
-        window_of[members] = number
-    return window_of
+def _refuse_overlap(
+    mesh: Mesh, window_of: Ints, members: NDArray[np.bool_], patch: Patch, patches: Sequence[Patch]
+) -> None:
+    taken = np.flatnonzero(members & (window_of >= 0))
+    if len(taken):
+        other = patches[int(window_of[taken[0]])]
+        place = mesh.vertices[mesh.faces[taken]].mean(axis=(0, 1))
+        gap = float(np.linalg.norm(np.asarray(patch.touchdown_um) - np.asarray(other.touchdown_um)))
+        raise WindowError(
+            f"windows {other.name!r} and {patch.name!r} overlap near ({place[0]:.4g}, {place[1]:.4g}, "
+            f"{place[2]:.4g}) µm: their middles are {gap:.4g} µm apart; move one, shrink one, or join them"
+        )
+    if not members.any():
+        raise WindowError(
+            f"window {patch.name!r} has no panel of its own; it is smaller than the panels can be made here"
+        )
 
 
-def _longest_edge_near(mesh: Mesh, value: Floats, radius: float) -> float:
-    near = (np.abs(value[mesh.faces] - radius) < 0.5 * radius).any(axis=1)
-    corners = mesh.vertices[mesh.faces[near]]
-    return float(np.linalg.norm(corners - np.roll(corners, 1, axis=1), axis=2).max(initial=0.0))
-
-
-def _connected_faces(
-    mesh: Mesh, chosen: NDArray[np.bool_], start: tuple[float, float, float]
-) -> NDArray[np.bool_]:
+def _connected_faces(mesh: Mesh, chosen: NDArray[np.bool_], start: tuple[float, float, float]) -> NDArray[np.bool_]:
     """The part of the `chosen` faces that holds the one nearest to `start`, connected through edges."""
     from scipy.sparse import coo_matrix
     from scipy.sparse.csgraph import connected_components
@@ -261,7 +251,7 @@ def _layered(mesh: Mesh, window_of: Ints, patches: Sequence[Patch], fineness: Fi
     reached = connected_vertices(mesh, value < 1.0, mesh.vertices[rim.ravel()])
     value[(value < 1.0) & ~reached] = np.inf
     for k in range(fineness.layers, 0, -1):
-        mesh, value = cut_along_level(mesh, value, (k / fineness.layers) ** 3, snap=0.15)
+        mesh, value = cut_along_level(mesh, value, (k / fineness.layers) ** 3, snap=_LAYER_SNAP)
     return mesh
 
 
@@ -272,9 +262,7 @@ def _without_ears(mesh: Mesh, window_of: Ints) -> Mesh:
     on_rim = np.zeros(len(mesh.vertices), bool)
     on_rim[rim.ravel()] = True
     edges, of_face = mesh_edges(mesh.faces)
-    is_rim = np.isin(
-        edges[:, 0] * len(mesh.vertices) + edges[:, 1], rim[:, 0] * len(mesh.vertices) + rim[:, 1]
-    )
+    is_rim = np.isin(edges[:, 0] * len(mesh.vertices) + edges[:, 1], rim[:, 0] * len(mesh.vertices) + rim[:, 1])
     chosen = on_rim[edges].all(axis=1) & ~is_rim
     return split_edges(mesh, edges, of_face, chosen, mesh.vertices[edges[chosen]].mean(axis=1))
 
@@ -290,9 +278,7 @@ def rim_edges(faces: Ints, window_of: Ints) -> tuple[Ints, Ints]:
     return edges[chosen], highest[chosen]
 
 
-def segment_distance(
-    points: Floats, start: Floats, end: Floats, *, candidates: int = 12
-) -> tuple[Floats, Ints]:
+def segment_distance(points: Floats, start: Floats, end: Floats, *, candidates: int = 12) -> tuple[Floats, Ints]:
     """Distance (k,) from points (k, 3) to the nearest of the segments start–end (s, 3), and which one (k,).
 
     Exact among the `candidates` segments with the nearest middles.

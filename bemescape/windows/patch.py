@@ -131,7 +131,7 @@ def _disc_patch(surface: Surface, window: Window, disc: Disc) -> tuple[Patch, li
     if others.any():
         other_gap = float(gaps[touched[others]].min())
         other = closest[touched[others][gaps[touched[others]].argmin()]]
-        if other_gap < max(2.0 * gap, 0.1 * disc.radius_um):
+        if other_gap < max(2.0 * gap, 1e-3 * disc.radius_um):
             raise WindowError(
                 f"window {window.name!r} sits on two sheets of the wall: {_place(touchdown)} and {_place(other)} are "
                 f"{format_length(gap)} and {format_length(other_gap)} from its centre; move the centre onto the sheet "

@@ -1,9 +1,9 @@
 """`bemescape view`: window or picture. Drawing itself is tested with the pictures."""
 
 import pytest
-from bemescape.viz import pictures, window
 
 from bemescape.cli.main import main
+from bemescape.viz import pictures, window
 
 
 @pytest.fixture

@@ -6,16 +6,16 @@ import sys
 import numpy as np
 import pytest
 import trimesh
-from bemescape.viz import cutaway_scene, render_png, save_pictures, wall_scene, windows_scene
-from bemescape.viz.overlay import safe_text
-from bemescape.viz.parts import Scene
-from bemescape.viz.shapes import standard_view
 from matplotlib import colormaps
 from matplotlib.colors import rgb_to_hsv
 from matplotlib.image import imread
 
 from bemescape.errors import SettingsError
 from bemescape.results.result import WindowResult
+from bemescape.viz import cutaway_scene, render_png, save_pictures, wall_scene, windows_scene
+from bemescape.viz.overlay import safe_text
+from bemescape.viz.parts import Scene
+from bemescape.viz.shapes import standard_view
 
 SIZE = (600, 450)
 RENDERED = ("view_front.png", "view_side.png", "view_top.png", "cutaway.png", "windows.png")

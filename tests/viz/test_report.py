@@ -4,10 +4,10 @@ from html.parser import HTMLParser
 from types import SimpleNamespace
 
 import pytest
-from bemescape.viz import write_report
 from matplotlib.figure import Figure
 
 from bemescape.errors import SettingsError
+from bemescape.viz import write_report
 
 
 class Reader(HTMLParser):

@@ -2,6 +2,10 @@ import dataclasses
 
 import numpy as np
 import pytest
+from matplotlib import colormaps
+from matplotlib.colors import to_rgb
+from skimage.color import deltaE_ciede2000, rgb2lab
+
 from bemescape.viz.scales import (
     MAP_NAME,
     WINDOW,
@@ -11,9 +15,6 @@ from bemescape.viz.scales import (
     round_ticks,
     time_colours,
 )
-from matplotlib import colormaps
-from matplotlib.colors import to_rgb
-from skimage.color import deltaE_ciede2000, rgb2lab
 
 
 @pytest.mark.parametrize("width", [0.013, 0.4, 1.0, 3.3, 9.99, 10.0, 77.0, 1234.5])

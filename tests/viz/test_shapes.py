@@ -3,6 +3,7 @@ import dataclasses
 import numpy as np
 import pytest
 import trimesh
+
 from bemescape.viz.shapes import (
     border_edges,
     corner_normals,

@@ -4,11 +4,11 @@ import sys
 
 import numpy as np
 import pytest
+
+from bemescape.errors import SettingsError
 from bemescape.viz import open_window
 from bemescape.viz.shapes import standard_view
 from bemescape.viz.window import DesktopWindow
-
-from bemescape.errors import SettingsError
 
 SIZE = (600, 450)
 
