@@ -144,10 +144,13 @@ def spread_dipole(ht, hs, tilt, spread_target, spread_source, inverse):
 
 @njit(cache=True, inline="always", error_model="numpy")
 def spread_distance(ht, hs, spread_target, spread_source, inverse):
-    """Mean of |x − y| over two panels, as `spread_inverse`; in a plane at height h, Δr = 1/r + h²/r³."""
+    """Mean of |x − y| over two panels, as `spread_inverse`; in a plane at height h, Δr = 1/r + h²/r³.
+
+    What ρ adds to r, spread_source/(2r), is the first part of the source's own term.
+    """
     inverse2 = inverse * inverse
     return _ONE / inverse + _HALF * inverse * (
-        spread_target * (_ONE + ht * ht * inverse2) + spread_source * (_ONE + hs * hs * inverse2)
+        spread_target * (_ONE + ht * ht * inverse2) + spread_source * hs * hs * inverse2
     )
 
 
@@ -157,5 +160,5 @@ def spread_lifted_distance(ht, hs, tilt, spread_target, spread_source, inverse):
     inverse2 = inverse * inverse
     return hs / inverse + _HALF * inverse * (
         spread_target * (_THREE * hs - _TWO * tilt * ht + hs * ht * ht * inverse2)
-        + spread_source * hs * (_ONE + hs * hs * inverse2)
+        + spread_source * hs * hs * hs * inverse2
     )
