@@ -45,9 +45,7 @@ def test_quadratic_elements_reproduce_a_prism_open_at_one_end():
 
 
 def test_elements_graded_to_a_square_window_approach_its_mean_time_from_below():
-    side = np.concatenate(
-        [np.linspace(0.0, 0.3, 3), np.linspace(0.3, 0.7, 5)[1:], np.linspace(0.7, 1.0, 3)[1:]]
-    )
+    side = np.concatenate([np.linspace(0.0, 0.3, 3), np.linspace(0.3, 0.7, 5)[1:], np.linspace(0.7, 1.0, 3)[1:]])
     coarse = box_with_window((side, side, np.linspace(0.0, 1.0, 7)), 0.2)
     times = [fem_mean_time(refined_at_rims(coarse, k, 0.7)).mean_time_s for k in (1, 2, 3)]
     exact = CUBE_CENTRED_WINDOW[0.4]
@@ -69,9 +67,7 @@ def test_ball_with_a_cap_agrees_with_finite_elements_on_the_same_polyhedron():
     sizes = Sizes(rim=0.3, wall=0.3, bulk=0.6, growth=0.9)
     window = DiscWindow((0.0, 0.0, 1.0), CAP)
     reference = fem_reference(surface.vertices, surface.faces, [window], sizes)
-    result = be.solve_escape(
-        surface, [be.Window.disc("cap", centre=window.centre, radius=CAP)], diffusion=1.0
-    )
+    result = be.solve_escape(surface, [be.Window.disc("cap", centre=window.centre, radius=CAP)], diffusion=1.0)
 
     assert result.relative_error + reference.relative_error < 0.015  # else the agreement would say little
     difference = result.mean_time_s / reference.mean_time_s - 1.0
@@ -87,14 +83,12 @@ def test_bouton_agrees_with_finite_elements_on_the_same_polyhedron():
     shapes = [FaceWindow(np.flatnonzero(labels == value)) for value in (1, 2)]
     sizes = Sizes(rim=0.25, wall=0.08, bulk=0.2, growth=0.9)
     reference = fem_reference(surface.vertices, surface.faces, shapes, sizes, 200.0)
-    windows = [
-        be.Window.labels(name, array="label", value=value)
-        for name, value in (("neck", 1), ("release face", 2))
-    ]
+    windows = [be.Window.labels(name, array="label", value=value) for name, value in (("neck", 1), ("release face", 2))]
     result = be.solve_escape(surface, windows, diffusion="200 um^2/s")
 
     assert result.relative_error + reference.relative_error < 0.015
     difference = result.mean_time_s / reference.mean_time_s - 1.0
     assert abs(difference) <= result.relative_error + reference.relative_error
-    # The finite elements bevel the neck, 4 % of the exits, by 2-3 % of its width.
-    assert result.shares["neck"] == pytest.approx(reference.shares[0], abs=2.5e-3)
+    # The tetrahedra bevel the neck (4 % of the exits): its mouth lost 2 % of its area, and a size of 0.05 at the
+    # wall instead of 0.08 raises its share by 0.0003.
+    assert result.shares["neck"] == pytest.approx(reference.shares[0], abs=1.5e-3)
