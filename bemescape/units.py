@@ -19,6 +19,7 @@ from bemescape.errors import SettingsError
 
 __all__ = [
     "Quantity",
+    "density_per_um2",
     "diffusion_um2_s",
     "format_length",
     "format_time",
@@ -54,9 +55,8 @@ def quantity(value: float, unit: str) -> pint.Quantity[Any]:
 _LONGEST_TEXT = 60
 _NUMBER = r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?"
 _FACTOR = r"[A-Za-zµμÅ_]+(?:(?:\^|\*\*)?-?\d{1,2}|⁻?[¹²³⁴-⁹])?"
-_TEXT = re.compile(
-    rf"(?P<number>{_NUMBER})?\s*(?P<unit>{_FACTOR}(?:\s*[*/·]\s*{_FACTOR}|\s+{_FACTOR})*)?", re.ASCII
-)
+_TEXT = re.compile(rf"(?P<number>{_NUMBER})?\s*(?P<unit>{_FACTOR}(?:\s*[*/·]\s*{_FACTOR}|\s+{_FACTOR})*)?", re.ASCII)
+_PER_AREA = re.compile(rf"(?P<number>{_NUMBER})\s*/\s*(?P<area>[^\s\d].{{0,{_LONGEST_TEXT}}})", re.ASCII)
 _BARE_EXPONENT = re.compile(r"(?<=[A-Za-zµμÅ])(?=-?\d)")
 
 
@@ -88,9 +88,7 @@ def _magnitude(value: object, unit: str, what: str, example: str, *, bare_unit: 
         return float(f"{float(parsed.to(unit).magnitude):.15g}")
     except (pint.PintError, ValueError, TypeError, AttributeError, ArithmeticError, LookupError) as error:
         kind = f"quantity in {unit}" if unit else "plain number or percentage"
-        raise SettingsError(
-            f"{what} {_shortened(value)} is not a {kind}; write it like {example!r}"
-        ) from error
+        raise SettingsError(f"{what} {_shortened(value)} is not a {kind}; write it like {example!r}") from error
 
 
 def _shortened(value: object) -> str:
@@ -122,6 +120,20 @@ def diffusion_um2_s(value: Quantity) -> float:
     """
     number = _magnitude(value, "um^2/s", "diffusion coefficient", "20 um^2/s")
     return _positive(number, "diffusion coefficient", "µm²/s")
+
+
+def density_per_um2(value: Quantity, what: str = "density") -> float:
+    """Number per area in 1/µm², above 0.
+
+    >>> density_per_um2("3 /um^2"), density_per_um2("3e-6 nm^-2")
+    (3.0, 3.0)
+    """
+    if isinstance(value, str) and (match := _PER_AREA.fullmatch(value.strip())):
+        # A slash right after the number, where the grammar of quantities wants a unit.
+        area = _magnitude(match["area"], "um^2", f"{what} {_shortened(value)}: area", "3 /um^2", bare_unit=True)
+        return _positive(float(match["number"]) / _positive(area, what, "µm²"), what, "per µm²")
+    number_per_um2 = _magnitude(value, "um^-2", what, "3 /um^2")
+    return _positive(number_per_um2, what, "per µm²")
 
 
 def permeability_um_s(value: Quantity | None) -> float:

@@ -1,9 +1,10 @@
 """From a surface and its windows to panels: rims cut into the mesh, panels graded towards them.
 
 Strategy: (1) bisect long edges until the panel size follows the distance to the nearest rim; (2) cut the mesh
-along each disc's rim; (3) cut it along lines of equal distance on both sides of every rim, at (k/n)³ of a band of
-about one panel. The flux grows as distance^(−1/2) towards a rim: panels that thin out with the cube of their
-number keep its error even, where uniform panels would converge as slowly as the square root of their size.
+along the rim of each window that is not made of whole faces; (3) cut it along lines of equal distance on both sides
+of every rim, at (k/n)³ of a band of about one panel. The flux grows as distance^(−1/2) towards a rim: panels that
+thin out with the cube of their number keep its error even, where uniform panels would converge as slowly as the
+square root of their size.
 """
 
 from __future__ import annotations
@@ -18,10 +19,11 @@ from scipy.spatial import cKDTree
 from bemescape.errors import WindowError
 from bemescape.surface.surface import Surface
 from bemescape.windows.mesh_edits import Mesh, bisected_to_size, cut_along_level, mesh_edges, split_edges
-from bemescape.windows.patch import Patch, connected_vertices, find_patches
-from bemescape.windows.window import Window
+from bemescape.windows.patch import Patch, connected_vertices
+from bemescape.windows.placement import Placement, place_windows
+from bemescape.windows.rims import rim_edges, segment_distance
 
-__all__ = ["Fineness", "GradedMesh", "Placement", "SizeLimit", "graded", "place_windows"]
+__all__ = ["Fineness", "GradedMesh", "Placement", "SizeLimit", "graded", "place_windows", "rim_edges"]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -75,29 +77,6 @@ class GradedMesh:
 
 
 @dataclass(frozen=True)
-class Placement:
-    """Windows found on a surface: the patches, in the order of the windows, and remarks for the reader."""
-
-    surface: Surface
-    windows: tuple[Window, ...]
-    patches: tuple[Patch, ...]
-    notes: tuple[str, ...]
-
-
-def place_windows(surface: Surface, windows: Sequence[Window]) -> Placement:
-    """Find every window on the wall, or refuse with names, distances and a remedy.
-
-    Raises
-    ------
-    WindowError
-        No window; a name twice; a window that misses the wall, is too small, sits on two sheets or takes all of
-        a part; an array or label that the mesh does not have.
-    """
-    patches, notes = find_patches(surface, windows)
-    return Placement(surface, tuple(windows), patches, notes)
-
-
-@dataclass(frozen=True)
 class SizeLimit:
     """Panel sizes that a coarser solution asked for: near each of its panels (p, 3), edges up to `edge` (p,) µm."""
 
@@ -131,7 +110,7 @@ def graded(
     mesh = bisected_to_size(mesh, size_at, most_faces=most_faces)
     window_of = np.full(len(mesh.faces), -1)
     for number, patch in enumerate(patches):
-        if patch.disc is not None:
+        if patch.level is not None:
             mesh, window_of, members = _rim_cut(mesh, window_of, patch)
         else:
             members = np.isin(mesh.parent, patch.faces)
@@ -164,31 +143,25 @@ def _panel_size(
 
 
 def _rim_cut(mesh: Mesh, window_of: Ints, patch: Patch) -> tuple[Mesh, Ints, NDArray[np.bool_]]:
-    """Cut along the sphere of a disc, on the sheet of its centre only; also the faces (m,) of the window."""
-    disc = patch.disc
-    if disc is None:
-        raise ValueError("only discs are cut")
-    centre = np.asarray(disc.centre_um)
-
-    def distance(points: Floats) -> Floats:
-        return np.asarray(np.linalg.norm(points - centre, axis=1))
-
-    value = distance(mesh.vertices)
-    inside = value < disc.radius_um
+    """Cut along the level of a patch, in its own pieces only; also the faces (m,) of the window."""
+    level = patch.level
+    if level is None:
+        raise ValueError("a window of whole faces is not cut")
+    value = level(mesh.vertices)
+    inside = value < 0.0
     if not inside.any():
         raise WindowError(
-            f"window {patch.name!r} (radius {disc.radius_um:g} µm) is smaller than the panels can be made here; "
+            f"window {patch.name!r} (radius {patch.radius_um:.4g} µm) is smaller than the panels can be made here; "
             "raise the panel budget or enlarge the window"
         )
-    kept = connected_vertices(mesh, inside, patch.touchdown_um)
-    value[inside & ~kept] = np.inf  # another sheet inside the ball stays wall
+    kept = connected_vertices(mesh, inside, patch.starts)
+    value[inside & ~kept] = np.inf  # another sheet within the level stays wall
     numbered = Mesh(mesh.vertices, mesh.faces, np.arange(len(mesh.faces)))
-    cut, value = cut_along_level(numbered, value, disc.radius_um, snap=_RIM_SNAP, refine=distance)
-    offset = value[cut.faces] - disc.radius_um
+    cut, value = cut_along_level(numbered, value, 0.0, snap=_RIM_SNAP, refine=level)
     # A face with all three corners on the rim itself goes by its middle.
-    middle = distance(cut.vertices[cut.faces].mean(axis=1)) < disc.radius_um
-    within = (offset <= 0.0).all(axis=1) & ((offset < 0.0).any(axis=1) | middle)
-    members = _connected_faces(cut, within, patch.touchdown_um)
+    middle = level(cut.vertices[cut.faces].mean(axis=1)) < 0.0
+    within = (value[cut.faces] <= 0.0).all(axis=1) & ((value[cut.faces] < 0.0).any(axis=1) | middle)
+    members = _connected_faces(cut, within, patch.starts)
     return Mesh(cut.vertices, cut.faces, mesh.parent[cut.parent]), window_of[cut.parent], members
 
 
@@ -210,8 +183,8 @@ def _refuse_overlap(
         )
 
 
-def _connected_faces(mesh: Mesh, chosen: NDArray[np.bool_], start: tuple[float, float, float]) -> NDArray[np.bool_]:
-    """The part of the `chosen` faces that holds the one nearest to `start`, connected through edges."""
+def _connected_faces(mesh: Mesh, chosen: NDArray[np.bool_], starts: Floats) -> NDArray[np.bool_]:
+    """The parts of the `chosen` faces (m,) nearest to each of `starts` (k, 3), connected through edges."""
     from scipy.sparse import coo_matrix
     from scipy.sparse.csgraph import connected_components
 
@@ -224,8 +197,8 @@ def _connected_faces(mesh: Mesh, chosen: NDArray[np.bool_], start: tuple[float, 
     incidence = coo_matrix((np.ones(len(rows)), (rows, of_face.ravel())), shape=(len(index), len(edges)))
     _, label = connected_components(incidence @ incidence.T, directed=False)
     middle = mesh.vertices[mesh.faces[index]].mean(axis=1)
-    nearest = np.linalg.norm(middle - np.asarray(start), axis=1).argmin()
-    out[index[label == label[nearest]]] = True
+    _, nearest = cKDTree(middle).query(starts)
+    out[index[np.isin(label, np.unique(label[nearest]))]] = True
     return out
 
 
@@ -265,31 +238,3 @@ def _without_ears(mesh: Mesh, window_of: Ints) -> Mesh:
     is_rim = np.isin(edges[:, 0] * len(mesh.vertices) + edges[:, 1], rim[:, 0] * len(mesh.vertices) + rim[:, 1])
     chosen = on_rim[edges].all(axis=1) & ~is_rim
     return split_edges(mesh, edges, of_face, chosen, mesh.vertices[edges[chosen]].mean(axis=1))
-
-
-def rim_edges(faces: Ints, window_of: Ints) -> tuple[Ints, Ints]:
-    """Edges (e, 2) between faces of different windows or of a window and the wall, and a window of each (e,)."""
-    edges, of_face = mesh_edges(faces)
-    lowest = np.full(len(edges), np.iinfo(np.int64).max)
-    highest = np.full(len(edges), np.iinfo(np.int64).min)
-    np.minimum.at(lowest, of_face.ravel(), np.repeat(window_of, 3))
-    np.maximum.at(highest, of_face.ravel(), np.repeat(window_of, 3))
-    chosen = lowest != highest
-    return edges[chosen], highest[chosen]
-
-
-def segment_distance(points: Floats, start: Floats, end: Floats, *, candidates: int = 12) -> tuple[Floats, Ints]:
-    """Distance (k,) from points (k, 3) to the nearest of the segments start–end (s, 3), and which one (k,).
-
-    Exact among the `candidates` segments with the nearest middles.
-    """
-    count = min(candidates, len(start))
-    _, near = cKDTree(0.5 * (start + end)).query(points, k=count)
-    near = near.reshape(len(points), count)
-    a, along = start[near], (end - start)[near]
-    square = np.maximum(np.einsum("ksx,ksx->ks", along, along), 1e-300)
-    part = np.clip(np.einsum("ksx,ksx->ks", points[:, None] - a, along) / square, 0.0, 1.0)
-    gap = np.linalg.norm(points[:, None] - a - part[..., None] * along, axis=2)
-    best = gap.argmin(axis=1)
-    rows = np.arange(len(points))
-    return gap[rows, best], near[rows, best]
