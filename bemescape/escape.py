@@ -5,28 +5,25 @@ from __future__ import annotations
 import time
 from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass, replace
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from bemescape.bem.averages import enclosed_volume, volume_integral
-from bemescape.bem.clusters import wall_clusters
-from bemescape.bem.field import field_at
+from bemescape.bem.averages import volume_integral
 from bemescape.bem.indicator import coarse_panels
-from bemescape.bem.operator import assemble
-from bemescape.bem.panels import make_panels
-from bemescape.bem.solve import solve_boundary
 from bemescape.errors import AccuracyError, SettingsError, SurfaceError, WindowError
 from bemescape.progress import Progress, ProgressEvent, silent
 from bemescape.results.accuracy import Estimate, Ladder, Rung
+from bemescape.results.prepared import Prepared, prepare
 from bemescape.results.result import EscapeResult, WindowResult
+from bemescape.results.spread import find_spread
+from bemescape.results.starts import Start, check_starts, results_from_starts
+from bemescape.results.ways_out import MOST_WINDOWS, chosen_windows, find_ways_out
 from bemescape.surface.compartments import compartments
 from bemescape.surface.health import check_surface
 from bemescape.surface.surface import Surface, triangle_areas_normals
 from bemescape.units import Quantity, diffusion_um2_s, fraction
 from bemescape.windows.grade import GradedMesh, Placement, SizeLimit, graded, place_windows
-from bemescape.windows.mesh_edits import face_pairs
 from bemescape.windows.window import Window
 
 __all__ = ["SolverSettings", "solve_escape"]
@@ -55,13 +52,15 @@ class SolverSettings:
 
 @dataclass(frozen=True, eq=False)
 class _Solution:
-    """One resolution, for D = 1, panels in the order of the mesh."""
+    """One resolution, for D = 1, panels in the order of the mesh; `prepared` has them in an order of its own."""
 
     rung: Rung
     mesh: GradedMesh
+    prepared: Prepared
     u: Floats
     q: Floats
     mean: float
+    shares: Floats
     balance: float
     residuals: tuple[float, ...]
     seconds: float
@@ -73,7 +72,8 @@ def solve_escape(
     diffusion: Quantity,
     *,
     target: float | str = 0.005,
-    start: Mapping[str, Sequence[float]] | None = None,
+    start: Mapping[str, Start] | None = None,
+    ways_out: bool | Sequence[str] | None = None,
     name: str | None = None,
     settings: SolverSettings | None = None,
     progress: Progress = silent,
@@ -94,8 +94,12 @@ def solve_escape(
         D > 0; "10 um^2/s", or a plain number in µm²/s.
     target : float or text, default 0.005
         Relative error wanted for the mean time: 0.005 or "0.5 %".
-    start : mapping of str to (3,) µm, optional
-        Named points inside; the mean time from each is in `result.start`.
+    start : mapping of str to start, optional
+        Where molecules start: a point (3,) in µm inside, a patch of the wall given like a window, or a `Ball`
+        inside. The mean time from each is in `result.start`, more in `result.start_details`.
+    ways_out : bool or sequence of str, optional
+        Whether to find splitting probabilities and conditional times, or the windows to find them for. By default
+        they are found if a start is named and there are 2 to 12 windows; `result.with_ways_out` finds them later.
     name : str, optional
         Name of the case; the surface's name by default.
     settings : SolverSettings, optional
@@ -110,7 +114,7 @@ def solve_escape(
     Raises
     ------
     SettingsError
-        A quantity is wrong, or a start point lies outside.
+        A quantity is wrong, a start lies outside, or a window of `ways_out` is unknown.
     SurfaceError
         The surface is not closed and outward-facing.
     WindowError
@@ -133,12 +137,13 @@ def solve_escape(
     d = diffusion_um2_s(diffusion)
     wanted = fraction(target, "target error")
     _check_surface(surface)
-    points = _start_points(surface, start or {})
     progress(ProgressEvent("placing windows"))
     placement = place_windows(surface, windows)
     _check_compartments(placement)
+    starts = check_starts(placement.surface, start or {})
+    names = _wanted_ways_out(placement.windows, ways_out, named_starts=bool(starts))
 
-    ladder = Ladder(wanted, len(windows))
+    ladder = Ladder(wanted, len(placement.windows))
     best: _Solution | None = None
     limits: list[SizeLimit] = []
     levels: list[dict[str, float]] = []
@@ -153,7 +158,7 @@ def solve_escape(
             break
         best = _solved(placement, rung, mesh, d, settings, progress)
         ladder.has_rims = bool((mesh.window_of < 0).any())
-        ladder.record(rung, best.mean, best.balance)
+        ladder.record(rung, best.mean, best.balance, best.shares)
         levels.append(
             {
                 "panels": len(mesh.faces),
@@ -172,16 +177,36 @@ def solve_escape(
             f"the panel budget of {settings.max_panels} ended the refinement at an estimated error of "
             f"{estimate.relative_error:.2%} (target {wanted:.2%}); raise max_panels or accept the error"
         )
-    result = _packed(placement, best, estimate, d)
+    result = _packed(placement, best, estimate, ladder.share_errors(), d)
+    order = best.prepared.panels.order
+    spread = find_spread(
+        best.prepared,
+        best.u[order],
+        best.q[order],
+        diffusion_um2_s=d,
+        mean_time_s=result.mean_time_s,
+        relative_error=result.relative_error,
+    )
+    result = replace(result, spread=spread)
+    if names is not None:
+        chosen = chosen_windows(result.windows, names)
+        result = replace(result, ways_out=find_ways_out(best.prepared, result, chosen))
+    from_starts = results_from_starts(result, placement.surface, starts)
     return replace(
         result,
         name=name or surface.name,
         target=wanted,
         target_met=target_met,
         levels=tuple(levels),
-        start=_start_times(best, points, d),
+        start={name: row.mean_time_s for name, row in from_starts.items()},
+        start_details=from_starts,
         notes=tuple(notes),
-        settings={**asdict(settings), "target": wanted, "surface": surface.name, "windows": _window_settings(windows)},
+        settings={
+            **asdict(settings),
+            "target": wanted,
+            "surface": surface.name,
+            "windows": [window.described() for window in windows],
+        },
         mesh_sha256=surface.sha256,
         health=surface.health,
         healing=surface.healing,
@@ -198,25 +223,12 @@ def _solved(
     progress: Progress,
 ) -> _Solution:
     began = time.perf_counter()
-    panels = make_panels(mesh.vertices[mesh.faces])
-    back = np.empty_like(panels.order)
-    back[panels.order] = np.arange(len(panels))
     kappa = np.array([window.permeability_um_s for window in placement.windows])
-    window_of = mesh.window_of[panels.order]
-    resistance = np.where(window_of >= 0, d / kappa[window_of], 0.0)
-    progress(ProgressEvent("near field", None, f"{len(panels)} panels"))
-    operator = assemble(panels, window_of, resistance)
-    clusters = wall_clusters(panels.centroids, back[face_pairs(mesh.faces)], operator.is_window)
-
-    def tell(iteration: int, residual: float) -> None:
-        # A residual falls by powers of ten: the part done is measured on that scale.
-        done = min(1.0, float(np.log(residual) / np.log(settings.tolerance)))
-        progress(ProgressEvent("iterating", done, f"iteration {iteration}, residual {residual:.1e}"))
-
-    solution = solve_boundary(
-        operator, operator.volume_potential, tolerance=settings.tolerance, cluster_of=clusters, tell=tell
+    prepared = prepare(
+        mesh.vertices, mesh.faces, mesh.window_of, d / kappa, tolerance=settings.tolerance, progress=progress
     )
-    volume = enclosed_volume(panels)
+    panels, volume = prepared.panels, prepared.volume
+    solution = prepared.solve(prepared.solver.operator.volume_potential, "iterating")
     mean = volume_integral(panels, solution.u, solution.q, 1.0) / volume
     balance = -float(panels.areas @ solution.q) / volume - 1.0
     if not (np.isfinite(mean) and abs(balance) <= settings.balance_limit):
@@ -224,9 +236,18 @@ def _solved(
             f"the windows drain {1.0 + balance:.4g} of V/D (limit 1 ± {settings.balance_limit:g}) on {len(panels)} "
             "panels: faces cross one another or the mesh is too damaged; try heal='rebuild'"
         )
-    seconds = time.perf_counter() - began
+    flow = np.bincount(prepared.window_of + 1, weights=-panels.areas * solution.q, minlength=len(kappa) + 1)
     return _Solution(
-        rung, mesh, solution.u[back], solution.q[back], mean, balance, solution.residuals, seconds
+        rung=rung,
+        mesh=mesh,
+        prepared=prepared,
+        u=solution.u[prepared.back],
+        q=solution.q[prepared.back],
+        mean=mean,
+        shares=flow[1:] / volume,
+        balance=balance,
+        residuals=solution.residuals,
+        seconds=time.perf_counter() - began,
     )
 
 
@@ -239,17 +260,19 @@ def _finer_wall(solution: _Solution) -> SizeLimit:
     return SizeLimit(corners.mean(axis=1), np.where(coarse, 0.75 * longest, np.inf))
 
 
-def _packed(placement: Placement, solution: _Solution, estimate: Estimate, d: float) -> EscapeResult:
+def _packed(
+    placement: Placement, solution: _Solution, estimate: Estimate, share_errors: Floats, d: float
+) -> EscapeResult:
     mesh = solution.mesh
     areas, _ = triangle_areas_normals(mesh.vertices, mesh.faces)
-    volume = placement.surface.volume
-    exit_density = -solution.q / volume
+    exit_density = -solution.q / solution.prepared.volume
     windows = tuple(
         WindowResult(
             name=window.name,
             area_um2=float(areas[mesh.window_of == number].sum()),
-            share=float((areas * exit_density)[mesh.window_of == number].sum()),
+            share=float(solution.shares[number]),
             permeability_um_s=window.permeability_um_s,
+            share_error=float(share_errors[number]),
         )
         for number, window in enumerate(placement.windows)
     )
@@ -257,7 +280,7 @@ def _packed(placement: Placement, solution: _Solution, estimate: Estimate, d: fl
         name=placement.surface.name,
         vertices=mesh.vertices,
         faces=mesh.faces,
-        parent_face=mesh.parent,
+        parent_face=placement.faces_given(mesh.parent),
         panel_window=mesh.window_of,
         panel_time_s=solution.u / d,
         panel_exit_density_per_um2=exit_density,
@@ -272,16 +295,6 @@ def _packed(placement: Placement, solution: _Solution, estimate: Estimate, d: fl
         levels=(),
         wall_s=0.0,
     )
-
-
-def _window_settings(windows: Sequence[Window]) -> list[dict[str, Any]]:
-    """Windows as they were asked for, in plain values: what is needed to repeat the run."""
-    rows = []
-    for window in windows:
-        kappa = window.permeability_um_s
-        row = {"name": window.name, **asdict(window.shape), "permeability_um_s": kappa if np.isfinite(kappa) else None}
-        rows.append(row)
-    return rows
 
 
 def _check_surface(surface: Surface) -> None:
@@ -315,37 +328,22 @@ def _check_compartments(placement: Placement) -> None:
             )
 
 
-def _start_points(surface: Surface, start: Mapping[str, Sequence[float]]) -> dict[str, Floats]:
-    """Named points, each inside the volume; refused before anything is computed."""
-    points = {}
-    for name, place in start.items():
-        point = np.asarray(place, dtype=np.float64)
-        if point.shape != (3,) or not np.isfinite(point).all():
-            raise SettingsError(f"start point {name!r} is {place!r}; it must be three finite numbers in µm")
-        points[name] = point
-    if points:
-        panels = make_panels(surface.vertices[surface.faces])
-        nothing = np.zeros(len(panels))
-        values = field_at(panels, nothing, nothing, 0.0, np.array(list(points.values())))
-        for name, winding, gap in zip(points, values.winding, values.gap, strict=True):
-            if winding < 0.5:
-                x, y, z = points[name]
-                raise SettingsError(
-                    f"start point {name!r} at ({x:.4g}, {y:.4g}, {z:.4g}) µm lies outside the volume, about "
-                    f"{gap:.3g} µm from the wall; move it inside, and check its unit"
-                )
-    return points
-
-
-def _start_times(solution: _Solution, points: dict[str, Floats], d: float) -> dict[str, float]:
-    if not points:
-        return {}
-    mesh = solution.mesh
-    panels = make_panels(mesh.vertices[mesh.faces])
-    values = field_at(
-        panels, solution.u[panels.order], solution.q[panels.order], 1.0, np.array(list(points.values()))
-    )
-    return {name: float(value) / d for name, value in zip(points, values.u, strict=True)}
+def _wanted_ways_out(
+    windows: Sequence[Window], wanted: bool | Sequence[str] | None, *, named_starts: bool
+) -> list[str] | None:
+    """Names of the windows whose ways out are found; None for none. Refused before anything is computed."""
+    names = [window.name for window in windows]
+    if wanted is None:
+        return names if named_starts and 2 <= len(names) <= MOST_WINDOWS else None
+    if isinstance(wanted, bool):
+        return names if wanted else None
+    for name in wanted:
+        if name not in names:
+            raise SettingsError(
+                f"ways_out names the window {name!r}, which is not given; the windows are "
+                f"{', '.join(map(repr, names[:12]))}"
+            )
+    return list(wanted) or None
 
 
 def _reading_notes(surface: Surface) -> list[str]:

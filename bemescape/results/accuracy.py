@@ -9,9 +9,14 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 
+import numpy as np
+from numpy.typing import NDArray
+
 from bemescape.windows.grade import Fineness
 
 __all__ = ["Estimate", "Ladder", "Rung"]
+
+Floats = NDArray[np.float64]
 
 #: Panels around a rim and lines of equal distance beside it, step by step. The innermost strip is about
 #: rim panel / layers³ wide, and the error of the flux at the rim is in proportion to that width: each step divides
@@ -82,6 +87,9 @@ class Ladder:
     _solved: list[tuple[Rung, float, float]] = field(default_factory=list)
     _rim_change: float | None = None
     _wall_change: float | None = None
+    _shares: Floats | None = None
+    _share_rim_change: Floats | None = None
+    _share_wall_change: Floats | None = None
 
     @property
     def solved(self) -> int:
@@ -108,15 +116,29 @@ class Ladder:
             return finer_wall
         return finer_rim
 
-    def record(self, rung: Rung, mean: float, balance: float) -> None:
-        """Take in the mean time and the balance of one resolution."""
-        if self._solved:
+    def record(self, rung: Rung, mean: float, balance: float, shares: Floats | None = None) -> None:
+        """Take in the mean time, the balance and the windows' shares (k,) of one resolution."""
+        shares = np.zeros(0) if shares is None else shares
+        if self._solved and self._shares is not None:
             before, old, _ = self._solved[-1]
             if rung.rim > before.rim:
-                self._rim_change = mean - old
+                self._rim_change, self._share_rim_change = mean - old, shares - self._shares
             if rung.wall > before.wall:
-                self._wall_change = mean - old
+                self._wall_change, self._share_wall_change = mean - old, shares - self._shares
         self._solved.append((rung, mean, balance))
+        self._shares = shares
+
+    def share_errors(self) -> Floats:
+        """Estimated absolute error (k,) of the last shares, which are not extrapolated."""
+        if self._shares is None:
+            return np.zeros(0)
+        unknown = 0.05 * np.abs(self._shares)
+        none = np.zeros_like(unknown)
+        rim = self._share_rim_change if self._share_rim_change is not None else (unknown if self.has_rims else none)
+        wall = self._share_wall_change if self._share_wall_change is not None else unknown
+        balance = _BALANCE_ERROR * abs(self._solved[-1][2]) + _FLOOR
+        steps = (_RIM_REST + _RIM_ERROR) * np.abs(rim) + (_WALL_REST + _WALL_ERROR) * np.abs(wall)
+        return np.asarray(steps + balance * np.abs(self._shares))
 
     def estimate(self) -> Estimate:
         """Extrapolated mean time and its error, from what has been solved so far."""

@@ -1,9 +1,9 @@
-"""What is read off a solution: times at points, slow regions, the rule of thumb, the summary."""
+"""What is read off a solution: slow regions, the rule of thumb, the summary."""
 
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -11,14 +11,15 @@ from numpy.typing import NDArray
 from scipy.sparse import coo_matrix, csr_matrix
 from scipy.sparse.csgraph import connected_components, dijkstra
 
-from bemescape.bem.field import FieldValues, field_at
-from bemescape.bem.panels import make_panels
 from bemescape.errors import SettingsError
+from bemescape.results.spread import exponential_statement
 from bemescape.results.summary import (
     Checks,
     MadeWith,
     RuleOfThumb,
     SlowRegion,
+    SpreadSummary,
+    StartSummary,
     Summary,
     WindowSummary,
 )
@@ -27,49 +28,12 @@ from bemescape.windows.mesh_edits import mesh_edges
 
 if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
+    from bemescape.results.ways_out import WaysOut
 
-__all__ = ["Region", "SlowRegions", "find_slow_regions", "rule_of_thumb", "summarise", "time_at"]
+__all__ = ["Region", "SlowRegions", "find_slow_regions", "rule_of_thumb", "summarise"]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
-
-#: Points closer to the wall than this part of the bounding box's diagonal count as on it.
-_ON_WALL = 1e-6
-
-
-def time_at(result: EscapeResult, points: Floats, *, outside: str) -> Floats:
-    """See `EscapeResult.time_at`."""
-    if outside not in {"raise", "nan"}:
-        raise SettingsError(f"outside={outside!r} is not known; use 'raise' or 'nan'")
-    if points.ndim != 2 or points.shape[1] != 3 or not np.isfinite(points).all():
-        raise SettingsError(
-            f"points have the shape {points.shape}; give finite positions in µm, three to a point"
-        )
-    values = _boundary_field(result, points)
-    diagonal = float(np.linalg.norm(result.vertices.max(axis=0) - result.vertices.min(axis=0)))
-    on_wall = values.gap < _ON_WALL * diagonal
-    beyond = (values.winding < 0.5) & ~on_wall
-    if beyond.any() and outside == "raise":
-        first = int(np.flatnonzero(beyond)[0])
-        place = ", ".join(f"{value:.4g}" for value in points[first])
-        raise SettingsError(
-            f"point {first + 1} of {len(points)} at ({place}) µm lies outside the volume, {values.gap[first]:.3g} µm "
-            "from the wall; move it inside, or ask with outside='nan'"
-        )
-    times = np.where(on_wall, result.panel_time_s[values.nearest], values.u)
-    times[beyond] = np.nan
-    return times
-
-
-def _boundary_field(result: EscapeResult, points: Floats) -> FieldValues:
-    panels = make_panels(result.vertices[result.faces])
-    volume = result.volume_um3
-    # Back to D = 1: q is the gradient of time along the normal, from the density of exits.
-    q = -result.panel_exit_density_per_um2 * volume / result.diffusion_um2_s
-    values = field_at(
-        panels, result.panel_time_s[panels.order], q[panels.order], 1.0 / result.diffusion_um2_s, points
-    )
-    return FieldValues(values.u, values.winding, values.gap, panels.order[values.nearest])
 
 
 @dataclass(frozen=True, eq=False)
@@ -236,10 +200,32 @@ def rule_of_thumb(volume_um3: float, window_areas_um2: Floats, diffusion_um2_s: 
     )
 
 
+def _spread_summary(result: EscapeResult) -> SpreadSummary | None:
+    spread = result.spread
+    if spread is None:
+        return None
+    return SpreadSummary(
+        second_moment_s2=spread.second_moment_s2,
+        cv=spread.cv,
+        sd_relative_error=spread.relative_error,
+        exponential_within=spread.exponential_within,
+        tail_time_s=spread.tail_time_s,
+        statement=exponential_statement(spread),
+        balance=spread.balance,
+    )
+
+
+def _share_disagreement(result: EscapeResult, ways: WaysOut) -> float:
+    shares = np.array([result.windows[number].share for number in ways.windows])
+    return float(np.abs(ways.mean_splitting - shares).max())
+
+
 def summarise(result: EscapeResult) -> Summary:
     """The content of `summary.json`."""
     window_areas = np.array([window.area_um2 for window in result.windows])
     wall_time = result.panel_time_s[result.panel_window < 0]
+    ways = result.ways_out
+    conditional_time = {} if ways is None else dict(zip(ways.windows, ways.mean_conditional_time_s, strict=True))
     return Summary(
         name=result.name,
         mean_time_s=result.mean_time_s,
@@ -254,10 +240,15 @@ def summarise(result: EscapeResult) -> Summary:
                 area_um2=window.area_um2,
                 share=window.share,
                 permeability_um_s=window.permeability_um_s if np.isfinite(window.permeability_um_s) else None,
+                share_error=window.share_error,
+                conditional_time_s=conditional_time.get(number),
             )
-            for window in result.windows
+            for number, window in enumerate(result.windows)
         ],
+        escape_time_sd_s=result.escape_time_sd_s,
+        spread=_spread_summary(result),
         start=dict(result.start),
+        start_details={name: StartSummary(**asdict(row)) for name, row in result.start_details.items()},
         slowest_time_s=float(wall_time.max() if len(wall_time) else result.panel_time_s.max()),
         slow_regions=[
             SlowRegion(
@@ -273,7 +264,11 @@ def summarise(result: EscapeResult) -> Summary:
         panels=len(result.faces),
         iterations=result.iterations,
         wall_s=result.wall_s,
-        checks=Checks(balance=result.balance),
+        checks=Checks(
+            balance=result.balance,
+            splitting_sum=None if ways is None else ways.sum_error,
+            splitting_share=None if ways is None else _share_disagreement(result, ways),
+        ),
         notes=list(result.notes),
         made_with=MadeWith(
             version=__version__, mesh_sha256=result.mesh_sha256, settings=dict(result.settings)

@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
-from dataclasses import dataclass, field
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -12,6 +12,8 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from bemescape.errors import SettingsError
+from bemescape.progress import Progress, silent
 from bemescape.surface.surface import triangle_areas_normals
 from bemescape.units import format_time, quantity
 
@@ -19,7 +21,10 @@ if TYPE_CHECKING:
     import pint
 
     from bemescape.results.measures import SlowRegions
+    from bemescape.results.spread import Spread
+    from bemescape.results.starts import StartResult
     from bemescape.results.summary import Summary
+    from bemescape.results.ways_out import WaysOut
     from bemescape.surface.heal import HealReport
     from bemescape.surface.health import HealthReport
 
@@ -29,14 +34,31 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 
+def _as_points(points: ArrayLike) -> Floats:
+    return np.atleast_2d(np.asarray(points, dtype=np.float64))
+
+
 @dataclass(frozen=True)
 class WindowResult:
-    """One window after the solve: area in µm², share of all exits, permeability in µm/s (inf: absorbing)."""
+    """One window after the solve.
+
+    Attributes
+    ----------
+    name : str
+    area_um2 : float
+    share : float
+        Part of all exits, start uniform in the volume.
+    permeability_um_s : float
+        Infinite for a perfectly absorbing window.
+    share_error : float or None
+        Estimated absolute error of the share.
+    """
 
     name: str
     area_um2: float
     share: float
     permeability_um_s: float = math.inf
+    share_error: float | None = None
 
 
 @dataclass(frozen=True, eq=False)
@@ -52,7 +74,7 @@ class EscapeResult:
     faces : (m, 3) int64
         Panels: rims are edges of this mesh, and every panel is wholly wall or wholly window.
     parent_face : (m,) int64
-        Face of the input surface on which each panel lies.
+        Face of the input surface on which each panel lies; -1 on a lid.
     panel_window : (m,) int64
         Number of the window in `windows`; -1 on the wall.
     panel_time_s : (m,) float64
@@ -69,6 +91,14 @@ class EscapeResult:
         Relative residual after each iteration of the last solve.
     levels : tuple of dict
         One row per resolution: panels, mean_time_s, iterations, seconds.
+    start : mapping of str to float
+        Mean time from each named start, s.
+    start_details : mapping of str to StartResult
+        The same with standard deviation, splitting and conditional times.
+    spread : Spread or None
+        Second moment of the escape time.
+    ways_out : WaysOut or None
+        Splitting probabilities and conditional times, where they were asked for.
     """
 
     name: str
@@ -94,6 +124,9 @@ class EscapeResult:
     mesh_sha256: str = ""
     health: HealthReport | None = None
     healing: HealReport | None = None
+    start_details: Mapping[str, StartResult] = field(default_factory=dict)
+    spread: Spread | None = None
+    ways_out: WaysOut | None = None
 
     @cached_property
     def _areas_normals(self) -> tuple[Floats, Floats]:
@@ -150,9 +183,86 @@ class EscapeResult:
         SettingsError
             A point lies outside the volume and `outside` is "raise".
         """
-        from bemescape.results.measures import time_at
+        from bemescape.results.points import PlacedPoints
 
-        return time_at(self, np.atleast_2d(np.asarray(points, dtype=np.float64)), outside=outside)
+        return PlacedPoints(self, _as_points(points), outside=outside).times()
+
+    @property
+    def escape_time_sd_s(self) -> float | None:
+        """Standard deviation of the escape time in s, start uniform in the volume; None if it was not computed."""
+        return None if self.spread is None else self.spread.sd_s
+
+    def time_sd_at(self, points: ArrayLike, *, outside: str = "raise") -> Floats:
+        """Standard deviation of the escape time in s from points (p, 3) in µm; arguments as `time_at`.
+
+        Raises
+        ------
+        SettingsError
+            As `time_at`; or the result holds no spread.
+        """
+        from bemescape.results.points import PlacedPoints
+
+        if self.spread is None:
+            raise SettingsError(f"result {self.name!r} holds no second moment; solve the case again")
+        placed = PlacedPoints(self, _as_points(points), outside=outside)
+        variance = placed.second_moments(self.spread) - placed.times() ** 2
+        return np.sqrt(np.where(variance < 0.0, 0.0, variance))
+
+    def with_ways_out(self, windows: Sequence[str] | None = None, *, progress: Progress = silent) -> EscapeResult:
+        """A copy that holds `ways_out` for the named windows, or for all of up to twelve; solved on the same panels.
+
+        Raises
+        ------
+        SettingsError
+            A window is unknown, or none is named and there are more than twelve.
+        """
+        from bemescape.results.prepared import prepare_again
+        from bemescape.results.ways_out import chosen_windows, find_ways_out
+
+        chosen = chosen_windows(self.windows, windows)
+        return replace(self, ways_out=find_ways_out(prepare_again(self, progress), self, chosen))
+
+    @cached_property
+    def _known_ways_out(self) -> WaysOut:
+        held = self.ways_out if self.ways_out is not None else self.with_ways_out().ways_out
+        if held is None:
+            raise SettingsError(f"result {self.name!r} holds no ways out; ask for result.with_ways_out()")
+        return held
+
+    def splitting(self) -> Floats:
+        """Probability (k, m) of leaving through each window from each panel; solved now if `ways_out` is None.
+
+        Row by row the windows of `ways_out.windows`, which are all windows unless fewer were named.
+        """
+        return self._known_ways_out.panel_splitting
+
+    def splitting_at(self, points: ArrayLike, *, outside: str = "raise") -> Floats:
+        """Probability (k, p) of leaving through each window from points (p, 3) in µm; arguments as `time_at`."""
+        from bemescape.results.points import PlacedPoints
+
+        return PlacedPoints(self, _as_points(points), outside=outside).splitting(self._known_ways_out)
+
+    def conditional_time(self) -> Floats:
+        """Mean time (k, m) in s of those who leave through each window, from each panel; NaN where nobody does."""
+        return self._known_ways_out.panel_conditional_time_s
+
+    def conditional_time_at(self, points: ArrayLike, *, outside: str = "raise") -> Floats:
+        """Mean time (k, p) in s of those who leave through each window from points (p, 3) in µm, as `time_at`."""
+        from bemescape.results.points import PlacedPoints
+        from bemescape.results.ways_out import conditional
+
+        placed = PlacedPoints(self, _as_points(points), outside=outside)
+        ways = self._known_ways_out
+        return conditional(placed.weighted_times(ways), placed.splitting(ways))
+
+    def conductance_um3_s(self) -> Floats:
+        """Flow (k, k) in µm³/s into window i for a unit difference of concentration between it and window j.
+
+        Rows sum to zero where all windows are held; symmetric up to the numerical error.
+        """
+        from bemescape.results.ways_out import conductance_um3_s
+
+        return conductance_um3_s(self, self._known_ways_out)
 
     def slow_regions(self, wall_fraction: float = 0.1) -> SlowRegions:
         """Connected parts of the slowest `wall_fraction` of the wall's area, largest first."""

@@ -27,7 +27,10 @@ from numpy.typing import NDArray
 
 from bemescape.errors import EscapeError, SettingsError
 from bemescape.results.result import EscapeResult, WindowResult
+from bemescape.results.spread import Spread
+from bemescape.results.starts import StartResult
 from bemescape.results.summary import Summary
+from bemescape.results.ways_out import WaysOut
 
 __all__ = ["add_pictures", "is_result_folder", "load_result", "save_result"]
 
@@ -40,9 +43,10 @@ PICTURES = (
     "cutaway.png",
     "windows.png",
     "spread.png",
+    "survival.png",
     "convergence.png",
 )
-_FORMAT = "bemescape result 1"
+_FORMAT = "bemescape result 2"
 _HEADER = "header_json"
 STAGING = ".saving-"
 
@@ -54,6 +58,19 @@ _ARRAYS: Mapping[str, tuple[type[np.generic], int]] = {
     "panel_window": (np.int64, 0),
     "panel_time_s": (np.float64, 0),
     "panel_exit_density_per_um2": (np.float64, 0),
+}
+#: Parts of a result that may be missing: name -> their class, and their arrays with a value to a panel, or rows of such.
+_PARTS: Mapping[str, tuple[type[Spread] | type[WaysOut], tuple[str, ...]]] = {
+    "spread": (Spread, ("panel_second_moment_s2", "panel_second_slope_s2_per_um")),
+    "ways_out": (
+        WaysOut,
+        (
+            "panel_splitting",
+            "panel_splitting_slope_per_um",
+            "panel_weighted_time_s",
+            "panel_weighted_slope_s_per_um",
+        ),
+    ),
 }
 
 
@@ -171,12 +188,22 @@ def _write_values(result: EscapeResult, path: Path) -> None:
     header = {
         field.name: _plain(getattr(result, field.name))
         for field in fields(EscapeResult)
-        if field.name not in _ARRAYS
+        if field.name not in _ARRAYS and field.name not in _PARTS
     }
-    text = json.dumps({"format": _FORMAT, **header}).encode()
-    arrays: dict[str, Any] = {_HEADER: np.frombuffer(text, dtype=np.uint8)}
+    arrays: dict[str, Any] = {}
     for name, (kind, _) in _ARRAYS.items():
         arrays[name] = np.ascontiguousarray(getattr(result, name), dtype=kind)
+    for name, (_, on_panels) in _PARTS.items():
+        part = getattr(result, name)
+        header[name] = None
+        if part is not None:
+            header[name] = {
+                entry.name: _plain(getattr(part, entry.name)) for entry in fields(part) if entry.name not in on_panels
+            }
+            for array in on_panels:
+                arrays[f"{name}.{array}"] = np.ascontiguousarray(getattr(part, array), dtype=np.float64)
+    text = json.dumps({"format": _FORMAT, **header}).encode()
+    arrays[_HEADER] = np.frombuffer(text, dtype=np.uint8)
     with path.open("wb") as stream:
         np.savez(stream, **arrays)
 
@@ -199,13 +226,36 @@ def _plain(value: Any) -> Any:
 def _read_values(path: Path) -> EscapeResult:
     with np.load(path, allow_pickle=False) as archive:
         header = json.loads(bytes(archive[_HEADER]).decode())
+        if header.pop("format", None) != _FORMAT:
+            raise ValueError("written by another version of the program")
         arrays = {name: archive[name] for name in _ARRAYS}
-    if header.pop("format", None) != _FORMAT:
-        raise ValueError("written by another version of the program")
+        on_panels = {
+            name: {array: archive[f"{name}.{array}"] for array in names}
+            for name, (_, names) in _PARTS.items()
+            if header[name] is not None
+        }
     _check_arrays(arrays, windows=len(header["windows"]))
+    parts = {name: _read_part(name, header.pop(name), on_panels.get(name, {}), arrays) for name in _PARTS}
     for array in arrays.values():
         array.setflags(write=False)
-    return EscapeResult(**arrays, **_typed(header))
+    return EscapeResult(**arrays, **parts, **_typed(header))
+
+
+def _read_part(
+    name: str, plain: dict[str, Any] | None, on_panels: dict[str, NDArray[Any]], arrays: Mapping[str, NDArray[Any]]
+) -> Any:
+    if plain is None:
+        return None
+    kind, _ = _PARTS[name]
+    rows = () if kind is Spread else (len(plain["windows"]),)
+    for key, array in on_panels.items():
+        if array.dtype != np.float64 or array.shape != (*rows, len(arrays["faces"])):
+            raise ValueError(f"{name}.{key} is {array.dtype} {array.shape}")
+        array.setflags(write=False)
+    values = {key: np.array(value) if isinstance(value, list) else value for key, value in plain.items()}
+    if kind is WaysOut:
+        values["windows"] = tuple(plain["windows"])
+    return kind(**on_panels, **values)
 
 
 def _typed(header: dict[str, Any]) -> dict[str, Any]:
@@ -222,12 +272,13 @@ def _typed(header: dict[str, Any]) -> dict[str, Any]:
         "levels": tuple[dict[str, float], ...],
         "notes": tuple[str, ...],
         "start": dict[str, float],
+        "start_details": dict[str, StartResult],
         "settings": dict[str, Any],
         "name": str,
         "mesh_sha256": str,
         "target_met": bool,
     }
-    wanted = {field.name for field in fields(EscapeResult)} - set(_ARRAYS)
+    wanted = {field.name for field in fields(EscapeResult)} - set(_ARRAYS) - set(_PARTS)
     return {name: TypeAdapter(kinds.get(name, float)).validate_python(header[name]) for name in wanted}
 
 
@@ -244,7 +295,7 @@ def _check_arrays(arrays: Mapping[str, NDArray[Any]], *, windows: int) -> None:
     for name, lowest, end in (
         ("faces", 0, corners),
         ("panel_window", -1, windows),
-        ("parent_face", 0, math.inf),
+        ("parent_face", -1, math.inf),
     ):
         if arrays[name].min() < lowest or arrays[name].max() >= end:
             raise ValueError(f"{name} points outside its range")
@@ -259,6 +310,17 @@ def _write_surface(result: EscapeResult, path: Path) -> None:
     mesh.cell_data["window"] = result.panel_window
     mesh.cell_data["slow_region"] = np.asarray(result.slow_regions().panel_region, dtype=np.int64)
     mesh.cell_data["parent_face"] = result.parent_face
+    if result.spread is not None:
+        mesh.cell_data["second_moment_s2"] = result.spread.panel_second_moment_s2
+    if result.ways_out is not None:
+        for number, splitting, times in zip(
+            result.ways_out.windows,
+            result.ways_out.panel_splitting,
+            result.ways_out.panel_conditional_time_s,
+            strict=True,
+        ):
+            mesh.cell_data[f"splitting_{number}"] = splitting
+            mesh.cell_data[f"conditional_time_s_{number}"] = times
     mesh.save(path)
     if not path.is_file():
         raise OSError(f"{path.name} was not written")

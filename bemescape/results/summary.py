@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Any, Literal
 
 from pydantic import BaseModel, ConfigDict, Field
 
@@ -12,6 +12,8 @@ __all__ = [
     "MadeWith",
     "RuleOfThumb",
     "SlowRegion",
+    "SpreadSummary",
+    "StartSummary",
     "Summary",
     "WindowSummary",
     "summary_schema",
@@ -35,6 +37,38 @@ class WindowSummary(_Model):
         description="part of all exits, start uniform in the volume; outflow * D / V, not normalised"
     )
     permeability_um_s: float | None = Field(default=None, description="null: perfectly absorbing")
+    share_error: float | None = Field(default=None, description="estimated numerical error of the share, absolute")
+    conditional_time_s: float | None = Field(
+        default=None, description="mean time of those who leave through it, start uniform; null: not computed"
+    )
+
+
+class SpreadSummary(_Model):
+    """How the escape time scatters, start uniform in the volume."""
+
+    second_moment_s2: float = Field(description="mean of the squared escape time")
+    cv: float = Field(description="standard deviation / mean; 1 for an exponential law, never below it")
+    sd_relative_error: float = Field(description="estimated numerical error of the standard deviation, relative")
+    exponential_within: float = Field(
+        description="largest difference, at any time, between the part still inside and exp(-t/mean): a bound"
+    )
+    tail_time_s: float = Field(description="second moment / (2 mean): mean remaining time of those found inside")
+    statement: str = Field(description="how close the escape is to one with a constant rate")
+    balance: float = Field(description="outflow of the second moment / (2/D * integral of the time) - 1")
+
+
+class StartSummary(_Model):
+    """What follows from one named start."""
+
+    kind: Literal["point", "wall patch", "ball"]
+    mean_time_s: float
+    escape_time_sd_s: float | None = None
+    splitting: dict[str, float] | None = Field(
+        default=None, description="window -> probability of leaving through it; null: not computed"
+    )
+    conditional_time_s: dict[str, float | None] | None = Field(
+        default=None, description="window -> mean time of those who leave through it"
+    )
 
 
 class SlowRegion(_Model):
@@ -62,6 +96,12 @@ class Checks(_Model):
     """What the result proves of itself."""
 
     balance: float = Field(description="outflow through all windows * D / V - 1")
+    splitting_sum: float | None = Field(
+        default=None, description="largest |sum of the splitting probabilities - 1| on the wall"
+    )
+    splitting_share: float | None = Field(
+        default=None, description="largest |volume average of a splitting probability - share of its window|"
+    )
     crosscheck: dict[str, Any] | None = Field(
         default=None, description="second opinion, where one was asked for"
     )
@@ -87,8 +127,10 @@ class Summary(_Model):
     area_um2: float
     windows: list[WindowSummary]
     escape_time_sd_s: float | None = Field(default=None, description="standard deviation of the escape time")
-    start: dict[str, float] = Field(
-        default_factory=dict, description="name of a start point -> mean time from it, s"
+    spread: SpreadSummary | None = Field(default=None, description="null: not computed")
+    start: dict[str, float] = Field(default_factory=dict, description="name of a start -> mean time from it, s")
+    start_details: dict[str, StartSummary] = Field(
+        default_factory=dict, description="name of a start -> all that was computed from it"
     )
     slowest_time_s: float = Field(description="largest mean time from any place on the wall")
     slow_regions: list[SlowRegion]

@@ -1,0 +1,134 @@
+"""One mesh with its windows, made ready to solve for any right-hand side."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from functools import cached_property
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from bemescape.bem.averages import enclosed_volume
+from bemescape.bem.clusters import wall_clusters
+from bemescape.bem.moments import SourcePotential
+from bemescape.bem.operator import assemble
+from bemescape.bem.panels import Panels, make_panels
+from bemescape.bem.solve import BoundarySolution, BoundarySolver
+from bemescape.progress import Progress, ProgressEvent, silent
+from bemescape.windows.mesh_edits import face_pairs
+
+if TYPE_CHECKING:
+    from bemescape.results.result import EscapeResult
+
+__all__ = ["Prepared", "iteration_teller", "prepare", "prepare_again"]
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+
+@dataclass(frozen=True, eq=False)
+class Prepared:
+    """A solver and what belongs to it; everything is for D = 1 and in the order of `panels`.
+
+    Attributes
+    ----------
+    panels : Panels
+        `panels.order` leads from the order of the mesh to theirs.
+    solver : BoundarySolver
+    tolerance : float
+        Of the iteration.
+    progress : callable
+        Receives a ProgressEvent for every step.
+    """
+
+    panels: Panels
+    solver: BoundarySolver
+    tolerance: float
+    progress: Progress
+
+    @cached_property
+    def back(self) -> Ints:
+        """From the order of the panels to that of the mesh: `values[back]`."""
+        back = np.empty_like(self.panels.order)
+        back[self.panels.order] = np.arange(len(self.panels))
+        return back
+
+    @property
+    def window_of(self) -> Ints:
+        """Number of the window of each panel (m,), −1 on the wall."""
+        return self.solver.operator.window_of
+
+    @cached_property
+    def volume(self) -> float:
+        """Enclosed volume in µm³."""
+        return enclosed_volume(self.panels)
+
+    @cached_property
+    def source_potential(self) -> SourcePotential:
+        """The potential of a solution, for problems whose source is one."""
+        self.progress(ProgressEvent("near field", None, "of the second moment"))
+        return SourcePotential(self.solver.operator)
+
+    def solve(self, right: Floats, stage: str, *, given: Floats | None = None) -> BoundarySolution:
+        """Solve for one right-hand side; see `BoundarySolver.solve`."""
+        return self.solver.solve(right, given=given, tell=iteration_teller(self.progress, self.tolerance, stage))
+
+
+def iteration_teller(progress: Progress, tolerance: float, stage: str) -> Callable[[int, float], None]:
+    """Reports iterations as events of `stage`."""
+
+    def tell(iteration: int, residual: float) -> None:
+        # A residual falls by powers of ten: the part done is measured on that scale.
+        done = min(1.0, float(np.log(max(residual, 1e-300)) / np.log(tolerance)))
+        progress(ProgressEvent(stage, done, f"iteration {iteration}, residual {residual:.1e}"))
+
+    return tell
+
+
+def prepare(
+    vertices: Floats,
+    faces: Ints,
+    window_of: Ints,
+    resistance_of_window: Floats,
+    *,
+    tolerance: float,
+    progress: Progress = silent,
+) -> Prepared:
+    """Near field, preconditioner and outer space of a mesh.
+
+    Parameters
+    ----------
+    vertices : (n, 3) float64
+    faces : (m, 3) int64
+    window_of : (m,) int64
+        Number of the window, −1 on the wall.
+    resistance_of_window : (k,) float64
+        D/κ of each window in µm, 0 where it absorbs perfectly.
+    tolerance : float
+        Relative residual at which an iteration ends.
+    progress : callable, optional
+    """
+    panels = make_panels(vertices[faces])
+    sorted_window = window_of[panels.order]
+    resistance = np.where(sorted_window >= 0, resistance_of_window[sorted_window], 0.0)
+    progress(ProgressEvent("near field", None, f"{len(panels)} panels"))
+    operator = assemble(panels, sorted_window, resistance)
+    number = np.empty_like(panels.order)
+    number[panels.order] = np.arange(len(panels))
+    clusters = wall_clusters(panels.centroids, number[face_pairs(faces)], operator.is_window)
+    return Prepared(panels, BoundarySolver(operator, cluster_of=clusters, tolerance=tolerance), tolerance, progress)
+
+
+def prepare_again(result: EscapeResult, progress: Progress = silent) -> Prepared:
+    """The solver of a result's own mesh, for questions that are asked afterwards."""
+    kappa = np.array([window.permeability_um_s for window in result.windows])
+    return prepare(
+        result.vertices,
+        result.faces,
+        result.panel_window,
+        result.diffusion_um2_s / kappa,
+        tolerance=float(result.settings.get("tolerance", 1e-6)),
+        progress=progress,
+    )
