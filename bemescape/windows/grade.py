@@ -18,6 +18,7 @@ from scipy.spatial import cKDTree
 
 from bemescape.errors import WindowError
 from bemescape.surface.surface import Surface
+from bemescape.windows.imprint import rims_cut
 from bemescape.windows.mesh_edits import Mesh, bisected_to_size, cut_along_level, mesh_edges, split_edges
 from bemescape.windows.patch import Patch, connected_vertices
 from bemescape.windows.placement import Placement, place_windows
@@ -29,9 +30,9 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 
-#: A crossing closer to a vertex than this part of the edge uses the vertex: rims stay exact, lines beside them may
-#: give way to avoid needless slivers (but the innermost crosses its edges at 1/8).
-_RIM_SNAP, _LAYER_SNAP = 0.005, 0.06
+#: A crossing closer to a vertex than this part of the edge uses the vertex: unlike rims, lines beside them may give way
+#: to avoid needless slivers (but the innermost crosses its edges at 1/8).
+_LAYER_SNAP = 0.06
 
 
 @dataclass(frozen=True)
@@ -108,14 +109,11 @@ def graded(
     mesh = Mesh(surface.vertices, surface.faces, np.arange(len(surface.faces)))
     size_at = _panel_size(surface, patches, fineness, limits)
     mesh = bisected_to_size(mesh, size_at, most_faces=most_faces)
+    mesh, members = rims_cut(mesh, patches)
     window_of = np.full(len(mesh.faces), -1)
     for number, patch in enumerate(patches):
-        if patch.level is not None:
-            mesh, window_of, members = _rim_cut(mesh, window_of, patch)
-        else:
-            members = np.isin(mesh.parent, patch.faces)
-        _refuse_overlap(mesh, window_of, members, patch, patches)
-        window_of[members] = number
+        _refuse_overlap(mesh, window_of, members[number], patch, patches)
+        window_of[members[number]] = number
     layered = _layered(Mesh(mesh.vertices, mesh.faces, np.arange(len(mesh.faces))), window_of, patches, fineness)
     return GradedMesh(layered.vertices, layered.faces, mesh.parent[layered.parent], window_of[layered.parent])
 
@@ -131,9 +129,18 @@ def _panel_size(
     # An equilateral panel with edge l has the area 0.433 l².
     largest = float(np.sqrt(surface.area / fineness.wall_panels / 0.433))
 
+    # Discs of one radius share a tree: the nearest centre has the nearest rim.
+    radii = sorted({patch.radius_um for patch in patches if patch.disc is not None})
+    groups = [[patch for patch in patches if patch.disc is not None and patch.radius_um == r] for r in radii]
+    trees = [cKDTree([patch.disc.centre_um for patch in group if patch.disc is not None]) for group in groups]
+    others = [patch for patch in patches if patch.disc is None]
+
     def size_at(points: Floats) -> Floats:
         size = np.full(len(points), largest)
-        for patch in patches:
+        for radius, group, tree in zip(radii, groups, trees, strict=True):
+            to_rim = np.abs(tree.query(points)[0] - radius)
+            size = np.minimum(size, _rim_size(group[0], fineness) + fineness.growth * to_rim)
+        for patch in others:
             size = np.minimum(size, _rim_size(patch, fineness) + fineness.growth * patch.distance_to_rim(points))
         for limit in limits:
             size = np.minimum(size, limit(points))
@@ -142,33 +149,8 @@ def _panel_size(
     return size_at
 
 
-def _rim_cut(mesh: Mesh, window_of: Ints, patch: Patch) -> tuple[Mesh, Ints, NDArray[np.bool_]]:
-    """Cut along the level of a patch, in its own pieces only; also the faces (m,) of the window."""
-    level = patch.level
-    if level is None:
-        raise ValueError("a window of whole faces is not cut")
-    value = level(mesh.vertices)
-    inside = value < 0.0
-    if not inside.any():
-        raise WindowError(
-            f"window {patch.name!r} (radius {patch.radius_um:.4g} µm) is smaller than the panels can be made here; "
-            "raise the panel budget or enlarge the window"
-        )
-    kept = connected_vertices(mesh, inside, patch.starts)
-    value[inside & ~kept] = np.inf  # another sheet within the level stays wall
-    numbered = Mesh(mesh.vertices, mesh.faces, np.arange(len(mesh.faces)))
-    cut, value = cut_along_level(numbered, value, 0.0, snap=_RIM_SNAP, refine=level)
-    # A face with all three corners on the rim itself goes by its middle.
-    middle = level(cut.vertices[cut.faces].mean(axis=1)) < 0.0
-    within = (value[cut.faces] <= 0.0).all(axis=1) & ((value[cut.faces] < 0.0).any(axis=1) | middle)
-    members = _connected_faces(cut, within, patch.starts)
-    return Mesh(cut.vertices, cut.faces, mesh.parent[cut.parent]), window_of[cut.parent], members
-
-
-def _refuse_overlap(
-    mesh: Mesh, window_of: Ints, members: NDArray[np.bool_], patch: Patch, patches: Sequence[Patch]
-) -> None:
-    taken = np.flatnonzero(members & (window_of >= 0))
+def _refuse_overlap(mesh: Mesh, window_of: Ints, members: Ints, patch: Patch, patches: Sequence[Patch]) -> None:
+    taken = members[window_of[members] >= 0]
     if len(taken):
         other = patches[int(window_of[taken[0]])]
         place = mesh.vertices[mesh.faces[taken]].mean(axis=(0, 1))
@@ -177,29 +159,10 @@ def _refuse_overlap(
             f"windows {other.name!r} and {patch.name!r} overlap near ({place[0]:.4g}, {place[1]:.4g}, "
             f"{place[2]:.4g}) µm: their middles are {gap:.4g} µm apart; move one, shrink one, or join them"
         )
-    if not members.any():
+    if not len(members):
         raise WindowError(
             f"window {patch.name!r} has no panel of its own; it is smaller than the panels can be made here"
         )
-
-
-def _connected_faces(mesh: Mesh, chosen: NDArray[np.bool_], starts: Floats) -> NDArray[np.bool_]:
-    """The parts of the `chosen` faces (m,) nearest to each of `starts` (k, 3), connected through edges."""
-    from scipy.sparse import coo_matrix
-    from scipy.sparse.csgraph import connected_components
-
-    index = np.flatnonzero(chosen)
-    out = np.zeros(len(mesh.faces), bool)
-    if len(index) == 0:
-        return out
-    edges, of_face = mesh_edges(mesh.faces[index])
-    rows = np.repeat(np.arange(len(index)), 3)
-    incidence = coo_matrix((np.ones(len(rows)), (rows, of_face.ravel())), shape=(len(index), len(edges)))
-    _, label = connected_components(incidence @ incidence.T, directed=False)
-    middle = mesh.vertices[mesh.faces[index]].mean(axis=1)
-    _, nearest = cKDTree(middle).query(starts)
-    out[index[np.isin(label, np.unique(label[nearest]))]] = True
-    return out
 
 
 def _layered(mesh: Mesh, window_of: Ints, patches: Sequence[Patch], fineness: Fineness) -> Mesh:

@@ -123,9 +123,7 @@ def bisected_to_size(mesh: Mesh, size_at: Callable[[Floats], Floats], *, most_fa
                 break
             chosen[longest[due]] = True
         # One bisection a face and round: only the longest edges now, the others in the next rounds.
-        shared = np.bincount(longest, minlength=len(edges)) == np.bincount(
-            of_face.ravel(), minlength=len(edges)
-        )
+        shared = np.bincount(longest, minlength=len(edges)) == np.bincount(of_face.ravel(), minlength=len(edges))
         now = chosen & shared
         mesh = split_edges(mesh, edges, of_face, now, ends[now].mean(axis=1))
 
@@ -154,7 +152,7 @@ def cut_along_level(
     offset = value - level
     edges, of_face = mesh_edges(mesh.faces)
     start, end = offset[edges[:, 0]], offset[edges[:, 1]]
-    crossing = (start * end < 0.0) & np.isfinite(start) & np.isfinite(end)
+    crossing = (np.sign(start) * np.sign(end) < 0.0) & np.isfinite(start) & np.isfinite(end)
     part = np.zeros(len(edges))
     part[crossing] = start[crossing] / (start[crossing] - end[crossing])
     if refine is not None and crossing.any():
@@ -164,7 +162,7 @@ def cut_along_level(
     offset[edges[crossing & (part < snap), 0]] = 0.0
     offset[edges[crossing & (part > 1.0 - snap), 1]] = 0.0
     start, end = offset[edges[:, 0]], offset[edges[:, 1]]
-    crossing &= start * end < 0.0
+    crossing &= np.sign(start) * np.sign(end) < 0.0
     ends = mesh.vertices[edges[crossing]]
     positions = ends[:, 0] + part[crossing, None] * (ends[:, 1] - ends[:, 0])
     cut = split_edges(mesh, edges, of_face, crossing, positions)
