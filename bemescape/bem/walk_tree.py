@@ -49,6 +49,17 @@ class Boxes(NamedTuple):
     high: Floats
 
 
+class Cones(NamedTuple):
+    """Cone around the normals of each node: axis (nodes, 3), sine and cosine (nodes,) of its half-angle.
+
+    Cosine −1 where they spread over more than a half-space.
+    """
+
+    axis: Floats
+    sine: Floats
+    cosine: Floats
+
+
 class PanelTree(NamedTuple):
     """Panels in tree order: corners (m, 3, 3), unit normals (m, 3), number (m,) of each at the caller."""
 
@@ -56,26 +67,16 @@ class PanelTree(NamedTuple):
     corners: Floats
     normals: Floats
     number: Ints
+    cones: Cones
 
 
 class EdgeTree(NamedTuple):
-    """Edges in tree order.
-
-    Attributes
-    ----------
-    ends : (e, 2, 3) float64
-    normals : (e, 2, 3) float64
-        Of the two faces beside each edge.
-    axis : (nodes, 3) float64, sine, cosine : (nodes,) float64
-        Cone around the normals of each node; cosine −1 where they spread over more than a half-space.
-    """
+    """Edges (e, 2, 3) in tree order, and the normals (e, 2, 3) of the two faces beside each."""
 
     boxes: Boxes
     ends: Floats
     normals: Floats
-    axis: Floats
-    sine: Floats
-    cosine: Floats
+    cones: Cones
 
 
 @njit(cache=True)
@@ -95,6 +96,9 @@ def _fit_boxes(first, last, item_low, item_high, low, high):
 
 def _boxes(points: Floats) -> Boxes:
     """Boxes around items of several points each (n, points, 3), already in Morton order."""
+    if len(points) == 0:
+        none = np.zeros(1, np.int64)
+        return Boxes(none, none, np.full((1, 3), np.inf), np.full((1, 3), np.inf))
     ranges = build_box_tree(points.mean(axis=1), np.zeros(len(points)))
     low, high = np.empty((len(ranges.first), 3)), np.empty((len(ranges.first), 3))
     _fit_boxes(ranges.first, ranges.last, points.min(axis=1), points.max(axis=1), low, high)
@@ -105,33 +109,32 @@ def panel_tree(corners: Floats, normals: Floats, chosen: Ints) -> PanelTree:
     """Tree over the `chosen` (k,) of panels (m, 3, 3); of none if k is 0."""
     if len(chosen):
         chosen = chosen[morton_order(corners[chosen].mean(axis=1))]
-    picked = np.ascontiguousarray(corners[chosen])
-    return PanelTree(_boxes(picked) if len(chosen) else _no_boxes(), picked, normals[chosen], chosen)
+    picked, facing = np.ascontiguousarray(corners[chosen]), np.ascontiguousarray(normals[chosen])
+    boxes = _boxes(picked)
+    return PanelTree(boxes, picked, facing, chosen, _cones(boxes, facing[:, None]))
 
 
 def edge_tree(ends: Floats, normals: Floats) -> EdgeTree:
     """Tree over edges (e, 2, 3) with the normals (e, 2, 3) of the faces beside them."""
-    if len(ends) == 0:
-        return EdgeTree(_no_boxes(), ends, normals, np.zeros((1, 3)), np.zeros(1), np.ones(1))
-    order = morton_order(ends.mean(axis=1))
-    ends, normals = np.ascontiguousarray(ends[order]), np.ascontiguousarray(normals[order])
+    if len(ends):
+        order = morton_order(ends.mean(axis=1))
+        ends, normals = np.ascontiguousarray(ends[order]), np.ascontiguousarray(normals[order])
     boxes = _boxes(ends)
-    axis, sine, cosine = _cones(boxes.first, boxes.last, normals)
-    return EdgeTree(boxes, ends, normals, axis, sine, cosine)
+    return EdgeTree(boxes, ends, normals, _cones(boxes, normals))
 
 
-def _no_boxes() -> Boxes:
-    none = np.zeros(1, np.int64)
-    return Boxes(none, none, np.full((1, 3), np.inf), np.full((1, 3), np.inf))
+def _cones(boxes: Boxes, normals: Floats) -> Cones:
+    """Cones around several normals of each item (n, normals, 3)."""
+    return Cones(*_fit_cones(boxes.first, boxes.last, normals))
 
 
 @njit(cache=True)
-def _cones(first, last, normals):
-    nodes = len(first)
+def _fit_cones(first, last, normals):
+    nodes, sides = len(first), normals.shape[1]
     axis, sine, cosine = np.zeros((nodes, 3)), np.zeros(nodes), np.full(nodes, -1.0)
     for node in range(nodes):
         for i in range(first[node], last[node]):
-            for side in range(2):
+            for side in range(sides):
                 for k in range(3):
                     axis[node, k] += normals[i, side, k]
         size = math.sqrt(axis[node, 0] ** 2 + axis[node, 1] ** 2 + axis[node, 2] ** 2)
@@ -141,7 +144,7 @@ def _cones(first, last, normals):
             axis[node, k] /= size
         smallest = 1.0
         for i in range(first[node], last[node]):
-            for side in range(2):
+            for side in range(sides):
                 dot = 0.0
                 for k in range(3):
                     dot += axis[node, k] * normals[i, side, k]
@@ -219,7 +222,7 @@ def _segment_distance2(ends, i, x, y, z):
 @njit(cache=True)
 def _one_way(tree, node, x, y, z):
     """Whether every face of the node is seen from the same side from (x, y, z)."""
-    if tree.cosine[node] <= 0.0:
+    if tree.cones.cosine[node] <= 0.0:
         return False
     square, radius2, along = 0.0, 0.0, 0.0
     for k in range(3):
@@ -228,14 +231,14 @@ def _one_way(tree, node, x, y, z):
         view = 0.5 * (low + high) - place
         square += view * view
         radius2 += 0.25 * (high - low) * (high - low)
-        along += view * tree.axis[node, k]
+        along += view * tree.cones.axis[node, k]
     if square <= radius2:
         return False
     sine = math.sqrt(radius2 / square)
     cosine = math.sqrt(1.0 - sine * sine)
-    if tree.cosine[node] * cosine - tree.sine[node] * sine <= 0.0:
+    if tree.cones.cosine[node] * cosine - tree.cones.sine[node] * sine <= 0.0:
         return False
-    return abs(along) > math.sqrt(square) * (tree.sine[node] * cosine + tree.cosine[node] * sine)
+    return abs(along) > math.sqrt(square) * (tree.cones.sine[node] * cosine + tree.cones.cosine[node] * sine)
 
 
 @njit(cache=True)
@@ -287,12 +290,30 @@ def edge_distance(tree, x, y, z, limit, stack):
 
 
 @njit(cache=True)
-def reach_before_exit(tree, rate, x, y, z, limit, stack):
+def _least_height(tree, node, x, y, z):
+    """A bound from below on how far (x, y, z) lies inside the planes of all panels of the node."""
+    if tree.cones.cosine[node] <= 0.0:
+        return -np.inf
+    along, furthest2 = 0.0, 0.0
+    for k in range(3):
+        place = x if k == 0 else (y if k == 1 else z)
+        low, high = tree.boxes.low[node, k] - place, tree.boxes.high[node, k] - place
+        axis = tree.cones.axis[node, k]
+        along += min(axis * low, axis * high)
+        furthest2 += max(low * low, high * high)
+    if along > 0.0:
+        along *= tree.cones.cosine[node]
+    return along - math.sqrt(furthest2) * tree.cones.sine[node]
+
+
+@njit(cache=True)
+def reach_before_exit(tree, rate, largest_rate, on_window, x, y, z, limit, stack):
     """Largest ball in which no partly open panel reflects with a negative probability; at most `limit`.
 
     A ray of length t to a panel at the height h above which the ball's centre lies is reflected with the probability
     1 − μ t²(1 − t/R)/h, smallest at t = 2R/3: it stays above 0 where R² ≤ 27 h/(4 μ), or where the ball does not
-    reach the panel.
+    reach the panel. From a wall in the same plane (h = 0) no ray meets the panel, so the ball must not reach it; a
+    walker `on_window` accounts for its own plane by itself. `largest_rate` is that of all panels of the tree.
     """
     best = limit
     if len(tree.number) == 0:
@@ -303,16 +324,20 @@ def reach_before_exit(tree, rate, x, y, z, limit, stack):
     while depth > 0:
         depth -= 1
         node = stack[depth]
-        if _box_distance2(tree.boxes, node, x, y, z) >= best * best:
+        # A node whose planes are all far enough away cannot shrink the ball: most of a flat window.
+        if (
+            _box_distance2(tree.boxes, node, x, y, z) >= best * best
+            or 6.75 * _least_height(tree, node, x, y, z) >= best * best * largest_rate
+        ):
             continue
         if node < inner:
             depth = _push_children(tree.boxes, node, x, y, z, best * best, stack, depth)
             continue
         for i in range(tree.boxes.first[node], tree.boxes.last[node]):
             height = _height(tree.corners[i, 0], tree.normals[i], x, y, z)
-            if height <= ON_PLANE:
+            if height < -ON_PLANE or (height <= ON_PLANE and on_window):
                 continue
-            reach = math.sqrt(6.75 * height / rate[tree.number[i]])
+            reach = math.sqrt(6.75 * max(height, 0.0) / rate[tree.number[i]])
             if reach < best:
                 best = min(best, max(reach, triangle_distance(x, y, z, tree.corners, i)))
     return best

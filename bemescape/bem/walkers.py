@@ -107,6 +107,7 @@ class _Scene(NamedTuple):
     rims: EdgeTree
     normals: Floats
     rate: Floats
+    largest_rate: float
     own_radius: Floats
     low: Floats
     high: Floats
@@ -226,11 +227,11 @@ def _scene(
     panel_rate = np.where(window_of >= 0, (rate * diagonal)[window_of], 0.0)
     own = own_region * np.minimum(radius, 1.0 / (rate * diagonal))
     absorbing = np.isinf(panel_rate)
-    ends, beside = _inner_edges(vertices, faces, normals, ~absorbing)
+    ends, beside = _inner_edges(vertices, faces, ~absorbing)
     # An edge is a rim of reflection where the rate changes across it; a silhouette only where the volume's angle is
     # above 180°: all others are seen from one side together.
     is_rim = panel_rate[beside[:, 0]] != panel_rate[beside[:, 1]]
-    reflex = _turn(corners, normals, ends, beside) > _FLAT
+    reflex = _turn(normals, ends, beside) > _FLAT
     return _Scene(
         wall=panel_tree(corners, normals, np.flatnonzero(~absorbing)),
         absorbing=panel_tree(corners, normals, np.flatnonzero(absorbing)),
@@ -239,6 +240,7 @@ def _scene(
         rims=edge_tree(ends[is_rim], normals[beside[is_rim]]),
         normals=normals,
         rate=panel_rate,
+        largest_rate=float(panel_rate[~absorbing].max(initial=0.0)),
         own_radius=np.where(window_of >= 0, own[window_of], 0.0),
         low=vertices.min(axis=0),
         high=vertices.max(axis=0),
@@ -246,9 +248,7 @@ def _scene(
     )
 
 
-def _inner_edges(
-    vertices: Floats, faces: Ints, normals: Floats, chosen: NDArray[np.bool_]
-) -> tuple[Floats, Ints]:
+def _inner_edges(vertices: Floats, faces: Ints, chosen: NDArray[np.bool_]) -> tuple[Floats, Ints]:
     """Edges (e, 2, 3) between two of the `chosen` faces, and these faces (e, 2)."""
     index = np.flatnonzero(chosen)
     start = faces[index].ravel()
@@ -261,7 +261,7 @@ def _inner_edges(
     return ends, np.stack([index[one // 3], index[other // 3]], axis=1)
 
 
-def _turn(corners: Floats, normals: Floats, ends: Floats, beside: Ints) -> Floats:
+def _turn(normals: Floats, ends: Floats, beside: Ints) -> Floats:
     """Sine of the angle by which the wall turns away from the volume at each edge; negative where it turns in."""
     along = ends[:, 1] - ends[:, 0]
     along /= np.linalg.norm(along, axis=1)[:, None]
@@ -296,8 +296,9 @@ def _direction(state):
 def _is_inside(scene, x, y, z, state, stack):
     """Whether the first panel on a ray in a random direction is crossed outwards."""
     vx, vy, vz = _direction(state)
-    best, hit = first_hit(scene.wall, x, y, z, vx, vy, vz, 2.0, True, stack)
-    to_window, window = first_hit(scene.absorbing, x, y, z, vx, vy, vz, best, True, stack)
+    both_sides = True
+    best, hit = first_hit(scene.wall, x, y, z, vx, vy, vz, 2.0, both_sides, stack)
+    _, window = first_hit(scene.absorbing, x, y, z, vx, vy, vz, best, both_sides, stack)
     if window >= 0:
         panel = scene.absorbing.number[window]
     elif hit >= 0:
@@ -325,29 +326,30 @@ def _one_walk(scene, window_of, state, stack):
     found, x, y, z = _start(scene, state, stack)
     if not found:
         return 0.0, _NO_START, 0
-    elapsed = 0.0
+    elapsed, only_outwards = 0.0, False
     on = -1  # the panel of the wall on which the walker is
     for step in range(_MOST_STEPS):
         radius, window = nearest_panel(scene.absorbing, x, y, z, 2.0, stack)
         if window >= 0 and radius < scene.shell:
             return elapsed, window_of[scene.absorbing.number[window]], step
         radius = silhouette_distance(scene.silhouettes, x, y, z, radius, stack)
-        radius = reach_before_exit(scene.partly, scene.rate, x, y, z, radius, stack)
+        on_window = on >= 0 and scene.rate[on] > 0.0
+        radius = reach_before_exit(scene.partly, scene.rate, scene.largest_rate, on_window, x, y, z, radius, stack)
         vx, vy, vz = _direction(state)
         if on >= 0:
             normal = scene.normals[on]
             if vx * normal[0] + vy * normal[1] + vz * normal[2] > 0.0:
                 vx, vy, vz = -vx, -vy, -vz
-            if scene.rate[on] > 0.0:
+            if on_window:
                 own = scene.own_radius[on]
                 to_rim = edge_distance(scene.rims, x, y, z, own, stack)
                 radius = min(radius, max(to_rim, OWN_REGION_AT_RIM * own))
         radius = max(radius, scene.shell)
-        if on >= 0 and scene.rate[on] > 0.0:
+        if on_window:
             outflow = 0.5 * scene.rate[on] * radius
             if _uniform(state) * (1.0 + outflow) < outflow:
                 return elapsed, window_of[on], step
-        length, hit = first_hit(scene.wall, x, y, z, vx, vy, vz, radius, False, stack)
+        length, hit = first_hit(scene.wall, x, y, z, vx, vy, vz, radius, only_outwards, stack)
         elapsed += length * length * (0.5 - length / (3.0 * radius))
         x, y, z = x + length * vx, y + length * vy, z + length * vz
         on = -1
