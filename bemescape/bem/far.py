@@ -69,64 +69,57 @@ _SINGLE, _LIFTED, _DOUBLE, _DISTANCE, _LIFTED_DISTANCE = 1, 2, 3, 4, 5
 
 
 def _pass(kind):
-    """A compiled loop over all pairs for one kind of kernel (a closure constant, so nothing branches inside)."""
+    """A compiled loop over all pairs for one kind of kernel (a closure constant, so nothing branches inside).
+
+    Sources come in groups, `first[g]` up to `first[g + 1]`, and each group has a column of `out` to itself.
+    """
 
     @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
-    def run(points, point_normals, point_spread, sources, normals, spread, strength, out):
-        n = len(sources)
+    def run(points, point_normals, point_spread, sources, normals, spread, strength, first, out):
         one = np.float32(1.0)
         for tile in prange((len(points) + _TILE - 1) // _TILE):
             begin, end = tile * _TILE, min(len(points), (tile + 1) * _TILE)
             cx, cy, cz = points[begin, 0], points[begin, 1], points[begin, 2]
-            sx, sy, sz = (
-                np.empty(_BLOCK, np.float32),
-                np.empty(_BLOCK, np.float32),
-                np.empty(_BLOCK, np.float32),
-            )
-            nx, ny, nz = (
-                np.empty(_BLOCK, np.float32),
-                np.empty(_BLOCK, np.float32),
-                np.empty(_BLOCK, np.float32),
-            )
+            sx, sy, sz = np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32)
+            nx, ny, nz = np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32)
             wide, weight = np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32)
-            for block in range(0, n, _BLOCK):
-                size = min(_BLOCK, n - block)
-                for k in range(size):
-                    j = block + k
-                    sx[k] = np.float32(sources[j, 0] - cx)
-                    sy[k] = np.float32(sources[j, 1] - cy)
-                    sz[k] = np.float32(sources[j, 2] - cz)
-                    nx[k], ny[k], nz[k] = normals[j, 0], normals[j, 1], normals[j, 2]
-                    wide[k], weight[k] = spread[j], strength[j]
-                for i in range(begin, end):
-                    x = np.float32(points[i, 0] - cx)
-                    y = np.float32(points[i, 1] - cy)
-                    z = np.float32(points[i, 2] - cz)
-                    px = np.float32(point_normals[i, 0])
-                    py = np.float32(point_normals[i, 1])
-                    pz = np.float32(point_normals[i, 2])
-                    mine = np.float32(point_spread[i])
-                    total = np.float32(0.0)
+            for group in range(len(first) - 1):
+                for block in range(first[group], first[group + 1], _BLOCK):
+                    size = min(_BLOCK, first[group + 1] - block)
                     for k in range(size):
-                        dx, dy, dz = x - sx[k], y - sy[k], z - sz[k]
-                        inverse = one / np.sqrt(dx * dx + dy * dy + dz * dz + wide[k])
-                        hs = nx[k] * dx + ny[k] * dy + nz[k] * dz
-                        ht = px * dx + py * dy + pz * dz
-                        if kind == _SINGLE:
-                            total += weight[k] * spread_inverse(ht, hs, mine, wide[k], inverse)
-                        elif kind == _DISTANCE:
-                            total += weight[k] * spread_distance(ht, hs, mine, wide[k], inverse)
-                        else:
-                            tilt = px * nx[k] + py * ny[k] + pz * nz[k]
-                            if kind == _LIFTED:
-                                total -= weight[k] * spread_lifted(ht, hs, tilt, mine, wide[k], inverse)
-                            elif kind == _LIFTED_DISTANCE:
-                                total -= weight[k] * spread_lifted_distance(
-                                    ht, hs, tilt, mine, wide[k], inverse
-                                )
+                        j = block + k
+                        sx[k] = np.float32(sources[j, 0] - cx)
+                        sy[k] = np.float32(sources[j, 1] - cy)
+                        sz[k] = np.float32(sources[j, 2] - cz)
+                        nx[k], ny[k], nz[k] = normals[j, 0], normals[j, 1], normals[j, 2]
+                        wide[k], weight[k] = spread[j], strength[j]
+                    for i in range(begin, end):
+                        x = np.float32(points[i, 0] - cx)
+                        y = np.float32(points[i, 1] - cy)
+                        z = np.float32(points[i, 2] - cz)
+                        px = np.float32(point_normals[i, 0])
+                        py = np.float32(point_normals[i, 1])
+                        pz = np.float32(point_normals[i, 2])
+                        mine = np.float32(point_spread[i])
+                        total = np.float32(0.0)
+                        for k in range(size):
+                            dx, dy, dz = x - sx[k], y - sy[k], z - sz[k]
+                            inverse = one / np.sqrt(dx * dx + dy * dy + dz * dz + wide[k])
+                            hs = nx[k] * dx + ny[k] * dy + nz[k] * dz
+                            ht = px * dx + py * dy + pz * dz
+                            if kind == _SINGLE:
+                                total += weight[k] * spread_inverse(ht, hs, mine, wide[k], inverse)
+                            elif kind == _DISTANCE:
+                                total += weight[k] * spread_distance(ht, hs, mine, wide[k], inverse)
                             else:
-                                total += weight[k] * spread_dipole(ht, hs, tilt, mine, wide[k], inverse)
-                    out[i] += total
+                                tilt = px * nx[k] + py * ny[k] + pz * nz[k]
+                                if kind == _LIFTED:
+                                    total -= weight[k] * spread_lifted(ht, hs, tilt, mine, wide[k], inverse)
+                                elif kind == _LIFTED_DISTANCE:
+                                    total -= weight[k] * spread_lifted_distance(ht, hs, tilt, mine, wide[k], inverse)
+                                else:
+                                    total += weight[k] * spread_dipole(ht, hs, tilt, mine, wide[k], inverse)
+                        out[i, group] += total
 
     return run
 
@@ -138,71 +131,43 @@ _distance_pass = _pass(_DISTANCE)
 _lifted_distance_pass = _pass(_LIFTED_DISTANCE)
 
 
-def _summed(run: Callable[..., None], at: Targets, panels: Panels, used: Ints, density: Floats) -> Floats:
-    out = np.zeros(len(at.points))
+def _summed(
+    run: Callable[..., None], at: Targets, panels: Panels, used: Ints, density: Floats, first: Ints | None = None
+) -> Floats:
+    if first is None:
+        first = np.array([0, len(used)])
+    out = np.zeros((len(at.points), len(first) - 1))
     strength = panels.areas[used] * density / _FOUR_PI
     run(
-        at.points, at.normals, at.spread, panels.centroids[used], panels.normals[used], panels.spread[used],
-        strength, out,
+        at.points, at.normals, at.spread, panels.centroids[used], panels.normals[used], panels.spread[used], strength,
+        first, out,
     )  # fmt: skip
     return out
 
 
 def single_layer(at: Targets, panels: Panels, used: Ints, density: Floats) -> Floats:
     """V q at the targets: Σ density_j ∫_j G over the panels `used` (k,), density (k,)."""
-    return _summed(_single_pass, at, panels, used, density)
+    return _summed(_single_pass, at, panels, used, density)[:, 0]
 
 
 def lifted_single_layer(at: Targets, panels: Panels, used: Ints, density: Floats) -> Floats:
     """Σ density_j h_j ∫_j G with h_j the height of panel j's plane above the target (along its normal)."""
-    return _summed(_lifted_pass, at, panels, used, density)
+    return _summed(_lifted_pass, at, panels, used, density)[:, 0]
 
 
 def double_layer(at: Targets, panels: Panels, used: Ints, density: Floats) -> Floats:
     """K u at the targets: Σ density_j ∫_j ∂G/∂n_y over the panels `used` (k,), density (k,)."""
-    return _summed(_double_pass, at, panels, used, density)
+    return _summed(_double_pass, at, panels, used, density)[:, 0]
 
 
 def distance_layer(at: Targets, panels: Panels, used: Ints, density: Floats) -> Floats:
     """Σ density_j ∫_j r/4π over the panels `used` (k,), density (k,); r is the distance from the target."""
-    return _summed(_distance_pass, at, panels, used, density)
+    return _summed(_distance_pass, at, panels, used, density)[:, 0]
 
 
 def lifted_distance_layer(at: Targets, panels: Panels, used: Ints, density: Floats) -> Floats:
     """Σ density_j h_j ∫_j r/4π with h_j as in `lifted_single_layer`."""
-    return _summed(_lifted_distance_pass, at, panels, used, density)
-
-
-@njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
-def _clusters(points, point_normals, point_spread, sources, normals, spread, strength, first, out):
-    n = len(sources)
-    one = np.float32(1.0)
-    for tile in prange((len(points) + _TILE - 1) // _TILE):
-        begin, end = tile * _TILE, min(len(points), (tile + 1) * _TILE)
-        cx, cy, cz = points[begin, 0], points[begin, 1], points[begin, 2]
-        sx, sy, sz = np.empty(n, np.float32), np.empty(n, np.float32), np.empty(n, np.float32)
-        for k in range(n):
-            sx[k] = np.float32(sources[k, 0] - cx)
-            sy[k] = np.float32(sources[k, 1] - cy)
-            sz[k] = np.float32(sources[k, 2] - cz)
-        for i in range(begin, end):
-            x = np.float32(points[i, 0] - cx)
-            y = np.float32(points[i, 1] - cy)
-            z = np.float32(points[i, 2] - cz)
-            px = np.float32(point_normals[i, 0])
-            py = np.float32(point_normals[i, 1])
-            pz = np.float32(point_normals[i, 2])
-            mine = np.float32(point_spread[i])
-            for cluster in range(len(first) - 1):
-                total = np.float32(0.0)
-                for k in range(first[cluster], first[cluster + 1]):
-                    dx, dy, dz = x - sx[k], y - sy[k], z - sz[k]
-                    inverse = one / np.sqrt(dx * dx + dy * dy + dz * dz + spread[k])
-                    hs = normals[0, k] * dx + normals[1, k] * dy + normals[2, k] * dz
-                    ht = px * dx + py * dy + pz * dz
-                    tilt = px * normals[0, k] + py * normals[1, k] + pz * normals[2, k]
-                    total += strength[k] * spread_dipole(ht, hs, tilt, mine, spread[k], inverse)
-                out[i, cluster] = total
+    return _summed(_lifted_distance_pass, at, panels, used, density)[:, 0]
 
 
 def cluster_double_layer(at: Targets, panels: Panels, used: Ints, first: Ints) -> Floats:
@@ -210,11 +175,4 @@ def cluster_double_layer(at: Targets, panels: Panels, used: Ints, first: Ints) -
 
     The panels `used` are sorted by cluster; cluster c holds `first[c]` up to `first[c + 1]`.
     """
-    out = np.zeros((len(at.points), len(first) - 1), np.float32)
-    single = np.float32
-    _clusters(
-        at.points, at.normals, at.spread, panels.centroids[used],
-        np.ascontiguousarray(panels.normals[used].T, single), panels.spread[used].astype(single),
-        (panels.areas[used] / _FOUR_PI).astype(single), first, out,
-    )  # fmt: skip
-    return out.astype(np.float64)
+    return _summed(_double_pass, at, panels, used, np.ones(len(used)), first)
