@@ -53,9 +53,7 @@ _CAPTIONS = {
 _MOST_ROWS = 60
 
 
-def write_report(
-    result: EscapeResult, path: str | Path, *, pictures: Iterable[str | Path] | None = None
-) -> Path:
+def write_report(result: EscapeResult, path: str | Path, *, pictures: Iterable[str | Path] | None = None) -> Path:
     """Write the report of `result` to `path`.
 
     Parameters
@@ -89,10 +87,7 @@ def write_report(
 
 
 def _data_uris(paths: Iterable[Path]) -> dict[str, str]:
-    return {
-        path.name: "data:image/png;base64," + base64.b64encode(path.read_bytes()).decode("ascii")
-        for path in paths
-    }
+    return {path.name: "data:image/png;base64," + base64.b64encode(path.read_bytes()).decode("ascii") for path in paths}
 
 
 def _body(result: EscapeResult, images: dict[str, str]) -> str:
@@ -213,9 +208,7 @@ def _caution() -> str:
 
 def _pictures(images: dict[str, str]) -> str:
     figures = [
-        _figure(images[name], caption, wide=wide)
-        for name, (caption, wide) in _CAPTIONS.items()
-        if name in images
+        _figure(images[name], caption, wide=wide) for name, (caption, wide) in _CAPTIONS.items() if name in images
     ]
     return f'<h2>Pictures</h2><div class="pictures">{"".join(figures)}</div>' if figures else ""
 
@@ -227,9 +220,7 @@ def _windows(summary: Summary) -> str:
             f"{window.area_um2:.4g}",
             _percent(window.area_um2 / summary.area_um2),
             _percent(window.share, 4),
-            "perfectly absorbing"
-            if window.permeability_um_s is None
-            else f"{window.permeability_um_s:.4g} µm/s",
+            "perfectly absorbing" if window.permeability_um_s is None else f"{window.permeability_um_s:.4g} µm/s",
         )
         for window in summary.windows
     ]
@@ -278,9 +269,7 @@ def _slow_regions(result: EscapeResult, summary: Summary) -> str:
 def _start_points(summary: Summary) -> str:
     if not summary.start:
         return ""
-    rows = [
-        (name, format_time(time), f"{time / summary.mean_time_s:.3f}") for name, time in summary.start.items()
-    ]
+    rows = [(name, format_time(time), f"{time / summary.mean_time_s:.3f}") for name, time in summary.start.items()]
     return "<h2>Named start points</h2>" + _table(
         ("start", "mean escape time from there", "ratio to the volume mean"), rows
     )
@@ -320,23 +309,16 @@ def _accuracy(result: EscapeResult, summary: Summary, images: dict[str, str]) ->
                 f"{row.get('seconds', float('nan')):.2f}",
             )
         )
-    rows.append(
-        ("stated", f"{summary.panels}", format_time(summary.mean_time_s, 6), "", f"{summary.iterations}", "")
-    )
+    rows.append(("stated", f"{summary.panels}", format_time(summary.mean_time_s, 6), "", f"{summary.iterations}", ""))
     checks = [
         f"Balance: the outflow through all windows times D / V differs from 1 by "
         f"{summary.checks.balance:.2e} (0 for an exact solution).",
-        f"Last relative residual of the iteration: {result.residuals[-1]:.1e} after {result.iterations} "
-        "iterations."
+        f"Last relative residual of the iteration: {result.residuals[-1]:.1e} after {result.iterations} iterations."
         if result.residuals
         else "The iteration kept no residuals.",
     ]
-    if summary.checks.crosscheck is not None:
-        checks.append(
-            "Second opinion: "
-            + ", ".join(f"{key} {_short(value)}" for key, value in summary.checks.crosscheck.items())
-            + "."
-        )
+    opinions = (summary.checks.crosscheck, summary.checks.walkers)
+    checks += [f"Second opinion: {opinion.statement}." for opinion in opinions if opinion is not None]
     chart = ""
     if "convergence.png" in images and len(result.levels) > 1:
         caption = "Mean escape time of each resolution, and the stated value with its error."
@@ -349,10 +331,6 @@ def _accuracy(result: EscapeResult, summary: Summary, images: dict[str, str]) ->
         + _list(checks)
         + f'<p class="soft">The run took {summary.wall_s:.2f} s.</p>'
     )
-
-
-def _short(value: object) -> str:
-    return f"{value:.5g}" if isinstance(value, float) else str(value)
 
 
 def _mesh(result: EscapeResult, summary: Summary) -> str:

@@ -44,10 +44,10 @@ from bemescape.bem.walk_tree import (
     reach_before_exit,
     silhouette_distance,
 )
-from bemescape.errors import AccuracyError, SettingsError
+from bemescape.errors import AccuracyError
 from bemescape.progress import Progress, ProgressEvent, silent
 
-__all__ = ["MOST_WALKERS", "Tally", "walk"]
+__all__ = ["Tally", "walk"]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -63,7 +63,6 @@ _MOST_STEPS = 2_000_000
 _MOST_STARTS = 1_000_000
 #: Above this part of lost walkers the rest says nothing.
 _MOST_LOST = 0.01
-MOST_WALKERS = 100_000_000
 #: Walkers that one thread sends without looking up, and seconds between two reports.
 _PARTY, _TELL_S = 50, 1.0
 
@@ -137,9 +136,9 @@ def walk(
     rate : (k,) float
         κ/D of each window in 1/µm; infinite for a perfectly absorbing one.
     walkers : int
-        How many; the standard error falls with its square root.
+        How many, at least two; the standard error falls with its square root.
     seed : int
-        The same seed gives the same answer.
+        From 0 to 2⁶³ − 1; the same seed gives the same answer.
     shell, own_region : float
         See SHELL and OWN_REGION: the two approximations.
     progress : callable
@@ -147,15 +146,9 @@ def walk(
 
     Raises
     ------
-    SettingsError
-        Fewer than two walkers, too many, or a negative seed.
     AccuracyError
         More than 1 % of the walkers are lost: the surface is open or crosses itself.
     """
-    if not 2 <= walkers <= MOST_WALKERS:
-        raise SettingsError(f"walkers is {walkers}; it must lie between 2 and {MOST_WALKERS}")
-    if not 0 <= seed < 2**63:
-        raise SettingsError(f"seed is {seed}; it must be a whole number from 0 to 2^63 − 1")
     began = time.perf_counter()
     progress(ProgressEvent("walkers", 0.0, "preparing"))
     diagonal = float(np.linalg.norm(vertices.max(axis=0) - vertices.min(axis=0)))

@@ -38,10 +38,8 @@ def summary_lines(summary: Summary) -> list[str]:
     """The answer of one solve as a short table."""
     rule = summary.rule_of_thumb
     lines = [
-        f"{summary.name}: mean escape time {format_time(summary.mean_time_s)} "
-        f"± {percent(summary.relative_error)}",
-        "  start uniform in the volume, "
-        f"D {summary.diffusion_um2_s:.4g} µm²/s, V {summary.volume_um3:.4g} µm³",
+        f"{summary.name}: mean escape time {format_time(summary.mean_time_s)} ± {percent(summary.relative_error)}",
+        f"  start uniform in the volume, D {summary.diffusion_um2_s:.4g} µm²/s, V {summary.volume_um3:.4g} µm³",
         "",
         *_columns(
             [
@@ -51,9 +49,7 @@ def summary_lines(summary: Summary) -> list[str]:
                         window.name,
                         f"{window.area_um2:.4g} µm²",
                         percent(window.share, digits=3),
-                        "absorbing"
-                        if window.permeability_um_s is None
-                        else f"{window.permeability_um_s:.4g} µm/s",
+                        "absorbing" if window.permeability_um_s is None else f"{window.permeability_um_s:.4g} µm/s",
                     )
                     for window in summary.windows
                 ),
@@ -87,9 +83,15 @@ def summary_lines(summary: Summary) -> list[str]:
         f"  rule of thumb   {format_time(rule.mean_time_s)} by {rule.formula}",
         f"  computed on     {summary.panels} panels, {summary.iterations} iterations, "
         f"{summary.wall_s:.3g} s, balance {summary.checks.balance:+.1e}",
+        *_opinion_lines(summary),
         *(f"  note: {note}" for note in summary.notes),
     ]
     return lines
+
+
+def _opinion_lines(summary: Summary) -> list[str]:
+    opinions = (summary.checks.crosscheck, summary.checks.walkers)
+    return [f"  second opinion  {opinion.statement}" for opinion in opinions if opinion is not None]
 
 
 def percent(part: float, digits: int = 2) -> str:
@@ -105,6 +107,5 @@ def _columns(rows: Iterable[Sequence[str]]) -> list[str]:
     table = list(rows)
     widths = [max(len(row[column]) for row in table) for column in range(len(table[0]))]
     return [
-        "  " + "   ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip()
-        for row in table
+        "  " + "   ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip() for row in table
     ]

@@ -3,14 +3,16 @@
 from __future__ import annotations
 
 import os
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from bemescape.errors import SettingsError
+from bemescape.errors import EscapeError, SettingsError
 
 if TYPE_CHECKING:
+    from bemescape.progress import Progress
     from bemescape.results.result import EscapeResult
 
 __all__ = ["solve"]
@@ -21,9 +23,7 @@ def solve(
     *,
     out: Annotated[
         Path | None,
-        typer.Option(
-            help="Folder for the results. Default: one named after the case, in the current folder."
-        ),
+        typer.Option(help="Folder for the results. Default: one named after the case, in the current folder."),
     ] = None,
     target: Annotated[
         str | None,
@@ -33,15 +33,23 @@ def solve(
         str | None,
         typer.Option(metavar="<int>", help="Panels at which refinement ends; replaces that of the case."),
     ] = None,
-    pictures: Annotated[
-        bool, typer.Option("--pictures/--no-pictures", help="Render pictures and report.html.")
-    ] = True,
-    json: Annotated[
-        bool, typer.Option("--json", help="Print the content of summary.json, alone, on stdout.")
+    crosscheck: Annotated[
+        bool, typer.Option("--crosscheck", help="Second opinion by a Galerkin method (bempp-cl); takes minutes.")
     ] = False,
+    walkers: Annotated[
+        str | None,
+        typer.Option(
+            metavar="<int>", help="Second opinion by this many particles; 100000 give 0.3 % and take minutes."
+        ),
+    ] = None,
+    seed: Annotated[str, typer.Option(metavar="<int>", help="Where the random numbers of the walkers begin.")] = "0",
+    pictures: Annotated[bool, typer.Option("--pictures/--no-pictures", help="Render pictures and report.html.")] = True,
+    json: Annotated[bool, typer.Option("--json", help="Print the content of summary.json, alone, on stdout.")] = False,
     quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress on stderr.")] = False,
 ) -> int:
     """Compute the mean escape time, the share of each window and the slow regions of one case.
+
+    A second opinion that does not agree is said in the answer and in summary.json (checks); it changes no exit code.
 
     Exit code 0: done; 1: solved and saved, but the target for the error was not met within the panel
     budget, or the solve failed its own checks and nothing is saved; 2: wrong input; 130: stopped by Ctrl-C.
@@ -56,6 +64,8 @@ def solve(
         target=None if target is None else fraction(_number_or_text(target), "--target"),
         max_panels=None if max_panels is None else _whole_number(max_panels, "--max-panels"),
     )
+    count = None if walkers is None else _walkers(walkers)
+    first = _whole_number(seed, "--seed", example=1)
     folder = Path(problem.name) if out is None else out
     _refuse_foreign_folder(folder)
     saved = False
@@ -65,12 +75,16 @@ def solve(
             progress(ProgressEvent("saving", None, str(folder)))
             save_result(result, folder, pictures=False)
             saved = True
+            if crosscheck or count is not None:
+                result = _with_opinions(result, progress, crosscheck=crosscheck, walkers=count, seed=first)
+                save_result(result, folder, pictures=False)
             if pictures:
                 progress(ProgressEvent("drawing", None, "pictures and report"))
                 add_pictures(result, folder)
     except KeyboardInterrupt as stop:
         if saved:
-            raise Stopped(f"the numbers are in {folder}, the pictures are missing") from stop
+            missing = "second opinions and pictures may be" if crosscheck or count is not None else "the pictures are"
+            raise Stopped(f"the numbers are in {folder}, {missing} missing") from stop
         raise
     _print_answer(result, folder, json=json)
     return 0 if result.target_met else 1
@@ -83,10 +97,37 @@ def _number_or_text(text: str) -> str | float:
         return text
 
 
-def _whole_number(text: str, option: str) -> int:
+def _whole_number(text: str, option: str, *, example: int = 60_000) -> int:
     if not (text.isascii() and text.isdigit() and len(text) < 10):
-        raise SettingsError(f"{option} is {text[:40]!r}; give a whole number, like 60000")
+        raise SettingsError(f"{option} is {text[:40]!r}; give a whole number, like {example}")
     return int(text)
+
+
+def _walkers(text: str) -> int:
+    """Refused before the solve, which may take minutes."""
+    from bemescape.results.second_opinion import FEWEST_WALKERS, MOST_WALKERS
+
+    count = _whole_number(text, "--walkers", example=100_000)
+    if not FEWEST_WALKERS <= count <= MOST_WALKERS:
+        raise SettingsError(f"--walkers is {count}; it must lie between {FEWEST_WALKERS} and {MOST_WALKERS}")
+    return count
+
+
+def _with_opinions(
+    result: EscapeResult, progress: Progress, *, crosscheck: bool, walkers: int | None, seed: int
+) -> EscapeResult:
+    """The result with the second opinions that were asked for; a note says why one could not be had."""
+    if crosscheck:
+        try:
+            result = replace(result, crosschecked=result.crosscheck(progress=progress))
+        except EscapeError as error:
+            result = replace(result, notes=(*result.notes, f"no cross-check: {error}"))
+    if walkers is not None:
+        try:
+            result = replace(result, walked=result.walkers(walkers, seed=seed, progress=progress))
+        except EscapeError as error:
+            result = replace(result, notes=(*result.notes, f"no walkers: {error}"))
+    return result
 
 
 def _refuse_foreign_folder(folder: Path) -> None:

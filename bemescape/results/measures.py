@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import asdict, dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,12 +15,14 @@ from bemescape.errors import SettingsError
 from bemescape.results.spread import exponential_statement
 from bemescape.results.summary import (
     Checks,
+    CrossCheckSummary,
     MadeWith,
     RuleOfThumb,
     SlowRegion,
     SpreadSummary,
     StartSummary,
     Summary,
+    WalkersSummary,
     WindowSummary,
 )
 from bemescape.version import __version__
@@ -28,9 +30,12 @@ from bemescape.windows.mesh_edits import mesh_edges
 
 if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
+    from bemescape.results.second_opinion import CrossCheck, WalkerEstimate
     from bemescape.results.ways_out import WaysOut
 
 __all__ = ["Region", "SlowRegions", "find_slow_regions", "rule_of_thumb", "summarise"]
+
+_Opinion = TypeVar("_Opinion", CrossCheckSummary, WalkersSummary)
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -182,9 +187,7 @@ def _face_components(faces: Ints) -> Ints:
     """Number of the component of each face (m,), faces joined by common edges."""
     edges, of_face = mesh_edges(faces)
     rows = np.repeat(np.arange(len(faces)), 3)
-    incidence = coo_matrix(
-        (np.ones(len(rows)), (rows, of_face.ravel())), shape=(len(faces), len(edges))
-    ).tocsr()
+    incidence = coo_matrix((np.ones(len(rows)), (rows, of_face.ravel())), shape=(len(faces), len(edges))).tocsr()
     return np.asarray(connected_components(incidence @ incidence.T, directed=False)[1])
 
 
@@ -218,6 +221,10 @@ def _spread_summary(result: EscapeResult) -> SpreadSummary | None:
 def _share_disagreement(result: EscapeResult, ways: WaysOut) -> float:
     shares = np.array([result.windows[number].share for number in ways.windows])
     return float(np.abs(ways.mean_splitting - shares).max())
+
+
+def _opinion(kind: type[_Opinion], opinion: CrossCheck | WalkerEstimate | None) -> _Opinion | None:
+    return None if opinion is None else kind(statement=opinion.line, **asdict(opinion))
 
 
 def summarise(result: EscapeResult) -> Summary:
@@ -268,9 +275,9 @@ def summarise(result: EscapeResult) -> Summary:
             balance=result.balance,
             splitting_sum=None if ways is None else ways.sum_error,
             splitting_share=None if ways is None else _share_disagreement(result, ways),
+            crosscheck=_opinion(CrossCheckSummary, result.crosschecked),
+            walkers=_opinion(WalkersSummary, result.walked),
         ),
         notes=list(result.notes),
-        made_with=MadeWith(
-            version=__version__, mesh_sha256=result.mesh_sha256, settings=dict(result.settings)
-        ),
+        made_with=MadeWith(version=__version__, mesh_sha256=result.mesh_sha256, settings=dict(result.settings)),
     )

@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     import pint
 
     from bemescape.results.measures import SlowRegions
+    from bemescape.results.second_opinion import CrossCheck, WalkerEstimate
     from bemescape.results.spread import Spread
     from bemescape.results.starts import StartResult
     from bemescape.results.summary import Summary
@@ -99,6 +100,10 @@ class EscapeResult:
         Second moment of the escape time.
     ways_out : WaysOut or None
         Splitting probabilities and conditional times, where they were asked for.
+    crosschecked : CrossCheck or None
+        What `crosscheck` gave, where `dataclasses.replace` has put it; it is saved and reported with the result.
+    walked : WalkerEstimate or None
+        The same of `walkers`.
     """
 
     name: str
@@ -127,6 +132,8 @@ class EscapeResult:
     start_details: Mapping[str, StartResult] = field(default_factory=dict)
     spread: Spread | None = None
     ways_out: WaysOut | None = None
+    crosschecked: CrossCheck | None = None
+    walked: WalkerEstimate | None = None
 
     @cached_property
     def _areas_normals(self) -> tuple[Floats, Floats]:
@@ -269,6 +276,34 @@ class EscapeResult:
         from bemescape.results.measures import find_slow_regions
 
         return find_slow_regions(self, wall_fraction)
+
+    def crosscheck(self, *, progress: Progress = silent) -> CrossCheck:
+        """Second opinion by bempp-cl's symmetric Galerkin system on at most 3 000 panels; takes minutes.
+
+        Raises
+        ------
+        SettingsError
+            A window has no panels.
+        AccuracyError
+            The mesh cannot be made coarse enough without damage.
+        """
+        from bemescape.results.second_opinion import cross_check
+
+        return cross_check(self, progress=progress)
+
+    def walkers(self, count: int, *, seed: int = 0, progress: Progress = silent) -> WalkerEstimate:
+        """Second opinion by `count` particles, whose standard error is about 1/√count; takes minutes for 100 000.
+
+        Raises
+        ------
+        SettingsError
+            The count or the seed is out of range, or a window has no panels.
+        AccuracyError
+            More than 1 % of the walkers are lost.
+        """
+        from bemescape.results.second_opinion import send_walkers
+
+        return send_walkers(self, count, seed=seed, progress=progress)
 
     @cached_property
     def summary(self) -> Summary:

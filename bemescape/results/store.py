@@ -27,6 +27,7 @@ from numpy.typing import NDArray
 
 from bemescape.errors import EscapeError, SettingsError
 from bemescape.results.result import EscapeResult, WindowResult
+from bemescape.results.second_opinion import CrossCheck, WalkerEstimate
 from bemescape.results.spread import Spread
 from bemescape.results.starts import StartResult
 from bemescape.results.summary import Summary
@@ -164,8 +165,7 @@ def load_result(folder: Path) -> EscapeResult:
     missing = [name for name in (SUMMARY, VALUES) if not (folder / name).is_file()]
     if missing:
         raise SettingsError(
-            f"{folder} is not a complete result: {' and '.join(missing)} missing; "
-            "give the folder that a solve wrote"
+            f"{folder} is not a complete result: {' and '.join(missing)} missing; give the folder that a solve wrote"
         )
     with _reading(folder / SUMMARY):
         summary = Summary.model_validate_json((folder / SUMMARY).read_bytes())
@@ -176,9 +176,7 @@ def load_result(folder: Path) -> EscapeResult:
         result.mean_time_s,
         len(result.faces),
     ):
-        raise SettingsError(
-            f"{folder} mixes files of two results ({SUMMARY} and {VALUES} differ); solve again"
-        )
+        raise SettingsError(f"{folder} mixes files of two results ({SUMMARY} and {VALUES} differ); solve again")
     # A cached property: measuring again would only repeat what is on disk.
     result.__dict__["summary"] = summary
     return result
@@ -273,6 +271,8 @@ def _typed(header: dict[str, Any]) -> dict[str, Any]:
         "notes": tuple[str, ...],
         "start": dict[str, float],
         "start_details": dict[str, StartResult],
+        "crosschecked": CrossCheck | None,
+        "walked": WalkerEstimate | None,
         "settings": dict[str, Any],
         "name": str,
         "mesh_sha256": str,
@@ -336,8 +336,7 @@ def _refuse_foreign_files(folder: Path) -> None:
     for path in (folder / SUMMARY, folder / SURFACE, folder / VALUES, *_picture_files(folder)):
         if path.exists():
             raise SettingsError(
-                f"{path} exists and belongs to no saved result, so it is not overwritten; "
-                "choose another folder"
+                f"{path} exists and belongs to no saved result, so it is not overwritten; choose another folder"
             )
 
 

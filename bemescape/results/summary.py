@@ -9,12 +9,14 @@ from pydantic import BaseModel, ConfigDict, Field
 __all__ = [
     "CAUTION",
     "Checks",
+    "CrossCheckSummary",
     "MadeWith",
     "RuleOfThumb",
     "SlowRegion",
     "SpreadSummary",
     "StartSummary",
     "Summary",
+    "WalkersSummary",
     "WindowSummary",
     "summary_schema",
 ]
@@ -33,9 +35,7 @@ class WindowSummary(_Model):
 
     name: str
     area_um2: float = Field(gt=0, description="area of the window's panels")
-    share: float = Field(
-        description="part of all exits, start uniform in the volume; outflow * D / V, not normalised"
-    )
+    share: float = Field(description="part of all exits, start uniform in the volume; outflow * D / V, not normalised")
     permeability_um_s: float | None = Field(default=None, description="null: perfectly absorbing")
     share_error: float | None = Field(default=None, description="estimated numerical error of the share, absolute")
     conditional_time_s: float | None = Field(
@@ -76,12 +76,8 @@ class SlowRegion(_Model):
 
     area_um2: float = Field(gt=0)
     mean_time_s: float = Field(description="area-weighted mean over the region of the time from there")
-    centre_um: tuple[float, float, float] = Field(
-        description="the panel of the region closest to its centroid"
-    )
-    distance_to_window_um: float = Field(
-        description="shortest path along the wall from the centre to a window"
-    )
+    centre_um: tuple[float, float, float] = Field(description="the panel of the region closest to its centroid")
+    distance_to_window_um: float = Field(description="shortest path along the wall from the centre to a window")
     nearest_window: str
 
 
@@ -90,6 +86,42 @@ class RuleOfThumb(_Model):
 
     formula: str
     mean_time_s: float
+
+
+class CrossCheckSummary(_Model):
+    """The same body by a symmetric Galerkin method (bempp-cl) on a coarser mesh."""
+
+    statement: str = Field(description="one sentence: agrees or does not, within what")
+    agrees: bool = Field(description="mean time and shares differ by less than the errors of both together")
+    mean_time_s: float
+    shares: dict[str, float]
+    relative_error: float = Field(description="estimated error of this mean_time_s, relative")
+    panels: int
+    difference: float = Field(description="this mean_time_s / that of the result - 1")
+    allowed: float = Field(description="sum of the relative errors of both")
+    share_difference: float = Field(description="absolute difference of the share that fits worst")
+    share_allowed: float
+    seconds: float
+
+
+class WalkersSummary(_Model):
+    """The same body by particles."""
+
+    statement: str = Field(description="one sentence: agrees or does not, within what")
+    agrees: bool = Field(description="mean time and shares differ by less than the errors of both together")
+    mean_time_s: float
+    standard_error_s: float
+    shares: dict[str, float]
+    share_errors: dict[str, float] = Field(description="standard errors")
+    walkers: int
+    lost: int = Field(description="walkers that were given up and are not counted")
+    seed: int
+    steps: float = Field(description="mean number of jumps")
+    difference: float = Field(description="this mean_time_s / that of the result - 1")
+    allowed: float = Field(description="three standard errors (more if many shares are compared) plus the error")
+    share_difference: float = Field(description="absolute difference of the share that fits worst")
+    share_allowed: float
+    seconds: float
 
 
 class Checks(_Model):
@@ -102,9 +134,8 @@ class Checks(_Model):
     splitting_share: float | None = Field(
         default=None, description="largest |volume average of a splitting probability - share of its window|"
     )
-    crosscheck: dict[str, Any] | None = Field(
-        default=None, description="second opinion, where one was asked for"
-    )
+    crosscheck: CrossCheckSummary | None = Field(default=None, description="second opinion, where one was asked for")
+    walkers: WalkersSummary | None = Field(default=None, description="second opinion, where one was asked for")
 
 
 class MadeWith(_Model):
@@ -139,9 +170,7 @@ class Summary(_Model):
     iterations: int
     wall_s: float = Field(description="duration of the run")
     checks: Checks
-    notes: list[str] = Field(
-        default_factory=list, description="what a reader should know: healing, budget, units"
-    )
+    notes: list[str] = Field(default_factory=list, description="what a reader should know: healing, budget, units")
     made_with: MadeWith
 
 

@@ -69,10 +69,7 @@ def test_a_report_is_one_file_that_loads_nothing(report):
 
 def test_a_report_carries_its_cautions_word_for_word(report):
     _, text = read(report)
-    assert (
-        "Research tool. Times scale with D and the segmentation; not for clinical or dosing decisions."
-        in text
-    )
+    assert "Research tool. Times scale with D and the segmentation; not for clinical or dosing decisions." in text
     assert "Follow local rules and licensed practice." in text
 
 
@@ -105,14 +102,15 @@ def test_a_missed_target_is_said_in_the_headline(make_spine, small_pictures, tmp
 
 def test_permeability_and_second_opinion_are_listed_where_they_exist(make_spine, small_pictures, tmp_path):
     result = make_spine()
-    checks = result.summary.checks.model_copy(update={"crosscheck": {"mean_time_s": 0.0123456}})
+    opinion = SimpleNamespace(statement="agrees with a Galerkin solution within 1.20%")
+    checks = result.summary.checks.model_copy(update={"crosscheck": opinion})
     windows = [result.summary.windows[0].model_copy(update={"permeability_um_s": 12.5})]
     result.__dict__["summary"] = result.summary.model_copy(
         update={"checks": checks, "windows": windows, "escape_time_sd_s": 0.0131}
     )
     _, text = read(write_report(result, tmp_path / "r.html", pictures=small_pictures))
     assert "12.5 µm/s" in text
-    assert "Second opinion: mean_time_s 0.012346" in text
+    assert "Second opinion: agrees with a Galerkin solution within 1.20%." in text
     assert "13.1 ms" in text
     assert "leaves through its window neck" in text
 
