@@ -1,0 +1,379 @@
+"""Far field in linear time: the sums of `bemescape.bem.far` by an adaptive fast multipole method.
+
+Strategy: panels are sorted into an octree. Boxes next to each other are summed panel by panel, with the kernels of the
+direct far field. For all others the panels of a box are condensed into an expansion in solid harmonics, translated to
+the boxes that see it from at least one box away, and evaluated there; panels enter and are averaged over with their
+second moments, as in these kernels. Everything is in single precision relative to the box at hand: the error is that
+of the expansions. What both ways differ in beyond the tolerance is of fourth order in (panel size / distance), as is
+what either leaves out of the integral over a panel.
+
+    panels ── up ──▶ multipoles ── move_up ──▶ … of larger boxes
+                         │ move_across
+                         ▼
+    targets ◀─ at points ── locals ◀── move_down ── … of larger boxes
+
+Sources: Greengard & Rokhlin (1987), doi:10.1016/0021-9991(87)90140-9; adaptive lists as named in `tree`.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from bemescape.bem import far
+from bemescape.bem.far import Targets, panel_targets, point_targets
+from bemescape.bem.fmm import near, passes
+from bemescape.bem.fmm.balance import even_chunks
+from bemescape.bem.fmm.blas import one_blas_thread
+from bemescape.bem.fmm.harmonics import coefficient_count, steps
+from bemescape.bem.fmm.operators import Operators, load_operators
+from bemescape.bem.fmm.tree import Lists, Octree, RootCube, build_lists, build_octree, root_cube
+from bemescape.bem.panels import Panels
+from bemescape.errors import SettingsError
+
+__all__ = ["FastSums", "PointSums"]
+
+Floats = NDArray[np.float64]
+Singles = NDArray[np.float32]
+Ints = NDArray[np.int64]
+
+_FOUR_PI = 4.0 * math.pi
+
+#: Tolerance -> degree of the expansions, tolerance of a single translation, panels in a box at most. The first is the
+#: error of sums over dipoles, relative, root mean square, on the sets of the tests; charges are a tenth of that.
+_PRESETS = {1e-4: (8, 1e-4, 64), 1e-5: (10, 1e-5, 80), 1e-6: (12, 1e-6, 110)}
+#: Sources that are fewer than this part of all get a tree of their own; so many such trees are kept.
+_SUBSET, _SUBSETS_KEPT = 0.6, 4
+#: Panels with a radius above this part of their leaf's side are summed directly, as sources and as targets.
+_OUTSIZE = 0.75
+#: Most memory for either set of expansions with several densities at once, in bytes, and most densities at once.
+_MOST_BYTES, _MOST_COLUMNS = 2.0e8, 32
+_CHUNKS = 64
+
+
+@dataclass(frozen=True)
+class _Side:
+    """Targets or sources in the order of their tree, in units of the root cube.
+
+    Attributes
+    ----------
+    points : (n, 3) float64, shape : (n, 4) float32
+        Centroids; normals and spread (zeros for bare points).
+    outsize : (k,) int64
+        Those too large for their box, as numbered by the caller.
+    """
+
+    tree: Octree
+    centres: Floats
+    scales: Floats
+    points: Floats
+    shape: Singles
+    outsize: Ints
+
+    @property
+    def leaf_first(self) -> Ints:
+        """First point of each leaf."""
+        return self.tree.first[self.tree.leaves]
+
+    @property
+    def leaf_last(self) -> Ints:
+        """One past the last point of each leaf."""
+        return self.tree.last[self.tree.leaves]
+
+
+def _side(cube: RootCube, at: Targets, radii: Floats, cap: int) -> _Side:
+    unit = cube.inside(at.points)
+    tree = build_octree(unit, radii / cube.side, cap)
+    sizes = tree.last[tree.leaves] - tree.first[tree.leaves]
+    limit = np.repeat(_OUTSIZE * cube.side / tree.scale[tree.leaves], sizes)
+    shape = np.column_stack([at.normals, at.spread / cube.side**2])[tree.order]
+    return _Side(
+        tree, tree.centres, tree.scale, np.ascontiguousarray(unit[tree.order]), shape.astype(np.float32),
+        np.sort(tree.order[radii[tree.order] > limit]),
+    )  # fmt: skip
+
+
+@dataclass(frozen=True)
+class _Sources:
+    """The panels `used` (k,) as sources, and how the targets see them."""
+
+    used: Ints
+    side: _Side
+    lists: Lists
+
+
+class PointSums:
+    """Sums over panels at fixed targets; made by `FastSums.at_points`."""
+
+    def __init__(
+        self, panels: Panels, at: Targets, radii: Floats, cube: RootCube, operators: Operators, cap: int
+    ) -> None:
+        self._panels, self._at, self._cube, self._operators, self._cap = panels, at, cube, operators, cap
+        self._factors = steps(operators.degree).astype(np.float32)
+        self._targets = _side(cube, at, radii, cap)
+        self._sources: dict[bytes, _Sources] = {}
+
+    def single(self, used: Ints, density: Floats) -> Floats:
+        """Σ density_j ∫_j G over the panels `used` (k,), density (k,), as `far.single_layer`."""
+        return self._checked(far.single_layer, self._single, used, density)
+
+    def double(self, used: Ints, density: Floats) -> Floats:
+        """Σ density_j ∫_j ∂G/∂n_y over the panels `used` (k,), density (k,), as `far.double_layer`."""
+        return self._checked(far.double_layer, self._double, used, density)
+
+    def lifted(self, used: Ints, density: Floats) -> Floats:
+        """Σ density_j h_j ∫_j G with h_j the height of panel j's plane above the target: `far.lifted_single_layer`."""
+        return self._checked(far.lifted_single_layer, self._lifted, used, density)
+
+    def double_many(self, used: Ints, densities: Floats) -> Floats:
+        """`double` of every column of densities (k, r) -> (t, r); zeros cost nothing, as with indicators of clusters."""
+        out = np.zeros((len(self._at.points), densities.shape[1]))
+        sources, used, densities = self._select(used, densities)
+        count = coefficient_count(self._operators.degree)
+        boxes = max(len(sources.side.tree), len(self._targets.tree))
+        width = int(np.clip(_MOST_BYTES // (4 * count * boxes), 1, _MOST_COLUMNS))
+        regular = densities.copy()
+        regular[sources.side.outsize] = 0.0
+        for begin in range(0, densities.shape[1], width):
+            columns = slice(begin, begin + width)
+            out[:, columns] = self._double_many(sources, regular[:, columns])
+        for column in range(densities.shape[1]):
+            self._add_outsize(far.double_layer, sources, used, densities[:, column], out[:, column])
+        return out
+
+    # -- which panels, and those that fit no box --------------------------------------------------------------------
+
+    def _select(self, used: Ints, density: Floats) -> tuple[_Sources, Ints, Floats]:
+        """Sources for `used`: all panels with zeros put in, or a tree for these few; `density` in their order."""
+        every = len(self._panels)
+        if len(used) >= _SUBSET * every:
+            full = np.zeros((every, *density.shape[1:]))
+            full[used] = density
+            return self._prepared(np.arange(every)), np.arange(every), full
+        return self._prepared(used), used, np.asarray(density, dtype=np.float64)
+
+    def _prepared(self, used: Ints) -> _Sources:
+        key = used.tobytes() if len(used) < len(self._panels) else b""
+        if key not in self._sources:
+            p = self._panels
+            if key == b"" and self._at.points is p.centroids:
+                side = self._targets
+            else:
+                at = Targets(p.centroids[used], p.normals[used], p.spread[used])
+                side = _side(self._cube, at, p.radii[used], self._cap)
+            for stale in [k for k in self._sources if k][: max(0, len(self._sources) - _SUBSETS_KEPT)]:
+                del self._sources[stale]
+            self._sources[key] = _Sources(used, side, build_lists(self._targets.tree, side.tree))
+        return self._sources[key]
+
+    def _checked(
+        self, direct: Callable[..., Floats], fast: Callable[..., Floats], used: Ints, density: Floats
+    ) -> Floats:
+        if not len(used):
+            return np.zeros(len(self._at.points))
+        sources, used, density = self._select(used, density)
+        regular = density.copy()
+        regular[sources.side.outsize] = 0.0
+        out = fast(sources, self._strength(sources, regular))
+        self._add_outsize(direct, sources, used, density, out)
+        return out
+
+    def _add_outsize(
+        self, direct: Callable[..., Floats], sources: _Sources, used: Ints, density: Floats, out: Floats
+    ) -> None:
+        large = sources.side.outsize
+        if len(large):
+            out += direct(self._at, self._panels, used[large], density[large])
+        targets = self._targets.outsize
+        if len(targets):
+            at = Targets(self._at.points[targets], self._at.normals[targets], self._at.spread[targets])
+            out[targets] = direct(at, self._panels, used, density)
+
+    def _strength(self, sources: _Sources, density: Floats) -> Floats:
+        """Charges (k,) or (k, r) in the order of the tree."""
+        areas = self._panels.areas[sources.used] / _FOUR_PI
+        strength = density * (areas if density.ndim == 1 else areas[:, None])
+        return np.asarray(strength[sources.side.tree.order])
+
+    # -- the sums ---------------------------------------------------------------------------------------------------
+
+    def _single(self, sources: _Sources, strength: Floats) -> Floats:
+        unit, scale = _scaled(strength)
+        out = self._near(near.near_single, sources, unit)
+        multipole, local = self._expand(sources, [(passes.charges_up, passes.charges_across, unit[None])])
+        out += self._values(sources, multipole, local)[0]
+        return self._restored(out, scale / self._cube.side)
+
+    def _double(self, sources: _Sources, strength: Floats) -> Floats:
+        unit, scale = _scaled(strength)
+        out = self._near(near.near_double, sources, unit)
+        multipole, local = self._expand(sources, [(passes.dipoles_up, passes.dipoles_across, unit[None])])
+        out += self._values(sources, multipole, local)[0]
+        return self._restored(out, scale / self._cube.side**2)
+
+    def _lifted(self, sources: _Sources, strength: Floats) -> Floats:
+        """Charges s h_j = s n·(y − c) − (x − c)·(s n): four sums of charges, with c the centre of the cube.
+
+        The mean over a target panel of this product, to second order, is that of its factors plus the spread times
+        n·∂B/∂n − div B, for B the potential of the charges s n; div B = −(double layer of s) is a fifth sum.
+        """
+        unit, scale = _scaled(strength)
+        side = sources.side
+        normals = side.shape[:, :3].astype(np.float64)
+        heights = (normals * (side.points - 0.5)).sum(axis=1)
+        charges = np.ascontiguousarray(np.vstack([heights, normals.T]) * unit, np.float32)
+        out = self._near(near.near_lifted, sources, unit)
+        multipole, local = self._expand(
+            sources,
+            [
+                (passes.charges_up, passes.charges_across, charges),
+                (passes.dipoles_up, passes.dipoles_across, unit[None]),
+            ],
+        )
+        value = self._values(sources, multipole, local, slopes=True)
+        t = self._targets
+        out += value[0] - ((t.points - 0.5).T * value[1:4]).sum(axis=0)
+        out += t.shape[:, 3] * ((t.shape[:, :3].T * value[4:7]).sum(axis=0) + value[7])
+        return self._restored(out, scale)
+
+    def _double_many(self, sources: _Sources, densities: Floats) -> Floats:
+        unit, scale = _scaled(self._strength(sources, densities))
+        t, s, lists = self._targets, sources.side, sources.lists
+        out = np.zeros((len(t.points), unit.shape[1]), np.float32)
+        with one_blas_thread():
+            near.near_double_many(
+                lists.leaf_chunks, lists.near_first, lists.near_begin, lists.near_end, t.leaf_first, t.leaf_last,
+                t.centres[t.tree.leaves], t.scales[t.tree.leaves], t.points, t.shape, s.points, s.shape,
+                unit.any(axis=1), unit, out,
+            )  # fmt: skip
+        multipole, local = self._expand(
+            sources, [(passes.dipoles_up, passes.dipoles_across, np.ascontiguousarray(unit.T))]
+        )
+        out += self._values(sources, multipole, local).T
+        return self._restored(out, scale / self._cube.side**2)
+
+    # -- the passes -------------------------------------------------------------------------------------------------
+
+    def _near(self, run: Callable[..., None], sources: _Sources, strength: Singles) -> Floats:
+        t, s, lists = self._targets, sources.side, sources.lists
+        out = np.zeros(len(t.points))
+        run(
+            lists.leaf_chunks, lists.near_first, lists.near_begin, lists.near_end, t.leaf_first, t.leaf_last,
+            t.centres[t.tree.leaves], t.scales[t.tree.leaves], t.points, t.shape, s.points, s.shape, strength, out,
+        )  # fmt: skip
+        return out
+
+    def _expand(
+        self, sources: _Sources, kinds: list[tuple[Callable[..., None], Callable[..., None], Singles]]
+    ) -> tuple[Singles, Singles]:
+        """Multipoles of the source boxes and locals of the target boxes, (boxes, columns, count).
+
+        Each of `kinds` is a pass into leaves, one into far boxes, and the strengths (columns, k) for both.
+        """
+        o, t, s, lists = self._operators, self._targets, sources.side, sources.lists
+        count, columns = coefficient_count(o.degree), sum(len(kind[2]) for kind in kinds)
+        multipole = np.zeros((len(s.tree), columns, count), np.float32)
+        local = np.zeros((len(t.tree), columns, count), np.float32)
+        leaves = s.tree.leaves
+        one_each = np.arange(len(leaves) + 1)
+        entered = np.flatnonzero(np.diff(lists.up_first))
+        entered_first = np.append(lists.up_first[entered], len(lists.up))
+        live = np.zeros((len(s.tree), columns), bool)
+        begin = 0
+        with one_blas_thread():
+            for into_leaves, into_far, strength in kinds:
+                end = begin + len(strength)
+                part = np.zeros((len(s.tree), end - begin, count), np.float32)
+                into_leaves(
+                    o.degree, self._factors, even_chunks(s.leaf_last - s.leaf_first, _CHUNKS), leaves, one_each,
+                    leaves, s.tree.first, s.tree.last, s.centres, s.scales, s.points, s.shape, strength, part,
+                )  # fmt: skip
+                multipole[:, begin:end] = part
+                if len(entered):
+                    part = np.zeros((len(t.tree), end - begin, count), np.float32)
+                    into_far(
+                        o.degree, self._factors, even_chunks(np.diff(entered_first), _CHUNKS), entered, entered_first,
+                        lists.up, s.tree.first, s.tree.last, t.centres, t.scales, s.points, s.shape, strength, part,
+                    )  # fmt: skip
+                    local[:, begin:end] = part
+                live[leaves, begin:end] = np.logical_or.reduceat(strength != 0.0, s.leaf_first, axis=1).T
+                begin = end
+            passes.move_up(s.tree.level_first, s.tree.child, o.to_parent, live, multipole)
+            passes.move_across(
+                lists.far_first, lists.far_target, lists.far_source, o.far_degree, o.far_first, o.far, live,
+                multipole, local,
+            )  # fmt: skip
+            passes.move_down(t.tree.level_first, t.tree.child, o.to_child, local)
+        return multipole, local
+
+    def _values(self, sources: _Sources, multipole: Singles, local: Singles, *, slopes: bool = False) -> Singles:
+        """Potentials (columns, t) at the targets in the order of their tree; with `slopes` the eight of `_lifted`."""
+        t, s, lists = self._targets, sources.side, sources.lists
+        out = np.zeros((8 if slopes else local.shape[1], len(t.points)), np.float32)
+        work = (t.leaf_last - t.leaf_first) * (1 + np.diff(lists.down_first))
+        with one_blas_thread():
+            (passes.slopes_at_points if slopes else passes.values_at_points)(
+                self._operators.degree, self._factors, even_chunks(work, _CHUNKS), t.tree.leaves,
+                t.tree.first, t.tree.last, t.centres, t.scales, t.points, t.shape, local,
+                lists.down_first, lists.down, s.centres, s.scales, multipole, out,
+            )  # fmt: skip
+        return out
+
+    def _restored(self, sorted_values: Floats | Singles, factor: float) -> Floats:
+        """Values (t, …) in the order of the caller, times `factor`."""
+        out = np.empty(sorted_values.shape)
+        out[self._targets.tree.order] = sorted_values
+        out *= factor
+        return out
+
+
+def _scaled(strength: Floats) -> tuple[Singles, float]:
+    """Strengths in single precision, the largest of them 1, and what they were divided by."""
+    largest = float(np.abs(strength).max(initial=0.0))
+    scale = largest if largest > 0.0 else 1.0
+    return (strength / scale).astype(np.float32), scale
+
+
+class FastSums(PointSums):
+    """Sums over panels, averaged over the same panels; prepared once for a mesh.
+
+    Parameters
+    ----------
+    panels : Panels
+        All panels that may be sources; every panel is a target.
+    tolerance : float, default 1e-5
+        Relative error of sums over dipoles, root mean square over the targets: 1e-6 to 1e-4. It is rounded down to
+        the next of 1e-4, 1e-5 and 1e-6; sums over charges are about ten times better.
+
+    Raises
+    ------
+    SettingsError
+        The tolerance is below 1e-6, where single precision ends, or not a positive number.
+    """
+
+    def __init__(self, panels: Panels, *, tolerance: float = 1e-5) -> None:
+        degree, translation, cap = _preset(tolerance)
+        operators = load_operators(degree, translation)
+        super().__init__(panels, panel_targets(panels), panels.radii, root_cube(panels.centroids), operators, cap)
+
+    def at_points(self, points: Floats) -> PointSums:
+        """The same sums at points (p, 3), without averages."""
+        at = point_targets(np.ascontiguousarray(points, dtype=np.float64))
+        cube = self._cube
+        if not cube.holds(at.points):
+            cube = root_cube(np.vstack([self._panels.centroids, at.points]))
+        return PointSums(self._panels, at, np.zeros(len(at.points)), cube, self._operators, self._cap)
+
+
+def _preset(tolerance: float) -> tuple[int, float, int]:
+    for limit in sorted(_PRESETS, reverse=True):
+        if tolerance >= limit * (1.0 - 1e-9) and np.isfinite(tolerance):
+            return _PRESETS[limit]
+    raise SettingsError(
+        f"far-field tolerance {tolerance:g} is below {min(_PRESETS):g}, the least that single precision can keep; "
+        f"ask for {min(_PRESETS):g} or more"
+    )

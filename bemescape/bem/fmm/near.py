@@ -1,0 +1,187 @@
+"""Sums over the panels in sight of each other, with the very kernels of the direct far field.
+
+Strategy: leaf by leaf. The sources that a leaf sees are copied, tile by tile, into single precision relative to the
+leaf's centre and in units of its side, so that close pairs keep their digits and nothing overflows; then every target
+runs along the tile, two at a time so that each source is loaded once for both. Tiles are filled up to whole vectors
+with sources of no strength.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numba import njit, prange
+
+from bemescape.bem.kernels import spread_dipole, spread_inverse, spread_lifted
+
+__all__ = ["DOUBLE", "LIFTED", "SINGLE", "near_double", "near_double_many", "near_lifted", "near_single"]
+
+# The kinds of kernel, as compile-time constants of the loops below.
+SINGLE, LIFTED, DOUBLE = 1, 2, 3
+
+_TILE = 512
+_VECTOR = 32
+#: Targets whose kernel values are laid out at a time when there are several densities.
+_ROWS = 32
+
+
+@njit(cache=True, fastmath=True, error_model="numpy")
+def _fill_tile(tile, size, begin, end, centre, scale, points, shape, strength):
+    """Append sources begin … end to the tile: rows x, y, z, normal, spread, strength."""
+    cx, cy, cz = centre[0], centre[1], centre[2]
+    area = np.float32(scale * scale)
+    for j in range(begin, end):
+        k = size + j - begin
+        tile[0, k] = np.float32((points[j, 0] - cx) * scale)
+        tile[1, k] = np.float32((points[j, 1] - cy) * scale)
+        tile[2, k] = np.float32((points[j, 2] - cz) * scale)
+        tile[3, k], tile[4, k], tile[5, k] = shape[j, 0], shape[j, 1], shape[j, 2]
+        tile[6, k] = shape[j, 3] * area
+        tile[7, k] = strength[j]
+    return size + end - begin
+
+
+@njit(cache=True)
+def _pad_tile(tile, size):
+    """Fill up to whole vectors with sources far away and of no strength; the padded size."""
+    padded = (size + _VECTOR - 1) // _VECTOR * _VECTOR
+    for k in range(size, padded):
+        tile[:, k] = 0.0
+        tile[0, k], tile[6, k] = 100.0, 1.0
+    return padded
+
+
+def _sums(kind):
+    """A compiled pass over all leaves for one kind of kernel."""
+
+    @njit(fastmath=True, error_model="numpy")
+    def value(dx, dy, dz, px, py, pz, mine, nx, ny, nz, wide):
+        inverse = np.float32(1.0) / np.sqrt(dx * dx + dy * dy + dz * dz + wide)
+        hs = nx * dx + ny * dy + nz * dz
+        ht = px * dx + py * dy + pz * dz
+        if kind == SINGLE:
+            return spread_inverse(ht, hs, mine, wide, inverse)
+        tilt = px * nx + py * ny + pz * nz
+        if kind == LIFTED:
+            return -spread_lifted(ht, hs, tilt, mine, wide, inverse)
+        return spread_dipole(ht, hs, tilt, mine, wide, inverse)
+
+    @njit(fastmath=True, error_model="numpy")
+    def against_tile(first, last, centre, scale, points, shape, tile, size, factor, out):
+        area = np.float32(scale * scale)
+        for i in range(first, last, 2):
+            j = min(i + 1, last - 1)
+            x = np.float32((points[i, 0] - centre[0]) * scale)
+            y = np.float32((points[i, 1] - centre[1]) * scale)
+            z = np.float32((points[i, 2] - centre[2]) * scale)
+            x2 = np.float32((points[j, 0] - centre[0]) * scale)
+            y2 = np.float32((points[j, 1] - centre[1]) * scale)
+            z2 = np.float32((points[j, 2] - centre[2]) * scale)
+            px, py, pz, mine = shape[i, 0], shape[i, 1], shape[i, 2], shape[i, 3] * area
+            px2, py2, pz2, mine2 = shape[j, 0], shape[j, 1], shape[j, 2], shape[j, 3] * area
+            one, two = np.float32(0.0), np.float32(0.0)
+            for k in range(size):
+                sx, sy, sz = tile[0, k], tile[1, k], tile[2, k]
+                nx, ny, nz, wide, weight = tile[3, k], tile[4, k], tile[5, k], tile[6, k], tile[7, k]
+                one += weight * value(x - sx, y - sy, z - sz, px, py, pz, mine, nx, ny, nz, wide)
+                two += weight * value(x2 - sx, y2 - sy, z2 - sz, px2, py2, pz2, mine2, nx, ny, nz, wide)
+            out[i] += factor * one
+            if j > i:
+                out[j] += factor * two
+
+    @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
+    def run(
+        chunks, near_first, near_begin, near_end, leaf_first, leaf_last, centres, scales,
+        points, shape, source_points, source_shape, strength, out,
+    ):  # fmt: skip
+        for chunk in prange(len(chunks) - 1):
+            tile = np.zeros((8, _TILE), np.float32)
+            for leaf in range(chunks[chunk], chunks[chunk + 1]):
+                scale = scales[leaf]
+                # Kernels in units of the leaf's side: 1/side, 1, 1/side².
+                factor = scale if kind == SINGLE else (scale * scale if kind == DOUBLE else 1.0)
+                size = 0
+                for r in range(near_first[leaf], near_first[leaf + 1]):
+                    begin = near_begin[r]
+                    while begin < near_end[r]:
+                        end = min(near_end[r], begin + _TILE - size)
+                        size = _fill_tile(
+                            tile, size, begin, end, centres[leaf], scale, source_points, source_shape, strength
+                        )
+                        begin = end
+                        if size == _TILE or (begin == near_end[r] and r + 1 == near_first[leaf + 1]):
+                            against_tile(
+                                leaf_first[leaf], leaf_last[leaf], centres[leaf], scale, points, shape,
+                                tile, _pad_tile(tile, size), factor, out,
+                            )  # fmt: skip
+                            size = 0
+
+    return run
+
+
+near_single, near_lifted, near_double = _sums(SINGLE), _sums(LIFTED), _sums(DOUBLE)
+
+
+@njit(cache=True, fastmath=True, error_model="numpy")
+def _kernel_row(x, y, z, px, py, pz, mine, tile, size, row, values):
+    for k in range(size):
+        dx, dy, dz = x - tile[0, k], y - tile[1, k], z - tile[2, k]
+        nx, ny, nz = tile[3, k], tile[4, k], tile[5, k]
+        inverse = np.float32(1.0) / np.sqrt(dx * dx + dy * dy + dz * dz + tile[6, k])
+        hs = nx * dx + ny * dy + nz * dz
+        ht = px * dx + py * dy + pz * dz
+        values[row, k] = spread_dipole(ht, hs, px * nx + py * ny + pz * nz, mine, tile[6, k], inverse)
+
+
+@njit(cache=True, fastmath=True, error_model="numpy")
+def _many_against_tile(first, last, centre, scale, points, shape, tile, size, dense, out):
+    """Kernel values for a block of targets, times the densities of the tile."""
+    area = np.float32(scale * scale)
+    count = dense.shape[1]
+    values = np.empty((_ROWS, size), np.float32)
+    for block in range(first, last, _ROWS):
+        rows = min(_ROWS, last - block)
+        for i in range(rows):
+            t = block + i
+            _kernel_row(
+                np.float32((points[t, 0] - centre[0]) * scale),
+                np.float32((points[t, 1] - centre[1]) * scale),
+                np.float32((points[t, 2] - centre[2]) * scale),
+                shape[t, 0], shape[t, 1], shape[t, 2], shape[t, 3] * area, tile, size, np.uintp(i), values,
+            )  # fmt: skip
+        sums = np.dot(values[:rows], dense[:size])
+        for i in range(rows):
+            for c in range(count):
+                out[block + i, c] += area * sums[i, c]
+
+
+@njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
+def near_double_many(
+    chunks, near_first, near_begin, near_end, leaf_first, leaf_last, centres, scales,
+    points, shape, source_points, source_shape, active, densities, out,
+):  # fmt: skip
+    """Double layer of several densities (n, r) at once; sources that are not `active` (n,) have none and are left out."""
+    ones = np.ones(len(active), np.float32)
+    for chunk in prange(len(chunks) - 1):
+        tile = np.zeros((8, _TILE), np.float32)
+        dense = np.zeros((_TILE, densities.shape[1]), np.float32)
+        for leaf in range(chunks[chunk], chunks[chunk + 1]):
+            size = 0
+            for r in range(near_first[leaf], near_first[leaf + 1]):
+                for j in range(near_begin[r], near_end[r]):
+                    if active[j]:
+                        _fill_tile(tile, size, j, j + 1, centres[leaf], scales[leaf], source_points, source_shape, ones)
+                        dense[size] = densities[j]
+                        size += 1
+                    if size == _TILE:
+                        _many_against_tile(
+                            leaf_first[leaf], leaf_last[leaf], centres[leaf], scales[leaf], points, shape,
+                            tile, size, dense, out,
+                        )  # fmt: skip
+                        size = 0
+            if size > 0:
+                padded = _pad_tile(tile, size)
+                dense[size:padded] = 0.0
+                _many_against_tile(
+                    leaf_first[leaf], leaf_last[leaf], centres[leaf], scales[leaf], points, shape,
+                    tile, padded, dense, out,
+                )  # fmt: skip

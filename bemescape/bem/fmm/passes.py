@@ -1,0 +1,231 @@
+"""Expansions: from panels up the tree, across it, and down to the targets.
+
+Every row of an expansion belongs to one box and one column (one density, or one part of a kernel); rows of columns in
+which a box has no source are not `live` and cost nothing on the way up and across. Translations are batched: many rows
+are gathered, multiplied by one matrix and added to where they belong, so that the work is done by the linear algebra
+library. All loops run over chunks fixed by the data, and a row is written by one chunk only, in a fixed order:
+results do not depend on the number of threads.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numba import njit, prange
+
+from bemescape.bem.fmm.harmonics import (
+    BLOCK,
+    COLUMNS,
+    charge_irregular,
+    charge_regular,
+    dipole_irregular,
+    dipole_regular,
+    slopes_irregular,
+    slopes_regular,
+)
+
+__all__ = [
+    "charges_across",
+    "charges_up",
+    "dipoles_across",
+    "dipoles_up",
+    "move_across",
+    "move_down",
+    "move_up",
+    "slopes_at_points",
+    "values_at_points",
+]
+
+#: Rows multiplied at a time.
+_BATCH = 256
+#: Chunks of boxes within one level, on the way up and down.
+_LEVEL_CHUNKS = 16
+
+
+@njit(cache=True, fastmath=True, error_model="numpy")
+def _load_block(block, first, size, centre, scale, points, shape):
+    """Panels first … first + size in units of a box; the rest of the block is a harmless point."""
+    area = np.float32(scale * scale)
+    for k in range(BLOCK):
+        j = first + min(k, size - 1)
+        block[0, k] = np.float32((points[j, 0] - centre[0]) * scale)
+        block[1, k] = np.float32((points[j, 1] - centre[1]) * scale)
+        block[2, k] = np.float32((points[j, 2] - centre[2]) * scale)
+        block[3, k], block[4, k], block[5, k] = shape[j, 0], shape[j, 1], shape[j, 2]
+        block[6, k] = shape[j, 3] * area
+
+
+@njit(cache=True)
+def _work(degree):
+    return np.zeros((COLUMNS + 2 * (degree + 1), 4, BLOCK), np.float32)
+
+
+def _gather(weights, dipole):
+    """A compiled pass from panels to expansions: about their own leaf, or about smaller target boxes that they enter."""
+
+    @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
+    def run(
+        degree, factors, chunks, into, item_first, items, first, last, centres, scales, points, shape, strengths, out
+    ):
+        """Row `number` adds the panels of the boxes items[item_first[number]: …] to the expansion of into[number]."""
+        columns = strengths.shape[0]
+        for chunk in prange(len(chunks) - 1):
+            block, work = np.zeros((7, BLOCK), np.float32), _work(degree)
+            weight = np.empty((1, (degree + 1) * (degree + 1), BLOCK), np.float32)
+            charge = np.empty((columns, BLOCK), np.float32)
+            for number in range(chunks[chunk], chunks[chunk + 1]):
+                b = into[number]
+                # Kernels in units of the box: 1/side for charges, another for the slope of dipoles.
+                unit = np.float32(scales[b] * scales[b] if dipole else scales[b])
+                for item in range(item_first[number], item_first[number + 1]):
+                    source = items[item]
+                    for start in range(first[source], last[source], BLOCK):
+                        size = min(BLOCK, last[source] - start)
+                        _load_block(block, start, size, centres[b], scales[b], points, shape)
+                        weights(block, degree, factors, work, weight)
+                        for c in range(columns):
+                            for k in range(BLOCK):
+                                charge[c, k] = unit * strengths[c, start + k] if k < size else np.float32(0.0)
+                        sums = np.dot(charge, weight[0].T)
+                        for c in range(columns):
+                            out[b, c] += sums[c]
+
+    return run
+
+
+charges_up, charges_across = (_gather(w, False) for w in (charge_regular, charge_irregular))
+dipoles_up, dipoles_across = (_gather(w, True) for w in (dipole_regular, dipole_irregular))
+
+
+@njit(cache=True, fastmath=True, error_model="numpy")
+def _translate(matrix, pairs_from, pairs_to, live, rows_from, rows_to, gathered, moved):
+    """Add the leading coefficients of boxes `pairs_from`, times `matrix`, to those of boxes `pairs_to`."""
+    k, columns = len(matrix), rows_from.shape[1]
+    row_of = np.empty((_BATCH, 2), np.int64)
+    size = 0
+    for p in range(len(pairs_from)):
+        for c in range(columns):
+            if live[pairs_from[p], c]:
+                source, target = rows_from[pairs_from[p], c], gathered[size * k : size * k + k]
+                for i in range(k):
+                    target[i] = source[i]
+                row_of[size] = pairs_to[p], c
+                size += 1
+            if size == _BATCH or (size > 0 and p == len(pairs_from) - 1 and c == columns - 1):
+                product = moved[: size * k].reshape((size, k))
+                np.dot(gathered[: size * k].reshape((size, k)), matrix, product)
+                for r in range(size):
+                    target, source = rows_to[row_of[r, 0], row_of[r, 1]], product[r]
+                    for i in range(k):
+                        target[i] += source[i]
+                size = 0
+
+
+@njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
+def move_up(level_first, child, to_parent, live, rows):
+    """Multipoles of all boxes from those of the leaves, in place; `live` (boxes, columns) is passed up with them."""
+    count = rows.shape[2]
+    for level in range(len(level_first) - 3, -1, -1):
+        boxes = level_first[level + 1] - level_first[level]
+        chunks = min(boxes, _LEVEL_CHUNKS)
+        for chunk in prange(chunks):
+            begin = level_first[level] + boxes * chunk // chunks
+            end = level_first[level] + boxes * (chunk + 1) // chunks
+            gathered, moved = np.empty(_BATCH * count, np.float32), np.empty(_BATCH * count, np.float32)
+            sources, targets = np.empty(end - begin, np.int64), np.empty(end - begin, np.int64)
+            for k in range(8):
+                size = 0
+                for b in range(begin, end):
+                    if child[b, k] >= 0:
+                        sources[size], targets[size] = child[b, k], b
+                        size += 1
+                        for c in range(rows.shape[1]):
+                            live[b, c] |= live[child[b, k], c]
+                _translate(to_parent[k], sources[:size], targets[:size], live, rows, rows, gathered, moved)
+
+
+@njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
+def move_across(far_first, far_target, far_source, far_degree, matrix_first, matrices, live, rows_from, rows_to):
+    """Multipoles of source boxes into the locals of far target boxes."""
+    count = rows_from.shape[2]
+    for chunk in prange(len(far_first)):
+        gathered, moved = np.empty(_BATCH * count, np.float32), np.empty(_BATCH * count, np.float32)
+        for offset in range(far_first.shape[1] - 1):
+            begin, end = far_first[chunk, offset], far_first[chunk, offset + 1]
+            if end > begin:
+                k = (far_degree[offset] + 1) * (far_degree[offset] + 1)
+                matrix = matrices[matrix_first[offset] : matrix_first[offset + 1]].reshape((k, k))
+                _translate(
+                    matrix, far_source[begin:end], far_target[begin:end], live, rows_from, rows_to, gathered, moved
+                )
+
+
+@njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
+def move_down(level_first, child, to_child, rows):
+    """Locals of all boxes: each adds its parent's, in place, level by level."""
+    count = rows.shape[2]
+    live = np.ones((rows.shape[0], rows.shape[1]), np.bool_)
+    for level in range(len(level_first) - 2):
+        boxes = level_first[level + 1] - level_first[level]
+        chunks = min(boxes, _LEVEL_CHUNKS)
+        for chunk in prange(chunks):
+            begin = level_first[level] + boxes * chunk // chunks
+            end = level_first[level] + boxes * (chunk + 1) // chunks
+            gathered, moved = np.empty(_BATCH * count, np.float32), np.empty(_BATCH * count, np.float32)
+            sources, targets = np.empty(end - begin, np.int64), np.empty(end - begin, np.int64)
+            for k in range(8):
+                size = 0
+                for b in range(begin, end):
+                    if child[b, k] >= 0:
+                        sources[size], targets[size] = b, child[b, k]
+                        size += 1
+                _translate(to_child[k], sources[:size], targets[:size], live, rows, rows, gathered, moved)
+
+
+def _scatter(near_weights, far_weights, slopes):
+    """A compiled pass from expansions to targets: locals of their leaf, and multipoles of smaller source boxes."""
+
+    @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
+    def run(
+        degree, factors, chunks, leaves, first, last, centres, scales, points, shape, local,
+        down_first, down, source_centres, source_scales, multipole, out,
+    ):  # fmt: skip
+        """Add to out (values, n); with `slopes` the values are those of four columns, then slopes of three, then one."""
+        columns = local.shape[1]
+        for chunk in prange(len(chunks) - 1):
+            block, work = np.zeros((7, BLOCK), np.float32), _work(degree)
+            weight = np.empty((3 if slopes else 1, (degree + 1) * (degree + 1), BLOCK), np.float32)
+            for number in range(chunks[chunk], chunks[chunk + 1]):
+                leaf = leaves[number]
+                for start in range(first[leaf], last[leaf], BLOCK):
+                    size = min(BLOCK, last[leaf] - start)
+                    for item in range(down_first[number] - 1, down_first[number + 1]):
+                        if item < down_first[number]:
+                            centre, scale, rows = centres[leaf], scales[leaf], local[leaf]
+                            _load_block(block, start, size, centre, scale, points, shape)
+                            near_weights(block, degree, factors, work, weight)
+                        else:
+                            b = down[item]
+                            centre, scale, rows = source_centres[b], source_scales[b], multipole[b]
+                            _load_block(block, start, size, centre, scale, points, shape)
+                            far_weights(block, degree, factors, work, weight)
+                        if slopes:
+                            values = np.dot(rows[:4], weight[0])
+                            steep = np.dot(rows[1:4], weight[2])
+                            plain = np.dot(rows[4:5], weight[1])
+                            for k in range(size):
+                                for c in range(4):
+                                    out[c, start + k] += values[c, k]
+                                for c in range(3):
+                                    out[4 + c, start + k] += np.float32(scale) * steep[c, k]
+                                out[7, start + k] += plain[0, k]
+                        else:
+                            values = np.dot(rows, weight[0])
+                            for c in range(columns):
+                                for k in range(size):
+                                    out[c, start + k] += values[c, k]
+
+    return run
+
+
+values_at_points = _scatter(charge_regular, charge_irregular, False)
+slopes_at_points = _scatter(slopes_regular, slopes_irregular, True)
