@@ -141,7 +141,7 @@ def solve_escape(
     placement = place_windows(surface, windows)
     _check_compartments(placement)
     starts = check_starts(placement.surface, start or {})
-    names = _wanted_ways_out(placement.windows, ways_out, named_starts=bool(starts))
+    names = _wanted_ways_out(placement.windows, wanted=ways_out, named_starts=bool(starts))
 
     ladder = Ladder(wanted, len(placement.windows))
     best: _Solution | None = None
@@ -329,7 +329,7 @@ def _check_compartments(placement: Placement) -> None:
 
 
 def _wanted_ways_out(
-    windows: Sequence[Window], wanted: bool | Sequence[str] | None, *, named_starts: bool
+    windows: Sequence[Window], *, wanted: bool | Sequence[str] | None, named_starts: bool
 ) -> list[str] | None:
     """Names of the windows whose ways out are found; None for none. Refused before anything is computed."""
     names = [window.name for window in windows]

@@ -101,9 +101,7 @@ class Ladder:
         if not self._solved:
             return Rung(1 if self.windows <= _FEW_WINDOWS else 0, 0)
         rung = self._solved[-1][0]
-        finer_rim = (
-            Rung(rung.rim + 1, rung.wall) if self.has_rims and rung.rim + 1 < len(_RIM_STEPS) else None
-        )
+        finer_rim = Rung(rung.rim + 1, rung.wall) if self.has_rims and rung.rim + 1 < len(_RIM_STEPS) else None
         finer_wall = Rung(rung.rim, rung.wall + 1)
         if self.has_rims and self._rim_change is None:
             return finer_rim

@@ -158,9 +158,10 @@ def _point_values(result: EscapeResult, point: Floats) -> _Means:
 
 
 def _ball_means(result: EscapeResult, ball: Ball) -> _Means:
-    """From the values at the centre alone: the mean of f over a ball is f + (r²/10) Δf + (r⁴/280) Δ²f + …
+    """From the values at the centre alone, by Pizzetti's formula (1909).
 
-    (Pizzetti 1909; Δu = −1/D, Δm = −2u/D, Δw = 0, Δg = −w/D, so the series ends here).
+    The mean of f over a ball is f + (r²/10) Δf + (r⁴/280) Δ²f + …; with Δu = −1/D, Δm = −2u/D, Δw = 0 and
+    Δg = −w/D the series ends here.
     """
     d, r2 = result.diffusion_um2_s, ball.radius_um**2
     time, second, splitting, weighted = _point_values(result, np.asarray(ball.centre_um))
@@ -212,14 +213,14 @@ def _patch_pieces(result: EscapeResult, surface: Surface, patch: Window) -> _Pie
 
 
 def _between_panels(result: EscapeResult, f: Floats, panel: Ints, points: Floats) -> Floats:
-    """f (m,) at points (k, 3) of given panels (k,): linear between vertex means on the wall, constant on windows."""
+    """Values of f (m,) at points (k, 3) of given panels (k,): linear between vertex means on the wall."""
     wall = result.panel_window < 0
     faces = result.faces[wall]
     weight = np.repeat(result.panel_areas_um2[wall], 3)
     n = len(result.vertices)
     total = np.bincount(faces.ravel(), weights=weight, minlength=n)
-    at_vertex = np.bincount(faces.ravel(), weights=weight * np.repeat(f[wall], 3), minlength=n)
-    at_vertex /= np.maximum(total, 1e-300)
+    summed = np.bincount(faces.ravel(), weights=weight * np.repeat(f[wall], 3), minlength=n)
+    at_vertex: Floats = summed / np.maximum(total, 1e-300)
     corners = result.faces[panel]
     barycentric = trimesh.triangles.points_to_barycentric(result.vertices[corners], points)
     linear = (at_vertex[corners] * barycentric).sum(axis=1)
@@ -248,14 +249,19 @@ def _three_numbers(place: object, what: str) -> Floats:
     return point
 
 
-def _refuse_outside(surface: Surface, starts: Mapping[str, Start]) -> None:
+def _centre(place: Ball | Sequence[float]) -> tuple[float, float, float]:
+    x, y, z = place.centre_um if isinstance(place, Ball) else place
+    return float(x), float(y), float(z)
+
+
+def _refuse_outside(surface: Surface, starts: Mapping[str, Ball | Sequence[float]]) -> None:
     panels = make_panels(surface.vertices[surface.faces])
     nothing = np.zeros(len(panels))
-    centres = np.array([place.centre_um if isinstance(place, Ball) else place for place in starts.values()])
+    centres = np.array([_centre(place) for place in starts.values()])
     values = field_at(panels, nothing, nothing, 0.0, centres)
     for (name, place), winding, gap in zip(starts.items(), values.winding, values.gap, strict=True):
         kind = "ball" if isinstance(place, Ball) else "point"
-        x, y, z = place.centre_um if isinstance(place, Ball) else place
+        x, y, z = _centre(place)
         if winding < 0.5:
             raise SettingsError(
                 f"start {kind} {name!r} at ({x:.4g}, {y:.4g}, {z:.4g}) µm lies outside the volume, about "

@@ -60,8 +60,8 @@ _ARRAYS: Mapping[str, tuple[type[np.generic], int]] = {
     "panel_time_s": (np.float64, 0),
     "panel_exit_density_per_um2": (np.float64, 0),
 }
-#: Parts of a result that may be missing: name -> their class, and their arrays with a value to a panel, or rows of such.
-_PARTS: Mapping[str, tuple[type[Spread] | type[WaysOut], tuple[str, ...]]] = {
+#: Parts of a result that may be missing: name -> their class, and their arrays with a value, or a row, to a panel.
+_PARTS: Mapping[str, tuple[Any, tuple[str, ...]]] = {
     "spread": (Spread, ("panel_second_moment_s2", "panel_second_slope_s2_per_um")),
     "ways_out": (
         WaysOut,

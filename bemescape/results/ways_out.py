@@ -18,7 +18,7 @@ from bemescape.results.result import WindowResult
 if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
 
-__all__ = ["MOST_WINDOWS", "WaysOut", "chosen_windows", "conductance_um3_s", "conditional", "find_ways_out"]
+__all__ = ["MOST_WINDOWS", "WaysOut", "chosen_windows", "conditional", "conductance_um3_s", "find_ways_out"]
 
 Floats = NDArray[np.float64]
 
@@ -81,7 +81,7 @@ class WaysOut:
 
 
 def conditional(weighted: Floats, splitting: Floats) -> Floats:
-    """weighted / splitting; NaN where the probability is lost in the numerical error."""
+    """The quotient; NaN where the probability is lost in the numerical error."""
     clear = splitting > 1e-6
     return np.divide(weighted, splitting, out=np.full_like(weighted, np.nan), where=clear)
 
