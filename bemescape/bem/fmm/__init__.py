@@ -302,12 +302,12 @@ class PointSums:
                     local[:, begin:end] = part
                 live[leaves, begin:end] = np.logical_or.reduceat(strength != 0.0, s.leaf_first, axis=1).T
                 begin = end
-            passes.move_up(s.tree.level_first, s.tree.child, o.to_parent, live, multipole)
+            passes.move_up(s.tree, o.to_parent, live, multipole)
             passes.move_across(
                 lists.far_first, lists.far_target, lists.far_source, o.far_degree, o.far_first, o.far, live,
                 multipole, local,
             )  # fmt: skip
-            passes.move_down(t.tree.level_first, t.tree.child, o.to_child, local)
+            passes.move_down(t.tree, o.to_child, local)
         return multipole, local
 
     def _values(self, sources: _Sources, multipole: Singles, local: Singles, *, slopes: bool = False) -> Singles:

@@ -39,6 +39,7 @@ __all__ = [
 _BATCH = 256
 #: Chunks of boxes within one level, on the way up and down.
 _LEVEL_CHUNKS = 16
+_SMALL_LEVEL = 256
 
 
 @njit(cache=True, fastmath=True, error_model="numpy")
@@ -120,27 +121,59 @@ def _translate(matrix, pairs_from, pairs_to, live, rows_from, rows_to, gathered,
                 size = 0
 
 
-@njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
-def move_up(level_first, child, to_parent, live, rows):
-    """Multipoles of all boxes from those of the leaves, in place; `live` (boxes, columns) is passed up with them."""
+@njit(cache=True)
+def _between_levels(begin, end, child, matrices, live, rows, upwards):
+    """Translate between boxes begin … end and their children, one kind of child at a time."""
     count = rows.shape[2]
-    for level in range(len(level_first) - 3, -1, -1):
-        boxes = level_first[level + 1] - level_first[level]
-        chunks = min(boxes, _LEVEL_CHUNKS)
-        for chunk in prange(chunks):
-            begin = level_first[level] + boxes * chunk // chunks
-            end = level_first[level] + boxes * (chunk + 1) // chunks
-            gathered, moved = np.empty(_BATCH * count, np.float32), np.empty(_BATCH * count, np.float32)
-            sources, targets = np.empty(end - begin, np.int64), np.empty(end - begin, np.int64)
-            for k in range(8):
-                size = 0
-                for b in range(begin, end):
-                    if child[b, k] >= 0:
-                        sources[size], targets[size] = child[b, k], b
-                        size += 1
-                        for c in range(rows.shape[1]):
-                            live[b, c] |= live[child[b, k], c]
-                _translate(to_parent[k], sources[:size], targets[:size], live, rows, rows, gathered, moved)
+    gathered, moved = np.empty(_BATCH * count, np.float32), np.empty(_BATCH * count, np.float32)
+    above, below = np.empty(end - begin, np.int64), np.empty(end - begin, np.int64)
+    for k in range(8):
+        size = 0
+        for b in range(begin, end):
+            if child[b, k] >= 0:
+                above[size], below[size] = b, child[b, k]
+                size += 1
+        if upwards:
+            _translate(matrices[k], below[:size], above[:size], live, rows, rows, gathered, moved)
+        else:
+            _translate(matrices[k], above[:size], below[:size], live, rows, rows, gathered, moved)
+
+
+@njit(cache=True, parallel=True)
+def _level(begin, end, child, matrices, live, rows, upwards):
+    boxes = end - begin
+    for chunk in prange(_LEVEL_CHUNKS):
+        first, last = begin + boxes * chunk // _LEVEL_CHUNKS, begin + boxes * (chunk + 1) // _LEVEL_CHUNKS
+        _between_levels(first, last, child, matrices, live, rows, upwards)
+
+
+@njit(cache=True)
+def _between_all_levels(level_first, child, matrices, live, rows, upwards):
+    levels = len(level_first) - 2
+    for step in range(levels):
+        level = levels - 1 - step if upwards else step
+        begin, end = level_first[level], level_first[level + 1]
+        # Waking the other threads for a small level costs more than it saves.
+        if end - begin < _SMALL_LEVEL:
+            _between_levels(begin, end, child, matrices, live, rows, upwards)
+        else:
+            _level(begin, end, child, matrices, live, rows, upwards)
+
+
+def move_up(tree, to_parent, live, rows):
+    """Multipoles (boxes, columns, count) of all boxes from those of the leaves, in place.
+
+    `live` (boxes, columns) tells where there are any; it is passed up with them.
+    """
+    for level in range(len(tree.level_first) - 2, 0, -1):
+        boxes = slice(tree.level_first[level], tree.level_first[level + 1])
+        np.logical_or.at(live, tree.parent[boxes], live[boxes])
+    _between_all_levels(tree.level_first, tree.child, to_parent, live, rows, True)
+
+
+def move_down(tree, to_child, rows):
+    """Locals (boxes, columns, count) of all boxes: each adds its parent's, in place, level by level."""
+    _between_all_levels(tree.level_first, tree.child, to_child, np.ones(rows.shape[:2], np.bool_), rows, False)
 
 
 @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
@@ -157,28 +190,6 @@ def move_across(far_first, far_target, far_source, far_degree, matrix_first, mat
                 _translate(
                     matrix, far_source[begin:end], far_target[begin:end], live, rows_from, rows_to, gathered, moved
                 )
-
-
-@njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
-def move_down(level_first, child, to_child, rows):
-    """Locals of all boxes: each adds its parent's, in place, level by level."""
-    count = rows.shape[2]
-    live = np.ones((rows.shape[0], rows.shape[1]), np.bool_)
-    for level in range(len(level_first) - 2):
-        boxes = level_first[level + 1] - level_first[level]
-        chunks = min(boxes, _LEVEL_CHUNKS)
-        for chunk in prange(chunks):
-            begin = level_first[level] + boxes * chunk // chunks
-            end = level_first[level] + boxes * (chunk + 1) // chunks
-            gathered, moved = np.empty(_BATCH * count, np.float32), np.empty(_BATCH * count, np.float32)
-            sources, targets = np.empty(end - begin, np.int64), np.empty(end - begin, np.int64)
-            for k in range(8):
-                size = 0
-                for b in range(begin, end):
-                    if child[b, k] >= 0:
-                        sources[size], targets[size] = b, child[b, k]
-                        size += 1
-                _translate(to_child[k], sources[:size], targets[:size], live, rows, rows, gathered, moved)
 
 
 def _scatter(near_weights, far_weights, slopes):
