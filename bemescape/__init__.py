@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from bemescape.escape import SolverSettings, solve_escape
     from bemescape.progress import ProgressEvent
     from bemescape.results.result import EscapeResult
+    from bemescape.results.starts import Ball
     from bemescape.results.summary import summary_schema
     from bemescape.surface import Surface, check_surface, heal_surface, read_surface
     from bemescape.version import __version__
@@ -31,6 +32,7 @@ if TYPE_CHECKING:
 #: Public name -> the module that holds it; loaded on first use, so that `bemescape --help` answers at once.
 _HOME = {
     "AccuracyError": "bemescape.errors",
+    "Ball": "bemescape.results.starts",
     "Case": "bemescape.case",
     "ConvergenceError": "bemescape.errors",
     "EscapeError": "bemescape.errors",
@@ -53,6 +55,7 @@ _HOME = {
 
 __all__ = [
     "AccuracyError",
+    "Ball",
     "Case",
     "ConvergenceError",
     "EscapeError",

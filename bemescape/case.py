@@ -28,12 +28,20 @@ from pydantic import (
 
 from bemescape.errors import SettingsError
 from bemescape.progress import Progress, silent
-from bemescape.units import diffusion_um2_s, fraction, length_um, permeability_um_s, unit_scale_um
+from bemescape.units import (
+    density_per_um2,
+    diffusion_um2_s,
+    fraction,
+    length_um,
+    permeability_um_s,
+    unit_scale_um,
+)
 
 if TYPE_CHECKING:
     from collections.abc import Callable
 
     from bemescape.results.result import EscapeResult
+    from bemescape.results.starts import Start
     from bemescape.surface.surface import Surface
     from bemescape.windows.window import Window
 
@@ -66,9 +74,7 @@ def _checked_unit(value: Any) -> str | tuple[str, ...]:
 
 def _checked_name(value: str) -> str:
     if not value.strip() or len(value) > LONGEST_NAME or not value.isprintable():
-        raise SettingsError(
-            f"is {_shortened(value)}; a name has 1 to {LONGEST_NAME} printable characters, like 'neck'"
-        )
+        raise SettingsError(f"is {_shortened(value)}; a name has 1 to {LONGEST_NAME} printable characters, like 'neck'")
     return value
 
 
@@ -102,6 +108,8 @@ _Unit = Annotated[
 ]
 _Diffusion = Annotated[float, _text_with_unit(diffusion_um2_s), _quantity_schema("20 um^2/s")]
 _Radius = Annotated[float, _text_with_unit(lambda v: length_um(v, "radius")), _quantity_schema("60 nm")]
+_Distance = Annotated[float, _text_with_unit(lambda v: length_um(v, "distance")), _quantity_schema("20 nm")]
+_Density = Annotated[float, _text_with_unit(density_per_um2), _quantity_schema("3 /um^2")]
 _Permeability = Annotated[float, _text_with_unit(permeability_um_s), _quantity_schema("10 um/s")]
 _Target = Annotated[
     float,
@@ -142,12 +150,72 @@ class LabelsSection(_Section):
     value: _Number = Field(examples=[1])
 
 
+class NearSection(_Section):
+    """The wall closer than a distance to another mesh in the same frame."""
+
+    file: _FileName = Field(examples=["psd.ply"])
+    unit: _Unit = Field(examples=["nm"])
+    distance_um: _Distance = Field(alias="distance", examples=["20 nm"])
+
+
+class LidSection(_Section):
+    """A flat lid where a plane cuts the surface; the side that the normal points to is cut off."""
+
+    point: _Position = Field(description="in units of the mesh file", examples=[[0.0, 0.0, -600.0]])
+    normal: _Position = Field(description="a direction in units of the mesh file", examples=[[0.0, 0.0, -1.0]])
+    near: _Position | None = Field(
+        default=None, description="picks among several openings", examples=[[0.0, 0.0, -600.0]]
+    )
+
+    @model_validator(mode="after")
+    def _normal_has_a_direction(self) -> Self:
+        if not any(self.normal):
+            raise SettingsError("has the normal [0, 0, 0], which has no direction; point it at what is cut off")
+        return self
+
+
+class PointsSection(_Section):
+    """Pores at the positions of a CSV file, moved to the wall."""
+
+    file: _FileName = Field(examples=["pores.csv"])
+    radius_um: _Radius = Field(alias="radius", examples=["25 nm"])
+    unit: _Unit | None = Field(
+        default=None, description="of the positions; that of the mesh file by default", examples=["nm"]
+    )
+    farthest_um: _Distance | None = Field(
+        default=None, alias="farthest", description="limit for the distance to the wall", examples=["50 nm"]
+    )
+
+
+class ScatterSection(_Section):
+    """Pores at random places, spaced."""
+
+    count: int | None = Field(default=None, strict=True, ge=1, le=10_000_000, examples=[40])
+    density_per_um2: _Density | None = Field(default=None, alias="density", examples=["3 /um^2"])
+    radius_um: _Radius = Field(alias="radius", examples=["25 nm"])
+    gap_um: _Distance | None = Field(
+        default=None, alias="gap", description="between two rims; one radius by default", examples=["100 nm"]
+    )
+    seed: int = Field(default=0, strict=True, ge=0, le=2**63, examples=[1])
+
+    @model_validator(mode="after")
+    def _has_a_number(self) -> Self:
+        if (self.count is None) == (self.density_per_um2 is None):
+            given = "neither count nor density" if self.count is None else "count and density"
+            raise SettingsError(f"has {given}; give exactly one of them")
+        return self
+
+
 class WindowSection(_Section):
     """One opening: a name, one kind, and a permeability where it is not perfectly absorbing."""
 
     name: _Name
     disc: DiscSection | None = None
     labels: LabelsSection | None = None
+    near: NearSection | None = None
+    lid: LidSection | None = None
+    points: PointsSection | None = None
+    scatter: ScatterSection | None = None
     permeability_um_s: _Permeability = Field(default=math.inf, alias="permeability", examples=["10 um/s"])
 
     @model_validator(mode="after")
@@ -156,13 +224,13 @@ class WindowSection(_Section):
         if len(given) != 1:
             raise SettingsError(
                 f"has {' and '.join(given) if given else 'no kind'}; "
-                f"a window has exactly one of {' or '.join(WINDOW_KINDS)}"
+                f"a window has exactly one of {', '.join(WINDOW_KINDS[:-1])} or {WINDOW_KINDS[-1]}"
             )
         return self
 
 
 #: Keys of a `[[window]]` that say which part of the wall it takes.
-WINDOW_KINDS = ("disc", "labels")
+WINDOW_KINDS = ("disc", "labels", "near", "lid", "points", "scatter")
 
 
 class AccuracySection(_Section):
@@ -172,10 +240,50 @@ class AccuracySection(_Section):
     max_panels: int | None = Field(default=None, strict=True, ge=100, le=10_000_000, examples=[60000])
 
 
+class BallSection(_Section):
+    """A ball inside the volume."""
+
+    centre: _Position = Field(description="in units of the mesh file", examples=[[100.0, 0.0, 0.0]])
+    radius_um: _Radius = Field(alias="radius", examples=["60 nm"])
+
+
+class StartRegionSection(_Section):
+    """A part of the wall, given like a window, or a ball inside: molecules start uniformly over it."""
+
+    name: _Name
+    disc: DiscSection | None = None
+    labels: LabelsSection | None = None
+    ball: BallSection | None = None
+
+    @model_validator(mode="after")
+    def _has_one_kind(self) -> Self:
+        given = [kind for kind in ("disc", "labels", "ball") if getattr(self, kind) is not None]
+        if len(given) != 1:
+            raise SettingsError(
+                f"has {' and '.join(given) if given else 'no kind'}; a start region has exactly one of disc, labels or "
+                "ball"
+            )
+        return self
+
+
 class StartSection(_Section):
-    """Places from which the time is wanted beside the mean."""
+    """Places from which times and ways out are wanted beside the mean."""
 
     points: dict[_Name, _Position] = Field(default_factory=dict, description="in units of the mesh file")
+    region: tuple[StartRegionSection, ...] = ()
+    ways_out: tuple[_Name, ...] | None = Field(
+        default=None,
+        description="windows whose splitting is wanted; by default all, if there are 2 to 12",
+        examples=[["neck"]],
+    )
+
+    @model_validator(mode="after")
+    def _names_are_distinct(self) -> Self:
+        count = Counter([*self.points, *(region.name for region in self.region)])
+        twice = next((name for name, times in count.items() if times > 1), None)
+        if twice is not None:
+            raise SettingsError(f"has {count[twice]} starts named {twice!r}; give each its own name")
+        return self
 
 
 class CaseDocument(_Section):
@@ -233,9 +341,7 @@ class Case:
         SettingsError
             The target does not lie between 0 and 1, or the budget between 100 and ten million panels.
         """
-        changes = {
-            key: value for key, value in (("target", target), ("max_panels", max_panels)) if value is not None
-        }
+        changes = {key: value for key, value in (("target", target), ("max_panels", max_panels)) if value is not None}
         before = self.document.accuracy.model_dump()
         try:
             accuracy = AccuracySection.model_validate(before | changes)
@@ -264,24 +370,88 @@ class Case:
         return read_surface(self.surface_path, unit=section.unit, heal=section.heal, progress=progress)
 
     def windows_for(self, surface: Surface) -> tuple[Window, ...]:
-        """The windows with positions in µm, by the surface's units."""
-        from bemescape.windows.window import Disc, Labels, Window
+        """The windows with positions in µm, by the surface's units; reads the files that they name.
 
-        windows = []
-        for section in self.document.window:
-            shape: Disc | Labels
-            if section.disc is not None:
-                shape = Disc(_scaled(section.disc.centre, surface), section.disc.radius_um)
-            elif section.labels is not None:
-                shape = Labels(section.labels.array, section.labels.value)
-            else:
-                raise SettingsError(f"window {section.name!r} has no kind")
-            windows.append(Window(section.name, shape, section.permeability_um_s))
-        return tuple(windows)
+        Raises
+        ------
+        SettingsError
+            A file of positions or another mesh is missing or wrong; the message names the window.
+        SurfaceError
+            Another mesh cannot be read.
+        """
+        return tuple(self._window(section, surface) for section in self.document.window)
 
-    def start_um(self, surface: Surface) -> dict[str, tuple[float, float, float]]:
-        """The named start points, (3,) in µm."""
-        return {name: _scaled(point, surface) for name, point in self.document.start.points.items()}
+    def _window(self, section: WindowSection, surface: Surface) -> Window:
+        from bemescape.windows.positions import read_positions
+        from bemescape.windows.window import Window
+
+        name, kappa = section.name, section.permeability_um_s
+        if (disc := section.disc) is not None:
+            centre = _scaled(disc.centre, surface)
+            return Window.disc(name, centre=centre, radius=disc.radius_um, permeability=kappa)
+        if (labels := section.labels) is not None:
+            return Window.labels(name, array=labels.array, value=labels.value, permeability=kappa)
+        if (near := section.near) is not None:
+            path = self._file_of(name, "near.file", near.file)
+            return Window.near(name, surface=path, unit=near.unit, distance=near.distance_um, permeability=kappa)
+        if (lid := section.lid) is not None:
+            # A direction between two positions of the file is scaled as they are.
+            return Window.lid(
+                name,
+                point=_scaled(lid.point, surface),
+                normal=_scaled(lid.normal, surface),
+                near=None if lid.near is None else _scaled(lid.near, surface),
+                permeability=kappa,
+            )
+        if (points := section.points) is not None:
+            path = self._file_of(name, "points.file", points.file)
+            places, lines = read_positions(path, unit=points.unit, otherwise_um=surface.unit_um)
+            return Window.points(
+                name,
+                positions=places,
+                lines=lines,
+                radius=points.radius_um,
+                farthest=points.farthest_um,
+                permeability=kappa,
+            )
+        if (scatter := section.scatter) is not None:
+            return Window.scatter(
+                name,
+                count=scatter.count,
+                density=scatter.density_per_um2,
+                radius=scatter.radius_um,
+                gap=scatter.gap_um,
+                seed=scatter.seed,
+                permeability=kappa,
+            )
+        raise SettingsError(f"window {name!r} has no kind")
+
+    def _file_of(self, name: str, key: str, file: str) -> Path:
+        path = self.folder / file
+        if not path.is_file():
+            raise SettingsError(
+                f"case {self.name!r}: [[window]] {name!r} {key} is {file!r}, but there is no file {path}; the path is "
+                "relative to the case file"
+            )
+        return path
+
+    def start_um(self, surface: Surface) -> dict[str, Start]:
+        """The named start points, (3,) in µm, and start regions."""
+        from bemescape.results.starts import Ball
+        from bemescape.windows.window import Window
+
+        section = self.document.start
+        starts: dict[str, Start] = {name: _scaled(point, surface) for name, point in section.points.items()}
+        for region in section.region:
+            if region.ball is not None:
+                starts[region.name] = Ball(_scaled(region.ball.centre, surface), region.ball.radius_um)
+            elif region.disc is not None:
+                centre = _scaled(region.disc.centre, surface)
+                starts[region.name] = Window.disc(region.name, centre=centre, radius=region.disc.radius_um)
+            elif region.labels is not None:
+                array, value = region.labels.array, region.labels.value
+                starts[region.name] = Window.labels(region.name, array=array, value=value)
+        return starts
 
     def solve(self, progress: Progress = silent) -> EscapeResult:
         """Load the surface and solve.
@@ -304,6 +474,7 @@ class Case:
             self.document.motion.diffusion_um2_s,
             target=accuracy.target,
             start=self.start_um(surface) or None,
+            ways_out=self.document.start.ways_out,
             name=self.name,
             settings=settings,
             progress=progress,
@@ -345,8 +516,7 @@ def read_case(path: str | Path) -> Case:
         text = content.decode("utf-8-sig")
     except UnicodeDecodeError as error:
         raise SettingsError(
-            f"{path} is not a text file (byte {error.start} is not UTF-8); "
-            "give the TOML file that names the mesh"
+            f"{path} is not a text file (byte {error.start} is not UTF-8); give the TOML file that names the mesh"
         ) from error
     for number, line in enumerate(text.splitlines(), start=1):
         if line.count(".") > MOST_DOTS_IN_A_LINE and not line.lstrip().startswith("#"):
@@ -457,11 +627,7 @@ def _place(location: tuple[int | str, ...], table: Mapping[str, Any]) -> str:
     if not rest:
         # A misplaced plain key at the top reads as what it is, a table's name in brackets.
         value = table.get(head)
-        return (
-            _shortened_key(head)
-            if head in table and not isinstance(value, Mapping)
-            else f"[{_shortened_key(head)}]"
-        )
+        return _shortened_key(head) if head in table and not isinstance(value, Mapping) else f"[{_shortened_key(head)}]"
     return f"[{_shortened_key(head)}] {_dotted(rest)}"
 
 

@@ -18,7 +18,7 @@ from bemescape.results.ways_out import conditional
 from bemescape.surface.surface import Surface, triangle_areas_normals
 from bemescape.units import Quantity, format_length, length_um
 from bemescape.windows.grade import Fineness, graded, place_windows
-from bemescape.windows.window import Window
+from bemescape.windows.window import Disc, Labels, Window
 
 if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
@@ -87,7 +87,7 @@ def check_starts(surface: Surface, start: Mapping[str, Start]) -> dict[str, Star
     checked: dict[str, Start] = {}
     for name, place in start.items():
         if isinstance(place, Window):
-            _patch_faces(surface, name, place)
+            _refuse_off_wall(surface, name, place)
             checked[name] = place
         elif isinstance(place, Ball):
             checked[name] = place
@@ -227,16 +227,17 @@ def _between_panels(result: EscapeResult, f: Floats, panel: Ints, points: Floats
     return np.asarray(np.where(wall[panel], linear, f[panel]))
 
 
-def _patch_faces(surface: Surface, name: str, patch: Window) -> None:
+def _refuse_off_wall(surface: Surface, name: str, patch: Window) -> None:
+    if not isinstance(patch.shape, Disc | Labels):
+        raise SettingsError(
+            f"start region {name!r} is a window of the kind {type(patch.shape).__name__.lower()}; give it as a disc or "
+            "by labels"
+        )
     try:
-        placed = place_windows(surface, [patch])
+        place_windows(surface, [patch])
     except WindowError as error:
         text = str(error).replace(f"window {patch.name!r}", f"start region {name!r}")
         raise SettingsError(text) from error
-    if placed.surface is not surface:
-        raise SettingsError(
-            f"start region {name!r} would cut the surface; give it as a disc, by labels or by nearness instead"
-        )
 
 
 def _three_numbers(place: object, what: str) -> Floats:
