@@ -14,6 +14,10 @@ not on an absorbing window (r); for D = 1, with h± = ½M ± K,
     [  V_pa      V_pp     −h₊_pr     ] [q_p] = [ h₊ φ − V g  ]    φ = |x|²/6,  g = x·n/3.
     [ −h₋ᵀ_ra    h₊ᵀ_rp   W_rr + μM_p ] [u_r]  [ h₋ᵀ g − W φ ]
 
+A closed shell without any window (an obstacle) needs one more equation: neither W nor a window elsewhere sees a
+constant on it. The first identity tested with the constant of the whole shell does, and is added to the rows of its
+hats, whose sum is 0 otherwise.
+
 g is exact on flat panels; φ is interpolated at the vertices. This is the symmetric formulation of the mixed boundary
 value problem (Steinbach 2008, Numerical Approximation Methods for Elliptic Boundary Value Problems,
 doi:10.1007/978-0-387-68805-3).
@@ -27,6 +31,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import lu_factor, lu_solve
+from scipy.sparse import coo_matrix
+from scipy.sparse.csgraph import connected_components
 
 __all__ = ["GalerkinAnswer", "GalerkinMatrices", "galerkin_matrices", "solve_mixed"]
 
@@ -143,6 +149,14 @@ def solve_mixed(
             minus[:, free].T @ slope - matrices.hyper[free] @ phi,
         ]
     )
+    for part in _parts_without(window, faces):
+        # As large as W: the sum of a_i is the shell's area.
+        hats = matrices.mass[part][:, free].sum(axis=0)
+        row = np.concatenate([matrices.single[part][:, window].sum(axis=0), -plus[part][:, free].sum(axis=0)])
+        value = float((plus[part] @ phi - matrices.single[part] @ slope).sum())
+        scale = float(areas[part].sum()) ** -1.5
+        system[len(window) :] -= scale * hats[:, None] * row
+        right[len(window) :] -= scale * hats * value
     solved = lu_solve(lu_factor(system, overwrite_a=True), right)
     q, u = np.zeros(len(faces)), np.zeros(len(vertices))  # for D = 1
     q[window], u[free] = solved[: len(window)], solved[len(window) :]
@@ -154,6 +168,15 @@ def solve_mixed(
     total = float(u[faces].mean(axis=1) @ (areas * slope) - q @ square / 6.0 - square @ outward / 30.0)
     flow = np.bincount(panel_window[window], weights=-(q * areas)[window], minlength=count) / volume
     return GalerkinAnswer(total / volume / diffusion_um2_s, flow, q / diffusion_um2_s, u / diffusion_um2_s, len(solved))
+
+
+def _parts_without(window: Ints, faces: Ints) -> list[Ints]:
+    """Panels of each closed shell on which no panel of a window lies."""
+    count = int(faces.max()) + 1
+    ends = np.concatenate([faces[:, :2], faces[:, 1:]])
+    graph = coo_matrix((np.ones(len(ends)), (ends[:, 0], ends[:, 1])), shape=(count, count))
+    part = connected_components(graph, directed=False)[1][faces[:, 0]]
+    return [np.flatnonzero(part == number) for number in np.setdiff1d(part, part[window])]
 
 
 def _mass_of_hats(faces: Ints, weight: Floats, count: int) -> Floats:

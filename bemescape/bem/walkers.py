@@ -25,8 +25,9 @@ from __future__ import annotations
 import math
 import time
 from collections.abc import Callable
-from concurrent.futures import ThreadPoolExecutor, wait
+from concurrent.futures import FIRST_COMPLETED, ThreadPoolExecutor, wait
 from dataclasses import dataclass
+from itertools import islice
 from typing import NamedTuple
 
 import numpy as np
@@ -188,16 +189,19 @@ def walk(
 
 def _in_threads(send: Callable[[int], int], parties: range, walkers: int, progress: Progress) -> None:
     """Send all parties, telling `progress` about every second; stopped between two parties by what it raises."""
-    pool = ThreadPoolExecutor(get_num_threads())
-    try:
-        pending = {pool.submit(send, first) for first in parties}
-        back = 0
+    threads = get_num_threads()
+    left = iter(parties)
+    back, told = 0, time.perf_counter()
+    with ThreadPoolExecutor(threads) as pool:
+        # Only a few wait in line, so that a stop is heard soon.
+        pending = {pool.submit(send, first) for first in islice(left, 2 * threads)}
         while pending:
-            home, pending = wait(pending, timeout=_TELL_S)
+            home, pending = wait(pending, return_when=FIRST_COMPLETED)
             back += sum(party.result() for party in home)
-            progress(ProgressEvent("walkers", back / walkers, f"{back} of {walkers}"))
-    finally:
-        pool.shutdown(cancel_futures=True)
+            pending |= {pool.submit(send, first) for first in islice(left, len(home))}
+            if time.perf_counter() - told > _TELL_S or not pending:
+                told = time.perf_counter()
+                progress(ProgressEvent("walkers", back / walkers, f"{back} of {walkers}"))
 
 
 def _scene(
@@ -260,7 +264,7 @@ def _turn(normals: Floats, ends: Floats, beside: Ints) -> Floats:
     along /= np.linalg.norm(along, axis=1)[:, None]
     # The edge runs counter-clockwise in its first face, so normal × along points out of that face over the edge.
     one, other = normals[beside[:, 0]], normals[beside[:, 1]]
-    return -np.einsum("ij,ij->i", np.cross(one, other), along)
+    return np.asarray(-np.einsum("ij,ij->i", np.cross(one, other), along))
 
 
 @njit(cache=True)

@@ -116,9 +116,8 @@ def _with_volume(vertices: Floats, faces: Ints, window_of: Ints, volume: float) 
 def _collapsed(
     vertices: Floats, faces: Ints, window_of: Ints, most_faces: int, *, touch_rims: bool
 ) -> tuple[Floats, Ints, Ints]:
-    rim, size_at = _rim_and_sizes(vertices, faces, window_of)
     error = _quadrics(vertices, faces)
-    size = size_at(vertices)
+    size = _wanted_size(vertices, faces, window_of)
     while len(faces) > most_faces:
         edges, _ = mesh_edges(faces)
         rim, _ = rim_edges(faces, window_of)
@@ -155,19 +154,14 @@ def _collapsed(
     return vertices, faces, window_of
 
 
-def _rim_and_sizes(vertices: Floats, faces: Ints, window_of: Ints):  # type: ignore[no-untyped-def]
+def _wanted_size(vertices: Floats, faces: Ints, window_of: Ints) -> Floats:
+    """Panel size (n,) at the vertices, up to a common factor."""
     rim, rim_window = rim_edges(faces, window_of)
-    count = int(window_of.max()) + 1
-    radius = np.sqrt(_window_areas(vertices, faces, window_of) / np.pi) if count else np.ones(1)
-    start, end = vertices[rim[:, 0]], vertices[rim[:, 1]]
-
-    def size_at(points: Floats) -> Floats:
-        if len(rim) == 0:
-            return np.ones(len(points))
-        distance, segment = segment_distance(points, start, end)
-        return np.asarray(_SIZE_AT_RIM * radius[rim_window[segment]] + _GROWTH * distance)
-
-    return rim, size_at
+    if len(rim) == 0:
+        return np.ones(len(vertices))
+    radius = np.sqrt(_window_areas(vertices, faces, window_of) / np.pi)
+    distance, segment = segment_distance(vertices, vertices[rim[:, 0]], vertices[rim[:, 1]])
+    return np.asarray(_SIZE_AT_RIM * radius[rim_window[segment]] + _GROWTH * distance)
 
 
 def _edge_key(edges: Ints, count: int) -> Ints:
@@ -218,7 +212,7 @@ def _volume(vertices: Floats, faces: Ints) -> float:
 def _window_areas(vertices: Floats, faces: Ints, window_of: Ints) -> Floats:
     chosen = window_of >= 0
     a, b, c = (vertices[faces[chosen, k]] for k in range(3))
-    return np.bincount(window_of[chosen], 0.5 * np.linalg.norm(np.cross(b - a, c - a), axis=1))
+    return np.bincount(window_of[chosen], 0.5 * np.linalg.norm(np.cross(b - a, c - a), axis=1)).astype(np.float64)
 
 
 @njit(cache=True)
