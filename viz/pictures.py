@@ -12,7 +12,7 @@ from bemescape.errors import SettingsError
 
 from .closeups import windows_scene
 from .parts import Scene
-from .plots import convergence_figure, spread_figure
+from .plots import convergence_figure, spread_figure, survival_figure
 from .scenes import cutaway_scene, wall_scene
 from .shapes import ViewName
 
@@ -27,14 +27,13 @@ __all__ = ["render_png", "save_pictures"]
 _LEAST_PIXELS, _MOST_PIXELS = 200, 8000
 
 
-def save_pictures(
-    result: EscapeResult, folder: str | Path, *, size: tuple[int, int] = (1600, 1200)
-) -> list[Path]:
+def save_pictures(result: EscapeResult, folder: str | Path, *, size: tuple[int, int] = (1600, 1200)) -> list[Path]:
     """Write every picture of `result` into `folder` and hand out their paths.
 
     `view_front.png`, `view_side.png`, `view_top.png`: time on the wall. `cutaway.png`: time inside.
     `windows.png`: exit density. `spread.png`: time over the wall's area and against the distance to a window.
-    `convergence.png`: mean time of every resolution.
+    `convergence.png`: mean time of every resolution. `survival.png`: the part still inside, where the result
+    holds the second moment.
 
     Parameters
     ----------
@@ -68,6 +67,8 @@ def save_pictures(
         "spread.png": spread_figure,
         "convergence.png": convergence_figure,
     }
+    if result.spread is not None:
+        figures["survival.png"] = survival_figure
     written = []
     for name, make in plotters.items():
         written.append(_shoot(make(), folder / name))

@@ -10,6 +10,7 @@ from matplotlib.figure import Figure
 from numpy.typing import NDArray
 from scipy.spatial import cKDTree
 
+from bemescape.errors import SettingsError
 from bemescape.units import time_scale
 
 from .scales import INK, map_colours, time_colours
@@ -17,7 +18,7 @@ from .scales import INK, map_colours, time_colours
 if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
 
-__all__ = ["convergence_figure", "spread_figure"]
+__all__ = ["convergence_figure", "spread_figure", "survival_figure"]
 
 Floats = NDArray[np.float64]
 
@@ -104,6 +105,57 @@ def convergence_figure(result: EscapeResult) -> Figure:
     axes.set_ylabel(f"mean escape time ({unit})")
     axes.ticklabel_format(axis="y", useOffset=False)
     axes.margins(0.12)
+    _plain(axes)
+    return figure
+
+
+def survival_figure(result: EscapeResult) -> Figure:
+    """The part still inside as time goes on: exp(−t/τ) within its proven bound, and the tail by two moments.
+
+    The tail, (τ/τ′) exp(−t/τ′) with τ′ = ⟨T²⟩/2τ, has the mean and the second moment of the true law.
+
+    Raises
+    ------
+    SettingsError
+        The result holds no second moment.
+    """
+    spread = result.spread
+    if spread is None:
+        raise SettingsError(f"result {result.name!r} holds no second moment; solve the case again")
+    figure = Figure(figsize=(6.4, 4.2), dpi=150, layout="constrained")
+    axes = figure.subplots()
+    mean, tail, within = spread.mean_time_s, spread.tail_time_s, spread.exponential_within
+    factor, unit = time_scale(mean)
+    time = np.linspace(0.0, 5.0 * mean, 400)
+    curve = np.exp(-time / mean)
+    axes.fill_between(
+        time / factor,
+        np.clip(curve - within, 1e-6, 1.0),
+        np.clip(curve + within, 1e-6, 1.0),
+        color=_LINE,
+        alpha=0.18,
+        linewidth=0.0,
+        label=f"± {100.0 * within:.2g} %: bound for any time",
+    )
+    axes.plot(time / factor, curve, color=_LINE, linewidth=1.8, label="exp(−t/τ), τ the mean escape time")
+    axes.plot(
+        time / factor,
+        mean / tail * np.exp(-time / tail),
+        color=_GREY,
+        linewidth=1.4,
+        linestyle="--",
+        label="tail with the same mean and second moment",
+    )
+    until = spread.exponential_until_s
+    if until < 5.0 * mean:
+        axes.axvline(until / factor, color=INK, linewidth=1.0, linestyle=":", label="the curve falls below its bound")
+    axes.set_yscale("log")
+    axes.set_ylim(5e-3, 1.1)
+    axes.set_xlim(0.0, 5.0 * mean / factor)
+    axes.set_xlabel(f"time since the start ({unit})")
+    axes.set_ylabel("part still inside")
+    axes.set_title("start uniform in the volume", fontsize=9, loc="left")
+    axes.legend(fontsize=8, frameon=False)
     _plain(axes)
     return figure
 

@@ -97,6 +97,7 @@ def _body(result: EscapeResult, images: dict[str, str]) -> str:
         _pictures(images),
         _windows(summary),
         _slow_regions(result, summary),
+        _spread(summary, images),
         _start_points(summary),
         _rule_of_thumb(summary),
         _accuracy(result, summary, images),
@@ -219,7 +220,7 @@ def _windows(summary: Summary) -> str:
             window.name,
             f"{window.area_um2:.4g}",
             _percent(window.area_um2 / summary.area_um2),
-            _percent(window.share, 4),
+            _percent(window.share, 4) + ("" if window.share_error is None else f" ± {_percent(window.share_error, 2)}"),
             "perfectly absorbing" if window.permeability_um_s is None else f"{window.permeability_um_s:.4g} µm/s",
         )
         for window in summary.windows
@@ -266,12 +267,74 @@ def _slow_regions(result: EscapeResult, summary: Summary) -> str:
     )
 
 
+def _spread(summary: Summary, images: dict[str, str]) -> str:
+    spread = summary.spread
+    if spread is None or summary.escape_time_sd_s is None:
+        return ""
+    rows = [
+        ("standard deviation", _with_error(summary.escape_time_sd_s, spread.sd_relative_error)),
+        ("standard deviation / mean", f"{spread.cv:.4f}"),
+        ("mean remaining time of those found inside", format_time(spread.tail_time_s)),
+    ]
+    chart = ""
+    if "survival.png" in images:
+        caption = (
+            "The part still inside as time goes on. Solid: one rate 1/τ, with its proven bound as a band. Dashed: the "
+            "exponential tail that has the computed mean and second moment; it does not show the early exits."
+        )
+        chart = f'<div class="pictures">{_figure(images["survival.png"], caption, wide=False)}</div>'
+    return (
+        "<h2>Spread of the escape time</h2>"
+        + _table(("start uniform in the volume", ""), rows)
+        + f"<p>{escape(spread.statement)}</p>"
+        + chart
+        + '<p class="soft">The bound follows from the first two moments alone (Brown 1983, Ann. Probab. 11:419).</p>'
+    )
+
+
 def _start_points(summary: Summary) -> str:
     if not summary.start:
         return ""
-    rows = [(name, format_time(time), f"{time / summary.mean_time_s:.3f}") for name, time in summary.start.items()]
-    return "<h2>Named start points</h2>" + _table(
-        ("start", "mean escape time from there", "ratio to the volume mean"), rows
+    rows = []
+    for name, time in summary.start.items():
+        details = summary.start_details.get(name)
+        sd = None if details is None else details.escape_time_sd_s
+        rows.append(
+            (
+                name,
+                "point" if details is None else details.kind,
+                format_time(time),
+                f"{time / summary.mean_time_s:.3f}",
+                "" if sd is None else format_time(sd),
+            )
+        )
+    return (
+        "<h2>Named starts</h2>"
+        + _table(
+            ("start", "kind", "mean escape time from there", "ratio to the volume mean", "standard deviation"),
+            rows,
+            text_columns=(1,),
+        )
+        + _ways_out(summary)
+    )
+
+
+def _ways_out(summary: Summary) -> str:
+    """Which window those from each start leave through, and after what time."""
+    rows = []
+    for name, details in summary.start_details.items():
+        times = details.conditional_time_s or {}
+        for window, part in (details.splitting or {}).items():
+            time = times.get(window)
+            rows.append((name, window, _percent(part, 4), "nobody" if time is None else format_time(time)))
+    if not rows:
+        return ""
+    return (
+        "<h3>Which way out</h3>"
+        + _table(("start", "window", "leave through it", "mean time of those who do"), rows, text_columns=(1,))
+        + '<p class="soft">The volume averages of these probabilities must be the shares above, which are found from '
+        "the outflow; in this result they differ by at most "
+        f"{0.0 if summary.checks.splitting_share is None else summary.checks.splitting_share:.1e}.</p>"
     )
 
 

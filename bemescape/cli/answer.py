@@ -48,7 +48,8 @@ def summary_lines(summary: Summary) -> list[str]:
                     (
                         window.name,
                         f"{window.area_um2:.4g} µm²",
-                        percent(window.share, digits=3),
+                        percent(window.share, digits=3)
+                        + ("" if window.share_error is None else f" ± {percent(window.share_error)}"),
                         "absorbing" if window.permeability_um_s is None else f"{window.permeability_um_s:.4g} µm/s",
                     )
                     for window in summary.windows
@@ -57,11 +58,7 @@ def summary_lines(summary: Summary) -> list[str]:
         ),
     ]
     if summary.start:
-        starts = [
-            ("start", "mean time"),
-            *((name, format_time(time)) for name, time in summary.start.items()),
-        ]
-        lines += ["", *_columns(starts)]
+        lines += ["", *_columns(_start_rows(summary))]
     if summary.slow_regions:
         rows = [("slow region", "mean time", "area", "centre", "nearest window")]
         rows += [
@@ -79,6 +76,7 @@ def summary_lines(summary: Summary) -> list[str]:
             lines.append(f"  and {len(summary.slow_regions) - _MOST_SLOW_REGIONS} smaller ones")
     lines += [
         "",
+        *_spread_lines(summary),
         f"  slowest place   {format_time(summary.slowest_time_s)}",
         f"  rule of thumb   {format_time(rule.mean_time_s)} by {rule.formula}",
         f"  computed on     {summary.panels} panels, {summary.iterations} iterations, "
@@ -87,6 +85,33 @@ def summary_lines(summary: Summary) -> list[str]:
         *(f"  note: {note}" for note in summary.notes),
     ]
     return lines
+
+
+def _start_rows(summary: Summary) -> list[tuple[str, ...]]:
+    rows: list[tuple[str, ...]] = [("start", "mean time", "standard deviation", "ways out")]
+    for name, time in summary.start.items():
+        details = summary.start_details.get(name)
+        sd = None if details is None else details.escape_time_sd_s
+        ways = {} if details is None else details.splitting or {}
+        rows.append(
+            (
+                name,
+                format_time(time),
+                "" if sd is None else format_time(sd),
+                ", ".join(f"{window} {percent(part, digits=3)}" for window, part in ways.items()),
+            )
+        )
+    return rows
+
+
+def _spread_lines(summary: Summary) -> list[str]:
+    if summary.spread is None or summary.escape_time_sd_s is None:
+        return []
+    return [
+        f"  spread          standard deviation {format_time(summary.escape_time_sd_s)} "
+        f"± {percent(summary.spread.sd_relative_error)}, {summary.spread.cv:.3f} of the mean",
+        f"                  {summary.spread.statement}",
+    ]
 
 
 def _opinion_lines(summary: Summary) -> list[str]:
