@@ -122,12 +122,12 @@ def _refuse_no_contact(window: Window, near: Near, closest: float, place: Floats
     if closest > FAR_APART * near.distance_um:
         low, high = near.other.bounds
         raise WindowError(
-            f"window {window.name!r}: the wall comes no closer than {format_length(closest)} to {other!r} (near "
+            f"window {window.name!r}: the wall comes no closer than {format_length(closest, 4)} to {other!r} (near "
             f"{shown_place(place)}), more than {FAR_APART:g} times the distance of {limit}; the two meshes may be in "
             f"different units or frames: {other!r} extends from {shown_place(low)} to {shown_place(high)}"
         )
     raise WindowError(
-        f"window {window.name!r}: the wall comes no closer than {format_length(closest)} to {other!r} (near "
+        f"window {window.name!r}: the wall comes no closer than {format_length(closest, 4)} to {other!r} (near "
         f"{shown_place(place)}), and the distance is {limit}; enlarge the distance"
     )
 

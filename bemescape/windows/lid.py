@@ -28,6 +28,8 @@ Mask = NDArray[np.bool_]
 
 #: A vertex closer to the plane than this part of an edge is moved onto it instead of cutting a sliver off.
 _SNAP = 0.01
+#: A vertex closer to the plane than this part of the surface's size lies in it.
+_IN_PLANE = 1e-9
 #: Openings named in a message, at most.
 _SHOWN = 6
 
@@ -70,10 +72,12 @@ def with_lid(wall: Wall, window: Window, lid: Lid, before: Sequence[str]) -> tup
     origin, normal = np.array(lid.point_um), np.array(lid.normal)
     height = (surface.vertices - origin) @ normal
     _refuse_a_miss(window, height, surface.vertices)
+    beyond = height > _IN_PLANE * wall.diagonal
     mesh, height = cut_along_level(
         Mesh(surface.vertices, surface.faces, np.arange(len(surface.faces))), height, 0.0, snap=_SNAP
     )
-    piece = _pieces_beyond(mesh, height, normal)
+    beyond = np.append(beyond, np.zeros(len(height) - len(beyond), bool))
+    piece = _pieces_beyond(mesh, height, beyond, normal)
     if (piece < 0).all():
         _refuse_a_miss(window, np.minimum(height, 0.0), mesh.vertices)
     flat = (mesh.vertices - origin) @ _axes(normal).T
@@ -114,14 +118,17 @@ def _refuse_a_miss(window: Window, height: Floats, vertices: Floats) -> None:
     )
 
 
-def _pieces_beyond(mesh: Mesh, height: Floats, normal: Floats) -> Ints:
-    """Number of the piece beyond the plane that each face (m,) belongs to; −1 for faces on the kept side."""
+def _pieces_beyond(mesh: Mesh, height: Floats, was_beyond: Mask, normal: Floats) -> Ints:
+    """Number of the piece beyond the plane that each face (m,) belongs to; −1 for faces on the kept side.
+
+    `was_beyond` (n,) marks vertices beyond the plane before they were taken to lie on it.
+    """
     of_face = height[mesh.faces]
     beyond = of_face.max(axis=1) > 0.0
-    # Of a face in the plane itself the volume lies behind its normal.
+    # Of a face in the plane itself the volume lies behind its normal; one that was put there is cut off.
     flat = (of_face == 0.0).all(axis=1)
     _, normals = triangle_areas_normals(mesh.vertices, mesh.faces)
-    beyond[flat] = (normals[flat] @ normal) < 0.0
+    beyond[flat] = ((normals[flat] @ normal) < 0.0) | was_beyond[mesh.faces[flat]].any(axis=1)
     index = np.flatnonzero(beyond)
     piece = np.full(len(mesh.faces), -1)
     if len(index):

@@ -234,6 +234,7 @@ class Window:
         radius: Quantity,
         unit: Quantity | Sequence[Quantity] | None = None,
         farthest: Quantity | None = None,
+        lines: Sequence[int] = (),
         permeability: Quantity | None = None,
     ) -> Window:
         """Round pores at given positions, moved to the nearest point of the wall.
@@ -249,6 +250,8 @@ class Window:
             A name, a length, or one for each axis; only where `positions` is a path.
         farthest : length, optional
             A position further off the wall is refused; two radii by default.
+        lines : sequence of int, optional
+            Lines of a file that the positions come from, for messages; found out where `positions` is a path.
         permeability : quantity, optional
             Of each pore.
 
@@ -261,7 +264,6 @@ class Window:
         """
         radius_um = length_um(radius, f"radius of window {name!r}")
         limit = FARTHEST_SNAP * radius_um if farthest is None else length_um(farthest, f"farthest of window {name!r}")
-        lines: tuple[int, ...] = ()
         if isinstance(positions, str | Path):
             from bemescape.windows.positions import read_positions
 
@@ -271,7 +273,7 @@ class Window:
                 raise SettingsError(f"window {name!r}: positions given as numbers are in µm; leave out unit={unit!r}")
             places = _positions(positions, name)
         places.setflags(write=False)
-        return cls(name, Points(places, radius_um, limit, lines), permeability_um_s(permeability))
+        return cls(name, Points(places, radius_um, limit, tuple(lines)), permeability_um_s(permeability))
 
     @classmethod
     def scatter(
