@@ -137,3 +137,94 @@ PLATONIC_CAPS_02 = {6: 0.70005458, 8: 0.50527188, 12: 0.3141251}
 #: Cylinder R = H = 1 with a coaxial neck, open at its end: (neck radius, length) -> average over head and neck. Head and
 #: neck are matched by a Galerkin method with edge-weighted functions, two resolutions agree to 1e-8.
 CYLINDER_NECK_ALL = {(0.2, 0.5): 15.7813822, (0.5, 1.0): 4.81056125}
+
+
+# -- partly open windows, ways out, second moments -------------------------------------------------------
+
+
+def slab_two_ends_mean(length, kappa_0, kappa_l):
+    """Slab 0 < x < L, D = 1, permeabilities at both ends: elementary; infinite κ by its limit."""
+    a, b = 1.0 / kappa_0, 1.0 / kappa_l
+    return length * (12.0 * a * b + 4.0 * length * (a + b) + length**2) / (12.0 * (a + b + length))
+
+
+def slab_splitting(x, length, kappa_0, kappa_l):
+    """Probability of leaving at x = 0 from x, D = 1: (1/κ₁ + L − x)/(1/κ₀ + 1/κ₁ + L), linear since w″ = 0."""
+    return (1.0 / kappa_l + length - x) / (1.0 / kappa_0 + 1.0 / kappa_l + length)
+
+
+def slab_conditional_time(x, length):
+    """Mean time of those who leave at x = 0, both ends absorbing, D = 1: (L² − (L − x)²)/6.
+
+    From g″ = −w with w = 1 − x/L, g = 0 at both ends, divided by w. For a shell and its inner wall the same holds
+    along the radius, since r g obeys the same equation.
+    """
+    return (length**2 - (length - x) ** 2) / 6.0
+
+
+def slab_second_moments(length, permeability=np.inf):
+    """E[T²] from the closed end and from a uniform start, one end open, D = 1: integrated from m″ = −2u."""
+    k = permeability
+    far = 5.0 * length**4 / 12.0 + 5.0 * length**3 / (3.0 * k) + 2.0 * length**2 / k**2
+    uniform = 4.0 * length**4 / 15.0 + 4.0 * length**3 / (3.0 * k) + 2.0 * length**2 / k**2
+    return far, uniform
+
+
+def ball_second_moments(permeability=np.inf):
+    """E[T²] from the centre and from a uniform start of the unit ball, its whole wall open, D = 1: as the slab."""
+    k = permeability
+    centre = 7.0 / 180.0 + 7.0 / (45.0 * k) + 2.0 / (9.0 * k**2)
+    uniform = 4.0 / 315.0 + 4.0 / (45.0 * k) + 2.0 / (9.0 * k**2)
+    return centre, uniform
+
+
+#: Shell 1 < r < 2, uniform start: E[T²] with the inner, or the outer, wall absorbing; radial equations integrated
+#: symbolically.
+SHELL_SECOND_MOMENT_INNER, SHELL_SECOND_MOMENT_OUTER = 0.992290249433, 0.0827664399093
+#: Shell 1 < r < 2, κ = 1 on one wall: mean; and κ = 1 inside, 2 outside: mean and the share of the inner wall.
+SHELL_MEAN_INNER_ROBIN, SHELL_MEAN_OUTER_ROBIN = 3.00952380952, 0.75952380952
+SHELL_MEAN_BOTH_ROBIN, SHELL_SHARE_BOTH_ROBIN = 0.364835164835, 0.164835164835
+#: Shell 1 < r < 2, both walls absorbing: mean 17/210; share of the inner wall a(2a + b)/(2(a² + ab + b²)) = 2/7.
+SHELL_MEAN_BOTH, SHELL_SHARE_BOTH = 17.0 / 210.0, 2.0 / 7.0
+
+
+def shell_splitting(r, a=1.0, b=2.0):
+    """Probability of leaving through the inner wall from r: a(b − r)/(r(b − a)), harmonic."""
+    return a * (b - r) / (r * (b - a))
+
+
+#: Half oblate spheroid of focal radius 1 and height 1 (semi-axes √2, √2, 1): the focal disc in its flat face and the
+#: dome absorb. In oblate coordinates w = 1 − arctan(λ)/arctan(1): share of the disc 1/π, conductance 8 (times D), and
+#: on the axis, where λ = z, w = 1 − (4/π) arctan z. Smythe (1968), Static and Dynamic Electricity, 5.28.
+SPHEROID_SHARE, SPHEROID_CONDUCTANCE = 1.0 / np.pi, 8.0
+
+
+def spheroid_splitting_on_axis(z):
+    """Probability of leaving through the focal disc from the axis at height z; see above."""
+    return 1.0 - 4.0 / np.pi * np.arctan(z)
+
+
+#: One absorbing cap on the unit ball: CV² of a uniform start, from the same series solution as CAP_MEAN, whose field
+#: is squared and integrated in closed form.
+CAP_CV2 = {0.1: 1.005723561, 0.5: 1.111391714, 1.0: 1.396076761}
+#: Two caps of half-angles (0.1, 0.2), antipodal: conductance between them; dual series.
+UNEQUAL_CAPS_CONDUCTANCE = 0.2419090018309
+#: Two caps (0.1, 0.5), antipodal: mean, share of the smaller, conductance; dual series, 12 digits.
+FAR_UNEQUAL_CAPS = (1.537603776482, 0.1772299222801, 0.3028664756139)
+
+#: Partly open cap on the unit ball, (half-angle, κ) -> mean, and the area of the cap: Galerkin with edge functions,
+#: two resolutions to 1e-8; limits κ → 0, κ → ∞ and the full ball reproduced.
+ROBIN_CAP_MEAN = {
+    (0.1, 10.0): 25.0212957,
+    (0.5, 0.1): 56.6452146,
+    (0.5, 1.0): 7.61798883,
+    (0.5, 10.0): 2.64389089,
+    (0.5, 100.0): 2.064816,
+    (1.0, 10.0): 0.91496816,
+}
+CAP_AREA = {0.1: 0.03138975532, 0.5: 0.76917144847, 1.0: 2.88836579751}
+#: Mean for a uniform flux over the cap (0.5), less V/(κA): the limit κ → 0.
+CAP_UNIFORM_FLUX = 2.18854318
+#: Disc of radius a and permeability κ in a flat wall, κa/D = 1: its conductance over 4Da, by a Galerkin method, and
+#: what two resistances in series, 1/(4Da) + 1/(πa²κ), say instead.
+ROBIN_DISC, ROBIN_DISC_IN_SERIES = 0.426679706, 0.439900846

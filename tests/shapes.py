@@ -125,3 +125,35 @@ def cylinder_with_strip(half_angle=0.5, height=1.0, *, around=96, cells=6, rings
     corners = np.array(triangles)
     vertices, index = np.unique(np.round(corners.reshape(-1, 3), 10), axis=0, return_inverse=True)
     return Surface(vertices, index.reshape(-1, 3), {"label": np.array(labels)})
+
+
+def half_oblate_spheroid(around=64, disc_rings=8, ring_rings=4, dome_rings=12):
+    """z > 0 half of the spheroid with semi-axes √2, √2, 1: label 1 the focal disc (radius 1), 2 the dome, 0 the rest.
+
+    Circles are polygons of the circles' areas, and heights are scaled so that the volume is the true one, 4π/3.
+    """
+    phi = 2.0 * np.pi * np.arange(around) / around
+    outwards = np.sqrt(2.0 * np.pi / around / np.sin(2.0 * np.pi / around))
+    flat = [(radius, 0.0, 1) for radius in np.linspace(0.0, 1.0, disc_rings + 1)[1:]]
+    flat += [(radius, 0.0, 0) for radius in np.linspace(1.0, np.sqrt(2.0), ring_rings + 1)[1:]]
+    dome = [(np.sqrt(2.0) * np.cos(t), np.sin(t), 2) for t in np.linspace(0.0, np.pi / 2.0, dome_rings + 1)[1:-1]]
+    rings = [*flat, *dome]
+    vertices = [(0.0, 0.0, 0.0)]
+    for radius, height, _ in rings:
+        vertices += [(outwards * radius * np.cos(p), outwards * radius * np.sin(p), height) for p in phi]
+    vertices.append((0.0, 0.0, 1.0))
+    faces, labels = [], []
+    for k in range(around):
+        after = (k + 1) % around
+        faces.append((0, 1 + after, 1 + k))
+        labels.append(rings[0][2])
+        for number, (_, _, label) in enumerate(rings[1:], start=1):
+            low, high = 1 + (number - 1) * around, 1 + number * around
+            faces += [(low + k, low + after, high + after), (low + k, high + after, high + k)]
+            labels += [label] * 2
+        last = 1 + (len(rings) - 1) * around
+        faces.append((last + k, last + after, len(vertices) - 1))
+        labels.append(2)
+    mesh = Surface(np.array(vertices), np.array(faces), {"label": np.array(labels)})
+    scale = BALL_VOLUME / mesh.volume
+    return Surface(mesh.vertices * [1.0, 1.0, scale], mesh.faces, mesh.face_data)

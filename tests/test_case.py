@@ -316,9 +316,7 @@ def test_any_table_is_a_case_or_refused_with_one_sentence(table):
     assert len(sentence) < 600
 
 
-pieces = st.sampled_from(
-    GOOD.split("\n") + list('[]{}="#.,\n') + ["[[window]]", "nan", "1e999", "'''", '"""']
-)
+pieces = st.sampled_from(GOOD.split("\n") + list('[]{}="#.,\n') + ["[[window]]", "nan", "1e999", "'''", '"""'])
 
 
 @settings(max_examples=200, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])

@@ -131,9 +131,7 @@ def test_half_a_percent_in_every_spelling(value):
     assert fraction(value) == 0.005
 
 
-@pytest.mark.parametrize(
-    "value", ["0 %", "100 %", 0, 1.0, "5", "nan", "% 5", "0.5 %%", "1 nm", True, math.nan]
-)
+@pytest.mark.parametrize("value", ["0 %", "100 %", 0, 1.0, "5", "nan", "% 5", "0.5 %%", "1 nm", True, math.nan])
 def test_what_does_not_lie_between_0_and_1_is_refused(value):
     with pytest.raises(SettingsError, match="target"):
         fraction(value, "target")

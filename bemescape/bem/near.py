@@ -28,7 +28,7 @@ __all__ = ["NearField", "build_near_field"]
 #: Pairs with centroids closer than this many radii (of the larger panel) are integrated in closed form.
 EXACT = 2.5
 #: Pairs closer than this many radii use three points on each panel.
-FINE = 6.0
+FINE = 4.5
 #: The finer average over a test panel serves sources closer than this many radii of the test panel.
 CLOSE = 1.5
 

@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import lu_factor, lu_solve, qr, solve_triangular
 
+from bemescape.bem.blas import one_blas_thread
 from bemescape.bem.kernels import spread_inverse
 from bemescape.bem.operator import EscapeOperator
 from bemescape.errors import ConvergenceError
@@ -97,6 +98,11 @@ class BoundarySolver:
         self.tolerance = tolerance
         self.most_iterations = most_iterations
         self._root = np.sqrt(panels.areas / panels.areas.sum())
+        with one_blas_thread():
+            self._prepare(cluster_of)
+
+    def _prepare(self, cluster_of: Ints | None) -> None:
+        operator, panels = self.operator, self.operator.panels
         self._blocks = _WindowBlocks(operator)
         # Outer space: C = A Z with orthonormal columns (area-weighted).
         if cluster_of is not None and cluster_of.max() >= 0:
@@ -131,9 +137,10 @@ class BoundarySolver:
         ConvergenceError
             The residual is above the tolerance after the most iterations allowed.
         """
-        if given is None:
-            return self._solved(right, tell)
-        rest = self._solved(right - self.operator.half_plus_double(given), tell)
+        with one_blas_thread():
+            if given is None:
+                return self._solved(right, tell)
+            rest = self._solved(right - self.operator.half_plus_double(given), tell)
         return BoundarySolution(rest.u + given, rest.q, rest.residuals)
 
     def _precondition(self, residual: Floats) -> tuple[Floats, Floats, Floats]:
@@ -156,7 +163,9 @@ class BoundarySolver:
         residual = root * right - outer @ start
         beta = float(np.linalg.norm(residual))
 
-        basis = [residual / beta]
+        # Rows are filled as they come; the system hands out memory only for those.
+        basis = np.empty((most_iterations + 1, len(right)))
+        basis[0] = residual / beta
         steps: list[tuple[Floats, Floats]] = []
         outer_parts: list[Floats] = []
         hessenberg = np.zeros((most_iterations + 1, most_iterations))
@@ -180,12 +189,11 @@ class BoundarySolver:
             new -= outer @ part
             column = hessenberg[:, k]
             for _ in range(2):  # twice: single-precision products leave the first pass not quite orthogonal
-                for j in range(k + 1):
-                    overlap = float(basis[j] @ new)
-                    column[j] += overlap
-                    new -= overlap * basis[j]
+                overlaps = basis[: k + 1] @ new
+                column[: k + 1] += overlaps
+                new -= overlaps @ basis[: k + 1]
             column[k + 1] = np.linalg.norm(new)
-            basis.append(new / max(column[k + 1], 1e-300))
+            basis[k + 1] = new / max(column[k + 1], 1e-300)
             for j in range(k):
                 c, s = givens[j]
                 column[j], column[j + 1] = c * column[j] + s * column[j + 1], -s * column[j] + c * column[j + 1]
@@ -226,7 +234,5 @@ def solve_boundary(
     tell: Callable[[int, float], None] = lambda _iteration, _residual: None,
 ) -> BoundarySolution:
     """Solve for one right-hand side; see `BoundarySolver`."""
-    solver = BoundarySolver(
-        operator, cluster_of=cluster_of, tolerance=tolerance, most_iterations=most_iterations
-    )
+    solver = BoundarySolver(operator, cluster_of=cluster_of, tolerance=tolerance, most_iterations=most_iterations)
     return solver.solve(right, tell=tell)
