@@ -317,7 +317,7 @@ class Window:
         for what, value, least in (("count", count, 1), ("seed", seed, 0)):
             if value is not None and (isinstance(value, bool) or not isinstance(value, int) or value < least):
                 raise SettingsError(
-                    f"{what} of window {name!r} is {value!r}; it must be a whole number from {least} on"
+                    f"{what} of window {name!r} is {value!r}; it must be a whole number, {least} or more"
                 )
         per_um2 = None if density is None else density_per_um2(density, f"density of window {name!r}")
         gap_um = radius_um if gap is None else length_um(gap, f"gap of window {name!r}")
