@@ -8,13 +8,14 @@ from pathlib import Path
 import jsonschema
 import numpy as np
 import pytest
+import trimesh
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from bemescape.case import Case, case_schema, parse_case, read_case
 from bemescape.errors import SettingsError
 from bemescape.surface.surface import Surface
-from bemescape.windows.window import Disc, Labels
+from bemescape.windows.window import Disc, Labels, Lid, Near, Points, Scatter
 
 GOOD = """
 [surface]
@@ -80,6 +81,58 @@ def test_positions_are_scaled_per_axis_and_radii_are_not(written):
     np.testing.assert_allclose(case.start_um(voxel_surface())["vesicle"], (0.04, 0.08, 1.2), rtol=1e-15)
 
 
+KINDS = """
+[[window]]
+name = "contact"
+near = { file = "psd.ply", unit = "nm", distance = "20 nm" }
+permeability = "3 um/s"
+[[window]]
+name = "mouth"
+lid = { point = [100, 0, 10], normal = [1, 0, 1], near = [0, 50, 10] }
+[[window]]
+name = "pores"
+points = { file = "pores.csv", radius = "25 nm", farthest = "1 um" }
+[[window]]
+name = "crowd"
+scatter = { density = "3 /um^2", radius = "25 nm", gap = "100 nm", seed = 5 }
+"""
+
+
+def with_all_kinds(tmp_path) -> Case:
+    trimesh.creation.box((1000.0, 1000.0, 10.0)).export(tmp_path / "psd.ply")
+    (tmp_path / "pores.csv").write_text("x,y,z\n100,0,10\n0,100,0\n")
+    path = tmp_path / "kinds.toml"
+    path.write_text(GOOD.split("[[window]]")[0] + KINDS)
+    return read_case(path)
+
+
+def test_every_kind_of_window_is_scaled_from_the_units_of_its_file(tmp_path):
+    contact, mouth, pores, crowd = with_all_kinds(tmp_path).windows_for(voxel_surface())
+    assert isinstance(contact.shape, Near)
+    np.testing.assert_allclose(contact.shape.other.bounds, [[-0.5, -0.5, -0.005], [0.5, 0.5, 0.005]], rtol=1e-12)
+    assert (contact.shape.distance_um, contact.permeability_um_s) == (0.02, 3.0)
+    assert isinstance(mouth.shape, Lid)
+    np.testing.assert_allclose(mouth.shape.point_um, (0.4, 0.0, 0.4), rtol=1e-15)
+    np.testing.assert_allclose(mouth.shape.near_um, (0.0, 0.2, 0.4), rtol=1e-15)
+    # A step of one voxel along x and z: 4 nm and 40 nm.
+    np.testing.assert_allclose(mouth.shape.normal, np.array([1, 0, 10]) / np.sqrt(101), rtol=1e-14)
+    assert isinstance(pores.shape, Points)
+    np.testing.assert_allclose(pores.shape.positions_um, [[0.4, 0.0, 0.4], [0.0, 0.4, 0.0]], rtol=1e-15)
+    assert pores.shape.lines == (2, 3)
+    assert pores.shape.farthest_um == 1.0
+    assert crowd.shape == Scatter(None, 3.0, 0.025, 0.1, 5)
+
+
+def test_a_missing_file_of_a_window_is_named_with_the_window(tmp_path):
+    case = with_all_kinds(tmp_path)
+    (tmp_path / "pores.csv").unlink()
+    with pytest.raises(SettingsError, match=r"\[\[window\]\] 'pores' points.file is 'pores.csv', but there is no file"):
+        case.windows_for(voxel_surface())
+    (tmp_path / "psd.ply").unlink()
+    with pytest.raises(SettingsError, match=r"'contact' near.file is 'psd.ply'.*relative to the case file"):
+        case.windows_for(voxel_surface())
+
+
 def test_defaults_are_half_a_percent_and_automatic_healing(written):
     text = GOOD.split("[accuracy]")[0]
     case = read_case(written(text))
@@ -99,7 +152,39 @@ def test_defaults_are_half_a_percent_and_automatic_healing(written):
         ("radius", "radus", r"\[\[window\]\] 'neck' disc.radus is not known; did you mean 'radius'\?"),
         ("target", "trget", r"\[accuracy\] trget is not known; did you mean 'target'\?"),
         ("[start]", "[start]\ntarget = 1", r"\[start\] target is not known here; it belongs in \[accuracy\]"),
-        ("disc =", "near =", r"near is not known; known here: name, disc, labels, permeability"),
+        ("disc =", "hole =", r"hole is not known; known here: name, disc, labels, near, lid, points, scatter, perm"),
+        ("disc =", "near =", r"'neck' near.centre is not known; known here: file, unit, distance"),
+        ("disc = { centre = [100.0, 0, -620.0],", "scatter = {", r"'neck' scatter has neither count nor density"),
+        (
+            "disc = { centre = [100.0, 0, -620.0],",
+            'scatter = { count = 3, density = "1 /um^2",',
+            r"'neck' scatter has count and density; give exactly one of them",
+        ),
+        (
+            "disc = { centre = [100.0, 0, -620.0],",
+            'scatter = { density = "3 um",',
+            r"'neck' scatter.density '3 um' is not a quantity in um\^-2; write it like '3 /um\^2'",
+        ),
+        (
+            "disc = { centre = [100.0, 0, -620.0],",
+            "scatter = { count = 2.0,",
+            r"'neck' scatter.count is 2.0; it should be a valid integer; write count = 40",
+        ),
+        (
+            "disc = { centre = [100.0, 0, -620.0],",
+            "points = {",
+            r"'neck' points.file is missing; write file = \"pores.csv\"",
+        ),
+        (
+            'disc = { centre = [100.0, 0, -620.0], radius = "60 nm" }',
+            "lid = { point = [0, 0, 1], normal = [0, 0, 0] }",
+            r"'neck' lid has the normal \[0, 0, 0\], which has no direction",
+        ),
+        (
+            'disc = { centre = [100.0, 0, -620.0], radius = "60 nm" }',
+            'near = { file = "psd.ply", distance = "20 nm" }',
+            r"'neck' near.unit is missing; write unit = \"nm\"",
+        ),
         ('diffusion = "20 um^2/s"', "", r"\[motion\] diffusion is missing; write diffusion = \"20 um\^2/s\""),
         ('"20 um^2/s"', "20", r"\[motion\] diffusion is the plain number 20; give it with its unit"),
         ('"20 um^2/s"', '"20 s"', r"\[motion\] diffusion.*'20 s' is not a quantity in um\^2/s"),
@@ -141,11 +226,15 @@ def test_defaults_are_half_a_percent_and_automatic_healing(written):
         ('"neck"', '"a\\nb"', r"number 1 name is 'a\\nb'"),
         ('"neck"', "3", r"number 1 name is 3; it should be a valid string"),
         ('"neck"', '"release face"', r"2 windows named 'release face'; give each its own name"),
-        ("labels = { array", "# ", r"'release face' has no kind; a window has exactly one of disc or labels"),
+        (
+            "labels = { array",
+            "# ",
+            r"'release face' has no kind; a window has exactly one of disc, labels, near, lid, points or scatter",
+        ),
         (
             '"60 nm" }',
             '"60 nm" }\nlabels = { array = "label", value = 2 }',
-            r"'neck' has disc and labels; a window has exactly one of disc or labels",
+            r"'neck' has disc and labels; a window has exactly one of disc, labels, near, lid, points or scatter",
         ),
         ('"0.2 %"', "5", r"\[accuracy\] target is 5; it must lie between 0 and 1"),
         ('"0.2 %"', '"best"', r"\[accuracy\] target 'best' is not a plain number or percentage"),
@@ -290,7 +379,7 @@ scalars = (
     | st.sampled_from(["60 nm", "20 um^2/s", "nm", "0.5 %", "auto"])
 )
 KNOWN = """surface motion window accuracy start file unit heal diffusion name disc labels centre radius array
-value permeability target max_panels points"""
+value permeability target max_panels points near lid scatter point normal distance count density gap seed farthest"""
 keys = st.sampled_from(KNOWN.split()) | st.text(max_size=5)
 tables = st.recursive(
     scalars,

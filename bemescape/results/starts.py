@@ -200,15 +200,15 @@ class _Pieces:
 
 
 def _patch_pieces(result: EscapeResult, surface: Surface, patch: Window) -> _Pieces:
-    """The patch as pieces of the result's panels: its faces, cut along its rim if it is a disc."""
+    """The patch as pieces of the result's panels: its faces, cut along its rim if it has one of its own."""
     placement = place_windows(surface, [patch])
-    if placement.patches[0].disc is None:
+    if placement.patches[0].level is None:
         chosen = np.flatnonzero(np.isin(result.parent_face, placement.patches[0].faces))
         return _Pieces(result.vertices, result.faces[chosen], chosen)
     on_panels = place_windows(Surface(result.vertices, result.faces), [patch])
     # Pieces of an eighth of the radius at the rim, larger ones elsewhere; no lines of equal distance.
     fine = graded(on_panels, Fineness(48.0, 0, 1.0, 4.0))
-    inside = np.flatnonzero(fine.window_of == 0)
+    inside = np.flatnonzero(fine.window_of >= 0)
     return _Pieces(fine.vertices, fine.faces[inside], fine.parent[inside])
 
 
