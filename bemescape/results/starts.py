@@ -213,18 +213,20 @@ def _patch_pieces(result: EscapeResult, surface: Surface, patch: Window) -> _Pie
 
 
 def _between_panels(result: EscapeResult, f: Floats, panel: Ints, points: Floats) -> Floats:
-    """Values of f (m,) at points (k, 3) of given panels (k,): linear between vertex means on the wall."""
+    """Values of f (m,) at points (k, 3) of given panels (k,), whose means stay f.
+
+    On the wall the slope is that of the linear function through vertex means; on windows f is constant.
+    """
     wall = result.panel_window < 0
     faces = result.faces[wall]
     weight = np.repeat(result.panel_areas_um2[wall], 3)
     n = len(result.vertices)
     total = np.bincount(faces.ravel(), weights=weight, minlength=n)
     summed = np.bincount(faces.ravel(), weights=weight * np.repeat(f[wall], 3), minlength=n)
-    at_vertex: Floats = summed / np.maximum(total, 1e-300)
-    corners = result.faces[panel]
-    barycentric = trimesh.triangles.points_to_barycentric(result.vertices[corners], points)
-    linear = (at_vertex[corners] * barycentric).sum(axis=1)
-    return np.asarray(np.where(wall[panel], linear, f[panel]))
+    at_corner = (summed / np.maximum(total, 1e-300))[result.faces[panel]]
+    barycentric = trimesh.triangles.points_to_barycentric(result.vertices[result.faces[panel]], points)
+    slope = (at_corner * (barycentric - 1.0 / 3.0)).sum(axis=1)
+    return np.asarray(np.where(wall[panel], f[panel] + slope, f[panel]))
 
 
 def _refuse_off_wall(surface: Surface, name: str, patch: Window) -> None:
