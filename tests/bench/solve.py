@@ -146,7 +146,10 @@ def _against_peers() -> dict[str, Any]:
             fem["unknowns"], fem["seconds_assembly"] + fem["seconds_solve"], fem["mean_time_s"], fem["peak_mb"]),
         "quadratic elements with meshing": (
             fem["unknowns"],
-            fem["seconds_meshing"] + fem["seconds_assembly"] + fem["seconds_solve"], fem["mean_time_s"], fem["peak_mb"]),
+            fem["seconds_meshing"] + fem["seconds_assembly"] + fem["seconds_solve"],
+            fem["mean_time_s"],
+            fem["peak_mb"],
+        ),
     }  # fmt: skip
     print(f"\n{'method':34} {'unknowns':>9} {'seconds':>8} {'ratio':>7} {'error':>8} {'peak MB':>8}")
     for name, (unknowns, seconds, mean, peak) in table.items():
