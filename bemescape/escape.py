@@ -37,15 +37,16 @@ class SolverSettings:
 
     Attributes
     ----------
-    max_panels : int
-        Refinement stops here, above the target if need be.
+    max_panels : int or None
+        Refinement stops here, above the target if need be. None: 60 000, or twice the surface's own faces where that
+        is more.
     tolerance : float
         Residual of the linear system, relative.
     balance_limit : float
         A result whose windows drain more or less than V/D by this part is not handed out.
     """
 
-    max_panels: int = 60_000
+    max_panels: int | None = None
     tolerance: float = 1e-6
     balance_limit: float = 0.02
 
@@ -143,6 +144,7 @@ def solve_escape(
     starts = check_starts(placement.surface, start or {})
     names = _wanted_ways_out(placement.windows, wanted=ways_out, named_starts=bool(starts))
 
+    budget = settings.max_panels or max(60_000, 2 * len(surface.faces))
     ladder = Ladder(wanted, len(placement.windows))
     best: _Solution | None = None
     limits: list[SizeLimit] = []
@@ -152,8 +154,8 @@ def solve_escape(
         progress(ProgressEvent("imprinting windows", None, f"resolution {len(levels) + 1}"))
         if best is not None and rung.wall > best.rung.wall:
             limits.append(_finer_wall(best))
-        mesh = graded(placement, rung.fineness, limits=limits, most_faces=2 * settings.max_panels)
-        if best is not None and len(mesh.faces) > settings.max_panels:
+        mesh = graded(placement, rung.fineness, limits=limits, most_faces=2 * budget)
+        if best is not None and len(mesh.faces) > budget:
             target_met = False
             break
         best = _solved(placement, rung, mesh, d, settings, progress)
@@ -174,7 +176,7 @@ def solve_escape(
     notes = [*placement.notes, *_reading_notes(surface)]
     if not target_met:
         notes.append(
-            f"the panel budget of {settings.max_panels} ended the refinement at an estimated error of "
+            f"the panel budget of {budget} ended the refinement at an estimated error of "
             f"{estimate.relative_error:.2%} (target {wanted:.2%}); raise max_panels or accept the error"
         )
     result = _packed(placement, best, estimate, ladder.share_errors(), d)
