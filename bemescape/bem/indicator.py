@@ -26,8 +26,8 @@ def coarse_panels(
     area, normal = 0.5 * double, cross / double[:, None]
     weight = np.repeat(area, 3)
     total = np.bincount(faces.ravel(), weights=weight, minlength=len(vertices))
-    at_vertex = np.bincount(faces.ravel(), weights=weight * np.repeat(u, 3), minlength=len(vertices))
-    at_vertex = at_vertex / np.maximum(total, 1e-300)
+    weighted = np.bincount(faces.ravel(), weights=weight * np.repeat(u, 3), minlength=len(vertices))
+    at_vertex = weighted / np.maximum(total, 1e-300)
     # Gradient of the linear function through the three corner values.
     opposite = corners[:, [2, 0, 1]] - corners[:, [1, 2, 0]]
     gradient = np.einsum("ik,ikx->ix", at_vertex[faces], np.cross(normal[:, None], opposite)) / double[:, None]
