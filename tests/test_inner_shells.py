@@ -101,7 +101,7 @@ def test_a_body_within_an_obstacle_needs_a_window_of_its_own():
     surface = joined(
         (shapes.ball(2, radius=3.0), False, 3), (shapes.ball(2, radius=2.0), True, 2), (shapes.ball(1), False, 1)
     )
-    with pytest.raises(WindowError, match="separate body .* has no window"):
+    with pytest.raises(WindowError, match=r"separate body .* has no window"):
         solve_escape(surface, [labelled(3)], 1.0)
     result = solved_once(surface, [labelled(3, "outside"), labelled(1, "inside")])
     # Two separate bodies: the inner ball (1/15) and the shell 2 < r < 3 with its outer wall open, weighted by volume.

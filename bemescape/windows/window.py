@@ -340,7 +340,9 @@ def _plain(shape: Shape) -> dict[str, Any]:
             "radius_um": shape.radius_um,
             "farthest_um": shape.farthest_um,
         }
-    return {"kind": type(shape).__name__.lower(), **vars(shape)}
+    # Lists, as JSON gives them back: a result read from disk equals the one that was saved.
+    plain = {key: list(value) if isinstance(value, tuple) else value for key, value in vars(shape).items()}
+    return {"kind": type(shape).__name__.lower(), **plain}
 
 
 def _position(value: Sequence[float], what: str) -> Position:

@@ -76,7 +76,7 @@ def test_mean_distances_of_far_panels_are_right_to_second_order(tilt):
     angles = 2.0 * np.pi * np.arange(3) / 3.0
     corners = np.column_stack([np.cos(angles), np.sin(angles), np.zeros(3)])
     source = make_panels((corners @ turn.T)[None])
-    target = make_panels((corners + [3.0, 5.0, 4.0])[None])
+    target = make_panels((corners + np.array([3.0, 5.0, 4.0]))[None])
     n = 20
     s, t = np.meshgrid((np.arange(n) + 0.5) / n, (np.arange(n) + 0.5) / n)
     s = np.sqrt(s.ravel())

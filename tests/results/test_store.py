@@ -277,3 +277,16 @@ def test_a_real_result_answers_after_loading_as_before(tmp_path):
     np.testing.assert_array_equal(loaded.time_at(inside), solved.time_at(inside))
     assert loaded.summary == summarise(loaded) == solved.summary
     assert repr(loaded) == repr(solved)
+
+
+def test_a_damaged_part_of_a_result_is_refused(tmp_path):
+    ball = trimesh.creation.icosphere(2, 0.5)
+    surface = Surface(ball.vertices, ball.faces, {"wall": np.ones(len(ball.faces))}, name="ball")
+    solved = solve_escape(surface, [Window.labels("wall", array="wall", value=1)], "20 um^2/s", target=0.2)
+    saved = solved.save(tmp_path / "ball", pictures=False)
+    with np.load(saved / "result.npz") as archive:
+        arrays = dict(archive)
+    arrays["spread.panel_second_moment_s2"] = arrays["spread.panel_second_moment_s2"][:-1]
+    np.savez(saved / "result.npz", **arrays)
+    with pytest.raises(SettingsError, match=r"spread\.panel_second_moment_s2"):
+        load_result(saved)
