@@ -12,7 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.sparse import coo_matrix, csr_matrix
+from scipy.sparse import csr_matrix
 from scipy.sparse.csgraph import connected_components
 from scipy.spatial import cKDTree
 
@@ -146,29 +146,7 @@ def _cut(mesh: Mesh, patches: Sequence[Patch], chosen: dict[int, _Inside]) -> tu
     by_place = owner[within[nearest.query(middles)[1]]] if len(middles) else of_corner
     face_patch = np.full(len(cut.faces), -1)
     face_patch[candidates] = np.where(of_corner >= 0, of_corner, by_place)
-    return cut, _joined(cut, face_patch, patches, chosen)
-
-
-def _joined(mesh: Mesh, face_patch: Ints, patches: Sequence[Patch], chosen: dict[int, _Inside]) -> Ints:
-    """Only faces that edges join to the pieces of their patch: none that merely touches at a corner."""
-    index = np.flatnonzero(face_patch >= 0)
-    if not len(index):
-        return face_patch
-    _, of_face = mesh_edges(mesh.faces[index])
-    # Faces of different patches are not joined: each edge is taken once for every patch.
-    key = np.unique(of_face.ravel() * np.int64(len(patches)) + np.repeat(face_patch[index], 3), return_inverse=True)[1]
-    rows = np.repeat(np.arange(len(index)), 3)
-    incidence = coo_matrix((np.ones(len(rows)), (rows, key)), shape=(len(index), int(key.max()) + 1))
-    label = connected_components(incidence @ incidence.T, directed=False)[1]
-    middles = mesh.vertices[mesh.faces[index]].mean(axis=1)
-    kept = np.zeros(len(index), bool)
-    for number in chosen:
-        own = np.flatnonzero(face_patch[index] == number)
-        if len(own):
-            _, nearest = cKDTree(middles[own]).query(patches[number].starts)
-            kept[own] = np.isin(label[own], label[own][nearest])
-    face_patch[index[~kept]] = -1
-    return face_patch
+    return cut, face_patch
 
 
 def _level(patch: Patch, points: Floats) -> Floats:
