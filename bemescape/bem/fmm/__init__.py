@@ -45,7 +45,7 @@ _FOUR_PI = 4.0 * math.pi
 
 #: Tolerance -> degree of the expansions, tolerance of a single translation, panels in a box at most. The first is the
 #: error of sums over dipoles, relative, root mean square, on the sets of the tests; charges are a tenth of that.
-_PRESETS = {1e-4: (8, 1e-4, 64), 1e-5: (10, 1e-5, 80), 1e-6: (12, 1e-6, 110)}
+_PRESETS = {1e-4: (9, 2e-5, 64), 1e-5: (11, 2e-6, 64), 1e-6: (13, 2e-7, 100)}
 #: Sources that are fewer than this part of all get a tree of their own; so many such trees are kept.
 _SUBSET, _SUBSETS_KEPT = 0.6, 4
 #: Panels with a radius above this part of their leaf's side are summed directly, as sources and as targets.
@@ -130,7 +130,7 @@ class PointSums:
         return self._checked(far.lifted_single_layer, self._lifted, used, density)
 
     def double_many(self, used: Ints, densities: Floats) -> Floats:
-        """`double` of every column of densities (k, r) -> (t, r); zeros cost nothing, as with indicators of clusters."""
+        """`double` of every column of densities (k, r) -> (t, r); zeros, as in indicators of clusters, cost nothing."""
         out = np.zeros((len(self._at.points), densities.shape[1]))
         sources, used, densities = self._select(used, densities)
         count = coefficient_count(self._operators.degree)
@@ -279,7 +279,6 @@ class PointSums:
         multipole = np.zeros((len(s.tree), columns, count), np.float32)
         local = np.zeros((len(t.tree), columns, count), np.float32)
         leaves = s.tree.leaves
-        one_each = np.arange(len(leaves) + 1)
         entered = np.flatnonzero(np.diff(lists.up_first))
         entered_first = np.append(lists.up_first[entered], len(lists.up))
         live = np.zeros((len(s.tree), columns), bool)
@@ -289,8 +288,8 @@ class PointSums:
                 end = begin + len(strength)
                 part = np.zeros((len(s.tree), end - begin, count), np.float32)
                 into_leaves(
-                    o.degree, self._factors, even_chunks(s.leaf_last - s.leaf_first, _CHUNKS), leaves, one_each,
-                    leaves, s.tree.first, s.tree.last, s.centres, s.scales, s.points, s.shape, strength, part,
+                    o.degree, self._factors, even_chunks(s.leaf_last - s.leaf_first, _CHUNKS), leaves,
+                    s.tree.first, s.tree.last, s.centres, s.scales, s.points, s.shape, strength, part,
                 )  # fmt: skip
                 multipole[:, begin:end] = part
                 if len(entered):
@@ -314,13 +313,21 @@ class PointSums:
         """Potentials (columns, t) at the targets in the order of their tree; with `slopes` the eight of `_lifted`."""
         t, s, lists = self._targets, sources.side, sources.lists
         out = np.zeros((8 if slopes else local.shape[1], len(t.points)), np.float32)
-        work = (t.leaf_last - t.leaf_first) * (1 + np.diff(lists.down_first))
+        looking = np.flatnonzero(np.diff(lists.down_first))
+        looking_first = np.append(lists.down_first[looking], len(lists.down))
+        at_leaves = passes.slopes_at_leaves if slopes else passes.values_at_leaves
+        from_smaller = passes.slopes_from_smaller if slopes else passes.values_from_smaller
         with one_blas_thread():
-            (passes.slopes_at_points if slopes else passes.values_at_points)(
-                self._operators.degree, self._factors, even_chunks(work, _CHUNKS), t.tree.leaves,
-                t.tree.first, t.tree.last, t.centres, t.scales, t.points, t.shape, local,
-                lists.down_first, lists.down, s.centres, s.scales, multipole, out,
+            at_leaves(
+                self._operators.degree, self._factors, even_chunks(t.leaf_last - t.leaf_first, _CHUNKS), t.tree.leaves,
+                t.tree.first, t.tree.last, t.centres, t.scales, t.points, t.shape, local, out,
             )  # fmt: skip
+            if len(looking):
+                from_smaller(
+                    self._operators.degree, self._factors, even_chunks(np.diff(looking_first), _CHUNKS),
+                    t.tree.leaves[looking], looking_first, lists.down, t.tree.first, t.tree.last, t.points, t.shape,
+                    s.centres, s.scales, multipole, out,
+                )  # fmt: skip
         return out
 
     def _restored(self, sorted_values: Floats | Singles, factor: float) -> Floats:

@@ -4,9 +4,10 @@ from __future__ import annotations
 
 from contextlib import AbstractContextManager
 from functools import cache
+from importlib import import_module
 from typing import Any
 
-from threadpoolctl import ThreadpoolController
+from threadpoolctl import ThreadpoolController  # type: ignore[import-untyped]
 
 __all__ = ["one_blas_thread"]
 
@@ -14,8 +15,7 @@ __all__ = ["one_blas_thread"]
 @cache
 def _controller() -> Any:
     # The compiled loops call the library through scipy, which must be loaded before it can be found.
-    import scipy.linalg.cython_blas
-
+    import_module("scipy.linalg.cython_blas")
     return ThreadpoolController()
 
 

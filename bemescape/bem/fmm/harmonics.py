@@ -10,9 +10,9 @@ R_1,−1 = y by
     R_m,m + i R_m,−m = √((2m−1)/2m) (x + iy) (R_m−1,m−1 + i R_m−1,1−m),                         m > 1,
     √((l+1)²−m²) R_l+1,m = (2l+1) z R_lm − √(l²−m²) r² R_l−1,m.
 
-Sources: Hobson (1931), The theory of spherical and ellipsoidal harmonics, chapter IV; the recurrences are those of the
-associated Legendre functions, DLMF 14.10.3 and 14.7.8, in Schmidt's normalisation. Since S_lm(x) = R_lm(x/r²)/r (Kelvin's
-transform), the same recurrences with x/r² for x and 1/r² for r², begun from 1/r, give the irregular harmonics.
+Sources: Hobson (1931), The theory of spherical and ellipsoidal harmonics, chapter IV; the recurrences are those of
+the associated Legendre functions, DLMF 14.10.3 and 14.7.8, in Schmidt's normalisation. Since S_lm(x) = R_lm(x/r²)/r
+(Kelvin's transform), the same recurrences with x/r² for x and 1/r² for r², begun from 1/r, give the irregular harmonics.
 
 A panel with normal n, seen to second order, needs 1 − ½ spread ∂²/∂n² of a harmonic function, and a dipole ∂/∂n of
 that. Each quantity is therefore carried as its Taylor coefficients in t along x + t n, up to t³; the recurrences hold
@@ -29,7 +29,7 @@ from numpy.typing import NDArray
 
 __all__ = [
     "BLOCK",
-    "COLUMNS",
+    "SERIES",
     "charge_irregular",
     "charge_regular",
     "coefficient_count",
@@ -40,14 +40,13 @@ __all__ = [
     "slopes_irregular",
     "slopes_regular",
     "steps",
-    "workspace",
 ]
 
 Floats = NDArray[np.float64]
 Singles = NDArray[np.float32]
 
-#: Points are handled in blocks of this many, side by side in vector registers.
-BLOCK = 64
+#: Points are handled in blocks of this many, side by side in vector registers (see below).
+BLOCK = 96
 
 
 def coefficient_count(degree: int) -> int:
@@ -96,23 +95,22 @@ def _harmonics(points: Floats, square: Floats, start: Floats, degree: int) -> Fl
     return out
 
 
-def workspace(degree: int) -> Singles:
-    """Work array for the compiled functions: power series (rows, 4, BLOCK)."""
-    return np.zeros((COLUMNS + 2 * (degree + 1), 4, BLOCK), np.float32)
+# Rows of the power series: of x, y, z, of r² (or 1/r²) and of the two harmonics with m = l; the last holds the spread.
+_X, _Y, _Z, _SQUARE, _COS, _SIN, _SPREAD = range(7)
+SERIES = 7
 
-
-# Rows of the work array: the power series of x, y, z, of r² (or 1/r²) and of the two harmonics with m = l; then for one
-# m at a time the harmonics from l = m upwards, cosines first. Row numbers that vary are unsigned: numba would otherwise
-# allow for negative ones, and the loops over the block would not vectorise. Nor would they if their length were a constant:
-# LLVM would unroll them first.
-_X, _Y, _Z, _SQUARE, _COS, _SIN, COLUMNS = range(7)
+# Loops over a block vectorise only with unsigned row numbers (numba allows for negative ones otherwise), with a length
+# that is no constant (LLVM would unroll the loop first), and if they are long: they begin with a check that rows lie
+# apart, and short ones would take the scalar way. Hence whole blocks always, of 96 (measured: 64 are
+# too few for dipoles).
 _ONE_BELOW, _TWO_BELOW = np.uintp(1), np.uintp(2)
+_compiled = njit(cache=True, fastmath=True, error_model="numpy")
 
 # What is written, from the coefficients of the power series.
 _CHARGE, _DIPOLE, _SLOPES = 1, 2, 3
 
 
-def _weights(kind, far):
+def _weights(kind, *, far):
     """A compiled function that writes the harmonics of one block of points.
 
     `kind`: _CHARGE writes f − ½ spread f″, _DIPOLE f′ − ½ spread f‴, _SLOPES three layers: the first as _CHARGE, then f
@@ -120,13 +118,13 @@ def _weights(kind, far):
     """
     dipole = kind == _DIPOLE
 
-    @njit(cache=True, fastmath=True, error_model="numpy")
-    def begin(points, w):
+    @_compiled
+    def begin(points, width, w):
         """Series of the coordinates, of r² or 1/r², and of R_00 or S_00."""
         zero, one, two, three, five = (
             np.float32(0.0), np.float32(1.0), np.float32(2.0), np.float32(3.0), np.float32(5.0),
         )  # fmt: skip
-        for k in range(w.shape[2]):
+        for k in range(width):
             x, y, z = points[0, k], points[1, k], points[2, k]
             nx, ny, nz = points[3, k], points[4, k], points[5, k]
             square = x * x + y * y + z * z
@@ -153,13 +151,13 @@ def _weights(kind, far):
                 w[_X, 1, k], w[_Y, 1, k], w[_Z, 1, k] = nx, ny, nz
                 w[_SQUARE, 0, k], w[_SQUARE, 1, k], w[_SQUARE, 2, k] = square, slope, one
                 w[_COS, 0, k], w[_COS, 1, k], w[_COS, 2, k], w[_COS, 3, k] = one, zero, zero, zero
-            for order in range(4):
-                w[_SIN, order, k] = zero
+            w[_SIN, 0, k], w[_SIN, 1, k], w[_SIN, 2, k], w[_SIN, 3, k] = zero, zero, zero, zero
+            w[_SPREAD, 0, k] = points[6, k]
 
-    @njit(cache=True, fastmath=True, error_model="numpy")
-    def turn(w, factor):
+    @_compiled
+    def turn(width, w, factor):
         """Next harmonics with m = l: (cos + i sin) (x + i y), up to `factor`."""
-        for k in range(w.shape[2]):
+        for k in range(width):
             x0, x1, y0, y1 = w[_X, 0, k], w[_X, 1, k], w[_Y, 0, k], w[_Y, 1, k]
             c0, c1, c2 = w[_COS, 0, k], w[_COS, 1, k], w[_COS, 2, k]
             s0, s1, s2 = w[_SIN, 0, k], w[_SIN, 1, k], w[_SIN, 2, k]
@@ -184,65 +182,72 @@ def _weights(kind, far):
                 w[_COS, 3, k], w[_SIN, 3, k] = factor * re3, factor * im3
             w[_COS, 2, k], w[_SIN, 2, k] = factor * re, factor * im
 
-    @njit(cache=True, fastmath=True, error_model="numpy")
-    def climb(points, w, row, up, down, out, number):
+    @_compiled
+    def climb(width, w, column, row, up, down, out, number):
         """The harmonic in `row` from those one and two rows below, and what is wanted of it."""
         below, lower = row - _ONE_BELOW, row - _TWO_BELOW
         three = np.float32(3.0)
-        for k in range(w.shape[2]):
+        for k in range(width):
             z0, z1 = up * w[_Z, 0, k], up * w[_Z, 1, k]
             q0, q1, q2 = down * w[_SQUARE, 0, k], down * w[_SQUARE, 1, k], down * w[_SQUARE, 2, k]
-            a0, a1, a2 = w[below, 0, k], w[below, 1, k], w[below, 2, k]
-            b0, b1, b2 = w[lower, 0, k], w[lower, 1, k], w[lower, 2, k]
+            a0, a1, a2 = column[below, 0, k], column[below, 1, k], column[below, 2, k]
+            b0, b1, b2 = column[lower, 0, k], column[lower, 1, k], column[lower, 2, k]
             f0 = z0 * a0 - q0 * b0
             f1 = z0 * a1 + z1 * a0 - q0 * b1 - q1 * b0
             f2 = z0 * a2 + z1 * a1 - q0 * b2 - q1 * b1 - q2 * b0
             if far:
                 z2 = up * w[_Z, 2, k]
                 f2 += z2 * a0
-            w[row, 0, k], w[row, 1, k], w[row, 2, k] = f0, f1, f2
+            column[row, 0, k], column[row, 1, k], column[row, 2, k] = f0, f1, f2
             if dipole:
-                f3 = z0 * w[below, 3, k] + z1 * a2 - q0 * w[lower, 3, k] - q1 * b2 - q2 * b1
+                f3 = z0 * column[below, 3, k] + z1 * a2 - q0 * column[lower, 3, k] - q1 * b2 - q2 * b1
                 if far:
                     f3 += z2 * a1 + up * w[_Z, 3, k] * a0 - down * w[_SQUARE, 3, k] * b0
-                w[row, 3, k] = f3
-                out[0, number, k] = f1 - three * points[6, k] * f3
+                column[row, 3, k] = f3
+                out[0, number, k] = f1 - three * w[_SPREAD, 0, k] * f3
             else:
-                out[0, number, k] = f0 - points[6, k] * f2
+                out[0, number, k] = f0 - w[_SPREAD, 0, k] * f2
                 if kind == _SLOPES:
                     out[1, number, k], out[2, number, k] = f0, f1
 
-    @njit(cache=True, fastmath=True, error_model="numpy")
-    def write(points, w, row, out, number):
+    @_compiled
+    def write(width, w, column, row, out, number):
         three = np.float32(3.0)
-        for k in range(w.shape[2]):
+        for k in range(width):
             if dipole:
-                out[0, number, k] = w[row, 1, k] - three * points[6, k] * w[row, 3, k]
+                out[0, number, k] = column[row, 1, k] - three * w[_SPREAD, 0, k] * column[row, 3, k]
             else:
-                out[0, number, k] = w[row, 0, k] - points[6, k] * w[row, 2, k]
+                out[0, number, k] = column[row, 0, k] - w[_SPREAD, 0, k] * column[row, 2, k]
                 if kind == _SLOPES:
-                    out[1, number, k], out[2, number, k] = w[row, 0, k], w[row, 1, k]
+                    out[1, number, k], out[2, number, k] = column[row, 0, k], column[row, 1, k]
 
-    @njit(cache=True, fastmath=True, error_model="numpy")
-    def run(points, degree, factors, w, out):
-        """Harmonics of a block: points (7, BLOCK) as x, y, z, normal, spread -> out (layers, count, BLOCK)."""
-        begin(points, w)
+    @_compiled
+    def run(points, degree, factors, w, column, out):
+        """Harmonics at a block of points (7, BLOCK): x, y, z, normal, spread.
+
+        They are written to out (layers, count, BLOCK); w (SERIES, 4, BLOCK) and column (2 degree + 3, 4, BLOCK) are
+        work arrays, the latter for the harmonics of one m at a time, cosines first, from l = m upwards.
+        """
+        width = points.shape[1]
+        begin(points, width, w)
         for m in range(degree + 1):
             if m > 0:
-                turn(w, np.float32(math.sqrt((2.0 * m - 1.0) / (2.0 * m)) if m > 1 else 1.0))
+                turn(width, w, np.float32(math.sqrt((2.0 * m - 1.0) / (2.0 * m)) if m > 1 else 1.0))
             for side in range(2 if m > 0 else 1):
-                # The row two below the first is never reached with a factor other than 0, but must be finite: it is.
-                first = COLUMNS + side * (degree + 1)
+                # Above the first row there is another, whatever it holds: its factor is 0.
+                first = 1 + side * (degree + 1)
                 sign = m if side == 0 else -m
-                w[first] = w[_COS + side]
-                write(points, w, np.uintp(first), out, np.uintp(m * m + m + sign))
-                for l in range(m + 1, degree + 1):
-                    row, number = np.uintp(first + l - m), np.uintp(l * l + l + sign)
-                    climb(points, w, row, factors[0, l, m], factors[1, l, m], out, number)
+                for order in range(4):
+                    for k in range(width):
+                        column[first, order, k] = w[_COS + side, order, k]
+                write(width, w, column, np.uintp(first), out, np.uintp(m * m + m + sign))
+                for ell in range(m + 1, degree + 1):
+                    row, number = np.uintp(first + ell - m), np.uintp(ell * ell + ell + sign)
+                    climb(width, w, column, row, factors[0, ell, m], factors[1, ell, m], out, number)
 
     return run
 
 
-charge_regular, charge_irregular = _weights(_CHARGE, False), _weights(_CHARGE, True)
-dipole_regular, dipole_irregular = _weights(_DIPOLE, False), _weights(_DIPOLE, True)
-slopes_regular, slopes_irregular = _weights(_SLOPES, False), _weights(_SLOPES, True)
+charge_regular, charge_irregular = _weights(_CHARGE, far=False), _weights(_CHARGE, far=True)
+dipole_regular, dipole_irregular = _weights(_DIPOLE, far=False), _weights(_DIPOLE, far=True)
+slopes_regular, slopes_irregular = _weights(_SLOPES, far=False), _weights(_SLOPES, far=True)

@@ -1,16 +1,16 @@
 """Translations between boxes: matrices that depend on nothing but the degree, kept on disk.
 
 Coordinates are centred on a box and scaled by its side, so that one set serves every level. An expansion about the
-source box (multipole) holds Σ q R_lm(y), one about the target box (local) the coefficients of R_lm(x); with 1/|x − y| in
-units of the side,
+source box (multipole) holds Σ q R_lm(y), one about the target box (local) the coefficients of R_lm(x); with 1/|x − y|
+in units of the side,
 
     child multipole → parent multipole:  R_lm of the parent in those of the child: y = ½ y_child + corner/4;
     multipole → local at an offset d:     S_lm(x + d) as a series in R_lm(x);
     parent local → child local:           R_lm of the parent as a series in those of the child.
 
 Each series follows from values on a sphere about the new centre: harmonics of different degree are orthogonal there, so
-Σ_k w_k f(ρ u_k) R_lm(u_k) (2l+1)/4π = ρ^l f_lm with any rule exact for the degrees that occur. For translations to a
-local series ρ is a quarter of the smallest distance: what the rule aliases is below 1e-13.
+Σ_k w_k f(ρ u_k) R_lm(u_k) (2l+1)/4π = ρ^l f_lm with any rule exact for the degrees that occur. For translations to
+a local series ρ is a quarter of the smallest distance: what the rule aliases is below 1e-13.
 
 A far translation is cut to the lowest degree whose error stays within the tolerance: most of the 316 offsets are
 farther than the closest, and their matrices much smaller.
@@ -123,16 +123,16 @@ def _sufficient_degree(matrix: Floats, offset: Floats, degree: int, tolerance: f
 
 def _mirror(degree: int, offset: Floats) -> Floats:
     """Factors (count,) ±1 that the harmonics take where the negative components of `offset` are reflected."""
-    l = np.repeat(np.arange(degree + 1), 2 * np.arange(degree + 1) + 1)
-    m = np.arange(coefficient_count(degree)) - l * l - l
+    ell = np.repeat(np.arange(degree + 1), 2 * np.arange(degree + 1) + 1)
+    m = np.arange(coefficient_count(degree)) - ell * ell - ell
     flip_x, flip_y, flip_z = offset < 0
-    factors = np.ones(len(l))
+    factors = np.ones(len(ell))
     if flip_x:
         factors *= np.where(m >= 0, 1.0, -1.0) * (-1.0) ** m
     if flip_y:
         factors *= np.where(m >= 0, 1.0, -1.0)
     if flip_z:
-        factors *= (-1.0) ** (l + m)
+        factors *= (-1.0) ** (ell + m)
     return factors
 
 

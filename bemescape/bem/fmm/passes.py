@@ -14,7 +14,7 @@ from numba import njit, prange
 
 from bemescape.bem.fmm.harmonics import (
     BLOCK,
-    COLUMNS,
+    SERIES,
     charge_irregular,
     charge_regular,
     dipole_irregular,
@@ -31,8 +31,10 @@ __all__ = [
     "move_across",
     "move_down",
     "move_up",
-    "slopes_at_points",
-    "values_at_points",
+    "slopes_at_leaves",
+    "slopes_from_smaller",
+    "values_at_leaves",
+    "values_from_smaller",
 ]
 
 #: Rows multiplied at a time.
@@ -40,61 +42,117 @@ _BATCH = 256
 #: Chunks of boxes within one level, on the way up and down.
 _LEVEL_CHUNKS = 16
 _SMALL_LEVEL = 256
+_UPWARDS, _DOWNWARDS = True, False
 
 
 @njit(cache=True, fastmath=True, error_model="numpy")
-def _load_block(block, first, size, centre, scale, points, shape):
-    """Panels first … first + size in units of a box; the rest of the block is a harmless point."""
-    area = np.float32(scale * scale)
-    for k in range(BLOCK):
-        j = first + min(k, size - 1)
-        block[0, k] = np.float32((points[j, 0] - centre[0]) * scale)
-        block[1, k] = np.float32((points[j, 1] - centre[1]) * scale)
-        block[2, k] = np.float32((points[j, 2] - centre[2]) * scale)
-        block[3, k], block[4, k], block[5, k] = shape[j, 0], shape[j, 1], shape[j, 2]
-        block[6, k] = shape[j, 3] * area
+def _load_point(block, k, j, centre, scale, points, shape):
+    """Panel j as point k of a block, in units of a box."""
+    block[0, k] = np.float32((points[j, 0] - centre[0]) * scale)
+    block[1, k] = np.float32((points[j, 1] - centre[1]) * scale)
+    block[2, k] = np.float32((points[j, 2] - centre[2]) * scale)
+    block[3, k], block[4, k], block[5, k] = shape[j, 0], shape[j, 1], shape[j, 2]
+    block[6, k] = shape[j, 3] * np.float32(scale * scale)
 
 
 @njit(cache=True)
-def _work(degree):
-    return np.zeros((COLUMNS + 2 * (degree + 1), 4, BLOCK), np.float32)
+def _load_box(block, first, size, centre, scale, points, shape):
+    """A block of panels seen from one box; the last is repeated to fill it."""
+    for k in range(BLOCK):
+        _load_point(block, k, first + min(k, size - 1), centre, scale, points, shape)
 
 
-def _gather(weights, dipole):
-    """A compiled pass from panels to expansions: about their own leaf, or about smaller target boxes that they enter."""
+@njit(cache=True)
+def _load_leaves(block, start, size, leaf, number, leaves, last, centres, scales, points, shape):
+    """A block of panels in a row, each seen from its own leaf; which (by number) is written to `leaf`."""
+    for k in range(BLOCK):
+        j = start + min(k, size - 1)
+        while j >= last[leaves[number]]:
+            number += 1
+        leaf[k] = number
+        _load_point(block, k, j, centres[leaves[number]], scales[leaves[number]], points, shape)
+
+
+@njit(cache=True)
+def _work(degree, layers):
+    """Arrays for a block: points, power series, one m of the harmonics, all of them."""
+    count = (degree + 1) * (degree + 1)
+    return (
+        np.zeros((7, BLOCK), np.float32), np.zeros((SERIES, 4, BLOCK), np.float32),
+        np.zeros((2 * degree + 3, 4, BLOCK), np.float32), np.zeros((layers, count, BLOCK), np.float32),
+    )  # fmt: skip
+
+
+@njit(cache=True, fastmath=True, error_model="numpy")
+def _add_moments(weight, strengths, unit, start, begin, end, charge, rows):
+    """Add to rows (columns, count) the panels begin … end of a block that starts with panel `start`."""
+    charge[:] = 0.0
+    for c in range(len(strengths)):
+        for k in range(begin, end):
+            charge[c, k] = unit * strengths[c, start + k]
+    if len(strengths) == 1:
+        for i in range(weight.shape[1]):
+            total = np.float32(0.0)
+            for k in range(weight.shape[2]):
+                total += charge[0, k] * weight[0, i, k]
+            rows[0, i] += total
+    else:
+        sums = np.dot(charge, weight[0].T)
+        for c in range(len(strengths)):
+            rows[c] += sums[c]
+
+
+def _from_panels(weights, far_weights, dipole):
+    """Two compiled passes from panels to expansions: of their own leaf, and of smaller target boxes that they enter."""
+
+    # Kernels in units of the box: 1/side for charges, another for the slope of dipoles.
+    @njit(cache=True)
+    def unit(scale):
+        return np.float32(scale * scale if dipole else scale)
 
     @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
-    def run(
+    def up(degree, factors, chunks, leaves, first, last, centres, scales, points, shape, strengths, out):
+        for chunk in prange(len(chunks) - 1):
+            block, series, column, weight = _work(degree, 1)
+            charge, leaf = np.empty((len(strengths), BLOCK), np.float32), np.empty(BLOCK, np.int64)
+            number = chunks[chunk]
+            start, stop = first[leaves[number]], last[leaves[chunks[chunk + 1] - 1]]
+            while start < stop and number < chunks[chunk + 1]:
+                size = min(BLOCK, stop - start)
+                _load_leaves(block, start, size, leaf, number, leaves, last, centres, scales, points, shape)
+                weights(block, degree, factors, series, column, weight)
+                begin = 0
+                while begin < size:
+                    number = leaf[begin]
+                    b = leaves[number]
+                    end = min(size, last[b] - start)
+                    _add_moments(weight, strengths, unit(scales[b]), start, begin, end, charge, out[b])
+                    begin = end
+                start += size
+
+    @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
+    def across(
         degree, factors, chunks, into, item_first, items, first, last, centres, scales, points, shape, strengths, out
     ):
-        """Row `number` adds the panels of the boxes items[item_first[number]: …] to the expansion of into[number]."""
-        columns = strengths.shape[0]
+        """Box into[number] is entered by the panels of the boxes items[item_first[number]: …]."""
         for chunk in prange(len(chunks) - 1):
-            block, work = np.zeros((7, BLOCK), np.float32), _work(degree)
-            weight = np.empty((1, (degree + 1) * (degree + 1), BLOCK), np.float32)
-            charge = np.empty((columns, BLOCK), np.float32)
+            block, series, column, weight = _work(degree, 1)
+            charge = np.empty((len(strengths), BLOCK), np.float32)
             for number in range(chunks[chunk], chunks[chunk + 1]):
                 b = into[number]
-                # Kernels in units of the box: 1/side for charges, another for the slope of dipoles.
-                unit = np.float32(scales[b] * scales[b] if dipole else scales[b])
                 for item in range(item_first[number], item_first[number + 1]):
                     source = items[item]
                     for start in range(first[source], last[source], BLOCK):
                         size = min(BLOCK, last[source] - start)
-                        _load_block(block, start, size, centres[b], scales[b], points, shape)
-                        weights(block, degree, factors, work, weight)
-                        for c in range(columns):
-                            for k in range(BLOCK):
-                                charge[c, k] = unit * strengths[c, start + k] if k < size else np.float32(0.0)
-                        sums = np.dot(charge, weight[0].T)
-                        for c in range(columns):
-                            out[b, c] += sums[c]
+                        _load_box(block, start, size, centres[b], scales[b], points, shape)
+                        far_weights(block, degree, factors, series, column, weight)
+                        _add_moments(weight, strengths, unit(scales[b]), start, 0, size, charge, out[b])
 
-    return run
+    return up, across
 
 
-charges_up, charges_across = (_gather(w, False) for w in (charge_regular, charge_irregular))
-dipoles_up, dipoles_across = (_gather(w, True) for w in (dipole_regular, dipole_irregular))
+charges_up, charges_across = _from_panels(charge_regular, charge_irregular, dipole=False)
+dipoles_up, dipoles_across = _from_panels(dipole_regular, dipole_irregular, dipole=True)
 
 
 @njit(cache=True, fastmath=True, error_model="numpy")
@@ -168,12 +226,12 @@ def move_up(tree, to_parent, live, rows):
     for level in range(len(tree.level_first) - 2, 0, -1):
         boxes = slice(tree.level_first[level], tree.level_first[level + 1])
         np.logical_or.at(live, tree.parent[boxes], live[boxes])
-    _between_all_levels(tree.level_first, tree.child, to_parent, live, rows, True)
+    _between_all_levels(tree.level_first, tree.child, to_parent, live, rows, _UPWARDS)
 
 
 def move_down(tree, to_child, rows):
     """Locals (boxes, columns, count) of all boxes: each adds its parent's, in place, level by level."""
-    _between_all_levels(tree.level_first, tree.child, to_child, np.ones(rows.shape[:2], np.bool_), rows, False)
+    _between_all_levels(tree.level_first, tree.child, to_child, np.ones(rows.shape[:2], np.bool_), rows, _DOWNWARDS)
 
 
 @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
@@ -192,51 +250,76 @@ def move_across(far_first, far_target, far_source, far_degree, matrix_first, mat
                 )
 
 
-def _scatter(near_weights, far_weights, slopes):
-    """A compiled pass from expansions to targets: locals of their leaf, and multipoles of smaller source boxes."""
+def _to_points(weights, far_weights, slopes):
+    """Two compiled passes from expansions to targets: locals of their leaf, and multipoles of smaller source boxes.
+
+    They add to out (values, n); with `slopes` these are the values of four columns, slopes of three, value of one.
+    """
+
+    @njit(cache=True, fastmath=True, error_model="numpy")
+    def add(weight, rows, scale, start, begin, end, out):
+        if slopes:
+            values, plain = np.dot(rows[:4], weight[0]), np.dot(rows[4:5], weight[1])
+            steep = np.dot(rows[1:4], weight[2])
+            for k in range(begin, end):
+                for c in range(4):
+                    out[c, start + k] += values[c, k]
+                for c in range(3):
+                    out[4 + c, start + k] += np.float32(scale) * steep[c, k]
+                out[7, start + k] += plain[0, k]
+        elif len(rows) == 1:
+            value = np.zeros(BLOCK, np.float32)
+            for i in range(weight.shape[1]):
+                coefficient = rows[0, i]
+                for k in range(weight.shape[2]):
+                    value[k] += coefficient * weight[0, i, k]
+            for k in range(begin, end):
+                out[0, start + k] += value[k]
+        else:
+            values = np.dot(rows, weight[0])
+            for c in range(len(rows)):
+                for k in range(begin, end):
+                    out[c, start + k] += values[c, k]
 
     @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
-    def run(
-        degree, factors, chunks, leaves, first, last, centres, scales, points, shape, local,
-        down_first, down, source_centres, source_scales, multipole, out,
-    ):  # fmt: skip
-        """Add to out (values, n); with `slopes` the values are those of four columns, then slopes of three, then one."""
-        columns = local.shape[1]
+    def at_leaves(degree, factors, chunks, leaves, first, last, centres, scales, points, shape, local, out):
         for chunk in prange(len(chunks) - 1):
-            block, work = np.zeros((7, BLOCK), np.float32), _work(degree)
-            weight = np.empty((3 if slopes else 1, (degree + 1) * (degree + 1), BLOCK), np.float32)
+            block, series, column, weight = _work(degree, 3 if slopes else 1)
+            leaf = np.empty(BLOCK, np.int64)
+            number = chunks[chunk]
+            start, stop = first[leaves[number]], last[leaves[chunks[chunk + 1] - 1]]
+            while start < stop and number < chunks[chunk + 1]:
+                size = min(BLOCK, stop - start)
+                _load_leaves(block, start, size, leaf, number, leaves, last, centres, scales, points, shape)
+                weights(block, degree, factors, series, column, weight)
+                begin = 0
+                while begin < size:
+                    number = leaf[begin]
+                    b = leaves[number]
+                    end = min(size, last[b] - start)
+                    add(weight, local[b], scales[b], start, begin, end, out)
+                    begin = end
+                start += size
+
+    @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
+    def from_smaller(
+        degree, factors, chunks, leaves, item_first, items, first, last, points, shape, centres, scales, multipole, out
+    ):
+        """The points of leaf leaves[number] see the boxes items[item_first[number]: …]."""
+        for chunk in prange(len(chunks) - 1):
+            block, series, column, weight = _work(degree, 3 if slopes else 1)
             for number in range(chunks[chunk], chunks[chunk + 1]):
                 leaf = leaves[number]
-                for start in range(first[leaf], last[leaf], BLOCK):
-                    size = min(BLOCK, last[leaf] - start)
-                    for item in range(down_first[number] - 1, down_first[number + 1]):
-                        if item < down_first[number]:
-                            centre, scale, rows = centres[leaf], scales[leaf], local[leaf]
-                            _load_block(block, start, size, centre, scale, points, shape)
-                            near_weights(block, degree, factors, work, weight)
-                        else:
-                            b = down[item]
-                            centre, scale, rows = source_centres[b], source_scales[b], multipole[b]
-                            _load_block(block, start, size, centre, scale, points, shape)
-                            far_weights(block, degree, factors, work, weight)
-                        if slopes:
-                            values = np.dot(rows[:4], weight[0])
-                            steep = np.dot(rows[1:4], weight[2])
-                            plain = np.dot(rows[4:5], weight[1])
-                            for k in range(size):
-                                for c in range(4):
-                                    out[c, start + k] += values[c, k]
-                                for c in range(3):
-                                    out[4 + c, start + k] += np.float32(scale) * steep[c, k]
-                                out[7, start + k] += plain[0, k]
-                        else:
-                            values = np.dot(rows, weight[0])
-                            for c in range(columns):
-                                for k in range(size):
-                                    out[c, start + k] += values[c, k]
+                for item in range(item_first[number], item_first[number + 1]):
+                    b = items[item]
+                    for start in range(first[leaf], last[leaf], BLOCK):
+                        size = min(BLOCK, last[leaf] - start)
+                        _load_box(block, start, size, centres[b], scales[b], points, shape)
+                        far_weights(block, degree, factors, series, column, weight)
+                        add(weight, multipole[b], scales[b], start, 0, size, out)
 
-    return run
+    return at_leaves, from_smaller
 
 
-values_at_points = _scatter(charge_regular, charge_irregular, False)
-slopes_at_points = _scatter(slopes_regular, slopes_irregular, True)
+values_at_leaves, values_from_smaller = _to_points(charge_regular, charge_irregular, slopes=False)
+slopes_at_leaves, slopes_from_smaller = _to_points(slopes_regular, slopes_irregular, slopes=True)
