@@ -53,11 +53,10 @@ class SolverSettings:
 
 @dataclass(frozen=True, eq=False)
 class _Solution:
-    """One resolution, for D = 1, panels in the order of the mesh; `prepared` has them in an order of its own."""
+    """One resolution, for D = 1, panels in the order of the mesh."""
 
     rung: Rung
     mesh: GradedMesh
-    prepared: Prepared
     u: Floats
     q: Floats
     mean: float
@@ -147,6 +146,7 @@ def solve_escape(
     budget = settings.max_panels or max(60_000, 2 * len(surface.faces))
     ladder = Ladder(wanted, len(placement.windows))
     best: _Solution | None = None
+    prepared: Prepared | None = None
     limits: list[SizeLimit] = []
     levels: list[dict[str, float]] = []
     target_met = True
@@ -158,7 +158,8 @@ def solve_escape(
         if best is not None and len(mesh.faces) > budget:
             target_met = False
             break
-        best = _solved(placement, rung, mesh, d, settings, progress)
+        prepared = None  # two near fields at a time would double the memory
+        best, prepared = _solved(placement, rung, mesh, d, settings, progress)
         ladder.has_rims = bool((mesh.window_of < 0).any())
         ladder.record(rung, best.mean, best.balance, best.shares)
         levels.append(
@@ -169,7 +170,7 @@ def solve_escape(
                 "seconds": best.seconds,
             }
         )
-    if best is None:
+    if best is None or prepared is None:
         raise SettingsError("no resolution was solved; raise max_panels")
     estimate = ladder.estimate()
     target_met = target_met and estimate.relative_error <= wanted
@@ -180,9 +181,9 @@ def solve_escape(
             f"{estimate.relative_error:.2%} (target {wanted:.2%}); raise max_panels or accept the error"
         )
     result = _packed(placement, best, estimate, ladder.share_errors(), d)
-    order = best.prepared.panels.order
+    order = prepared.panels.order
     spread = find_spread(
-        best.prepared,
+        prepared,
         best.u[order],
         best.q[order],
         diffusion_um2_s=d,
@@ -192,8 +193,8 @@ def solve_escape(
     result = replace(result, spread=spread)
     if names is not None:
         chosen = chosen_windows(result.windows, names)
-        result = replace(result, ways_out=find_ways_out(best.prepared, result, chosen))
-    from_starts = results_from_starts(result, placement.surface, starts)
+        result = replace(result, ways_out=find_ways_out(prepared, result, chosen))
+    from_starts = results_from_starts(result, surface, starts)
     return replace(
         result,
         name=name or surface.name,
@@ -223,7 +224,7 @@ def _solved(
     d: float,
     settings: SolverSettings,
     progress: Progress,
-) -> _Solution:
+) -> tuple[_Solution, Prepared]:
     began = time.perf_counter()
     kappa = np.array([window.permeability_um_s for window in placement.windows])
     prepared = prepare(
@@ -239,10 +240,9 @@ def _solved(
             "panels: faces cross one another or the mesh is too damaged; try heal='rebuild'"
         )
     flow = np.bincount(prepared.window_of + 1, weights=-panels.areas * solution.q, minlength=len(kappa) + 1)
-    return _Solution(
+    solution_on_mesh = _Solution(
         rung=rung,
         mesh=mesh,
-        prepared=prepared,
         u=solution.u[prepared.back],
         q=solution.q[prepared.back],
         mean=mean,
@@ -251,6 +251,7 @@ def _solved(
         residuals=solution.residuals,
         seconds=time.perf_counter() - began,
     )
+    return solution_on_mesh, prepared
 
 
 def _finer_wall(solution: _Solution) -> SizeLimit:
@@ -267,7 +268,7 @@ def _packed(
 ) -> EscapeResult:
     mesh = solution.mesh
     areas, _ = triangle_areas_normals(mesh.vertices, mesh.faces)
-    exit_density = -solution.q / solution.prepared.volume
+    exit_density = -solution.q / placement.surface.volume
     windows = tuple(
         WindowResult(
             name=window.name,

@@ -25,7 +25,7 @@ def solved_once(surface, windows, *, rim=1, wall=0, ways_out=False):
         "name": "one mesh",
         "vertices": mesh.vertices,
         "faces": mesh.faces,
-        "parent_face": mesh.parent,
+        "parent_face": placement.faces_given(mesh.parent),
         "panel_window": mesh.window_of,
         "panel_time_s": solution.u[prepared.back],
         "panel_exit_density_per_um2": -solution.q[prepared.back] / volume,

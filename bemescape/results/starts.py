@@ -108,7 +108,7 @@ def results_from_starts(result: EscapeResult, surface: Surface, start: Mapping[s
     result : EscapeResult
         With its spread and ways out, as far as they are wanted.
     surface : Surface
-        The surface that was solved, whose faces `result.parent_face` counts.
+        The surface as it was given, whose faces `result.parent_face` counts.
     start : mapping
         As `check_starts` returns it.
     """

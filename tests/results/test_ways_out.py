@@ -218,6 +218,16 @@ def test_a_start_patch_by_labels_is_the_mean_over_its_faces(slab):
     assert found.mean_time_s == pytest.approx(1.0 / 12.0, rel=0.005)
 
 
+def test_a_start_patch_by_labels_means_the_same_faces_where_a_lid_cut_the_surface():
+    surface = shapes.box(cells=6, label=lambda c: int(c[0] < 1e-9))
+    lid = Window.lid("lid", point=(0.5, 0.5, 0.7), normal=(0.0, 0.0, 1.0))
+    result = solved_once(surface, [lid], rim=0)
+    patch = Window.labels("side", array="label", value=1)
+    found = results_from_starts(result, surface, {"side": patch})["side"]
+    # A prism of height 0.7 open at its top; its side sees the mean over the height, L²/3.
+    assert found.mean_time_s == pytest.approx(exact.prism_mean(0.7), rel=0.005)
+
+
 @pytest.mark.parametrize(
     ("place", "message"),
     [
