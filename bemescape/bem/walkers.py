@@ -53,10 +53,13 @@ __all__ = ["Tally", "walk"]
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-#: A walker this close to an absorbing window has left, in radii of the smallest window (√(area/π)).
-SHELL = 1e-4
+#: A walker this close to an absorbing window has left, in radii of the smallest window (√(area/π)). Measured on a
+#: square window in a cube: the mean is low by 32, 14, 5 and 1.9 % at 0.3, 0.1, 0.03 and 0.01, about twice the shell;
+#: each factor of ten costs some nine jumps more. Here that leaves 2e-5, less than any affordable standard error.
+SHELL = 1e-5
 #: Radius of the region of a walker on a partly open window, in the smaller of 1/μ and the window's radius, and the
-#: part of it that is kept next to the rim.
+#: part of it that is kept next to the rim. Measured on the same window with μ = 10: 1.0 and 0.3 differ from 0.05 by
+#: less than 1 %, the standard error then, so the second-order rest at 0.05 is far below.
 OWN_REGION, OWN_REGION_AT_RIM = 0.05, 0.05
 #: Edges with a smaller turn (sine) count as flat: between parts of one flat face it is rounding.
 _FLAT = 1e-6
