@@ -16,15 +16,9 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.sparse import csr_matrix
 
-from bemescape.bem.far import (
-    cluster_double_layer,
-    double_layer,
-    lifted_single_layer,
-    panel_targets,
-    single_layer,
-)
 from bemescape.bem.near import build_near_field
 from bemescape.bem.panels import Panels
+from bemescape.bem.sums import FarSums, far_sums
 
 __all__ = ["EscapeOperator", "assemble"]
 
@@ -39,6 +33,7 @@ class EscapeOperator:
     Attributes
     ----------
     panels : Panels
+    sums : FarSums
     window_of : (m,) int64
         Window number of each panel, −1 on the wall.
     resistance : (m,) float64
@@ -52,6 +47,7 @@ class EscapeOperator:
     """
 
     panels: Panels
+    sums: FarSums
     window_of: Ints
     resistance: Floats
     near_double: csr_matrix
@@ -66,23 +62,22 @@ class EscapeOperator:
 
     def single(self, q_window: Floats) -> Floats:
         """V q on all panels, for q (w,) on the window panels."""
-        far = single_layer(panel_targets(self.panels), self.panels, np.flatnonzero(self.is_window), q_window)
+        far = self.sums.single(np.flatnonzero(self.is_window), q_window)
         return np.asarray(far + self.near_single @ q_window.astype(np.float32))
 
     def half_plus_double(self, u: Floats) -> Floats:
         """(½ + K) u on all panels, for u (m,)."""
         used = np.flatnonzero(u)
-        far = double_layer(panel_targets(self.panels), self.panels, used, u[used])
+        far = self.sums.double(used, u[used])
         return np.asarray(far + self.near_double @ u.astype(np.float32) + self.diagonal * u)
 
     def half_plus_double_of_clusters(self, cluster_of: Ints, count: int) -> Floats:
         """(½ + K) Z, (m, count), for the indicator functions Z of clusters of panels (−1: in none)."""
-        p = self.panels
         used = np.flatnonzero(cluster_of >= 0)
-        used = used[np.argsort(cluster_of[used], kind="stable")]
-        first = np.searchsorted(cluster_of[used], np.arange(count + 1))
-        image = cluster_double_layer(panel_targets(p), p, used, first)
-        indicator = csr_matrix((np.ones(len(used), np.float32), (used, cluster_of[used])), shape=(len(p), count))
+        image = self.sums.double_of_clusters(cluster_of, count)
+        indicator = csr_matrix(
+            (np.ones(len(used), np.float32), (used, cluster_of[used])), shape=(len(self.panels), count)
+        )
         image += (self.near_double @ indicator).toarray()
         image[used, cluster_of[used]] += self.diagonal[used]
         return image
@@ -98,7 +93,7 @@ def assemble(panels: Panels, window_of: Ints, resistance: Floats) -> EscapeOpera
     near_single = csr_matrix(
         (near.single, number[near.window_column], near.window_first), shape=(m, int(is_window.sum()))
     )
-    everywhere, every, ones = panel_targets(panels), np.arange(m), np.ones(m)
-    row_sum = double_layer(everywhere, panels, every, ones) + near_double @ ones.astype(np.float32)
-    volume = 0.5 * lifted_single_layer(everywhere, panels, every, ones) + near.volume
-    return EscapeOperator(panels, window_of, resistance, near_double, near_single, -row_sum, volume)
+    sums, every, ones = far_sums(panels), np.arange(m), np.ones(m)
+    row_sum = sums.double(every, ones) + near_double @ ones.astype(np.float32)
+    volume = 0.5 * sums.lifted(every, ones) + near.volume
+    return EscapeOperator(panels, sums, window_of, resistance, near_double, near_single, -row_sum, volume)
