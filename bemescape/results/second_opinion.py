@@ -6,6 +6,7 @@ extrapolates; `send_walkers` follows particles. Both say whether they agree with
 
 from __future__ import annotations
 
+import math
 import time
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
@@ -43,6 +44,8 @@ CROSSCHECK_PANELS = 3000
 #: coarser mesh to the finer is 1 to 2.4 of that step. 1.5 is added, and as much again is the error: it covers what is
 #: left for any order from nothing (the step was all) to 0.6 of it per step.
 _REST, _STEP_ERROR = 1.5, 1.5
+#: The coarser mesh may have this part of the panels of the finer at most.
+_MOST_COARSE = 0.75
 #: A window's resistance follows the square root of its area, and the mean time the volume.
 _WINDOW_ERROR, _VOLUME_ERROR = 0.5, 1.0
 #: No Galerkin answer is believed below this.
@@ -177,20 +180,23 @@ def cross_check(result: EscapeResult, *, panels: int = CROSSCHECK_PANELS, progre
     kappa = np.array([window.permeability_um_s for window in result.windows])
     answers: list[GalerkinAnswer] = []
     meshes: list[CoarseMesh] = []
-    for step, most in enumerate((panels // 2, panels)):
-        progress(ProgressEvent("cross-check", 0.4 * step, f"coarsening to {most} panels"))
-        mesh = _coarse(result, most, panels)
-        compiling = ", compiling for about a minute first" if step == 0 else ""
-        progress(ProgressEvent("cross-check", 0.4 * step + 0.1, f"assembling {len(mesh.faces)} panels{compiling}"))
+    panels = min(panels, len(result.faces))
+    for turn, most in enumerate((panels // 2, panels)):
+        progress(ProgressEvent("cross-check", 0.4 * turn, f"coarsening to {most} panels"))
+        mesh = _coarse(result, most, panels if turn == 1 else _MOST_COARSE * panels)
+        compiling = ", compiling for about a minute first" if turn == 0 else ""
+        progress(ProgressEvent("cross-check", 0.4 * turn + 0.1, f"assembling {len(mesh.faces)} panels{compiling}"))
         centred = mesh.vertices - 0.5 * (mesh.vertices.min(axis=0) + mesh.vertices.max(axis=0))
         matrices = galerkin_matrices(centred, mesh.faces)
-        progress(ProgressEvent("cross-check", 0.4 * step + 0.3, f"solving {len(mesh.faces)} panels"))
+        progress(ProgressEvent("cross-check", 0.4 * turn + 0.3, f"solving {len(mesh.faces)} panels"))
         answers.append(
             solve_mixed(centred, mesh.faces, mesh.window_of, result.diffusion_um2_s, matrices, permeability_um_s=kappa)
         )
         meshes.append(mesh)
     coarse, fine = answers
-    step, share_step = fine.mean_time_s - coarse.mean_time_s, fine.shares - coarse.shares
+    # As if the coarser mesh had half the panels: with many windows it cannot go that low, and the step is short.
+    stretch = math.log(2.0) / math.log(len(meshes[1].faces) / len(meshes[0].faces))
+    step, share_step = stretch * (fine.mean_time_s - coarse.mean_time_s), stretch * (fine.shares - coarse.shares)
     mean, shares = fine.mean_time_s + _REST * step, fine.shares + _REST * share_step
     geometry = _WINDOW_ERROR * meshes[1].window_change + _VOLUME_ERROR * abs(meshes[1].volume_change)
     error = _STEP_ERROR * abs(step) / mean + geometry + _FLOOR
@@ -213,7 +219,7 @@ def cross_check(result: EscapeResult, *, panels: int = CROSSCHECK_PANELS, progre
     )
 
 
-def _coarse(result: EscapeResult, most: int, budget: int) -> CoarseMesh:
+def _coarse(result: EscapeResult, most: int, budget: float) -> CoarseMesh:
     """The refined mesh of a result with at most `most` panels; a little more where rims need it."""
     from bemescape.windows.coarsen import coarsened
 
@@ -221,7 +227,7 @@ def _coarse(result: EscapeResult, most: int, budget: int) -> CoarseMesh:
     if len(mesh.faces) > budget:
         raise AccuracyError(
             f"the mesh of {result.name!r} cannot be coarsened below {len(mesh.faces)} panels without damage (the "
-            f"cross-check takes at most {budget}); use walkers for a second opinion"
+            f"cross-check takes at most {budget:.0f} here); use walkers for a second opinion"
         )
     if not mesh.is_closed:
         raise AccuracyError(

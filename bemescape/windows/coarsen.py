@@ -2,10 +2,12 @@
 
 Strategy: edges are collapsed onto one of their own ends, in rounds of collapses that do not touch one another. The
 cheapest edge is the one that is shortest against its distance to the nearest rim, so that panels still thin out
-towards rims, and whose collapse moves the surface least (quadrics: Garland & Heckbert 1997,
-doi:10.1145/258734.258849). Rims stay as they are for as long as the count can be reached without touching them. The
-link condition (Dey et al. 1999) keeps the mesh closed and manifold; no panel turns over. What a rounded part loses in
-volume is given back by moving its vertices, except those of rims, along their normals by one common length.
+towards rims, and whose collapse moves the surface least against the edge's length (quadrics: Garland & Heckbert 1997,
+doi:10.1145/258734.258849): a thin neck keeps its shape as well as a large body does. The end that stays is moved along
+its normal until the volume is what it was (Lindstrom & Turk 1998, doi:10.1109/VISUAL.1998.745314). Rims stay as they
+are for as long as the count can be reached without touching them; windows that lose area then are scaled about their
+middle. What is left of the change of volume is given back at the end by one common length. The link condition (Dey et
+al. 1999) keeps the mesh closed and manifold; no panel turns over.
 """
 
 from __future__ import annotations
@@ -27,13 +29,18 @@ Ints = NDArray[np.int64]
 
 #: Panel size at the rim against the window's radius, and gained per distance from it; only their ratio matters.
 _SIZE_AT_RIM, _GROWTH = 0.15, 0.4
-#: How much a moved surface costs against a long edge.
-_SHAPE_COST = 400.0
+#: A surface moved by 0.07 of an edge (the sagitta of eleven panels around a neck) costs as much as a full-sized edge.
+_SHAPE_COST = 200.0
 #: New panels may turn by 60° at most, and have this height against their longest edge unless the old were worse.
 _LEAST_COSINE, _LEAST_HEIGHT = 0.5, 0.15
 #: Part of the edges that one round may collapse, cheapest first.
 _ROUND = 0.15
+#: A round that collapses less than this part of them is followed by one that tries all.
+_FEW = 0.01
 _VOLUME_STEPS = 3
+#: Longest edge of a rim that may still be collapsed, in radii of its window: some nine panels stay around a disc.
+_LONGEST_RIM = 0.5
+_KEPT_AREA = 0.01
 
 
 @dataclass(frozen=True, eq=False)
@@ -82,6 +89,7 @@ def coarsened(vertices: Floats, faces: Ints, window_of: Ints, most_faces: int) -
         vertices, faces, window_of = _collapsed(vertices, faces, window_of, most_faces, touch_rims=touch_rims)
         if len(faces) <= most_faces:
             break
+    vertices = _with_areas(vertices, faces, window_of, start_areas)
     vertices = _with_volume(vertices, faces, window_of, start_volume)
     areas = _window_areas(vertices, faces, window_of)
     return CoarseMesh(
@@ -91,6 +99,16 @@ def coarsened(vertices: Floats, faces: Ints, window_of: Ints, most_faces: int) -
         volume_change=_volume(vertices, faces) / start_volume - 1.0,
         window_change=float(np.abs(areas / start_areas - 1.0).max(initial=0.0)),
     )
+
+
+def _with_areas(vertices: Floats, faces: Ints, window_of: Ints, areas: Floats) -> Floats:
+    """Windows scaled about their middles to the areas that they had, where they lost more than a little."""
+    now = _window_areas(vertices, faces, window_of)
+    for number in np.flatnonzero(np.abs(now / areas - 1.0) > _KEPT_AREA):
+        own = np.unique(faces[window_of == number])
+        middle = vertices[own].mean(axis=0)
+        vertices[own] = middle + (vertices[own] - middle) * np.sqrt(areas[number] / now[number])
+    return vertices
 
 
 def _with_volume(vertices: Floats, faces: Ints, window_of: Ints, volume: float) -> Floats:
@@ -117,7 +135,12 @@ def _collapsed(
     vertices: Floats, faces: Ints, window_of: Ints, most_faces: int, *, touch_rims: bool
 ) -> tuple[Floats, Ints, Ints]:
     error = _quadrics(vertices, faces)
-    size = _wanted_size(vertices, faces, window_of)
+    size = _wanted_size(vertices, faces, window_of, most_faces)
+    radius = np.zeros(len(vertices))
+    of_window = np.sqrt(_window_areas(vertices, faces, window_of) / np.pi)
+    for corner in faces[window_of >= 0].T:
+        radius[corner] = of_window[window_of[window_of >= 0]]
+    part = _ROUND
     while len(faces) > most_faces:
         edges, _ = mesh_edges(faces)
         rim, _ = rim_edges(faces, window_of)
@@ -130,19 +153,24 @@ def _collapsed(
         end = np.concatenate([edges[:, 1], edges[:, 0]])
         along_rim = np.concatenate([is_rim, is_rim])
         allowed = ~on_rim[begin] | (along_rim & ~corner[begin] if touch_rims else False)
+        longest = np.where(along_rim, _LONGEST_RIM * radius[begin], np.inf)
+        allowed &= np.linalg.norm(vertices[begin] - vertices[end], axis=1) < longest
         allowed &= np.tile(_shared_neighbours(edges, len(vertices)) == 2, 2)
         begin, end = begin[allowed], end[allowed]
         scale = 0.5 * (size[begin] + size[end])
-        length = np.linalg.norm(vertices[begin] - vertices[end], axis=1)
-        moved = _quadric_error(error[begin], vertices[end])
-        cost = (length / scale) ** 2 + _SHAPE_COST * moved / scale**2
-        order = np.argsort(cost, kind="stable")[: max(200, int(_ROUND * len(edges)))]
+        length2 = ((vertices[begin] - vertices[end]) ** 2).sum(axis=1)
+        moved2 = _quadric_error(error[begin], vertices[end])
+        cost = length2 / scale**2 + _SHAPE_COST * moved2 / length2
+        order = np.argsort(cost, kind="stable")[: max(200, int(part * len(edges)))]
         target = np.arange(len(vertices))
         room = (len(faces) - most_faces + 1) // 2
         first, around = _faces_around(faces, len(vertices))
-        done = _collapse_round(vertices, faces, first, around, begin[order], end[order], target, room)
-        if done == 0:
+        vertices = vertices.copy()
+        done = _collapse_round(vertices, faces, first, around, begin[order], end[order], on_rim, target, room)
+        if done == 0 and part == 1.0:
             break
+        # Where the cheapest are all forbidden, the others get their turn.
+        part = 1.0 if done < _FEW * len(order) else _ROUND
         gone = np.flatnonzero(target != np.arange(len(vertices)))
         np.add.at(error, target[gone], error[gone])
         faces = target[faces]
@@ -150,11 +178,20 @@ def _collapsed(
         faces, window_of = faces[kept], window_of[kept]
         used, faces = np.unique(faces, return_inverse=True)
         faces = faces.reshape(-1, 3).astype(np.int64)
-        vertices, error, size = vertices[used], error[used], size[used]
+        vertices, error, size, radius = vertices[used], error[used], size[used], radius[used]
     return vertices, faces, window_of
 
 
-def _wanted_size(vertices: Floats, faces: Ints, window_of: Ints) -> Floats:
+def _wanted_size(vertices: Floats, faces: Ints, window_of: Ints, most_faces: int) -> Floats:
+    """Edge length (n,) at the vertices at which `most_faces` equilateral panels would cover the surface."""
+    size = _graded_size(vertices, faces, window_of)
+    a, b, c = (vertices[faces[:, k]] for k in range(3))
+    areas = 0.5 * np.linalg.norm(np.cross(b - a, c - a), axis=1)
+    panels = float((areas / size[faces].mean(axis=1) ** 2).sum() / (0.25 * np.sqrt(3.0)))
+    return np.asarray(size * np.sqrt(panels / most_faces))
+
+
+def _graded_size(vertices: Floats, faces: Ints, window_of: Ints) -> Floats:
     """Panel size (n,) at the vertices, up to a common factor."""
     rim, rim_window = rim_edges(faces, window_of)
     if len(rim) == 0:
@@ -224,7 +261,7 @@ def _shape(a, b, c):
 
 
 @njit(cache=True)
-def _collapse_round(vertices, faces, first, around, begin, end, target, room):
+def _collapse_round(vertices, faces, first, around, begin, end, fixed, target, room):
     """Collapse begin[i] onto end[i] in this order where nothing near has moved yet; number of collapses."""
     touched = np.zeros(len(vertices), np.bool_)
     done = 0
@@ -239,7 +276,8 @@ def _collapse_round(vertices, faces, first, around, begin, end, target, room):
         for place in range(first[w], first[w + 1]):
             for k in range(3):
                 fine = fine and not touched[faces[around[place], k]]
-        worst_old, worst_new = 1.0, 1.0
+        worst_old, worst_new, lost = 1.0, 1.0, 0.0
+        gain = np.zeros(3)  # d(volume)/d(position of the end that stays), times 6
         for place in range(first[v], first[v + 1]):
             if not fine:
                 break
@@ -259,6 +297,9 @@ def _collapse_round(vertices, faces, first, around, begin, end, target, room):
                 fine = False
             else:
                 worst_new = min(worst_new, new_size / longest)
+                # The volume between the old face and the end that stays, times 6.
+                lost += ((vertices[v] - vertices[w]) * old).sum()
+                gain += new
         if not fine or (worst_new < _LEAST_HEIGHT and worst_new < worst_old):
             continue
         for place in range(first[v], first[v + 1]):
@@ -267,6 +308,14 @@ def _collapse_round(vertices, faces, first, around, begin, end, target, room):
         for place in range(first[w], first[w + 1]):
             for k in range(3):
                 touched[faces[around[place], k]] = True
+        for place in range(first[w], first[w + 1]):
+            face = faces[around[place]]
+            if face[0] != v and face[1] != v and face[2] != v:
+                kept, _ = _shape(vertices[face[0]], vertices[face[1]], vertices[face[2]])
+                gain += kept
+        square = (gain * gain).sum()
+        if not fixed[w] and square > 0.0:
+            vertices[w] += lost / square * gain
         target[v] = w
         done += 1
     return done
