@@ -7,7 +7,7 @@ from functools import cache
 from importlib import import_module
 from typing import Any
 
-from threadpoolctl import ThreadpoolController  # type: ignore[import-untyped]
+from threadpoolctl import ThreadpoolController
 
 __all__ = ["one_blas_thread"]
 

@@ -12,7 +12,8 @@ R_1,−1 = y by
 
 Sources: Hobson (1931), The theory of spherical and ellipsoidal harmonics, chapter IV; the recurrences are those of
 the associated Legendre functions, DLMF 14.10.3 and 14.7.8, in Schmidt's normalisation. Since S_lm(x) = R_lm(x/r²)/r
-(Kelvin's transform), the same recurrences with x/r² for x and 1/r² for r², begun from 1/r, give the irregular harmonics.
+(Kelvin's transform), the same recurrences with x/r² for x and 1/r² for r², begun from 1/r, give the irregular
+harmonics.
 
 A panel with normal n, seen to second order, needs 1 − ½ spread ∂²/∂n² of a harmonic function, and a dipole ∂/∂n of
 that. Each quantity is therefore carried as its Taylor coefficients in t along x + t n, up to t³; the recurrences hold

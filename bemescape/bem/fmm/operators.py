@@ -179,7 +179,9 @@ def _read(path: Path, degree: int) -> Operators | None:
     fits = (
         read.to_parent.shape == read.to_child.shape == (8, count, count)
         and read.far_degree.shape == (len(FAR_OFFSETS),)
-        and np.array_equal(np.diff(read.far_first), sizes)
+        and read.far_degree.dtype == read.far_first.dtype == np.int64
+        and 0 <= read.far_degree.min() <= read.far_degree.max() <= degree
+        and np.array_equal(read.far_first, np.concatenate([[0], np.cumsum(sizes)]))
         and read.far.shape == (sizes.sum(),)
         and all(a.dtype == np.float32 and np.isfinite(a).all() for a in (read.to_parent, read.to_child, read.far))
     )

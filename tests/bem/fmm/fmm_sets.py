@@ -61,7 +61,12 @@ def cube(n, rng):
             a, b = np.meshgrid(grid[:-1], grid[:-1], indexing="ij")
             h = 1.0 / cells
             flat = np.stack(
-                [np.stack([a, b], -1), np.stack([a + h, b], -1), np.stack([a + h, b + h], -1), np.stack([a, b + h], -1)],
+                [
+                    np.stack([a, b], -1),
+                    np.stack([a + h, b], -1),
+                    np.stack([a + h, b + h], -1),
+                    np.stack([a, b + h], -1),
+                ],
                 axis=2,
             ).reshape(-1, 4, 2)
             quads = np.insert(flat, axis, side, axis=2)
