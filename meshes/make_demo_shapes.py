@@ -25,9 +25,7 @@ MOUTH, PATCH = 1, 2
 
 def bouton() -> sg.Mesh:
     """Flattened body with a flat release face (facing up) and a bent 120 nm neck that ends at x = 850."""
-    swelling = sg.joined(
-        sg.ellipsoid((0, 0, 0), (520, 440, 400)), sg.ellipsoid((-210, 170, -60), (300, 310, 270)), 160
-    )
+    swelling = sg.joined(sg.ellipsoid((0, 0, 0), (520, 440, 400)), sg.ellipsoid((-210, 170, -60), (300, 310, 270)), 160)
     body = sg.bumpy(swelling, 16.0, 520.0, seed=11)
     body = sg.common(body, sg.half_space((-60, -30, 300), (-0.12, 0.06, 1)), 90)
     neck = sg.tube(
@@ -80,9 +78,7 @@ def mitochondrion() -> sg.Mesh:
     left_arm = [(-1650, -190, 0), (-1250, 20, 60), (-940, 90, 40), (-690, 70, 20), (-440, 40, 0)]
     right_arm = [(150, -30, 0), (700, 120, 60), (1150, 90, 140), (1600, -120, 90)]
     trunk = sg.tube([*left_arm, *right_arm], [330, 400, 360, 141, 370, 430, 390, 400, 330])
-    branch = sg.tube(
-        [(120, -20, 0), (330, -330, -60), (480, -690, -30), (400, -1080, 70)], [360, 350, 370, 310]
-    )
+    branch = sg.tube([(120, -20, 0), (330, -330, -60), (480, -690, -30), (400, -1080, 70)], [360, 350, 370, 310])
     body = sg.bumpy(sg.joined(trunk, branch, 120), 9.0, 480.0, seed=41)
     return sg.segmented(body, (-1950, -1400, -350), (1900, 450, 450), voxel=14, triangles=12000, seed=42)
 
@@ -101,9 +97,7 @@ def disc_window(name: str, centre: Sequence[float] | sg.Floats, radius: int) -> 
     return f'[[window]]\nname = "{name}"\ndisc = {{ centre = [{place}], radius = "{radius} nm" }}'
 
 
-def case_text(
-    name: str, title: str, motion: str, windows: Sequence[str], start: dict[str, Sequence[float]]
-) -> str:
+def case_text(name: str, title: str, motion: str, windows: Sequence[str], start: dict[str, Sequence[float]]) -> str:
     """A whole case file."""
     points = ", ".join(f"{key} = [{', '.join(f'{x:.1f}' for x in place)}]" for key, place in start.items())
     blocks = [
@@ -182,9 +176,7 @@ def check_inside(mesh: sg.Mesh, start: dict[str, Sequence[float]]) -> dict[str, 
     """The same points, once each is known to lie at least 30 nm inside."""
     for name, place in start.items():
         if (depth := sg.depth(mesh, place)) < 30.0:
-            raise RuntimeError(
-                f"start point {name!r} is {depth:.0f} nm inside the wall (limit 30 nm); move it"
-            )
+            raise RuntimeError(f"start point {name!r} is {depth:.0f} nm inside the wall (limit 30 nm); move it")
     return start
 
 

@@ -129,9 +129,7 @@ def segmented(
 
     image = pv.ImageData(dimensions=mask.shape, spacing=(voxel,) * 3, origin=tuple(lower))
     image.point_data["inside"] = mask.ravel(order="F").astype(np.uint8)
-    net = image.contour_labels(
-        smoothing_iterations=20, smoothing_distance=voxel, output_mesh_type="triangles"
-    )
+    net = image.contour_labels(smoothing_iterations=20, smoothing_distance=voxel, output_mesh_type="triangles")
     # Surface nets leave faint terraces; a pass band filter removes them and keeps the volume.
     net = net.smooth_taubin(n_iter=40, pass_band=0.03)
     net = net.decimate(1.0 - triangles / net.n_cells, volume_preservation=True)
@@ -139,9 +137,7 @@ def segmented(
     surface = trimesh.Trimesh(net.points, net.regular_faces, process=False)
     if surface.volume < 0.0:
         surface.invert()
-    return Mesh(
-        np.asarray(surface.vertices), np.asarray(surface.faces), np.zeros(len(surface.faces), np.uint8)
-    )
+    return Mesh(np.asarray(surface.vertices), np.asarray(surface.faces), np.zeros(len(surface.faces), np.uint8))
 
 
 def _thickened(mask: NDArray[np.bool_]) -> NDArray[np.bool_]:
@@ -154,9 +150,7 @@ def _thickened(mask: NDArray[np.bool_]) -> NDArray[np.bool_]:
             # Views of the same mask, shifted by one voxel along some of the axes: the corners of each block.
             corners = [
                 mask[tuple(slice(shift.get(k, 0), shift.get(k, 1) - 1 or None) for k in range(3))]
-                for shift in (
-                    dict(zip(axes, bits, strict=True)) for bits in product((0, 1), repeat=len(axes))
-                )
+                for shift in (dict(zip(axes, bits, strict=True)) for bits in product((0, 1), repeat=len(axes)))
             ]
             filled = sum(corner.astype(np.int8) for corner in corners)
             pairs = list(zip(corners, reversed(corners), strict=True))[: len(corners) // 2]
@@ -343,8 +337,7 @@ def faults(mesh: Mesh) -> list[str]:
     # A vertex is manifold if its corners, linked through shared edges, form one fan.
     pairs, shared = surface.face_adjacency, surface.face_adjacency_edges
     links = [
-        [3 * face + np.argmax(mesh.faces[face] == vertex[:, None], axis=1) for face in pairs.T]
-        for vertex in shared.T
+        [3 * face + np.argmax(mesh.faces[face] == vertex[:, None], axis=1) for face in pairs.T] for vertex in shared.T
     ]
     rows, columns = np.concatenate(links, axis=1)
     graph = coo_matrix((np.ones(len(rows)), (rows, columns)), shape=(mesh.faces.size,) * 2)

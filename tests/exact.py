@@ -134,7 +134,8 @@ NECK_ALL, NECK_HEAD = 3.943980, 4.127853
 #: Unit ball with equal caps of half-angle 0.2 at the vertices of a platonic solid: number of caps -> mean. Spectral
 #: solution with the sphere's closed-form Neumann function.
 PLATONIC_CAPS_02 = {6: 0.70005458, 8: 0.50527188, 12: 0.3141251}
-#: Cylinder R = H = 1 with a coaxial neck, open at its end: (neck radius, length) -> average over head and neck. Head and
+#: Cylinder R = H = 1 with a coaxial neck, open at its end: (neck radius, length) -> average over head and neck.
+#: Head and
 #: neck are matched by a Galerkin method with edge-weighted functions, two resolutions agree to 1e-8.
 CYLINDER_NECK_ALL = {(0.2, 0.5): 15.7813822, (0.5, 1.0): 4.81056125}
 

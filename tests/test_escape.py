@@ -21,6 +21,8 @@ from bemescape import (
     WindowError,
     solve_escape,
 )
+from bemescape.bem.averages import volume_integral
+from bemescape.results.prepared import prepare
 
 AXIS = np.array([0.3, 0.5, 0.81]) / np.linalg.norm([0.3, 0.5, 0.81])
 ACROSS = np.cross(AXIS, [1.0, 0.0, 0.0]) / np.linalg.norm(np.cross(AXIS, [1.0, 0.0, 0.0]))
@@ -162,7 +164,9 @@ def test_times_inside_and_on_the_wall_match_the_dual_series(capped_ball):
 
 
 def test_points_outside_are_named_or_nan(capped_ball):
-    with pytest.raises(SettingsError, match=r"point 2 of 2 at \(0, 0, 1\.5\) µm lies outside the volume, 0\.5"):
+    with pytest.raises(
+        SettingsError, match=r"point 2 of 2 at \(0, 0, 1\.5\) µm lies outside the volume, about 0\.[45]"
+    ):
         capped_ball.time_at([[0, 0, 0], [0, 0, 1.5]])
     values = capped_ball.time_at([[0, 0, 0], [0, 0, 1.5]], outside="nan")
     assert np.isfinite(values[0])
@@ -197,21 +201,21 @@ def test_two_far_windows_halve_the_time_of_one_and_touching_ones_hardly_help():
     assert near > 1.25 * far
 
 
-def test_a_converging_sequence_has_its_order_and_its_balance():
-    """Prism, uniform wall refinement only: P0 panels beside right-angled edges converge faster than first order."""
-    means, sizes = [], []
-    for cells in (4, 8, 16):
+def test_the_error_falls_nearly_in_proportion_to_the_panels():
+    """Even panels on a prism, no grading: piecewise constants beside right-angled edges, order 0.8 in panels."""
+    panels, errors = [], []
+    for cells in (6, 12, 24):
         surface = shapes.box(cells=cells, label=lambda c: int(c[2] < 1e-9))
-        result = solve_escape(surface, [labelled()], 1.0, target=0.5)
-        means.append(result.levels[0]["mean_time_s"])
-        sizes.append(1.0 / cells)
-    errors = np.abs(np.array(means) / exact.prism_mean(1.0) - 1.0)
-    assert errors[-1] < errors[0]
-    tight = [solve_escape(shapes.box_with_neck(), [labelled()], 1.0, target=target) for target in (0.02, 0.004)]
-    panels = [len(result.faces) for result in tight]
-    true = [abs(result.levels[-1]["mean_time_s"] / exact.NECK_ALL - 1.0) for result in tight]
-    order = np.log(true[0] / true[1]) / np.log(panels[1] / panels[0])
-    assert order > 0.6  # errors fall about as 1/panels; measured 0.75 at this re-entrant neck
+        window_of = surface.face_data["label"] - 1
+        prepared = prepare(surface.vertices, surface.faces, window_of, np.zeros(1), tolerance=1e-6)
+        solution = prepared.solve(prepared.solver.operator.volume_potential, "iterating")
+        mean = volume_integral(prepared.panels, solution.u, solution.q, 1.0) / prepared.volume
+        panels.append(len(surface.faces))
+        errors.append(abs(mean / exact.prism_mean(1.0) - 1.0))
+    orders = -np.diff(np.log(errors)) / np.diff(np.log(panels))
+    # Measured 0.80 and 0.86; 1 is second order in the panel size, 0.5 would be first.
+    assert orders.min() > 0.7
+    assert errors[-1] < 2.5e-3
 
 
 def test_the_slow_region_of_a_capped_ball_lies_opposite_and_knows_its_way(capped_ball):

@@ -101,9 +101,7 @@ def _unit(vector: Floats) -> Floats:
     return np.asarray(vector / max(float(np.linalg.norm(vector)), 1e-300))
 
 
-def section(
-    result: EscapeResult, plane: CutPlane, corner_times_s: Floats, *, max_points: int = 6000
-) -> Section | None:
+def section(result: EscapeResult, plane: CutPlane, corner_times_s: Floats, *, max_points: int = 6000) -> Section | None:
     """The section of the diffusing volume with `plane`, or None where the plane misses it.
 
     Parameters

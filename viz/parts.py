@@ -116,9 +116,7 @@ class Scene:
         touched = np.zeros(len(result.vertices), dtype=bool)
         touched[result.faces[region >= 0]] = True
         near = np.flatnonzero(touched[result.faces].any(axis=1) & (result.panel_window < 0))
-        segments, _, _ = crossings(
-            result.vertices[result.faces[near]], self.corner_times_s[near] - self.slow.level_s
-        )
+        segments, _, _ = crossings(result.vertices[result.faces[near]], self.corner_times_s[near] - self.slow.level_s)
         if len(segments):
             return segments
         edges: Floats = result.vertices[border_edges(result.faces, region)]
@@ -343,9 +341,7 @@ def look_from(plotter: pv.Plotter, points: Floats, view: View, *, narrower: floa
     )
     left, bottom, right, top = SHAPE_FRAME
     right -= narrower
-    half = 0.5 * max(
-        float(np.ptp(along)) / (top - bottom), float(np.ptp(across)) / (right - left) * height / width
-    )
+    half = 0.5 * max(float(np.ptp(along)) / (top - bottom), float(np.ptp(across)) / (right - left) * height / width)
     far = 2.0 * max(float(np.ptp(deep)), half)
     camera = plotter.camera
     camera.ParallelProjectionOn()

@@ -156,9 +156,7 @@ def density_scale(result: EscapeResult) -> ColourScale:
         return ColourScale(0.1, 1.0, 1.0, label, log=True, map_name=DENSITY_MAP_NAME)
     order = np.argsort(values)
     part = np.cumsum(result.panel_areas_um2[inside][order])
-    low, high = values[order][
-        np.minimum(np.searchsorted(part, np.array([0.005, 0.995]) * part[-1]), len(values) - 1)
-    ]
+    low, high = values[order][np.minimum(np.searchsorted(part, np.array([0.005, 0.995]) * part[-1]), len(values) - 1)]
     low = max(min(float(low), 0.5 * float(high)), float(high) * 10.0**-_LOG_DECADES)
     return ColourScale(
         low,

@@ -151,8 +151,7 @@ def cutaway_scene(
     scene.overlay = Overlay(
         plotter,
         title=headline(result),
-        note="cut-away: time inside, on a plane through the middle · thin lines: equal time · "
-        "light blue: windows",
+        note="cut-away: time inside, on a plane through the middle · thin lines: equal time · light blue: windows",
         scale=scale,
         labels=_cut_labels(scene, plane),
     )
@@ -180,9 +179,7 @@ def _cut_labels(scene: Scene, plane: CutPlane) -> list[Label]:
     return labels if len(labels) <= _MOST_WINDOW_LABELS else []
 
 
-def add_section(
-    plotter: pv.Plotter, scene: Scene, plane: CutPlane, scale: ColourScale, max_points: int
-) -> None:
+def add_section(plotter: pv.Plotter, scene: Scene, plane: CutPlane, scale: ColourScale, max_points: int) -> None:
     """Put the section with `plane`, its border and its lines of equal time into `plotter`."""
     cut = section(scene.result, plane, scene.corner_times_s, max_points=max_points)
     scene.actors["section"] = []

@@ -192,9 +192,7 @@ def _window_side(result: EscapeResult, axis: Floats) -> Floats:
     """`axis` or its reverse: where more window area faces; else by the third moment of the shape."""
     window = result.panel_window >= 0
     areas = result.panel_areas_um2
-    facing = float(areas[window] @ (result.panel_normals[window] @ axis)) / max(
-        float(areas[window].sum()), 1e-300
-    )
+    facing = float(areas[window] @ (result.panel_normals[window] @ axis)) / max(float(areas[window].sum()), 1e-300)
     if abs(facing) > 0.05:
         return axis if facing > 0.0 else -axis
     along = result.panel_centroids @ axis

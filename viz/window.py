@@ -98,9 +98,7 @@ class DesktopWindow:
         size: tuple[int, int] = (1400, 1000),
     ) -> None:
         self.scene = Scene(result)
-        self.plotter = wall_scene(
-            result, view, size=size, off_screen=off_screen, scene=self.scene, corner=KEYS
-        )
+        self.plotter = wall_scene(result, view, size=size, off_screen=off_screen, scene=self.scene, corner=KEYS)
         self._result = result
         self._mode: str = "linear"
         self._density = False

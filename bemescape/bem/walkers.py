@@ -326,13 +326,16 @@ def _one_walk(scene, window_of, state, stack):
     found, x, y, z = _start(scene, state, stack)
     if not found:
         return 0.0, _NO_START, 0
-    elapsed, only_outwards = 0.0, False
+    elapsed, clear, measured, only_outwards = 0.0, 0.0, 0.0, False
     on = -1  # the panel of the wall on which the walker is
     for step in range(_MOST_STEPS):
-        radius, window = nearest_panel(scene.absorbing, x, y, z, 2.0, stack)
-        if window >= 0 and radius < scene.shell:
-            return elapsed, window_of[scene.absorbing.number[window]], step
-        radius = silhouette_distance(scene.silhouettes, x, y, z, radius, stack)
+        # The distance to the windows falls by no more than a jump: it is measured anew when half of it may be gone.
+        if clear < max(0.5 * measured, 2.0 * scene.shell):
+            measured, window = nearest_panel(scene.absorbing, x, y, z, 2.0, stack)
+            if window >= 0 and measured < scene.shell:
+                return elapsed, window_of[scene.absorbing.number[window]], step
+            clear = measured
+        radius = silhouette_distance(scene.silhouettes, x, y, z, clear, stack)
         on_window = on >= 0 and scene.rate[on] > 0.0
         radius = reach_before_exit(scene.partly, scene.rate, scene.largest_rate, on_window, x, y, z, radius, stack)
         vx, vy, vz = _direction(state)
@@ -352,6 +355,7 @@ def _one_walk(scene, window_of, state, stack):
         length, hit = first_hit(scene.wall, x, y, z, vx, vy, vz, radius, only_outwards, stack)
         elapsed += length * length * (0.5 - length / (3.0 * radius))
         x, y, z = x + length * vx, y + length * vy, z + length * vz
+        clear -= length
         on = -1
         if hit >= 0:
             on = scene.wall.number[hit]

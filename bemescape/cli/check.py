@@ -20,9 +20,7 @@ def check(
     *,
     unit: Annotated[
         str | None,
-        typer.Option(
-            help='Length of one file unit, needed: "nm", "4 nm" for voxels, "4 nm, 4 nm, 40 nm" by axis.'
-        ),
+        typer.Option(help='Length of one file unit, needed: "nm", "4 nm" for voxels, "4 nm, 4 nm, 40 nm" by axis.'),
     ] = None,
     json: Annotated[bool, typer.Option("--json", help="Print the report as JSON, alone, on stdout.")] = False,
     quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress on stderr.")] = False,

@@ -24,9 +24,7 @@ __all__ = ["app", "main"]
 STOPPED = 130
 #: What typer raises for a wrong command line; the class has no public name of its own.
 _CommandLineError: type[Exception] = next(
-    kind
-    for kind in typer.BadParameter.__mro__
-    if kind.__name__ == "ClickException" and issubclass(kind, Exception)
+    kind for kind in typer.BadParameter.__mro__ if kind.__name__ == "ClickException" and issubclass(kind, Exception)
 )
 
 app = typer.Typer(
@@ -55,9 +53,7 @@ def _program(
     *,
     version: Annotated[
         bool,
-        typer.Option(
-            "--version", callback=_print_version, is_eager=True, help="Print the version and leave."
-        ),
+        typer.Option("--version", callback=_print_version, is_eager=True, help="Print the version and leave."),
     ] = False,
 ) -> None:
     """Mean escape times of diffusing molecules from measured 3D shapes, by boundary elements."""
@@ -103,9 +99,7 @@ def _complain(message: str) -> None:
 
 def _usage_sentence(error: Exception, arguments: Sequence[str]) -> str:
     message = str(getattr(error, "format_message", error.__str__)()).strip().rstrip(".")
-    known = {
-        command.name or command.callback.__name__ for command in app.registered_commands if command.callback
-    }
+    known = {command.name or command.callback.__name__ for command in app.registered_commands if command.callback}
     place = f"{arguments[0]} " if arguments and arguments[0] in known else ""
     return f"{message[:1].lower()}{message[1:]}; see bemescape {place}--help"
 

@@ -86,8 +86,6 @@ def _live_line() -> Iterator[Progress]:
 
         def receive(event: ProgressEvent) -> None:
             total = None if event.done is None else 1.0
-            bars.update(
-                task, description=event.stage, total=total, completed=event.done or 0.0, detail=event.detail
-            )
+            bars.update(task, description=event.stage, total=total, completed=event.done or 0.0, detail=event.detail)
 
         yield receive

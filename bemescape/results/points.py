@@ -57,7 +57,7 @@ class PlacedPoints:
             first = int(np.flatnonzero(self._beyond)[0])
             place = ", ".join(f"{value:.4g}" for value in points[first])
             raise SettingsError(
-                f"point {first + 1} of {len(points)} at ({place}) µm lies outside the volume, "
+                f"point {first + 1} of {len(points)} at ({place}) µm lies outside the volume, about "
                 f"{self._times.gap[first]:.3g} µm from the wall; move it inside, or ask with outside='nan'"
             )
 

@@ -201,7 +201,8 @@ def cross_check(result: EscapeResult, *, panels: int = CROSSCHECK_PANELS, progre
     geometry = _WINDOW_ERROR * meshes[1].window_change + _VOLUME_ERROR * abs(meshes[1].volume_change)
     error = _STEP_ERROR * abs(step) / mean + geometry + _FLOOR
     own_shares = np.array([window.share for window in result.windows])
-    share_error = _STEP_ERROR * np.abs(share_step) + (geometry + _FLOOR) * own_shares
+    # Two resistances that are off by `error` each move a share s by s(1 − s) of it, whatever the steps happen to be.
+    share_error = _STEP_ERROR * np.abs(share_step) + (error * (1.0 - own_shares) + _FLOOR) * np.abs(own_shares)
     difference = mean / result.mean_time_s - 1.0
     allowed = error + result.relative_error
     worst, limit = _worst(shares - own_shares, share_error + _share_errors(result))

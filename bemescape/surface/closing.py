@@ -92,9 +92,7 @@ def _dropped(
         members = order[bounds[k] : bounds[k + 1]]
         where = ", ".join(f"{value:.4g}" for value in middle[members].mean(axis=0))
         share = f"{abs(volume[k]) / all_volume:.2g} of the volume, " if all_volume > 0.0 else ""
-        detail = (
-            f"{what} of {len(members)} faces around ({where}) µm: {share}{area[k] / all_area:.2g} of the area"
-        )
+        detail = f"{what} of {len(members)} faces around ({where}) µm: {share}{area[k] / all_area:.2g} of the area"
         repairs.append(Repair(left, 1, detail, mesh.face_source[members], -float(volume[k]), -float(area[k])))
     return repairs
 
@@ -210,9 +208,7 @@ def _lid(mesh: Working, hole: _Hole, neighbours: Ints, next_vertex: int) -> _Lid
     around = np.arange(size)
     fan = np.stack([around, np.roll(around, -1), np.full(size, size)], axis=1)
     if _least_agreement(np.vstack([points, hole.centre]), fan) > 0.0:
-        return _Lid(
-            hole, np.r_[ring, next_vertex][fan], source, hole.centre[None], mesh.vertex_source[ring[:1]]
-        )
+        return _Lid(hole, np.r_[ring, next_vertex][fan], source, hole.centre[None], mesh.vertex_source[ring[:1]])
     ears = _ears(points)
     if len(ears) != size - 2 or _least_agreement(points, ears) <= 0.0:
         return None

@@ -56,9 +56,7 @@ def read_glb(data: bytes, name: str) -> Polygons:
     document = _document(chunks.get(_JSON_CHUNK, b""), name)
     buffers = _items(document, "buffers", name)
     if len(buffers) != 1 or "uri" in buffers[0]:
-        raise SurfaceError(
-            f"{name} keeps its data in {len(buffers)} buffers or in other files; export it as one GLB"
-        )
+        raise SurfaceError(f"{name} keeps its data in {len(buffers)} buffers or in other files; export it as one GLB")
     return _polygons(document, [chunks.get(_BINARY_CHUNK, b"")], name)
 
 
@@ -80,9 +78,7 @@ def _document(data: bytes, name: str) -> dict[str, Any]:
     try:
         document = json.loads(text)
     except (ValueError, RecursionError) as error:
-        raise SurfaceError(
-            f"{name}: its JSON part cannot be read ({str(error)[:80]}); the file is damaged"
-        ) from error
+        raise SurfaceError(f"{name}: its JSON part cannot be read ({str(error)[:80]}); the file is damaged") from error
     if not isinstance(document, dict):
         raise SurfaceError(f"{name}: its JSON part is not a glTF document")
     needed = document.get("extensionsRequired")
@@ -106,9 +102,7 @@ def _buffer(entry: dict[str, Any], name: str, folder: Path) -> bytes:
         try:
             return base64.b64decode(uri.partition(",")[2], validate=True)
         except binascii.Error as error:
-            raise SurfaceError(
-                f"{name}: a buffer inside the file is not base64; the file is damaged"
-            ) from error
+            raise SurfaceError(f"{name}: a buffer inside the file is not base64; the file is damaged") from error
     if Path(uri).name != uri or "\\" in uri or ":" in uri:
         raise SurfaceError(f"{name}: its data lie at {uri[:80]!r}; only files in the same folder are read")
     path = folder / uri
@@ -150,8 +144,7 @@ def _polygons(document: dict[str, Any], blobs: list[bytes], name: str) -> Polygo
         OverflowError,
     ) as error:
         raise SurfaceError(
-            f"{name}: its parts do not fit together ({type(error).__name__}: {str(error)[:80]}); the file "
-            f"is damaged"
+            f"{name}: its parts do not fit together ({type(error).__name__}: {str(error)[:80]}); the file is damaged"
         ) from error
     return Polygons.of_triangles(np.array(mesh.vertices, np.float64), np.array(mesh.faces, np.int64))
 
@@ -170,14 +163,10 @@ def _check_views(document: dict[str, Any], sizes: list[int], name: str) -> None:
     for k, view in enumerate(views):
         buffer, start, length = view.get("buffer"), view.get("byteOffset", 0), view.get("byteLength")
         stride = view.get("byteStride", 0)
-        if not (_count(buffer) and _count(start) and _count(length) and _count(stride)) or buffer >= len(
-            sizes
-        ):
+        if not (_count(buffer) and _count(start) and _count(length) and _count(stride)) or buffer >= len(sizes):
             raise SurfaceError(f"{name}: bufferView {k} is not complete; the file is damaged")
         if start + length > sizes[buffer]:
-            raise SurfaceError(
-                f"{name}: bufferView {k} ends at byte {start + length} of {sizes[buffer]}; cut short"
-            )
+            raise SurfaceError(f"{name}: bufferView {k} ends at byte {start + length} of {sizes[buffer]}; cut short")
     for k, accessor in enumerate(_items(document, "accessors", name)):
         number, start, count = (
             accessor.get("bufferView"),
@@ -204,9 +193,7 @@ def _slim(document: dict[str, Any], name: str) -> dict[str, Any]:
             position = attributes.get("POSITION") if isinstance(attributes, dict) else None
             indices = primitive.get("indices")
             if primitive.get("mode", _TRIANGLES) != _TRIANGLES:
-                raise SurfaceError(
-                    f"{name}: mesh {k} is drawn as points, lines or strips; export it as triangles"
-                )
+                raise SurfaceError(f"{name}: mesh {k} is drawn as points, lines or strips; export it as triangles")
             wanted: list[Any] = [position] if indices is None else [position, indices]
             if not all(_count(entry) and entry < len(accessors) for entry in wanted):
                 raise SurfaceError(f"{name}: mesh {k} names positions or corners that the file does not hold")
@@ -259,6 +246,5 @@ def _check_tree(nodes: list[dict[str, Any]], mesh_count: int, name: str) -> None
             break
     if max(parents, default=0) > 1 or seen != len(nodes) or seen > _NODE_LIMIT:
         raise SurfaceError(
-            f"{name}: its {len(nodes)} nodes do not form a tree of at most {_NODE_LIMIT}; export it as one "
-            f"mesh"
+            f"{name}: its {len(nodes)} nodes do not form a tree of at most {_NODE_LIMIT}; export it as one mesh"
         )

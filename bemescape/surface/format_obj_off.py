@@ -44,15 +44,11 @@ def read_obj(data: bytes, name: str) -> Polygons:
     if strange:
         number = text.count("\n", 0, strange.start()) + 1
         line = text[strange.start() :].split("\n", 1)[0].strip()
-        raise SurfaceError(
-            f"{name}: line {number}, {line[:40]!r}, is not an OBJ statement; the file is damaged"
-        )
+        raise SurfaceError(f"{name}: line {number}, {line[:40]!r}, is not an OBJ statement; the file is damaged")
     positions = _OBJ_POSITION.findall(text)
     rings = _OBJ_FACE.findall(text)
     if not positions or not rings:
-        raise SurfaceError(
-            f"{name} holds {len(positions)} vertices and {len(rings)} faces; was it exported as points?"
-        )
+        raise SurfaceError(f"{name} holds {len(positions)} vertices and {len(rings)} faces; was it exported as points?")
     vertices = loaded_rows(positions, "a vertex line", name, columns=(0, 1, 2))
     if "/" in text:
         rings = [_SLASHES.sub("", ring) for ring in rings]
@@ -79,9 +75,7 @@ def read_off(data: bytes, name: str) -> Polygons:
     lines = list(significant_lines(decode_text(data, name)))
     head = re.fullmatch(r"(C?N?OFF)\s*(.*)", lines[0][1]) if lines else None
     if head is None:
-        raise SurfaceError(
-            f"{name} does not begin with OFF, COFF or NOFF; the file is damaged or of another format"
-        )
+        raise SurfaceError(f"{name} does not begin with OFF, COFF or NOFF; the file is damaged or of another format")
     rows = [line for _, line in lines[1:]]
     counts = head.group(2) or (rows.pop(0) if rows else "")
     numbers = re.fullmatch(r"(\d{1,18})\s+(\d{1,18})(\s+\d{1,18})?", counts)
@@ -95,18 +89,14 @@ def read_off(data: bytes, name: str) -> Polygons:
             "follow; the file is cut short or its header is wrong"
         )
     if not vertex_count or not face_count:
-        raise SurfaceError(
-            f"{name} holds {vertex_count} vertices and {face_count} faces; was it exported as points?"
-        )
+        raise SurfaceError(f"{name} holds {vertex_count} vertices and {face_count} faces; was it exported as points?")
     vertices = loaded_rows(rows[:vertex_count], "a vertex line", name, columns=(0, 1, 2))
     rings = []
     for face, row in enumerate(rows[vertex_count:]):
         words = row.split()
         size = int(words[0]) if words[0].isascii() and words[0].isdigit() and len(words[0]) < 10 else -1
         if not 0 < size < len(words):
-            raise SurfaceError(
-                f"{name}: face {face}, {row[:40]!r}, does not hold the corners it counts", faces=(face,)
-            )
+            raise SurfaceError(f"{name}: face {face}, {row[:40]!r}, does not hold the corners it counts", faces=(face,))
         rings.append(" ".join(words[1 : size + 1]))
     sizes, corners = loaded_rings(rings, name)
     return Polygons(vertices, sizes, corners)

@@ -88,13 +88,10 @@ def _header(data: bytes, name: str) -> tuple[list[_Element], str, int]:
         elif words[0] == "property" and elements:
             elements[-1] = _with_property(elements[-1], words, byte_order(layout), f"{name}, line {number}")
         else:
-            raise SurfaceError(
-                f"{name}: line {number} of the PLY header, {' '.join(words)[:60]!r}, means nothing"
-            )
+            raise SurfaceError(f"{name}: line {number} of the PLY header, {' '.join(words)[:60]!r}, means nothing")
     if layout not in {"ascii", "binary_little_endian", "binary_big_endian"}:
         raise SurfaceError(
-            f"{name}: the PLY format is {layout!r}; it must be ascii, binary_little_endian or "
-            f"binary_big_endian"
+            f"{name}: the PLY format is {layout!r}; it must be ascii, binary_little_endian or binary_big_endian"
         )
     return elements, layout, stop
 
@@ -196,9 +193,7 @@ def _split_table(
             same = block[:, at] == size
             stop = at + 1 + int(size)
             kept = {key: column[same] for key, column in values.items()}
-            pending.append(
-                (rows[same], block[same], index + 1, stop, {**kept, prop.name: block[same, at + 1 : stop]})
-            )
+            pending.append((rows[same], block[same], index + 1, stop, {**kept, prop.name: block[same, at + 1 : stop]}))
     return done
 
 
@@ -215,9 +210,7 @@ def _cast(values: NDArray[np.float64], dtype: np.dtype[np.generic], what: str) -
     whole = np.isfinite(values) & (values == np.round(values))
     limits = np.iinfo(dtype.str)
     if not (whole & (values >= limits.min) & (values <= limits.max)).all():
-        raise SurfaceError(
-            f"{what} holds numbers that do not fit its type, {dtype.name}; the file is damaged"
-        )
+        raise SurfaceError(f"{what} holds numbers that do not fit its type, {dtype.name}; the file is damaged")
     return values.astype(dtype)
 
 
@@ -268,9 +261,7 @@ def _binary_columns(element: _Element, body: memoryview, name: str) -> tuple[_Co
             if not (table[str(k)] == size).all():
                 return _walk(element, body, name)
         elif shape:
-            columns[label] = _Lists(
-                np.full(element.count, shape[0], np.int64), _native(table[str(k)].reshape(-1))
-            )
+            columns[label] = _Lists(np.full(element.count, shape[0], np.int64), _native(table[str(k)].reshape(-1)))
         else:
             columns[label] = _native(table[str(k)])
     return columns, element.count * record.itemsize
@@ -331,8 +322,6 @@ def _assembled(tables: dict[str, _Columns], name: str) -> Polygons:
         corners=corners.items.astype(np.int64),
         face_data={key: column for key, column in face.items() if isinstance(column, np.ndarray)},
         vertex_data={
-            key: column
-            for key, column in vertex.items()
-            if isinstance(column, np.ndarray) and key not in _NOT_KEPT
+            key: column for key, column in vertex.items() if isinstance(column, np.ndarray) and key not in _NOT_KEPT
         },
     )

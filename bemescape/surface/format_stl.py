@@ -87,8 +87,6 @@ def _read_text(text: str, name: str) -> Floats:
     if text[at:].strip() or opened != closed or not opened:
         number = text.count("\n", 0, at) + 1
         line = text[at : at + 200].strip().split("\n", 1)[0]
-        found = (
-            f"does not go on with a whole facet of finite numbers but with {line[:60]!r}" if line else "ends"
-        )
+        found = f"does not go on with a whole facet of finite numbers but with {line[:60]!r}" if line else "ends"
         raise SurfaceError(f"{name}: line {number} {found} before endsolid; the file is damaged or cut short")
     return loaded_rows(corners, "a corner", name)

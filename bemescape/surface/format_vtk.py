@@ -80,9 +80,7 @@ def read_vtp(path: Path, data: bytes, name: str) -> Polygons:
         found = kind.group(1).decode("ascii", "replace")[:40] if kind else "unnamed data set"
         raise SurfaceError(f"{name} holds a {found}, not PolyData; extract the surface first")
     if b"<!DOCTYPE" in head or b"<!ENTITY" in head:
-        raise SurfaceError(
-            f"{name} declares its own XML entities, which mesh files never need; it is not read"
-        )
+        raise SurfaceError(f"{name} declares its own XML entities, which mesh files never need; it is not read")
     if b"</VTKFile>" not in data[-4096:]:
         raise SurfaceError(f"{name} does not end with </VTKFile>; the file is cut short")
     for match in _XML_COUNT.finditer(data):

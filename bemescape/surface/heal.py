@@ -165,9 +165,7 @@ def heal_surface(
 def _finished(surface: Surface, before: HealthReport, log: _Log, mode: Literal["auto", "rebuild"]) -> Surface:
     mesh = log.mesh.without_unused_vertices()
     if not len(mesh.faces):
-        raise SurfaceError(
-            f"{surface.name}: nothing closed is left after dropping faces without area or partner"
-        )
+        raise SurfaceError(f"{surface.name}: nothing closed is left after dropping faces without area or partner")
     after = check_surface(mesh.vertices, mesh.faces)
     if not after.ok:
         remedy = "try heal='rebuild'" if mode == "auto" else "repair it in a mesh editor"
@@ -201,9 +199,7 @@ def _refusal(
         remedy += " or close it in a mesh editor; an open sheet has no inside"
     others = [error.kind for error in errors if error is not worst]
     also = f" (also: {', '.join(others)})" if others else ""
-    return SurfaceError(
-        f"{name} is not a closed surface: {worst.message}{where}{also}; {remedy}", faces=faces
-    )
+    return SurfaceError(f"{name} is not a closed surface: {worst.message}{where}{also}; {remedy}", faces=faces)
 
 
 class _Log:

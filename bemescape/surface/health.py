@@ -150,9 +150,7 @@ class HealthReport:
 
     def lines(self) -> list[str]:
         """The report as sentences, the damage last."""
-        size = " × ".join(
-            format_length(high - low) for low, high in zip(self.lowest_um, self.highest_um, strict=True)
-        )
+        size = " × ".join(format_length(high - low) for low, high in zip(self.lowest_um, self.highest_um, strict=True))
         edge, quality = self.edge_length_um, self.triangle_quality
         parts = f"{self.part_count} part" + ("s" if self.part_count != 1 else "")
         state = "closed" if self.closed else "not closed"
@@ -185,9 +183,7 @@ def check_surface(vertices: Floats, faces: Ints, *, crossings: bool = True) -> H
     HealthReport
         `.ok` tells whether the mesh is one or several closed, well-oriented shells.
     """
-    return _Examination(np.asarray(vertices, np.float64), np.asarray(faces, np.int64)).report(
-        crossings=crossings
-    )
+    return _Examination(np.asarray(vertices, np.float64), np.asarray(faces, np.int64)).report(crossings=crossings)
 
 
 def _triple(values: Floats) -> tuple[float, float, float]:
@@ -358,9 +354,7 @@ class _Examination:
         keys = triangle_keys(self.faces)
         doubled = np.flatnonzero(np.bincount(keys)[keys] > 1)
         extra = len(keys) - (int(keys.max(initial=-1)) + 1)
-        self.note(
-            "doubled faces", "error", extra, f"{extra} faces repeat the corners of another face", doubled
-        )
+        self.note("doubled faces", "error", extra, f"{extra} faces repeat the corners of another face", doubled)
         limit = ZERO_ALTITUDE * box_diagonal(self.vertices)
         zero = np.flatnonzero(altitudes(self.areas, self.lengths) <= limit)
         self.note("zero-area faces", "error", len(zero), f"{len(zero)} faces have no area", zero)
@@ -372,9 +366,7 @@ class _Examination:
         whole = np.ones(count, dtype=bool)
         whole[part[edges.order[edges.starts[edges.counts != 2]] // 3]] = False
         pairs = edges.pairs
-        signs, group, one_sided_groups = oriented_signs(
-            len(faces), pairs[:, 0] // 3, pairs[:, 1] // 3, edges.same_way
-        )
+        signs, group, one_sided_groups = oriented_signs(len(faces), pairs[:, 0] // 3, pairs[:, 1] // 3, edges.same_way)
         del signs
         one_sided = np.zeros(count, dtype=bool)
         one_sided[part[np.isin(group, one_sided_groups)]] = True
@@ -483,8 +475,7 @@ class _Examination:
             "crossing faces",
             "warning",
             len(within),
-            f"{len(within)} faces cross other faces of the same part; the volume there is counted twice or "
-            f"lost",
+            f"{len(within)} faces cross other faces of the same part; the volume there is counted twice or lost",
             within,
         )
         return len(np.unique(found.pairs))

@@ -28,9 +28,7 @@ def agree_orientation(mesh: Working) -> Repair | None:
         extra = np.concatenate(alternate)
         all_links = np.concatenate([links, extra])
         all_opposed = np.r_[opposed, edges.tail[extra[:, 0]] == edges.tail[extra[:, 1]]]
-        signs, _, one_sided = oriented_signs(
-            len(mesh.faces), all_links[:, 0] // 3, all_links[:, 1] // 3, all_opposed
-        )
+        signs, _, one_sided = oriented_signs(len(mesh.faces), all_links[:, 0] // 3, all_links[:, 1] // 3, all_opposed)
     if not alternate or len(one_sided):
         signs, _, _ = oriented_signs(len(mesh.faces), links[:, 0] // 3, links[:, 1] // 3, opposed)
     turn = signs < 0
@@ -73,8 +71,7 @@ def separate_sheets(mesh: Working, *, borders: bool) -> Repair | None:
     added = len(split.vertices) - len(mesh.vertices)
     touched = np.unique(np.concatenate([matched.reshape(-1) // 3, np.flatnonzero(extra[fan]) // 3]))
     detail = (
-        f"{crowded} edges of more than two faces and {int(extra.sum())} vertices were split, "
-        f"{added} vertices added"
+        f"{crowded} edges of more than two faces and {int(extra.sum())} vertices were split, {added} vertices added"
     )
     if halved:
         detail += f" ({halved} of them half-way along an edge)"

@@ -126,9 +126,7 @@ def loaded_rows(
         return np.loadtxt(rows, dtype=np.float64, comments=None, ndmin=2, usecols=columns)
     except (ValueError, IndexError, OverflowError) as error:
         reason = str(error).split(";")[0].split("\n")[0][:120]
-        raise SurfaceError(
-            f"{name}: {what} cannot be read as numbers ({reason}); export the file again"
-        ) from error
+        raise SurfaceError(f"{name}: {what} cannot be read as numbers ({reason}); export the file again") from error
 
 
 def loaded_rings(rings: Sequence[str], name: str) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
@@ -201,8 +199,7 @@ def _refuse_bad_numbers(polygons: Polygons, name: str) -> None:
     short = np.flatnonzero(sizes < 3)
     if len(short):
         raise SurfaceError(
-            f"{name}: face {short[0]} has {sizes[short[0]]} corners, at least 3 are needed ({len(short)} "
-            f"such faces)",
+            f"{name}: face {short[0]} has {sizes[short[0]]} corners, at least 3 are needed ({len(short)} such faces)",
             faces=tuple(int(k) for k in short[:24]),
         )
     wrong = np.flatnonzero((corners < 0) | (corners >= len(vertices)))

@@ -166,13 +166,10 @@ def _checked_kind(path: Path, data: bytes) -> str:
     # ending.
     if looks is not None and looks != ending:
         raise SurfaceError(
-            f"{path.name} ends in {path.suffix} but its content looks like {looks}; rename it or export it "
-            f"again"
+            f"{path.name} ends in {path.suffix} but its content looks like {looks}; rename it or export it again"
         )
     if looks is None and ending in {"PLY", "GLB", "VTP", "VTK", "glTF"}:
-        raise SurfaceError(
-            f"{path.name} does not begin as a {ending} file does; the file is damaged or mislabelled"
-        )
+        raise SurfaceError(f"{path.name} does not begin as a {ending} file does; the file is damaged or mislabelled")
     return ending
 
 

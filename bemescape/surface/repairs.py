@@ -127,9 +127,7 @@ def drop_collapsed_faces(mesh: Working) -> Repair | None:
     count = int(collapsed.sum())
     if not count:
         return None
-    return Repair(
-        mesh.keeping(~collapsed), count, f"{count} faces named a vertex twice", mesh.face_source[collapsed]
-    )
+    return Repair(mesh.keeping(~collapsed), count, f"{count} faces named a vertex twice", mesh.face_source[collapsed])
 
 
 def drop_doubled_faces(mesh: Working) -> Repair | None:
@@ -202,9 +200,7 @@ def remove_flat_faces(mesh: Working) -> Repair | None:
         mesh = turned
     if not turned_count and not pulled_count:
         return None
-    detail = (
-        f"{turned_count} flat faces were turned away and {pulled_count} pulled together along a short edge"
-    )
+    detail = f"{turned_count} flat faces were turned away and {pulled_count} pulled together along a short edge"
     return Repair(mesh, count, detail, np.unique(np.concatenate(touched)))
 
 

@@ -101,7 +101,4 @@ class Surface:
         return np.array([self.vertices.min(axis=0), self.vertices.max(axis=0)])
 
     def __repr__(self) -> str:
-        return (
-            f"Surface: {self.name}, {len(self.faces)} faces, volume {self.volume:.4g} µm³, "
-            f"area {self.area:.4g} µm²"
-        )
+        return f"Surface: {self.name}, {len(self.faces)} faces, volume {self.volume:.4g} µm³, area {self.area:.4g} µm²"

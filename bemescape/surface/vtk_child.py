@@ -55,9 +55,7 @@ def main(kind: str, source: str, target: str, limit: int) -> int:
     # Cell arrays run over vertices, lines, polygons in this order.
     first = mesh.GetNumberOfVerts() + mesh.GetNumberOfLines()
     count = polygons.GetNumberOfCells()
-    faces = {
-        key: array[first : first + count] for key, array in _numbers(mesh.GetCellData(), "face ").items()
-    }
+    faces = {key: array[first : first + count] for key, array in _numbers(mesh.GetCellData(), "face ").items()}
     found: dict[str, Any] = {
         "points": vtk_to_numpy(mesh.GetPoints().GetData()),
         "offsets": vtk_to_numpy(polygons.GetOffsetsArray()),

@@ -109,9 +109,7 @@ def test_stopping_the_solve_writes_nothing_and_says_so(workplace, painted, capsy
     assert not (workplace / "ball").exists()
 
 
-def test_stopping_while_pictures_are_drawn_keeps_the_numbers_and_says_so(
-    workplace, painted, capsys, monkeypatch
-):
+def test_stopping_while_pictures_are_drawn_keeps_the_numbers_and_says_so(workplace, painted, capsys, monkeypatch):
     def stop(result, folder):
         raise KeyboardInterrupt
 

@@ -15,9 +15,7 @@ def saved(workplace, painted, capsys):
 
 def test_a_picture_is_rendered_with_the_view_and_cut_asked_for(saved, capsys, monkeypatch):
     calls = []
-    monkeypatch.setattr(
-        pictures, "render_png", lambda result, path, **named: calls.append((path.name, named))
-    )
+    monkeypatch.setattr(pictures, "render_png", lambda result, path, **named: calls.append((path.name, named)))
     assert main(["view", "ball", "--png", "a.png"]) == 0
     assert main(["view", "ball", "--png", "b.PNG", "--view", "top", "--cut"]) == 0
     assert calls == [

@@ -112,16 +112,11 @@ def fem_reference(
         meshed = perf_counter()
         levels.append(fem_mean_time(mesh, diffusion_um2_s))
         meshing, solving = meshing + meshed - started, solving + perf_counter() - meshed
-    lost = [
-        0.0 if rim.area is None else abs(mesh.window_area(k) / rim.area - 1.0)
-        for k, rim in enumerate(mesh.rims)
-    ]
+    lost = [0.0 if rim.area is None else abs(mesh.window_area(k) / rim.area - 1.0) for k, rim in enumerate(mesh.rims)]
     first, second, third = (level.mean_time_s for level in levels[-3:])
     value = 2.0 * third - second
     shares = tuple(2.0 * b - a for a, b in zip(levels[-2].shares, levels[-1].shares, strict=True))
-    error = (
-        abs(value - (2.0 * second - first)) / value + 0.25 * abs(missing) + 0.5 * float(np.dot(shares, lost))
-    )
+    error = abs(value - (2.0 * second - first)) / value + 0.25 * abs(missing) + 0.5 * float(np.dot(shares, lost))
     return FemReference(value * (1.0 + missing), error, shares, tuple(levels), meshing, solving)
 
 

@@ -92,9 +92,7 @@ class Rim:
         if isinstance(window, FaceWindow):
             inside = np.zeros(len(polyhedron.faces), bool)
             inside[window.faces] = True
-            self._sides = [
-                _polydata(polyhedron.vertices, polyhedron.faces[side]) for side in (inside, ~inside)
-            ]
+            self._sides = [_polydata(polyhedron.vertices, polyhedron.faces[side]) for side in (inside, ~inside)]
             self._tree = cKDTree(_rim_points(polyhedron, inside))
             corners = polyhedron.vertices[polyhedron.faces[window.faces]]
             twice = np.cross(corners[:, 1] - corners[:, 0], corners[:, 2] - corners[:, 0])
@@ -115,9 +113,7 @@ class Rim:
 
     def distance(self, points: Floats, to_wall: Floats) -> Floats:
         if isinstance(self.window, DiscWindow):
-            return np.hypot(
-                self.level(points), to_wall
-            )  # the sphere crosses the wall at nearly a right angle
+            return np.hypot(self.level(points), to_wall)  # the sphere crosses the wall at nearly a right angle
         return np.asarray(self._tree.query(points)[0])
 
 
@@ -170,9 +166,7 @@ def refined_at_rims(mesh: Tetrahedra, halvings: int, growth: float = 0.5) -> Tet
             break
         points, tets = _bisect(points, tets, coarse)
     old, new = boundary_facets(mesh.tets), boundary_facets(tets)
-    number = {
-        tuple(facet): k for k, facets in enumerate(mesh.window_facets) for facet in np.sort(facets, axis=1)
-    }
+    number = {tuple(facet): k for k, facets in enumerate(mesh.window_facets) for facet in np.sort(facets, axis=1)}
     window = np.array([number.get(tuple(facet), -1) for facet in np.sort(old, axis=1)])
     parent = _polydata(mesh.points, old).find_closest_cell(points[new].mean(axis=1))
     facets = tuple(new[window[parent] == k] for k in range(len(mesh.window_facets)))
@@ -203,9 +197,7 @@ def _open_edges(facets: Ints) -> Ints:
     return unique[count == 1]
 
 
-def fill(
-    vertices: Floats, faces: Ints, windows: Sequence[DiscWindow | FaceWindow], sizes: Sizes
-) -> Tetrahedra:
+def fill(vertices: Floats, faces: Ints, windows: Sequence[DiscWindow | FaceWindow], sizes: Sizes) -> Tetrahedra:
     """Tetrahedra inside a closed surface: vertices (n, 3), outward faces (m, 3)."""
     polyhedron = Polyhedron(vertices, faces)
     rims = [Rim(polyhedron, window) for window in windows]
@@ -251,9 +243,7 @@ def _graded_lattice(polyhedron: Polyhedron, rims: Sequence[Rim], sizes: Sizes) -
         to_wall = polyhedron.signed_distance(fresh)
         size = np.clip(sizes.growth * np.abs(to_wall), sizes.wall, sizes.bulk)
         for rim in rims:
-            size = np.minimum(
-                size, np.maximum(sizes.rim * rim.radius, sizes.growth * rim.distance(fresh, to_wall))
-            )
+            size = np.minimum(size, np.maximum(sizes.rim * rim.radius, sizes.growth * rim.distance(fresh, to_wall)))
         depth, wanted = np.append(depth, to_wall), np.append(wanted, size)
         longest = _lengths(points, tets).max(axis=1)
         near = depth[tets].min(axis=1) < longest  # the others lie wholly outside

@@ -18,9 +18,7 @@ def _cube_quads(side: float = 1.0) -> tuple[np.ndarray, np.ndarray]:
     return vertices, quads
 
 
-def _cube(
-    side: float = 1.0, at: tuple[float, float, float] = (0.0, 0.0, 0.0)
-) -> tuple[np.ndarray, np.ndarray]:
+def _cube(side: float = 1.0, at: tuple[float, float, float] = (0.0, 0.0, 0.0)) -> tuple[np.ndarray, np.ndarray]:
     vertices, quads = _cube_quads(side)
     return vertices + np.array(at), np.concatenate([quads[:, [0, 1, 2]], quads[:, [0, 2, 3]]])
 
@@ -48,9 +46,7 @@ def _mobius(count: int = 24) -> tuple[np.ndarray, np.ndarray]:
     rows = []
     for side in (-0.3, 0.3):
         radius = 1.0 + side * np.cos(0.5 * angle)
-        rows.append(
-            np.stack([radius * np.cos(angle), radius * np.sin(angle), side * np.sin(0.5 * angle)], axis=1)
-        )
+        rows.append(np.stack([radius * np.cos(angle), radius * np.sin(angle), side * np.sin(0.5 * angle)], axis=1))
     vertices = np.stack(rows, axis=1).reshape(-1, 3)
     faces = []
     for k in range(count):
@@ -79,9 +75,7 @@ def _ply_bytes(
     order = ">" if layout == "binary_big_endian" else "<"
     for k, vertex in enumerate(vertices):
         if layout == "ascii":
-            row = [repr(float(value)) for value in vertex] + (
-                [repr(float(zone[k]))] if zone is not None else []
-            )
+            row = [repr(float(value)) for value in vertex] + ([repr(float(zone[k]))] if zone is not None else [])
             body += (" ".join(row) + "\n").encode()
         else:
             body += struct.pack(order + "3d", *vertex)

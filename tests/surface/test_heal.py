@@ -122,9 +122,7 @@ def test_a_face_without_length_is_pulled_together(shapes):
     assert surface.volume == pytest.approx(Surface(*shapes.ball()).volume, rel=1e-12)
 
 
-@pytest.mark.parametrize(
-    ("shift", "crowded"), [((1.0, 1.0, 0.0), "1 edges"), ((1.0, 1.0, 1.0), "1 vertices")]
-)
+@pytest.mark.parametrize(("shift", "crowded"), [((1.0, 1.0, 0.0), "1 edges"), ((1.0, 1.0, 1.0), "1 vertices")])
 def test_cubes_that_touch_come_apart(shift, crowded, shapes):
     vertices, faces = shapes.weld(*shapes.join(shapes.cube(), shapes.cube(1.0, shift)))
     surface = healed(vertices, faces)
@@ -229,9 +227,7 @@ def test_debris_is_dropped_and_a_vesicle_is_not(shapes):
     open_scrap, closed_speck = surface.healing.changes
     assert open_scrap.area_change_um2 == pytest.approx(-0.005, rel=1e-12)
     assert closed_speck.volume_change_um3 == pytest.approx(-Surface(*speck).volume, rel=1e-9)
-    share = Surface(*speck).volume / (
-        Surface(*body).volume + Surface(*vesicle).volume + Surface(*speck).volume
-    )
+    share = Surface(*speck).volume / (Surface(*body).volume + Surface(*vesicle).volume + Surface(*speck).volume)
     assert f"{share:.2g} of the volume" in closed_speck.detail
     # Debris beside an otherwise sound mesh goes as well.
     assert kinds(healed(*shapes.join(body, speck))) == ["dropped part"]

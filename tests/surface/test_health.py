@@ -30,9 +30,7 @@ def test_a_ball_is_healthy_and_measured_as_trimesh_does(shapes):
 
 def test_quality_of_a_right_triangle_is_its_closed_form():
     # Legs 3 and 4: r = 1, R = 2.5, so 2r/R = 0.8.
-    report = check_surface(
-        np.array([[0.0, 0.0, 0.0], [3.0, 0.0, 0.0], [0.0, 4.0, 0.0]]), np.array([[0, 1, 2]])
-    )
+    report = check_surface(np.array([[0.0, 0.0, 0.0], [3.0, 0.0, 0.0], [0.0, 4.0, 0.0]]), np.array([[0, 1, 2]]))
     assert report.triangle_quality.median == pytest.approx(0.8, rel=1e-14)
 
 
@@ -88,9 +86,7 @@ def test_touching_bodies_are_crowded_edges_or_vertices(shapes):
 
 
 def test_nesting_makes_obstacles_and_bodies_in_them(shapes):
-    mesh = shapes.join(
-        shapes.ball(3.0), shapes.ball(2.0), shapes.ball(1.0), shapes.ball(1.0, at=(9.0, 0.0, 0.0))
-    )
+    mesh = shapes.join(shapes.ball(3.0), shapes.ball(2.0), shapes.ball(1.0), shapes.ball(1.0, at=(9.0, 0.0, 0.0)))
     report = check_surface(*mesh)
     assert sorted(part.depth for part in report.parts) == [0, 0, 1, 2]
     assert report.inverted_parts == 1  # the middle one must look into the obstacle

@@ -39,9 +39,7 @@ def test_a_ball_keeps_its_volume_and_reports_its_distance(shapes):
 
 def test_halving_the_voxels_brings_the_volume_closer(shapes):
     ball = Surface(*shapes.ball(1.0))
-    errors = [
-        abs(heal_surface(ball, "rebuild", voxel=f"{size} nm").volume - ball.volume) for size in (160, 80, 40)
-    ]
+    errors = [abs(heal_surface(ball, "rebuild", voxel=f"{size} nm").volume - ball.volume) for size in (160, 80, 40)]
     assert errors[2] < 0.5 * errors[1] < 0.25 * errors[0] * 1.5
 
 
@@ -59,9 +57,7 @@ def test_many_small_holes_do_not_let_the_outside_in(shapes):
 
 
 def test_an_obstacle_stays_hollow(shapes):
-    surface = heal_surface(
-        Surface(*shapes.join(shapes.ball(1.0), shapes.ball(0.5))), "rebuild", voxel="40 nm"
-    )
+    surface = heal_surface(Surface(*shapes.join(shapes.ball(1.0), shapes.ball(0.5))), "rebuild", voxel="40 nm")
     expected = Surface(*shapes.ball(1.0)).volume - Surface(*shapes.ball(0.5)).volume
     assert surface.volume == pytest.approx(expected, rel=0.01)
     assert surface.healing.after.part_count == 2

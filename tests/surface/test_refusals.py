@@ -151,9 +151,7 @@ def test_a_ply_cut_anywhere_is_refused(layout, shapes, write):
     ],
 )
 def test_a_gltf_that_contradicts_itself_is_refused(change, reason, write):
-    assert read_surface(write("a.gltf", gltf(lambda _: None)), unit="um").volume == pytest.approx(
-        1 / 6, rel=1e-6
-    )
+    assert read_surface(write("a.gltf", gltf(lambda _: None)), unit="um").volume == pytest.approx(1 / 6, rel=1e-6)
     with pytest.raises(SurfaceError, match=reason):
         read_surface(write("a.gltf", gltf(change)), unit="um")
 
@@ -217,9 +215,7 @@ def test_a_cloud_of_loose_triangles_is_refused(shapes, write):
 
 
 def test_overlapping_parts_are_refused_and_sent_to_rebuild(shapes, write):
-    path = write(
-        "two.ply", shapes.ply_bytes(*shapes.join(shapes.cube(), shapes.cube(1.0, (0.51, 0.52, 0.53))))
-    )
+    path = write("two.ply", shapes.ply_bytes(*shapes.join(shapes.cube(), shapes.cube(1.0, (0.51, 0.52, 0.53)))))
     with pytest.raises(SurfaceError, match=r"these parts overlap.*heal='rebuild'"):
         read_surface(path, unit="um")
 

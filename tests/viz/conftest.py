@@ -160,9 +160,7 @@ def painted(name="spine 12", step=0.035, names=("neck", "side pore"), **changes)
     window[np.linalg.norm(centroids - pore, axis=1) < 0.09] = 1
     time = np.where(window >= 0, 0.0, PaintedResult.formula(centroids))
     corners = vertices[faces]
-    areas = 0.5 * np.linalg.norm(
-        np.cross(corners[:, 1] - corners[:, 0], corners[:, 2] - corners[:, 0]), axis=1
-    )
+    areas = 0.5 * np.linalg.norm(np.cross(corners[:, 1] - corners[:, 0], corners[:, 2] - corners[:, 0]), axis=1)
     density = np.zeros(len(faces))
     for number, share in ((0, 0.7), (1, 0.3)):
         inside = window == number

@@ -59,9 +59,7 @@ def test_a_figure_is_not_blank(pictures, name):
 
 
 def test_the_wall_has_the_hues_of_the_map_and_windows_one_of_their_own(pictures):
-    colours = shape_part(imread(pictures["view_side.png"])).reshape(
-        -1, imread(pictures["view_side.png"]).shape[-1]
-    )
+    colours = shape_part(imread(pictures["view_side.png"])).reshape(-1, imread(pictures["view_side.png"]).shape[-1])
     hue, saturation, value = rgb_to_hsv(colours[:, :3]).T
     vivid = hue[(saturation > 0.3) & (value > 0.2)] * 360.0
     # The map runs from blue (215°) to yellow (52°) through grey; the windows' light blue is at 193°.
@@ -220,9 +218,7 @@ def test_pictures_need_no_display_and_say_nothing_on_stderr():
 
 def test_importing_the_package_loads_no_drawing_library():
     code = "import sys, bemescape.viz; print(*sys.modules)"
-    done = subprocess.run(
-        [sys.executable, "-c", code], capture_output=True, text=True, timeout=60, check=True
-    )
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, timeout=60, check=True)
     loaded = set(done.stdout.split())
     assert "bemescape.viz" in loaded
     assert not loaded & {"pyvista", "matplotlib", "vtkmodules"}

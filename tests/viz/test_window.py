@@ -38,9 +38,7 @@ def test_without_a_display_the_window_is_refused_with_the_remedy(spine, monkeypa
         open_window(spine)
 
 
-@pytest.mark.skipif(
-    not sys.platform.startswith("linux"), reason="only X has a display that can be unreachable"
-)
+@pytest.mark.skipif(not sys.platform.startswith("linux"), reason="only X has a display that can be unreachable")
 def test_a_display_that_does_not_answer_is_refused_too_not_drawn_unseen(tmp_path):
     code = (
         "import sys\n"
