@@ -239,7 +239,7 @@ class PointSums:
         value = self._values(sources, multipole, local, slopes=True)
         t = self._targets
         out += value[0] - ((t.points - middle).T * value[1:4]).sum(axis=0)
-        out += 0.0 * t.shape[:, 3] * ((t.shape[:, :3].T * value[4:7]).sum(axis=0) + value[7])
+        out += t.shape[:, 3] * ((t.shape[:, :3].T * value[4:7]).sum(axis=0) + value[7])
         return self._restored(out, scale)
 
     def _double_many(self, sources: _Sources, densities: Floats) -> Floats:
