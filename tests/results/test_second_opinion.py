@@ -148,10 +148,16 @@ def test_a_mesh_that_cannot_be_coarsened_is_refused_with_its_count(monkeypatch):
 @pytest.mark.slow
 @pytest.mark.parametrize(
     # Through the necks of spine and mitochondrion a walker needs thousands of jumps: a fifth of the walkers there.
-    ("name", "walkers"),
-    [("bouton", 100_000), ("nucleus", 100_000), ("spine", 20_000), ("mitochondrion", 20_000)],
+    # Forty rims leave the Galerkin mesh of the nucleus 75 panels each: it says itself that its error is a third.
+    ("name", "walkers", "galerkin_error"),
+    [
+        ("bouton", 100_000, 0.02),
+        ("nucleus", 100_000, 0.5),
+        ("spine", 20_000, 0.02),
+        ("mitochondrion", 20_000, 0.02),
+    ],
 )
-def test_both_opinions_agree_on_the_demo_shapes(name, walkers):
+def test_both_opinions_agree_on_the_demo_shapes(name, walkers, galerkin_error):
     result = read_case(MESHES / f"{name}.toml").solve()
     walked = result.walkers(walkers, seed=1)
     assert walked.agrees, walked.line
@@ -160,4 +166,4 @@ def test_both_opinions_agree_on_the_demo_shapes(name, walkers):
     assert walked.lost == 0
     checked = result.crosscheck()
     assert checked.agrees, checked.line
-    assert checked.relative_error < 0.1
+    assert checked.relative_error < galerkin_error
