@@ -236,7 +236,7 @@ def _solved(
     balance = -float(panels.areas @ solution.q) / volume - 1.0
     if not (np.isfinite(mean) and abs(balance) <= settings.balance_limit):
         raise AccuracyError(
-            f"the windows drain {1.0 + balance:.4g} of V/D (limit 1 ± {settings.balance_limit:g}) on {len(panels)} "
+            f"the windows drain {1.0 + balance:.7g} of V/D (limit 1 ± {settings.balance_limit:g}) on {len(panels)} "
             "panels: faces cross one another or the mesh is too damaged; try heal='rebuild'"
         )
     flow = np.bincount(prepared.window_of + 1, weights=-panels.areas * solution.q, minlength=len(kappa) + 1)

@@ -114,18 +114,18 @@ def compare(
 
 
 def peer(panels: Panels, density: Floats, epsilon: float, pick: NDArray[np.int64], repeats: int) -> dict[str, Any]:
-    """fmm3dpy's dipoles at the centroids."""
+    """fmm3dpy's dipoles at the centroids; its kernel is 1/4πr."""
     from fmm3dpy import lfmm3d
 
     sources = np.asfortranarray(panels.centroids.T)
-    dipoles = np.asfortranarray((panels.normals * (panels.areas * density / (4.0 * np.pi))[:, None]).T)
+    dipoles = np.asfortranarray((panels.normals * (panels.areas * density)[:, None]).T)
     got, times = timed(lambda: lfmm3d(eps=epsilon, sources=sources, dipvec=dipoles, pg=1).pot, min(repeats, 3))
     exact = np.empty(len(pick))
     for k, i in enumerate(pick):
         d = panels.centroids[i] - panels.centroids
         square = (d**2).sum(axis=1)
         square[i] = np.inf
-        exact[k] = ((d * dipoles.T).sum(axis=1) / square**1.5).sum()
+        exact[k] = ((d * dipoles.T).sum(axis=1) / square**1.5).sum() / (4.0 * np.pi)
     return {"method": f"fmm3dpy {epsilon:g}", "error": fmm_sets.relative(got[pick], exact)} | times
 
 
