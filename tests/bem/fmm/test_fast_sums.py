@@ -134,11 +134,18 @@ def test_panels_too_large_for_their_box_are_summed_directly():
     centre = np.full((3, 3), 0.5)
     large = fmm_sets.small_triangles(centre + 0.01 * rng.normal(size=(3, 3)), np.eye(3), np.full(3, 0.4), rng)
     panels = make_panels(np.concatenate([fine, large]))
-    density = fmm_sets.density_on(panels, rng)
-    every = np.arange(len(panels))
+    every, is_large = np.arange(len(panels)), panels.radii > 0.1
+    sums = FastSums(panels, tolerance=1e-5)
+    # As targets only, then as sources only, so that either way shows alone.
+    density = np.where(is_large, 0.0, fmm_sets.density_on(panels, rng))
+    exact = fmm_sets.direct("double", panel_targets(panels), panels, every, density)[is_large]
+    got = sums.double(every, density)[is_large]
+    np.testing.assert_allclose(got, exact, rtol=0, atol=1e-5 * np.abs(exact).max())
+    density = is_large.astype(float)
     exact = fmm_sets.direct("double", panel_targets(panels), panels, every, density)
-    got = FastSums(panels, tolerance=1e-5).double(every, density)
-    assert fmm_sets.relative(got, exact) < 2e-5
+    assert fmm_sets.relative(sums.double(every, density), exact) < 1e-5
+    densities = np.column_stack([density, 1.0 - density])
+    assert fmm_sets.relative(sums.double_many(every, densities)[:, 0], exact) < 1e-5
 
 
 def test_a_handful_of_panels_and_coincident_ones_are_no_trouble():
