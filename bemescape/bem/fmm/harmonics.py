@@ -105,7 +105,6 @@ SERIES = 7
 # apart, and short ones would take the scalar way. Hence whole blocks always, of 96 (measured: 64 are
 # too few for dipoles).
 _ONE_BELOW, _TWO_BELOW = np.uintp(1), np.uintp(2)
-_compiled = njit(cache=True, fastmath=True, error_model="numpy")
 
 # What is written, from the coefficients of the power series.
 _CHARGE, _DIPOLE, _SLOPES = 1, 2, 3
@@ -116,15 +115,24 @@ def _weights(kind, *, far):
 
     `kind`: _CHARGE writes f − ½ spread f″, _DIPOLE f′ − ½ spread f‴, _SLOPES three layers: the first as _CHARGE, then f
     and f′. `far` selects the irregular harmonics. All in single precision, in units of the box.
+
+    It is one long function because numba's cache on disk knows closures by what they hold: numbers are the same in
+    every process, compiled functions are not.
     """
     dipole = kind == _DIPOLE
 
-    @_compiled
-    def begin(points, width, w):
-        """Series of the coordinates, of r² or 1/r², and of R_00 or S_00."""
+    @njit(cache=True, fastmath=True, error_model="numpy")
+    def run(points, degree, factors, w, column, out):
+        """Harmonics at a block of points (7, BLOCK): x, y, z, normal, spread.
+
+        They are written to out (layers, count, BLOCK); w (SERIES, 4, BLOCK) and column (2 degree + 3, 4, BLOCK) are
+        work arrays, the latter for the harmonics of one m at a time, cosines first, from l = m upwards.
+        """
+        width = points.shape[1]
         zero, one, two, three, five = (
             np.float32(0.0), np.float32(1.0), np.float32(2.0), np.float32(3.0), np.float32(5.0),
         )  # fmt: skip
+        # Series of the coordinates, of r² or 1/r², and of R_00 or S_00.
         for k in range(width):
             x, y, z = points[0, k], points[1, k], points[2, k]
             nx, ny, nz = points[3, k], points[4, k], points[5, k]
@@ -154,97 +162,76 @@ def _weights(kind, *, far):
                 w[_COS, 0, k], w[_COS, 1, k], w[_COS, 2, k], w[_COS, 3, k] = one, zero, zero, zero
             w[_SIN, 0, k], w[_SIN, 1, k], w[_SIN, 2, k], w[_SIN, 3, k] = zero, zero, zero, zero
             w[_SPREAD, 0, k] = points[6, k]
-
-    @_compiled
-    def turn(width, w, factor):
-        """Next harmonics with m = l: (cos + i sin) (x + i y), up to `factor`."""
-        for k in range(width):
-            x0, x1, y0, y1 = w[_X, 0, k], w[_X, 1, k], w[_Y, 0, k], w[_Y, 1, k]
-            c0, c1, c2 = w[_COS, 0, k], w[_COS, 1, k], w[_COS, 2, k]
-            s0, s1, s2 = w[_SIN, 0, k], w[_SIN, 1, k], w[_SIN, 2, k]
-            w[_COS, 0, k] = factor * (x0 * c0 - y0 * s0)
-            w[_SIN, 0, k] = factor * (y0 * c0 + x0 * s0)
-            w[_COS, 1, k] = factor * (x0 * c1 + x1 * c0 - y0 * s1 - y1 * s0)
-            w[_SIN, 1, k] = factor * (y0 * c1 + y1 * c0 + x0 * s1 + x1 * s0)
-            re = x0 * c2 + x1 * c1 - y0 * s2 - y1 * s1
-            im = y0 * c2 + y1 * c1 + x0 * s2 + x1 * s1
-            if far:
-                x2, y2 = w[_X, 2, k], w[_Y, 2, k]
-                re += x2 * c0 - y2 * s0
-                im += y2 * c0 + x2 * s0
-            if dipole:
-                c3, s3 = w[_COS, 3, k], w[_SIN, 3, k]
-                re3 = x0 * c3 + x1 * c2 - y0 * s3 - y1 * s2
-                im3 = y0 * c3 + y1 * c2 + x0 * s3 + x1 * s2
-                if far:
-                    x3, y3 = w[_X, 3, k], w[_Y, 3, k]
-                    re3 += x2 * c1 + x3 * c0 - y2 * s1 - y3 * s0
-                    im3 += y2 * c1 + y3 * c0 + x2 * s1 + x3 * s0
-                w[_COS, 3, k], w[_SIN, 3, k] = factor * re3, factor * im3
-            w[_COS, 2, k], w[_SIN, 2, k] = factor * re, factor * im
-
-    @_compiled
-    def climb(width, w, column, row, up, down, out, number):
-        """The harmonic in `row` from those one and two rows below, and what is wanted of it."""
-        below, lower = row - _ONE_BELOW, row - _TWO_BELOW
-        three = np.float32(3.0)
-        for k in range(width):
-            z0, z1 = up * w[_Z, 0, k], up * w[_Z, 1, k]
-            q0, q1, q2 = down * w[_SQUARE, 0, k], down * w[_SQUARE, 1, k], down * w[_SQUARE, 2, k]
-            a0, a1, a2 = column[below, 0, k], column[below, 1, k], column[below, 2, k]
-            b0, b1, b2 = column[lower, 0, k], column[lower, 1, k], column[lower, 2, k]
-            f0 = z0 * a0 - q0 * b0
-            f1 = z0 * a1 + z1 * a0 - q0 * b1 - q1 * b0
-            f2 = z0 * a2 + z1 * a1 - q0 * b2 - q1 * b1 - q2 * b0
-            if far:
-                z2 = up * w[_Z, 2, k]
-                f2 += z2 * a0
-            column[row, 0, k], column[row, 1, k], column[row, 2, k] = f0, f1, f2
-            if dipole:
-                f3 = z0 * column[below, 3, k] + z1 * a2 - q0 * column[lower, 3, k] - q1 * b2 - q2 * b1
-                if far:
-                    f3 += z2 * a1 + up * w[_Z, 3, k] * a0 - down * w[_SQUARE, 3, k] * b0
-                column[row, 3, k] = f3
-                out[0, number, k] = f1 - three * w[_SPREAD, 0, k] * f3
-            else:
-                out[0, number, k] = f0 - w[_SPREAD, 0, k] * f2
-                if kind == _SLOPES:
-                    out[1, number, k], out[2, number, k] = f0, f1
-
-    @_compiled
-    def write(width, w, column, row, out, number):
-        three = np.float32(3.0)
-        for k in range(width):
-            if dipole:
-                out[0, number, k] = column[row, 1, k] - three * w[_SPREAD, 0, k] * column[row, 3, k]
-            else:
-                out[0, number, k] = column[row, 0, k] - w[_SPREAD, 0, k] * column[row, 2, k]
-                if kind == _SLOPES:
-                    out[1, number, k], out[2, number, k] = column[row, 0, k], column[row, 1, k]
-
-    @_compiled
-    def run(points, degree, factors, w, column, out):
-        """Harmonics at a block of points (7, BLOCK): x, y, z, normal, spread.
-
-        They are written to out (layers, count, BLOCK); w (SERIES, 4, BLOCK) and column (2 degree + 3, 4, BLOCK) are
-        work arrays, the latter for the harmonics of one m at a time, cosines first, from l = m upwards.
-        """
-        width = points.shape[1]
-        begin(points, width, w)
         for m in range(degree + 1):
             if m > 0:
-                turn(width, w, np.float32(math.sqrt((2.0 * m - 1.0) / (2.0 * m)) if m > 1 else 1.0))
+                # The next harmonics with m = l: (cos + i sin) (x + i y), up to a factor.
+                factor = np.float32(math.sqrt((2.0 * m - 1.0) / (2.0 * m)) if m > 1 else 1.0)
+                for k in range(width):
+                    x0, x1, y0, y1 = w[_X, 0, k], w[_X, 1, k], w[_Y, 0, k], w[_Y, 1, k]
+                    c0, c1, c2 = w[_COS, 0, k], w[_COS, 1, k], w[_COS, 2, k]
+                    s0, s1, s2 = w[_SIN, 0, k], w[_SIN, 1, k], w[_SIN, 2, k]
+                    w[_COS, 0, k] = factor * (x0 * c0 - y0 * s0)
+                    w[_SIN, 0, k] = factor * (y0 * c0 + x0 * s0)
+                    w[_COS, 1, k] = factor * (x0 * c1 + x1 * c0 - y0 * s1 - y1 * s0)
+                    w[_SIN, 1, k] = factor * (y0 * c1 + y1 * c0 + x0 * s1 + x1 * s0)
+                    re = x0 * c2 + x1 * c1 - y0 * s2 - y1 * s1
+                    im = y0 * c2 + y1 * c1 + x0 * s2 + x1 * s1
+                    if far:
+                        x2, y2 = w[_X, 2, k], w[_Y, 2, k]
+                        re += x2 * c0 - y2 * s0
+                        im += y2 * c0 + x2 * s0
+                    if dipole:
+                        c3, s3 = w[_COS, 3, k], w[_SIN, 3, k]
+                        re3 = x0 * c3 + x1 * c2 - y0 * s3 - y1 * s2
+                        im3 = y0 * c3 + y1 * c2 + x0 * s3 + x1 * s2
+                        if far:
+                            x3, y3 = w[_X, 3, k], w[_Y, 3, k]
+                            re3 += x2 * c1 + x3 * c0 - y2 * s1 - y3 * s0
+                            im3 += y2 * c1 + y3 * c0 + x2 * s1 + x3 * s0
+                        w[_COS, 3, k], w[_SIN, 3, k] = factor * re3, factor * im3
+                    w[_COS, 2, k], w[_SIN, 2, k] = factor * re, factor * im
             for side in range(2 if m > 0 else 1):
                 # Above the first row there is another, whatever it holds: its factor is 0.
-                first = 1 + side * (degree + 1)
-                sign = m if side == 0 else -m
+                first = np.uintp(1 + side * (degree + 1))
+                start, sign = _COS + side, m if side == 0 else -m
+                number = np.uintp(m * m + m + sign)
                 for order in range(4):
                     for k in range(width):
-                        column[first, order, k] = w[_COS + side, order, k]
-                write(width, w, column, np.uintp(first), out, np.uintp(m * m + m + sign))
+                        column[first, order, k] = w[start, order, k]
+                for k in range(width):
+                    if dipole:
+                        out[0, number, k] = column[first, 1, k] - three * w[_SPREAD, 0, k] * column[first, 3, k]
+                    else:
+                        out[0, number, k] = column[first, 0, k] - w[_SPREAD, 0, k] * column[first, 2, k]
+                        if kind == _SLOPES:
+                            out[1, number, k], out[2, number, k] = column[first, 0, k], column[first, 1, k]
                 for ell in range(m + 1, degree + 1):
-                    row, number = np.uintp(first + ell - m), np.uintp(ell * ell + ell + sign)
-                    climb(width, w, column, row, factors[0, ell, m], factors[1, ell, m], out, number)
+                    # From the two rows below.
+                    along, across = factors[0, ell, m], factors[1, ell, m]
+                    row, number = first + np.uintp(ell - m), np.uintp(ell * ell + ell + sign)
+                    below, lower = row - _ONE_BELOW, row - _TWO_BELOW
+                    for k in range(width):
+                        z0, z1 = along * w[_Z, 0, k], along * w[_Z, 1, k]
+                        q0, q1, q2 = across * w[_SQUARE, 0, k], across * w[_SQUARE, 1, k], across * w[_SQUARE, 2, k]
+                        a0, a1, a2 = column[below, 0, k], column[below, 1, k], column[below, 2, k]
+                        b0, b1, b2 = column[lower, 0, k], column[lower, 1, k], column[lower, 2, k]
+                        f0 = z0 * a0 - q0 * b0
+                        f1 = z0 * a1 + z1 * a0 - q0 * b1 - q1 * b0
+                        f2 = z0 * a2 + z1 * a1 - q0 * b2 - q1 * b1 - q2 * b0
+                        if far:
+                            z2 = along * w[_Z, 2, k]
+                            f2 += z2 * a0
+                        column[row, 0, k], column[row, 1, k], column[row, 2, k] = f0, f1, f2
+                        if dipole:
+                            f3 = z0 * column[below, 3, k] + z1 * a2 - q0 * column[lower, 3, k] - q1 * b2 - q2 * b1
+                            if far:
+                                f3 += z2 * a1 + along * w[_Z, 3, k] * a0 - across * w[_SQUARE, 3, k] * b0
+                            column[row, 3, k] = f3
+                            out[0, number, k] = f1 - three * w[_SPREAD, 0, k] * f3
+                        else:
+                            out[0, number, k] = f0 - w[_SPREAD, 0, k] * f2
+                            if kind == _SLOPES:
+                                out[1, number, k], out[2, number, k] = f0, f1
 
     return run
 

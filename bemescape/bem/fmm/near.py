@@ -50,44 +50,25 @@ def _pad_tile(tile, size):
     return padded
 
 
+@njit(cache=True, fastmath=True, error_model="numpy")
+def _load_target(target, i, centre, scale, points, shape):
+    """Position, normal and spread of target i in units of the leaf."""
+    for k in range(3):
+        target[k], target[3 + k] = np.float32((points[i, k] - centre[k]) * scale), shape[i, k]
+    target[6] = shape[i, 3] * np.float32(scale * scale)
+
+
 def _sums(kind):
     """A compiled pass over all leaves for one kind of kernel."""
-
-    @njit(fastmath=True, error_model="numpy")
-    def value(dx, dy, dz, px, py, pz, mine, nx, ny, nz, wide):
-        inverse = np.float32(1.0) / np.sqrt(dx * dx + dy * dy + dz * dz + wide)
-        hs = nx * dx + ny * dy + nz * dz
-        ht = px * dx + py * dy + pz * dz
-        if kind == SINGLE:
-            return spread_inverse(ht, hs, mine, wide, inverse)
-        tilt = px * nx + py * ny + pz * nz
-        if kind == LIFTED:
-            return -spread_lifted(ht, hs, tilt, mine, wide, inverse)
-        return spread_dipole(ht, hs, tilt, mine, wide, inverse)
-
-    @njit(fastmath=True, error_model="numpy")
-    def against_tile(first, last, centre, scale, points, shape, tile, size, factor, out):
-        area = np.float32(scale * scale)
-        for i in range(first, last):
-            x = np.float32((points[i, 0] - centre[0]) * scale)
-            y = np.float32((points[i, 1] - centre[1]) * scale)
-            z = np.float32((points[i, 2] - centre[2]) * scale)
-            px, py, pz, mine = shape[i, 0], shape[i, 1], shape[i, 2], shape[i, 3] * area
-            total = np.float32(0.0)
-            for k in range(size):
-                total += tile[7, k] * value(
-                    x - tile[0, k], y - tile[1, k], z - tile[2, k], px, py, pz, mine,
-                    tile[3, k], tile[4, k], tile[5, k], tile[6, k],
-                )  # fmt: skip
-            out[i] += factor * total
 
     @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
     def run(
         chunks, near_first, near_begin, near_end, leaf_first, leaf_last, centres, scales,
         points, shape, source_points, source_shape, strength, out,
     ):  # fmt: skip
+        one = np.float32(1.0)
         for chunk in prange(len(chunks) - 1):
-            tile = np.zeros((8, _TILE), np.float32)
+            tile, target = np.zeros((8, _TILE), np.float32), np.zeros(7, np.float32)
             for leaf in range(chunks[chunk], chunks[chunk + 1]):
                 scale = scales[leaf]
                 # Kernels in units of the leaf's side: 1/side, 1, 1/side².
@@ -101,12 +82,30 @@ def _sums(kind):
                             tile, size, begin, end, centres[leaf], scale, source_points, source_shape, strength
                         )
                         begin = end
-                        if size == _TILE or (begin == near_end[r] and r + 1 == near_first[leaf + 1]):
-                            against_tile(
-                                leaf_first[leaf], leaf_last[leaf], centres[leaf], scale, points, shape,
-                                tile, _pad_tile(tile, size), factor, out,
-                            )  # fmt: skip
-                            size = 0
+                        if size < _TILE and (begin < near_end[r] or r + 1 < near_first[leaf + 1]):
+                            continue
+                        size = _pad_tile(tile, size)
+                        for i in range(leaf_first[leaf], leaf_last[leaf]):
+                            _load_target(target, i, centres[leaf], scale, points, shape)
+                            x, y, z = target[0], target[1], target[2]
+                            px, py, pz, mine = target[3], target[4], target[5], target[6]
+                            total = np.float32(0.0)
+                            for k in range(size):
+                                dx, dy, dz, wide = x - tile[0, k], y - tile[1, k], z - tile[2, k], tile[6, k]
+                                inverse = one / np.sqrt(dx * dx + dy * dy + dz * dz + wide)
+                                nx, ny, nz = tile[3, k], tile[4, k], tile[5, k]
+                                hs = nx * dx + ny * dy + nz * dz
+                                ht = px * dx + py * dy + pz * dz
+                                if kind == SINGLE:
+                                    total += tile[7, k] * spread_inverse(ht, hs, mine, wide, inverse)
+                                else:
+                                    tilt = px * nx + py * ny + pz * nz
+                                    if kind == LIFTED:
+                                        total -= tile[7, k] * spread_lifted(ht, hs, tilt, mine, wide, inverse)
+                                    else:
+                                        total += tile[7, k] * spread_dipole(ht, hs, tilt, mine, wide, inverse)
+                            out[i] += factor * total
+                        size = 0
 
     return run
 

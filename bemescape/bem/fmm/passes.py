@@ -4,7 +4,8 @@ Every row of an expansion belongs to one box and one column (one density, or one
 which a box has no source are not `live` and cost nothing on the way up and across. Translations are batched: many rows
 are gathered, multiplied by one matrix and added to where they belong, so that the work is done by the linear algebra
 library. All loops run over chunks fixed by the data, and a row is written by one chunk only, in a fixed order:
-results do not depend on the number of threads.
+results do not depend on the number of threads. (Variants are closures over flags, never over functions: numba could not
+find those again in its cache on disk.)
 """
 
 from __future__ import annotations
@@ -102,13 +103,11 @@ def _add_moments(weight, strengths, unit, start, begin, end, charge, rows):
             rows[c] += sums[c]
 
 
-def _from_panels(weights, far_weights, dipole):
-    """Two compiled passes from panels to expansions: of their own leaf, and of smaller target boxes that they enter."""
+def _from_panels(dipole):
+    """Two compiled passes from panels to expansions: of their own leaf, and of smaller target boxes that they enter.
 
-    # Kernels in units of the box: 1/side for charges, another for the slope of dipoles.
-    @njit(cache=True)
-    def unit(scale):
-        return np.float32(scale * scale if dipole else scale)
+    Kernels are in units of the box: 1/side for charges, another for the slope of dipoles.
+    """
 
     @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
     def up(degree, factors, chunks, leaves, first, last, centres, scales, points, shape, strengths, out):
@@ -120,13 +119,17 @@ def _from_panels(weights, far_weights, dipole):
             while start < stop and number < chunks[chunk + 1]:
                 size = min(BLOCK, stop - start)
                 _load_leaves(block, start, size, leaf, number, leaves, last, centres, scales, points, shape)
-                weights(block, degree, factors, series, column, weight)
+                if dipole:
+                    dipole_regular(block, degree, factors, series, column, weight)
+                else:
+                    charge_regular(block, degree, factors, series, column, weight)
                 begin = 0
                 while begin < size:
                     number = leaf[begin]
                     b = leaves[number]
                     end = min(size, last[b] - start)
-                    _add_moments(weight, strengths, unit(scales[b]), start, begin, end, charge, out[b])
+                    unit = np.float32(scales[b] * scales[b] if dipole else scales[b])
+                    _add_moments(weight, strengths, unit, start, begin, end, charge, out[b])
                     begin = end
                 start += size
 
@@ -140,19 +143,23 @@ def _from_panels(weights, far_weights, dipole):
             charge = np.empty((len(strengths), BLOCK), np.float32)
             for number in range(chunks[chunk], chunks[chunk + 1]):
                 b = into[number]
+                unit = np.float32(scales[b] * scales[b] if dipole else scales[b])
                 for item in range(item_first[number], item_first[number + 1]):
                     source = items[item]
                     for start in range(first[source], last[source], BLOCK):
                         size = min(BLOCK, last[source] - start)
                         _load_box(block, start, size, centres[b], scales[b], points, shape)
-                        far_weights(block, degree, factors, series, column, weight)
-                        _add_moments(weight, strengths, unit(scales[b]), start, 0, size, charge, out[b])
+                        if dipole:
+                            dipole_irregular(block, degree, factors, series, column, weight)
+                        else:
+                            charge_irregular(block, degree, factors, series, column, weight)
+                        _add_moments(weight, strengths, unit, start, 0, size, charge, out[b])
 
     return up, across
 
 
-charges_up, charges_across = _from_panels(charge_regular, charge_irregular, dipole=False)
-dipoles_up, dipoles_across = _from_panels(dipole_regular, dipole_irregular, dipole=True)
+charges_up, charges_across = _from_panels(dipole=False)
+dipoles_up, dipoles_across = _from_panels(dipole=True)
 
 
 @njit(cache=True, fastmath=True, error_model="numpy")
@@ -250,36 +257,42 @@ def move_across(far_first, far_target, far_source, far_degree, matrix_first, mat
                 )
 
 
-def _to_points(weights, far_weights, slopes):
+@njit(cache=True, fastmath=True, error_model="numpy")
+def _add_values(weight, rows, start, begin, end, out):
+    """Add to out (columns, n) the values of rows (columns, count) at the points begin … end of a block."""
+    if len(rows) == 1:
+        value = np.zeros(BLOCK, np.float32)
+        for i in range(weight.shape[1]):
+            coefficient = rows[0, i]
+            for k in range(weight.shape[2]):
+                value[k] += coefficient * weight[0, i, k]
+        for k in range(begin, end):
+            out[0, start + k] += value[k]
+    else:
+        values = np.dot(rows, weight[0])
+        for c in range(len(rows)):
+            for k in range(begin, end):
+                out[c, start + k] += values[c, k]
+
+
+@njit(cache=True, fastmath=True, error_model="numpy")
+def _add_slopes(weight, rows, scale, start, begin, end, out):
+    """As `_add_values` of four columns, then the slopes of the last three of these, then the bare value of a fifth."""
+    values, plain = np.dot(rows[:4], weight[0]), np.dot(rows[4:5], weight[1])
+    steep = np.dot(rows[1:4], weight[2])
+    for k in range(begin, end):
+        for c in range(4):
+            out[c, start + k] += values[c, k]
+        for c in range(3):
+            out[4 + c, start + k] += np.float32(scale) * steep[c, k]
+        out[7, start + k] += plain[0, k]
+
+
+def _to_points(slopes):
     """Two compiled passes from expansions to targets: locals of their leaf, and multipoles of smaller source boxes.
 
-    They add to out (values, n); with `slopes` these are the values of four columns, slopes of three, value of one.
+    They add to out (values, n), by `_add_values` or with `slopes` by `_add_slopes`.
     """
-
-    @njit(cache=True, fastmath=True, error_model="numpy")
-    def add(weight, rows, scale, start, begin, end, out):
-        if slopes:
-            values, plain = np.dot(rows[:4], weight[0]), np.dot(rows[4:5], weight[1])
-            steep = np.dot(rows[1:4], weight[2])
-            for k in range(begin, end):
-                for c in range(4):
-                    out[c, start + k] += values[c, k]
-                for c in range(3):
-                    out[4 + c, start + k] += np.float32(scale) * steep[c, k]
-                out[7, start + k] += plain[0, k]
-        elif len(rows) == 1:
-            value = np.zeros(BLOCK, np.float32)
-            for i in range(weight.shape[1]):
-                coefficient = rows[0, i]
-                for k in range(weight.shape[2]):
-                    value[k] += coefficient * weight[0, i, k]
-            for k in range(begin, end):
-                out[0, start + k] += value[k]
-        else:
-            values = np.dot(rows, weight[0])
-            for c in range(len(rows)):
-                for k in range(begin, end):
-                    out[c, start + k] += values[c, k]
 
     @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
     def at_leaves(degree, factors, chunks, leaves, first, last, centres, scales, points, shape, local, out):
@@ -291,13 +304,19 @@ def _to_points(weights, far_weights, slopes):
             while start < stop and number < chunks[chunk + 1]:
                 size = min(BLOCK, stop - start)
                 _load_leaves(block, start, size, leaf, number, leaves, last, centres, scales, points, shape)
-                weights(block, degree, factors, series, column, weight)
+                if slopes:
+                    slopes_regular(block, degree, factors, series, column, weight)
+                else:
+                    charge_regular(block, degree, factors, series, column, weight)
                 begin = 0
                 while begin < size:
                     number = leaf[begin]
                     b = leaves[number]
                     end = min(size, last[b] - start)
-                    add(weight, local[b], scales[b], start, begin, end, out)
+                    if slopes:
+                        _add_slopes(weight, local[b], scales[b], start, begin, end, out)
+                    else:
+                        _add_values(weight, local[b], start, begin, end, out)
                     begin = end
                 start += size
 
@@ -315,11 +334,15 @@ def _to_points(weights, far_weights, slopes):
                     for start in range(first[leaf], last[leaf], BLOCK):
                         size = min(BLOCK, last[leaf] - start)
                         _load_box(block, start, size, centres[b], scales[b], points, shape)
-                        far_weights(block, degree, factors, series, column, weight)
-                        add(weight, multipole[b], scales[b], start, 0, size, out)
+                        if slopes:
+                            slopes_irregular(block, degree, factors, series, column, weight)
+                            _add_slopes(weight, multipole[b], scales[b], start, 0, size, out)
+                        else:
+                            charge_irregular(block, degree, factors, series, column, weight)
+                            _add_values(weight, multipole[b], start, 0, size, out)
 
     return at_leaves, from_smaller
 
 
-values_at_leaves, values_from_smaller = _to_points(charge_regular, charge_irregular, slopes=False)
-slopes_at_leaves, slopes_from_smaller = _to_points(slopes_regular, slopes_irregular, slopes=True)
+values_at_leaves, values_from_smaller = _to_points(slopes=False)
+slopes_at_leaves, slopes_from_smaller = _to_points(slopes=True)

@@ -11,7 +11,7 @@ import pytest
 import shapes
 from bemescape.bem import far
 from bemescape.bem.far import Targets, panel_targets, point_targets
-from bemescape.bem.fmm import FastSums
+from bemescape.bem.fmm import FastSums, harmonics, near, passes
 from bemescape.bem.panels import make_panels
 from bemescape.errors import SettingsError
 from bemescape.windows.grade import Fineness, graded, place_windows
@@ -172,3 +172,13 @@ def test_importing_compiles_nothing():
     )
     answer = subprocess.run([sys.executable, "-c", ask], capture_output=True, text=True, check=True, timeout=100)
     assert answer.stdout.strip() == "0"
+
+
+def test_compiled_loops_can_be_found_again_in_the_cache_on_disk():
+    # numba keys the cache of a closure by its cells; compiled functions among them differ from process to process, and
+    # every process would then compile for a minute.
+    loops = [f for module in (harmonics, near, passes) for f in vars(module).values() if hasattr(f, "py_func")]
+    assert len(loops) > 15
+    cells = [cell.cell_contents for f in loops for cell in f.py_func.__closure__ or ()]
+    assert cells
+    assert all(isinstance(held, (int, bool)) for held in cells)
