@@ -10,16 +10,17 @@ import bemescape
 ROOT = Path(bemescape.__file__).parent
 VIZ = ROOT.parent / "viz" if (ROOT.parent / "viz").is_dir() else ROOT / "viz"
 
-BASE = {"errors", "units", "progress", "version"}
+BASE = {"errors", "units", "progress", "threads", "version"}
 #: Room -> rooms it may import. A room is a folder or module of the package.
 MAY_IMPORT = {
     "errors": set(),
     "progress": set(),
+    "threads": {"errors"},
     "version": set(),
     "units": {"errors"},
     "surface": BASE,
     "windows": BASE | {"surface"},
-    "bem": {"errors", "progress"},
+    "bem": {"errors", "progress", "threads"},
     "results": BASE | {"surface", "windows", "bem"},
     "escape": BASE | {"surface", "windows", "bem", "results"},
     "case": BASE | {"surface", "windows", "results", "escape"},

@@ -1,7 +1,7 @@
 """Far field by direct summation: every pair, with each panel as a point at its centroid.
 
 Strategy: targets are taken in tiles of neighbours. Sources are copied into single precision relative to the
-tile's centre, so that close pairs keep their digits; the inner loop over sources then vectorises. Close pairs are
+tile's centre, so that close pairs keep their digits; the inner loops over sources then vectorise. Close pairs are
 wrong on purpose (softened centroid rule) and corrected by the near field. Work grows as m²: about 5·10⁹ pairs a
 second on two cores.
 """
@@ -9,11 +9,10 @@ second on two cores.
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.kernels import (
@@ -24,6 +23,7 @@ from bemescape.bem.kernels import (
     spread_lifted_distance,
 )
 from bemescape.bem.panels import Panels
+from bemescape.threads import over_rows
 
 __all__ = [
     "Targets",
@@ -42,6 +42,7 @@ Ints = NDArray[np.int64]
 
 _TILE = 64
 _BLOCK = 256
+_CHUNKS = 32
 _FOUR_PI = 4.0 * math.pi
 
 
@@ -64,110 +65,120 @@ def point_targets(points: Floats) -> Targets:
     return Targets(points, np.zeros_like(points), np.zeros(len(points)))
 
 
-# The kinds of kernel, as compile-time constants of the one loop below.
+# The kinds of kernel.
 _SINGLE, _LIFTED, _DOUBLE, _DISTANCE, _LIFTED_DISTANCE = 1, 2, 3, 4, 5
 
 
-def _pass(kind):
-    """A compiled loop over all pairs for one kind of kernel (a closure constant, so nothing branches inside).
+@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
+def _pass(
+    kind, points, point_normals, point_spread, sources, normals, spread, strength, first, out, first_tile, last_tile
+):
+    """All pairs of the targets in some tiles with all sources.
 
-    Sources come in groups, `first[g]` up to `first[g + 1]`, and each group has a column of `out` to itself.
+    Sources come in groups, `first[g]` up to `first[g + 1]`, and each group has a column of `out` to itself. One
+    function holds all kinds since most of what takes time to compile is common; the choice is outside the inner loops.
     """
-
-    @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
-    def run(points, point_normals, point_spread, sources, normals, spread, strength, first, out):
-        one = np.float32(1.0)
-        for tile in prange((len(points) + _TILE - 1) // _TILE):
-            begin, end = tile * _TILE, min(len(points), (tile + 1) * _TILE)
-            cx, cy, cz = points[begin, 0], points[begin, 1], points[begin, 2]
-            sx, sy, sz = np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32)
-            nx, ny, nz = np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32)
-            wide, weight = np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32)
-            for group in range(len(first) - 1):
-                for block in range(first[group], first[group + 1], _BLOCK):
-                    size = min(_BLOCK, first[group + 1] - block)
-                    for k in range(size):
-                        j = block + k
-                        sx[k] = np.float32(sources[j, 0] - cx)
-                        sy[k] = np.float32(sources[j, 1] - cy)
-                        sz[k] = np.float32(sources[j, 2] - cz)
-                        nx[k], ny[k], nz[k] = normals[j, 0], normals[j, 1], normals[j, 2]
-                        wide[k], weight[k] = spread[j], strength[j]
-                    for i in range(begin, end):
-                        x = np.float32(points[i, 0] - cx)
-                        y = np.float32(points[i, 1] - cy)
-                        z = np.float32(points[i, 2] - cz)
-                        px = np.float32(point_normals[i, 0])
-                        py = np.float32(point_normals[i, 1])
-                        pz = np.float32(point_normals[i, 2])
-                        mine = np.float32(point_spread[i])
-                        total = np.float32(0.0)
+    one = np.float32(1.0)
+    sx, sy, sz = np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32)
+    nx, ny, nz = np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32)
+    wide, weight = np.empty(_BLOCK, np.float32), np.empty(_BLOCK, np.float32)
+    for tile in range(first_tile, last_tile):
+        begin, end = tile * _TILE, min(len(points), (tile + 1) * _TILE)
+        cx, cy, cz = points[begin, 0], points[begin, 1], points[begin, 2]
+        for group in range(len(first) - 1):
+            for block in range(first[group], first[group + 1], _BLOCK):
+                size = min(_BLOCK, first[group + 1] - block)
+                for k in range(size):
+                    j = block + k
+                    sx[k] = np.float32(sources[j, 0] - cx)
+                    sy[k] = np.float32(sources[j, 1] - cy)
+                    sz[k] = np.float32(sources[j, 2] - cz)
+                    nx[k], ny[k], nz[k] = normals[j, 0], normals[j, 1], normals[j, 2]
+                    wide[k], weight[k] = spread[j], strength[j]
+                for i in range(begin, end):
+                    x = np.float32(points[i, 0] - cx)
+                    y = np.float32(points[i, 1] - cy)
+                    z = np.float32(points[i, 2] - cz)
+                    px = np.float32(point_normals[i, 0])
+                    py = np.float32(point_normals[i, 1])
+                    pz = np.float32(point_normals[i, 2])
+                    mine = np.float32(point_spread[i])
+                    total = np.float32(0.0)
+                    # fmt: off
+                    if kind == _SINGLE:
                         for k in range(size):
                             dx, dy, dz = x - sx[k], y - sy[k], z - sz[k]
                             inverse = one / np.sqrt(dx * dx + dy * dy + dz * dz + wide[k])
-                            hs = nx[k] * dx + ny[k] * dy + nz[k] * dz
-                            ht = px * dx + py * dy + pz * dz
-                            if kind == _SINGLE:
-                                total += weight[k] * spread_inverse(ht, hs, mine, wide[k], inverse)
-                            elif kind == _DISTANCE:
-                                total += weight[k] * spread_distance(ht, hs, mine, wide[k], inverse)
-                            else:
-                                tilt = px * nx[k] + py * ny[k] + pz * nz[k]
-                                if kind == _LIFTED:
-                                    total -= weight[k] * spread_lifted(ht, hs, tilt, mine, wide[k], inverse)
-                                elif kind == _LIFTED_DISTANCE:
-                                    total -= weight[k] * spread_lifted_distance(ht, hs, tilt, mine, wide[k], inverse)
-                                else:
-                                    total += weight[k] * spread_dipole(ht, hs, tilt, mine, wide[k], inverse)
-                        out[i, group] += total
+                            hs, ht = nx[k] * dx + ny[k] * dy + nz[k] * dz, px * dx + py * dy + pz * dz
+                            total += weight[k] * spread_inverse(ht, hs, mine, wide[k], inverse)
+                    elif kind == _DISTANCE:
+                        for k in range(size):
+                            dx, dy, dz = x - sx[k], y - sy[k], z - sz[k]
+                            inverse = one / np.sqrt(dx * dx + dy * dy + dz * dz + wide[k])
+                            hs, ht = nx[k] * dx + ny[k] * dy + nz[k] * dz, px * dx + py * dy + pz * dz
+                            total += weight[k] * spread_distance(ht, hs, mine, wide[k], inverse)
+                    elif kind == _LIFTED:
+                        for k in range(size):
+                            dx, dy, dz = x - sx[k], y - sy[k], z - sz[k]
+                            inverse = one / np.sqrt(dx * dx + dy * dy + dz * dz + wide[k])
+                            hs, ht = nx[k] * dx + ny[k] * dy + nz[k] * dz, px * dx + py * dy + pz * dz
+                            tilt = px * nx[k] + py * ny[k] + pz * nz[k]
+                            total -= weight[k] * spread_lifted(ht, hs, tilt, mine, wide[k], inverse)
+                    elif kind == _LIFTED_DISTANCE:
+                        for k in range(size):
+                            dx, dy, dz = x - sx[k], y - sy[k], z - sz[k]
+                            inverse = one / np.sqrt(dx * dx + dy * dy + dz * dz + wide[k])
+                            hs, ht = nx[k] * dx + ny[k] * dy + nz[k] * dz, px * dx + py * dy + pz * dz
+                            tilt = px * nx[k] + py * ny[k] + pz * nz[k]
+                            total -= weight[k] * spread_lifted_distance(ht, hs, tilt, mine, wide[k], inverse)
+                    else:
+                        for k in range(size):
+                            dx, dy, dz = x - sx[k], y - sy[k], z - sz[k]
+                            inverse = one / np.sqrt(dx * dx + dy * dy + dz * dz + wide[k])
+                            hs, ht = nx[k] * dx + ny[k] * dy + nz[k] * dz, px * dx + py * dy + pz * dz
+                            tilt = px * nx[k] + py * ny[k] + pz * nz[k]
+                            total += weight[k] * spread_dipole(ht, hs, tilt, mine, wide[k], inverse)
+                    # fmt: on
+                    out[i, group] += total
 
-    return run
 
-
-_single_pass = _pass(_SINGLE)
-_lifted_pass = _pass(_LIFTED)
-_double_pass = _pass(_DOUBLE)
-_distance_pass = _pass(_DISTANCE)
-_lifted_distance_pass = _pass(_LIFTED_DISTANCE)
-
-
-def _summed(
-    run: Callable[..., None], at: Targets, panels: Panels, used: Ints, density: Floats, first: Ints | None = None
-) -> Floats:
+def _summed(kind: int, at: Targets, panels: Panels, used: Ints, density: Floats, first: Ints | None = None) -> Floats:
     if first is None:
         first = np.array([0, len(used)])
     out = np.zeros((len(at.points), len(first) - 1))
     strength = panels.areas[used] * density / _FOUR_PI
-    run(
-        at.points, at.normals, at.spread, panels.centroids[used], panels.normals[used], panels.spread[used], strength,
-        first, out,
+    tiles = -(-len(at.points) // _TILE)
+    over_rows(
+        _pass, tiles, max(1, tiles // _CHUNKS),
+        kind, at.points, at.normals, at.spread, panels.centroids[used], panels.normals[used], panels.spread[used],
+        strength, first, out,
     )  # fmt: skip
     return out
 
 
 def single_layer(at: Targets, panels: Panels, used: Ints, density: Floats) -> Floats:
     """V q at the targets: Σ density_j ∫_j G over the panels `used` (k,), density (k,)."""
-    return _summed(_single_pass, at, panels, used, density)[:, 0]
+    return _summed(_SINGLE, at, panels, used, density)[:, 0]
 
 
 def lifted_single_layer(at: Targets, panels: Panels, used: Ints, density: Floats) -> Floats:
     """Σ density_j h_j ∫_j G with h_j the height of panel j's plane above the target (along its normal)."""
-    return _summed(_lifted_pass, at, panels, used, density)[:, 0]
+    return _summed(_LIFTED, at, panels, used, density)[:, 0]
 
 
 def double_layer(at: Targets, panels: Panels, used: Ints, density: Floats) -> Floats:
     """K u at the targets: Σ density_j ∫_j ∂G/∂n_y over the panels `used` (k,), density (k,)."""
-    return _summed(_double_pass, at, panels, used, density)[:, 0]
+    return _summed(_DOUBLE, at, panels, used, density)[:, 0]
 
 
 def distance_layer(at: Targets, panels: Panels, used: Ints, density: Floats) -> Floats:
     """Σ density_j ∫_j r/4π over the panels `used` (k,), density (k,); r is the distance from the target."""
-    return _summed(_distance_pass, at, panels, used, density)[:, 0]
+    return _summed(_DISTANCE, at, panels, used, density)[:, 0]
 
 
 def lifted_distance_layer(at: Targets, panels: Panels, used: Ints, density: Floats) -> Floats:
     """Σ density_j h_j ∫_j r/4π with h_j as in `lifted_single_layer`."""
-    return _summed(_lifted_distance_pass, at, panels, used, density)[:, 0]
+    return _summed(_LIFTED_DISTANCE, at, panels, used, density)[:, 0]
 
 
 def cluster_double_layer(at: Targets, panels: Panels, used: Ints, first: Ints) -> Floats:
@@ -175,4 +186,4 @@ def cluster_double_layer(at: Targets, panels: Panels, used: Ints, first: Ints) -
 
     The panels `used` are sorted by cluster; cluster c holds `first[c]` up to `first[c + 1]`.
     """
-    return _summed(_double_pass, at, panels, used, np.ones(len(used)), first)
+    return _summed(_DOUBLE, at, panels, used, np.ones(len(used)), first)

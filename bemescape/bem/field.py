@@ -6,11 +6,12 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.kernels import panel_integrals, spread_dipole, spread_inverse, spread_lifted
 from bemescape.bem.panels import Panels
+from bemescape.threads import over_rows
 
 __all__ = ["FieldValues", "field_at", "triangle_distance"]
 
@@ -74,10 +75,12 @@ def triangle_distance(x, y, z, corners, j):
     return math.sqrt(best)
 
 
-@njit(cache=True, parallel=True, error_model="numpy")
-def _sums(points, corners, centroids, normals, areas, radii, spread, u, q, source, value, winding, gap, nearest):
+@njit(cache=True, nogil=True, error_model="numpy")
+def _sums(
+    points, corners, centroids, normals, areas, radii, spread, u, q, source, value, winding, gap, nearest, begin, end
+):
     m = len(areas)
-    for i in prange(len(points)):
+    for i in range(begin, end):
         x, y, z = points[i, 0], points[i, 1], points[i, 2]
         total = 0.0
         angle_sum = 0.0
@@ -122,7 +125,8 @@ def field_at(panels: Panels, u: Floats, q: Floats, source: float, points: Floats
     count = len(points)
     value, winding, gap = np.zeros(count), np.zeros(count), np.zeros(count)
     nearest = np.zeros(count, np.int64)
-    _sums(
+    over_rows(
+        _sums, count, 1 + count // 32,
         np.ascontiguousarray(points), panels.corners, panels.centroids, panels.normals, panels.areas, panels.radii,
         panels.spread, u - level, q, source, value, winding, gap, nearest,
     )  # fmt: skip

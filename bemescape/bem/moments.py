@@ -13,7 +13,7 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 from numpy.typing import NDArray
 from scipy.sparse import csr_matrix
 
@@ -26,6 +26,7 @@ from bemescape.bem.kernels import (
 )
 from bemescape.bem.operator import EscapeOperator
 from bemescape.bem.panels import Panels
+from bemescape.threads import over_rows
 
 __all__ = ["SourcePotential", "source_potential_at", "volume_integral_of_chain"]
 
@@ -33,15 +34,17 @@ Floats = NDArray[np.float64]
 
 #: At a point, panels closer than this many of their radii are integrated in closed form.
 _EXACT = 5.0
+#: Rows that a thread takes at a time.
+_ROWS = 256
 _FOUR_PI = 4.0 * math.pi
 
 
-@njit(cache=True, parallel=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy")
 def _near_corrections(
     corners, centroids, normals, areas, spread, three_points, first, column,
-    lifted, distance, lifted_distance,
+    lifted, distance, lifted_distance, begin, end,
 ):  # fmt: skip
-    for i in prange(len(areas)):
+    for i in range(begin, end):
         for slot in range(first[i], first[i + 1]):
             j = column[slot]
             one_mean = r_mean = hr_mean = 0.0
@@ -97,7 +100,8 @@ class SourcePotential:
         lifted = np.empty(len(pairs.indices), np.float32)
         distance = np.empty(len(pairs.indices), np.float32)
         lifted_distance = np.zeros(len(p))
-        _near_corrections(
+        over_rows(
+            _near_corrections, len(p), _ROWS,
             p.corners, p.centroids, p.normals, p.areas, p.spread, p.three_points,
             pairs.indptr, pairs.indices, lifted, distance, lifted_distance,
         )  # fmt: skip
@@ -120,9 +124,11 @@ class SourcePotential:
         return np.asarray(out - source * self._of_constant)
 
 
-@njit(cache=True, parallel=True, error_model="numpy")
-def _potential_at(points, corners, centroids, normals, areas, radii, spread, three_points, f, slope, source, out):
-    for i in prange(len(points)):
+@njit(cache=True, nogil=True, error_model="numpy")
+def _potential_at(
+    points, corners, centroids, normals, areas, radii, spread, three_points, f, slope, source, out, begin, end
+):
+    for i in range(begin, end):
         x, y, z = points[i, 0], points[i, 1], points[i, 2]
         total = 0.0
         for j in range(len(areas)):
@@ -155,7 +161,8 @@ def _potential_at(points, corners, centroids, normals, areas, radii, spread, thr
 def source_potential_at(panels: Panels, f: Floats, slope: Floats, source: float, points: Floats) -> Floats:
     """∫_Ω G f at points (p, 3), as `SourcePotential.of`."""
     out = np.empty(len(points))
-    _potential_at(
+    over_rows(
+        _potential_at, len(points), 1 + len(points) // 32,
         np.ascontiguousarray(points), panels.corners, panels.centroids, panels.normals, panels.areas, panels.radii,
         panels.spread, panels.three_points, f, slope, source, out,
     )  # fmt: skip

@@ -11,7 +11,7 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.kernels import (
@@ -22,8 +22,9 @@ from bemescape.bem.kernels import (
     spread_lifted,
 )
 from bemescape.bem.panels import Panels
+from bemescape.threads import over_rows
 
-__all__ = ["NearField", "build_near_field"]
+__all__ = ["NearField", "build_near_field", "fill_single_rows"]
 
 #: Pairs with centroids closer than this many radii (of the larger panel) are integrated in closed form.
 EXACT = 2.5
@@ -31,6 +32,9 @@ EXACT = 2.5
 FINE = 4.5
 #: The finer average over a test panel serves sources closer than this many radii of the test panel.
 CLOSE = 1.5
+
+#: Rows that a thread takes at a time.
+_ROWS = 256
 
 _FOUR_PI = 4.0 * math.pi
 
@@ -64,7 +68,7 @@ class NearField:
 
 @njit(cache=True, error_model="numpy")
 def _near_panels(i, centroids, radii, first, last, low, high, reach, factor, found):
-    """Write the numbers of the panels near panel i into `found`; return how many there are."""
+    """Write the numbers of the panels near panel i into `found`, ascending; return how many there are."""
     stack = np.empty(128, np.int64)
     stack[0] = 0
     top = 1
@@ -83,8 +87,9 @@ def _near_panels(i, centroids, radii, first, last, low, high, reach, factor, fou
         if gx * gx + gy * gy + gz * gz > limit * limit:
             continue
         if node < half:
-            stack[top] = 2 * node + 1
-            stack[top + 1] = 2 * node + 2
+            # The left child is taken first: panels are found in the order of their numbers.
+            stack[top] = 2 * node + 2
+            stack[top + 1] = 2 * node + 1
             top += 2
             continue
         for j in range(first[node], last[node]):
@@ -97,20 +102,14 @@ def _near_panels(i, centroids, radii, first, last, low, high, reach, factor, fou
     return count
 
 
-@njit(cache=True, parallel=True, error_model="numpy")
-def _count_pairs(centroids, radii, is_window, first, last, low, high, reach, factor):
-    m = len(radii)
-    counts = np.zeros(m, np.int64)
-    window_counts = np.zeros(m, np.int64)
-    chunks = (m + 63) // 64
-    for chunk in prange(chunks):
-        found = np.empty(m, np.int64)
-        for i in range(64 * chunk, min(m, 64 * chunk + 64)):
-            counts[i] = _near_panels(i, centroids, radii, first, last, low, high, reach, factor, found)
-            for k in range(counts[i]):
-                if is_window[found[k]]:
-                    window_counts[i] += 1
-    return counts, window_counts
+@njit(cache=True, nogil=True, error_model="numpy")
+def _count_pairs(centroids, radii, is_window, first, last, low, high, reach, factor, counts, window_counts, begin, end):
+    found = np.empty(len(radii), np.int64)
+    for i in range(begin, end):
+        counts[i] = _near_panels(i, centroids, radii, first, last, low, high, reach, factor, found)
+        for k in range(counts[i]):
+            if is_window[found[k]]:
+                window_counts[i] += 1
 
 
 @njit(cache=True, error_model="numpy")
@@ -162,52 +161,64 @@ def _three_by_three(points, sources, normals, areas, j):
     return weight * one_mean, weight * angle_mean, weight * lifted_mean
 
 
-@njit(cache=True, parallel=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy")
 def _fill_rows(
     corners, centroids, normals, areas, radii, spread, three_points,
     close_points, close_weights, close_first, is_window,
     tree_first, tree_last, low, high, reach, exact, fine, close,
-    first, column, double, window_first, window_column, single, volume,
+    first, column, double, window_first, window_column, single, volume, begin, end,
 ):  # fmt: skip
-    m = len(areas)
-    for chunk in prange((m + 63) // 64):
-        found = np.empty(m, np.int64)
-        thirds = np.full(3, 1.0 / 3.0)
-        for i in range(64 * chunk, min(m, 64 * chunk + 64)):
-            count = _near_panels(i, centroids, radii, tree_first, tree_last, low, high, reach, fine, found)
-            found[:count].sort()
-            slot = window_first[i]
-            for k in range(count):
-                j = found[k]
-                dx = centroids[i, 0] - centroids[j, 0]
-                dy = centroids[i, 1] - centroids[j, 1]
-                dz = centroids[i, 2] - centroids[j, 2]
-                distance = math.sqrt(dx * dx + dy * dy + dz * dz)
-                if i == j:
-                    a, b, c = _side(corners, i, 0, 1), _side(corners, i, 1, 2), _side(corners, i, 2, 0)
-                    v, d, h = self_mean_inverse_distance(a, b, c, areas[i]), 0.0, 0.0
-                elif distance < close * radii[i] + radii[j]:
-                    rule = slice(close_first[i], close_first[i + 1])
-                    v, d, h = _exact_pair(close_points[rule], close_weights[rule], corners, centroids, normals, j)
-                elif distance < exact * max(radii[i], radii[j]):
-                    v, d, h = _exact_pair(three_points[i], thirds, corners, centroids, normals, j)
-                else:
-                    v, d, h = _three_by_three(three_points[i], three_points[j], normals, areas, j)
-                # What the far field does with this pair, to be taken back.
-                inverse = 1.0 / math.sqrt(distance * distance + spread[j])
-                hs = normals[j, 0] * dx + normals[j, 1] * dy + normals[j, 2] * dz
-                ht = normals[i, 0] * dx + normals[i, 1] * dy + normals[i, 2] * dz
-                tilt = normals[i, 0] * normals[j, 0] + normals[i, 1] * normals[j, 1] + normals[i, 2] * normals[j, 2]
-                far_v = areas[j] * spread_inverse(ht, hs, spread[i], spread[j], inverse)
-                far_d = areas[j] * spread_dipole(ht, hs, tilt, spread[i], spread[j], inverse)
-                far_h = -areas[j] * spread_lifted(ht, hs, tilt, spread[i], spread[j], inverse)
-                column[first[i] + k] = j
-                double[first[i] + k] = (d - far_d) / _FOUR_PI
-                volume[i] += 0.5 * (h - far_h) / _FOUR_PI
-                if is_window[j]:
-                    window_column[slot] = j
-                    single[slot] = (v - far_v) / _FOUR_PI
-                    slot += 1
+    found = np.empty(len(areas), np.int64)
+    thirds = np.full(3, 1.0 / 3.0)
+    for i in range(begin, end):
+        count = _near_panels(i, centroids, radii, tree_first, tree_last, low, high, reach, fine, found)
+        slot = window_first[i]
+        for k in range(count):
+            j = found[k]
+            dx = centroids[i, 0] - centroids[j, 0]
+            dy = centroids[i, 1] - centroids[j, 1]
+            dz = centroids[i, 2] - centroids[j, 2]
+            distance = math.sqrt(dx * dx + dy * dy + dz * dz)
+            if i == j:
+                a, b, c = _side(corners, i, 0, 1), _side(corners, i, 1, 2), _side(corners, i, 2, 0)
+                v, d, h = self_mean_inverse_distance(a, b, c, areas[i]), 0.0, 0.0
+            elif distance < close * radii[i] + radii[j]:
+                rule = slice(close_first[i], close_first[i + 1])
+                v, d, h = _exact_pair(close_points[rule], close_weights[rule], corners, centroids, normals, j)
+            elif distance < exact * max(radii[i], radii[j]):
+                v, d, h = _exact_pair(three_points[i], thirds, corners, centroids, normals, j)
+            else:
+                v, d, h = _three_by_three(three_points[i], three_points[j], normals, areas, j)
+            # What the far field does with this pair, to be taken back.
+            inverse = 1.0 / math.sqrt(distance * distance + spread[j])
+            hs = normals[j, 0] * dx + normals[j, 1] * dy + normals[j, 2] * dz
+            ht = normals[i, 0] * dx + normals[i, 1] * dy + normals[i, 2] * dz
+            tilt = normals[i, 0] * normals[j, 0] + normals[i, 1] * normals[j, 1] + normals[i, 2] * normals[j, 2]
+            far_v = areas[j] * spread_inverse(ht, hs, spread[i], spread[j], inverse)
+            far_d = areas[j] * spread_dipole(ht, hs, tilt, spread[i], spread[j], inverse)
+            far_h = -areas[j] * spread_lifted(ht, hs, tilt, spread[i], spread[j], inverse)
+            column[first[i] + k] = j
+            double[first[i] + k] = (d - far_d) / _FOUR_PI
+            volume[i] += 0.5 * (h - far_h) / _FOUR_PI
+            if is_window[j]:
+                window_column[slot] = j
+                single[slot] = (v - far_v) / _FOUR_PI
+                slot += 1
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def fill_single_rows(centroids, normals, areas, spread, block, begin, end):
+    """Rows of the far field's V between all of these panels, times √(area of the target / area of the source)."""
+    for i in range(begin, end):
+        for j in range(len(areas)):
+            dx = centroids[i, 0] - centroids[j, 0]
+            dy = centroids[i, 1] - centroids[j, 1]
+            dz = centroids[i, 2] - centroids[j, 2]
+            inverse = 1.0 / math.sqrt(dx * dx + dy * dy + dz * dz + spread[j])
+            hs = normals[j, 0] * dx + normals[j, 1] * dy + normals[j, 2] * dz
+            ht = normals[i, 0] * dx + normals[i, 1] * dy + normals[i, 2] * dz
+            value = spread_inverse(ht, hs, spread[i], spread[j], inverse)
+            block[i, j] = math.sqrt(areas[i] * areas[j]) / _FOUR_PI * value
 
 
 def build_near_field(
@@ -220,7 +231,9 @@ def build_near_field(
 ) -> NearField:
     """Corrections for all close pairs of `panels`; `is_window` (m,) names the columns that V needs."""
     tree = (panels.tree.first, panels.tree.last, panels.tree.low, panels.tree.high, panels.tree.reach)
-    counts, window_counts = _count_pairs(panels.centroids, panels.radii, is_window, *tree, fine)
+    m = len(panels)
+    counts, window_counts = np.zeros(m, np.int64), np.zeros(m, np.int64)
+    over_rows(_count_pairs, m, _ROWS, panels.centroids, panels.radii, is_window, *tree, fine, counts, window_counts)
     first = np.concatenate([[0], np.cumsum(counts)])
     window_first = np.concatenate([[0], np.cumsum(window_counts)])
     near = NearField(
@@ -230,9 +243,10 @@ def build_near_field(
         window_first,
         np.empty(window_first[-1], np.int32),
         np.empty(window_first[-1], np.float32),
-        np.zeros(len(panels)),
+        np.zeros(m),
     )
-    _fill_rows(
+    over_rows(
+        _fill_rows, m, _ROWS,
         panels.corners, panels.centroids, panels.normals, panels.areas, panels.radii, panels.spread,
         panels.three_points, panels.close_points,
         panels.close_weights, panels.close_first, is_window, *tree, exact, fine, close,

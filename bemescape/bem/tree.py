@@ -12,16 +12,15 @@ import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
-__all__ = ["BoxTree", "build_box_tree", "morton_order"]
+__all__ = ["BoxTree", "build_box_tree", "morton_codes", "morton_order"]
 
 _LEAF = 8
 _BITS = 21
 
 
-@njit(cache=True)
-def _spread(value):
+def _spread(value: NDArray[np.uint64]) -> NDArray[np.uint64]:
     """Insert two zero bits between the lowest 21 bits."""
-    x = np.uint64(value) & np.uint64(0x1FFFFF)
+    x = value & np.uint64(0x1FFFFF)
     x = (x | (x << np.uint64(32))) & np.uint64(0x1F00000000FFFF)
     x = (x | (x << np.uint64(16))) & np.uint64(0x1F0000FF0000FF)
     x = (x | (x << np.uint64(8))) & np.uint64(0x100F00F00F00F00F)
@@ -29,14 +28,10 @@ def _spread(value):
     return (x | (x << np.uint64(2))) & np.uint64(0x1249249249249249)
 
 
-@njit(cache=True)
-def _morton_codes(cells):
-    codes = np.empty(len(cells), np.uint64)
-    for i in range(len(cells)):
-        codes[i] = (
-            _spread(cells[i, 0]) | (_spread(cells[i, 1]) << np.uint64(1)) | (_spread(cells[i, 2]) << np.uint64(2))
-        )
-    return codes
+def morton_codes(cells: NDArray[np.int64]) -> NDArray[np.uint64]:
+    """Numbers (n,) along the Morton curve of cells (n, 3), whose indices are below 2^21."""
+    x, y, z = _spread(cells.T.astype(np.uint64))
+    return np.asarray(x | (y << np.uint64(1)) | (z << np.uint64(2)))
 
 
 def morton_order(points: NDArray[np.float64]) -> NDArray[np.int64]:
@@ -44,7 +39,7 @@ def morton_order(points: NDArray[np.float64]) -> NDArray[np.int64]:
     low = points.min(axis=0)
     span = max(float((points.max(axis=0) - low).max()), 1e-300)
     cells = np.minimum(((points - low) / span * 2**_BITS).astype(np.int64), 2**_BITS - 1)
-    return np.argsort(_morton_codes(cells), kind="stable")
+    return np.argsort(morton_codes(cells), kind="stable")
 
 
 @dataclass(frozen=True)

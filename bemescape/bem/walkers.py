@@ -31,7 +31,7 @@ from itertools import islice
 from typing import NamedTuple
 
 import numpy as np
-from numba import get_num_threads, njit
+from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.walk_tree import (
@@ -47,6 +47,7 @@ from bemescape.bem.walk_tree import (
 )
 from bemescape.errors import AccuracyError
 from bemescape.progress import Progress, ProgressEvent, silent
+from bemescape.threads import thread_count
 
 __all__ = ["Tally", "walk"]
 
@@ -192,7 +193,7 @@ def walk(
 
 def _in_threads(send: Callable[[int], int], parties: range, walkers: int, progress: Progress) -> None:
     """Send all parties, telling `progress` about every second; stopped between two parties by what it raises."""
-    threads = get_num_threads()
+    threads = thread_count()
     left = iter(parties)
     back, told = 0, time.perf_counter()
     with ThreadPoolExecutor(threads) as pool:

@@ -5,8 +5,10 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 from numpy.typing import NDArray
+
+from bemescape.threads import over_rows
 
 __all__ = ["winding_numbers"]
 
@@ -24,14 +26,17 @@ def winding_numbers(points: Floats, corners: Floats) -> Floats:
     Jacobson, Kavan & Sorkine-Hornung (2013), doi:10.1145/2461912.2461916; solid angle of a triangle after
     van Oosterom & Strackee (1983), doi:10.1109/TBME.1983.325207.
     """
-    result: Floats = _sum_angles(np.ascontiguousarray(points), np.ascontiguousarray(corners.reshape(-1, 9)))
+    result = np.empty(len(points))
+    over_rows(
+        _sum_angles, len(points), 1 + len(points) // 32,
+        np.ascontiguousarray(points), np.ascontiguousarray(corners.reshape(-1, 9)), result,
+    )  # fmt: skip
     return result
 
 
-@njit(cache=True, parallel=True)
-def _sum_angles(points, corners):  # type: ignore[no-untyped-def]
-    result = np.empty(len(points))
-    for i in prange(len(points)):
+@njit(cache=True, nogil=True)
+def _sum_angles(points, corners, result, begin, end):  # type: ignore[no-untyped-def]
+    for i in range(begin, end):
         x, y, z = points[i, 0], points[i, 1], points[i, 2]
         total = 0.0
         for j in range(len(corners)):
@@ -45,4 +50,3 @@ def _sum_angles(points, corners):  # type: ignore[no-untyped-def]
             ab, bc, ca = ax * bx + ay * by + az * bz, bx * cx + by * cy + bz * cz, cx * ax + cy * ay + cz * az
             total += math.atan2(triple, a * b * c + ab * c + bc * a + ca * b)
         result[i] = total / (2.0 * math.pi)
-    return result

@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 from numpy.typing import NDArray
+
+from bemescape.threads import over_rows
 
 __all__ = ["NearestTriangle"]
 
@@ -55,7 +57,11 @@ class NearestTriangle:
 
     def closest(self, points: Floats) -> tuple[Floats, Floats, Ints]:
         """Distance (k,), closest point (k, 3) and number of its triangle (k,) for points (k, 3)."""
-        places, triangle = _walk(np.ascontiguousarray(points, np.float64), self._corners, self._start, self._box)
+        places, triangle = np.empty((len(points), 3)), np.empty(len(points), np.int64)
+        over_rows(
+            _walk, len(points), 1024,
+            np.ascontiguousarray(points, np.float64), self._corners, self._start, self._box, places, triangle,
+        )  # fmt: skip
         return np.linalg.norm(places - points, axis=1), places, self._order[triangle]
 
     def distance(self, points: Floats) -> Floats:
@@ -113,14 +119,12 @@ def _square_to_box(px, py, pz, box, node):  # type: ignore[no-untyped-def]
     return x * x + y * y + z * z
 
 
-@njit(cache=True, parallel=True)
-def _walk(points, corners, start, box):  # type: ignore[no-untyped-def]
-    places = np.empty((len(points), 3))
-    nearest = np.empty(len(points), np.int64)
+@njit(cache=True, nogil=True)
+def _walk(points, corners, start, box, places, nearest, begin, end):  # type: ignore[no-untyped-def]
     first_leaf = len(start) - 2
-    for i in prange(len(points)):
+    stack = np.empty(_DEEPEST, np.int64)
+    for i in range(begin, end):
         px, py, pz = points[i, 0], points[i, 1], points[i, 2]
-        stack = np.empty(_DEEPEST, np.int64)
         best, best_triangle = np.inf, -1
         best_x, best_y, best_z = np.nan, np.nan, np.nan
         stack[0] = 0
@@ -145,4 +149,3 @@ def _walk(points, corners, start, box):  # type: ignore[no-untyped-def]
                 waiting += 2
         nearest[i] = best_triangle
         places[i, 0], places[i, 1], places[i, 2] = best_x, best_y, best_z
-    return places, nearest

@@ -1,6 +1,5 @@
 """Particles against closed forms. Seeds are fixed, so that three standard errors never fail by chance."""
 
-import numba
 import numpy as np
 import pytest
 
@@ -9,6 +8,7 @@ import shapes
 from bemescape.bem.walkers import walk
 from bemescape.errors import AccuracyError
 from bemescape.progress import silent
+from bemescape.threads import use_threads
 from bemescape.windows.grade import Fineness, graded, place_windows
 from bemescape.windows.window import Window
 
@@ -85,13 +85,10 @@ def test_two_unequal_caps_share_the_walkers():
 
 def test_the_same_seed_gives_the_same_answer_on_any_number_of_threads():
     body = shapes.box(cells=2, label=lambda centre: int(centre[2] > 0.999))
-    threads = numba.get_num_threads()
-    try:
-        numba.set_num_threads(1)
+    with use_threads(1):
         alone = sent(body, labelled(body), walkers=300, seed=7)
-    finally:
-        numba.set_num_threads(threads)
-    together = sent(body, labelled(body), walkers=300, seed=7)
+    with use_threads(3):
+        together = sent(body, labelled(body), walkers=300, seed=7)
     other = sent(body, labelled(body), walkers=300, seed=8)
     assert alone.mean == together.mean
     assert alone.mean != other.mean

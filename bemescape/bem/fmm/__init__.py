@@ -25,15 +25,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from bemescape.bem import far
+from bemescape.bem.blas import one_blas_thread
 from bemescape.bem.far import Targets, panel_targets, point_targets
 from bemescape.bem.fmm import near, passes
 from bemescape.bem.fmm.balance import even_chunks
-from bemescape.bem.fmm.blas import one_blas_thread
 from bemescape.bem.fmm.harmonics import coefficient_count, steps
 from bemescape.bem.fmm.operators import Operators, load_operators
 from bemescape.bem.fmm.tree import Lists, Octree, RootCube, build_lists, build_octree, root_cube
 from bemescape.bem.panels import Panels
 from bemescape.errors import SettingsError
+from bemescape.threads import over_rows
 
 __all__ = ["FastSums", "PointSums"]
 
@@ -53,7 +54,7 @@ _SUBSET, _SUBSETS_KEPT = 0.6, 4
 _OUTSIZE = 0.75
 #: Most memory for either set of expansions with several densities at once, in bytes, and most densities at once.
 _MOST_BYTES, _MOST_COLUMNS = 2.0e8, 32
-_CHUNKS = 64
+_CHUNKS = 16
 
 
 @dataclass(frozen=True)
@@ -247,7 +248,8 @@ class PointSums:
         t, s, lists = self._targets, sources.side, sources.lists
         out = np.zeros((len(t.points), unit.shape[1]), np.float32)
         with one_blas_thread():
-            near.near_double_many(
+            over_rows(
+                near.near_double_many, len(lists.leaf_chunks) - 1, 1,
                 lists.leaf_chunks, lists.near_first, lists.near_begin, lists.near_end, t.leaf_first, t.leaf_last,
                 t.centres[t.tree.leaves], t.scales[t.tree.leaves], t.points, t.shape, s.points, s.shape,
                 unit.any(axis=1), unit, out,
@@ -263,7 +265,8 @@ class PointSums:
     def _near(self, run: Callable[..., None], sources: _Sources, strength: Singles) -> Floats:
         t, s, lists = self._targets, sources.side, sources.lists
         out = np.zeros(len(t.points))
-        run(
+        over_rows(
+            run, len(lists.leaf_chunks) - 1, 1,
             lists.leaf_chunks, lists.near_first, lists.near_begin, lists.near_end, t.leaf_first, t.leaf_last,
             t.centres[t.tree.leaves], t.scales[t.tree.leaves], t.points, t.shape, s.points, s.shape, strength, out,
         )  # fmt: skip
@@ -289,14 +292,16 @@ class PointSums:
             for into_leaves, into_far, strength in kinds:
                 end = begin + len(strength)
                 part = np.zeros((len(s.tree), end - begin, count), np.float32)
-                into_leaves(
+                over_rows(
+                    into_leaves, _CHUNKS, 1,
                     o.degree, self._factors, even_chunks(s.leaf_last - s.leaf_first, _CHUNKS), leaves,
                     s.tree.first, s.tree.last, s.centres, s.scales, s.points, s.shape, strength, part,
                 )  # fmt: skip
                 multipole[:, begin:end] = part
                 if len(entered):
                     part = np.zeros((len(t.tree), end - begin, count), np.float32)
-                    into_far(
+                    over_rows(
+                        into_far, _CHUNKS, 1,
                         o.degree, self._factors, even_chunks(np.diff(entered_first), _CHUNKS), entered, entered_first,
                         lists.up, s.tree.first, s.tree.last, t.centres, t.scales, s.points, s.shape, strength, part,
                     )  # fmt: skip
@@ -304,7 +309,8 @@ class PointSums:
                 live[leaves, begin:end] = np.logical_or.reduceat(strength != 0.0, s.leaf_first, axis=1).T
                 begin = end
             passes.move_up(s.tree, o.to_parent, live, multipole)
-            passes.move_across(
+            over_rows(
+                passes.move_across, len(lists.far_first), 1,
                 lists.far_first, lists.far_target, lists.far_source, o.far_degree, o.far_first, o.far, live,
                 multipole, local,
             )  # fmt: skip
@@ -320,12 +326,14 @@ class PointSums:
         at_leaves = passes.slopes_at_leaves if slopes else passes.values_at_leaves
         from_smaller = passes.slopes_from_smaller if slopes else passes.values_from_smaller
         with one_blas_thread():
-            at_leaves(
+            over_rows(
+                at_leaves, _CHUNKS, 1,
                 self._operators.degree, self._factors, even_chunks(t.leaf_last - t.leaf_first, _CHUNKS), t.tree.leaves,
                 t.tree.first, t.tree.last, t.centres, t.scales, t.points, t.shape, local, out,
             )  # fmt: skip
             if len(looking):
-                from_smaller(
+                over_rows(
+                    from_smaller, _CHUNKS, 1,
                     self._operators.degree, self._factors, even_chunks(np.diff(looking_first), _CHUNKS),
                     t.tree.leaves[looking], looking_first, lists.down, t.tree.first, t.tree.last, t.points, t.shape,
                     s.centres, s.scales, multipole, out,

@@ -9,7 +9,7 @@ loads, but sixteen vector registers do not hold them: measured, slower.)
 from __future__ import annotations
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 
 from bemescape.bem.kernels import spread_dipole, spread_inverse, spread_lifted
 
@@ -45,7 +45,8 @@ def _pad_tile(tile, size):
     """Fill up to whole vectors with sources far away and of no strength; the padded size."""
     padded = (size + _VECTOR - 1) // _VECTOR * _VECTOR
     for k in range(size, padded):
-        tile[:, k] = 0.0
+        for row in range(8):
+            tile[row, k] = 0.0
         tile[0, k], tile[6, k] = 100.0, 1.0
     return padded
 
@@ -61,13 +62,13 @@ def _load_target(target, i, centre, scale, points, shape):
 def _sums(kind):
     """A compiled pass over all leaves for one kind of kernel."""
 
-    @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
+    @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
     def run(
         chunks, near_first, near_begin, near_end, leaf_first, leaf_last, centres, scales,
-        points, shape, source_points, source_shape, strength, out,
+        points, shape, source_points, source_shape, strength, out, first_chunk, last_chunk,
     ):  # fmt: skip
         one = np.float32(1.0)
-        for chunk in prange(len(chunks) - 1):
+        for chunk in range(first_chunk, last_chunk):
             tile, target = np.zeros((8, _TILE), np.float32), np.zeros(7, np.float32)
             for leaf in range(chunks[chunk], chunks[chunk + 1]):
                 scale = scales[leaf]
@@ -146,14 +147,14 @@ def _many_against_tile(first, last, centre, scale, points, shape, tile, size, de
                 out[block + i, c] += area * sums[i, c]
 
 
-@njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
+@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
 def near_double_many(
     chunks, near_first, near_begin, near_end, leaf_first, leaf_last, centres, scales,
-    points, shape, source_points, source_shape, active, densities, out,
+    points, shape, source_points, source_shape, active, densities, out, first_chunk, last_chunk,
 ):  # fmt: skip
     """Double layer of several densities (n, r) at once; sources not `active` (n,) have none and are left out."""
     ones = np.ones(len(active), np.float32)
-    for chunk in prange(len(chunks) - 1):
+    for chunk in range(first_chunk, last_chunk):
         tile = np.zeros((8, _TILE), np.float32)
         dense = np.zeros((_TILE, densities.shape[1]), np.float32)
         for leaf in range(chunks[chunk], chunks[chunk + 1]):
@@ -162,7 +163,8 @@ def near_double_many(
                 for j in range(near_begin[r], near_end[r]):
                     if active[j]:
                         _fill_tile(tile, size, j, j + 1, centres[leaf], scales[leaf], source_points, source_shape, ones)
-                        dense[size] = densities[j]
+                        for c in range(densities.shape[1]):
+                            dense[size, c] = densities[j, c]
                         size += 1
                     if size == _TILE:
                         _many_against_tile(
@@ -172,7 +174,9 @@ def near_double_many(
                         size = 0
             if size > 0:
                 padded = _pad_tile(tile, size)
-                dense[size:padded] = 0.0
+                for k in range(size, padded):
+                    for c in range(densities.shape[1]):
+                        dense[k, c] = 0.0
                 _many_against_tile(
                     leaf_first[leaf], leaf_last[leaf], centres[leaf], scales[leaf], points, shape,
                     tile, padded, dense, out,

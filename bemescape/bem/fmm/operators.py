@@ -28,7 +28,7 @@ import numpy as np
 from numpy.typing import NDArray
 from platformdirs import user_cache_dir
 
-from bemescape.bem.fmm.blas import one_blas_thread
+from bemescape.bem.blas import one_blas_thread
 from bemescape.bem.fmm.harmonics import coefficient_count, irregular, regular
 from bemescape.bem.fmm.tree import FAR_OFFSETS
 

@@ -3,7 +3,7 @@
 Every row of an expansion belongs to one box and one column (one density, or one part of a kernel); rows of columns in
 which a box has no source are not `live` and cost nothing on the way up and across. Translations are batched: many rows
 are gathered, multiplied by one matrix and added to where they belong, so that the work is done by the linear algebra
-library. All loops run over chunks fixed by the data, and a row is written by one chunk only, in a fixed order:
+library. All passes run over chunks fixed by the data, and a row is written by one chunk only, in a fixed order:
 results do not depend on the number of threads. (Variants are closures over flags, never over functions: numba could not
 find those again in its cache on disk.)
 """
@@ -11,7 +11,7 @@ find those again in its cache on disk.)
 from __future__ import annotations
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 
 from bemescape.bem.fmm.harmonics import (
     BLOCK,
@@ -23,6 +23,7 @@ from bemescape.bem.fmm.harmonics import (
     slopes_irregular,
     slopes_regular,
 )
+from bemescape.threads import over_rows
 
 __all__ = [
     "charges_across",
@@ -40,8 +41,8 @@ __all__ = [
 
 #: Rows multiplied at a time.
 _BATCH = 256
-#: Chunks of boxes within one level, on the way up and down.
-_LEVEL_CHUNKS = 16
+#: Pieces of a level of boxes, on the way up and down.
+_LEVEL_PIECES = 16
 _SMALL_LEVEL = 256
 _UPWARDS, _DOWNWARDS = True, False
 
@@ -87,8 +88,9 @@ def _work(degree, layers):
 @njit(cache=True, fastmath=True, error_model="numpy")
 def _add_moments(weight, strengths, unit, start, begin, end, charge, rows):
     """Add to rows (columns, count) the panels begin … end of a block that starts with panel `start`."""
-    charge[:] = 0.0
     for c in range(len(strengths)):
+        for k in range(BLOCK):
+            charge[c, k] = 0.0
         for k in range(begin, end):
             charge[c, k] = unit * strengths[c, start + k]
     if len(strengths) == 1:
@@ -100,7 +102,8 @@ def _add_moments(weight, strengths, unit, start, begin, end, charge, rows):
     else:
         sums = np.dot(charge, weight[0].T)
         for c in range(len(strengths)):
-            rows[c] += sums[c]
+            for i in range(rows.shape[1]):
+                rows[c, i] += sums[c, i]
 
 
 def _from_panels(dipole):
@@ -109,9 +112,12 @@ def _from_panels(dipole):
     Kernels are in units of the box: 1/side for charges, another for the slope of dipoles.
     """
 
-    @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
-    def up(degree, factors, chunks, leaves, first, last, centres, scales, points, shape, strengths, out):
-        for chunk in prange(len(chunks) - 1):
+    @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
+    def up(
+        degree, factors, chunks, leaves, first, last, centres, scales, points, shape, strengths, out,
+        first_chunk, last_chunk,
+    ):  # fmt: skip
+        for chunk in range(first_chunk, last_chunk):
             block, series, column, weight = _work(degree, 1)
             charge, leaf = np.empty((len(strengths), BLOCK), np.float32), np.empty(BLOCK, np.int64)
             number = chunks[chunk]
@@ -133,12 +139,13 @@ def _from_panels(dipole):
                     begin = end
                 start += size
 
-    @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
+    @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
     def across(
-        degree, factors, chunks, into, item_first, items, first, last, centres, scales, points, shape, strengths, out
-    ):
+        degree, factors, chunks, into, item_first, items, first, last, centres, scales, points, shape, strengths, out,
+        first_chunk, last_chunk,
+    ):  # fmt: skip
         """Box into[number] is entered by the panels of the boxes items[item_first[number]: …]."""
-        for chunk in prange(len(chunks) - 1):
+        for chunk in range(first_chunk, last_chunk):
             block, series, column, weight = _work(degree, 1)
             charge = np.empty((len(strengths), BLOCK), np.float32)
             for number in range(chunks[chunk], chunks[chunk + 1]):
@@ -174,7 +181,7 @@ def _translate(matrix, pairs_from, pairs_to, live, rows_from, rows_to, gathered,
                 source, target = rows_from[pairs_from[p], c], gathered[size * k : size * k + k]
                 for i in range(k):
                     target[i] = source[i]
-                row_of[size] = pairs_to[p], c
+                row_of[size, 0], row_of[size, 1] = pairs_to[p], c
                 size += 1
             if size == _BATCH or (size > 0 and p == len(pairs_from) - 1 and c == columns - 1):
                 product = moved[: size * k].reshape((size, k))
@@ -186,43 +193,36 @@ def _translate(matrix, pairs_from, pairs_to, live, rows_from, rows_to, gathered,
                 size = 0
 
 
-@njit(cache=True)
-def _between_levels(begin, end, child, matrices, live, rows, upwards):
-    """Translate between boxes begin … end and their children, one kind of child at a time."""
+@njit(cache=True, nogil=True)
+def _between_levels(begin, end, pieces, child, matrices, live, rows, upwards, first_piece, last_piece):
+    """Translate between boxes begin … end, in pieces, and their children, one kind of child at a time."""
     count = rows.shape[2]
     gathered, moved = np.empty(_BATCH * count, np.float32), np.empty(_BATCH * count, np.float32)
     above, below = np.empty(end - begin, np.int64), np.empty(end - begin, np.int64)
-    for k in range(8):
-        size = 0
-        for b in range(begin, end):
-            if child[b, k] >= 0:
-                above[size], below[size] = b, child[b, k]
-                size += 1
-        if upwards:
-            _translate(matrices[k], below[:size], above[:size], live, rows, rows, gathered, moved)
-        else:
-            _translate(matrices[k], above[:size], below[:size], live, rows, rows, gathered, moved)
+    for piece in range(first_piece, last_piece):
+        for k in range(8):
+            size = 0
+            for b in range(
+                begin + (end - begin) * piece // pieces,
+                begin + (end - begin) * (piece + 1) // pieces,
+            ):
+                if child[b, k] >= 0:
+                    above[size], below[size] = b, child[b, k]
+                    size += 1
+            if upwards:
+                _translate(matrices[k], below[:size], above[:size], live, rows, rows, gathered, moved)
+            else:
+                _translate(matrices[k], above[:size], below[:size], live, rows, rows, gathered, moved)
 
 
-@njit(cache=True, parallel=True)
-def _level(begin, end, child, matrices, live, rows, upwards):
-    boxes = end - begin
-    for chunk in prange(_LEVEL_CHUNKS):
-        first, last = begin + boxes * chunk // _LEVEL_CHUNKS, begin + boxes * (chunk + 1) // _LEVEL_CHUNKS
-        _between_levels(first, last, child, matrices, live, rows, upwards)
-
-
-@njit(cache=True)
 def _between_all_levels(level_first, child, matrices, live, rows, upwards):
     levels = len(level_first) - 2
     for step in range(levels):
         level = levels - 1 - step if upwards else step
         begin, end = level_first[level], level_first[level + 1]
         # Waking the other threads for a small level costs more than it saves.
-        if end - begin < _SMALL_LEVEL:
-            _between_levels(begin, end, child, matrices, live, rows, upwards)
-        else:
-            _level(begin, end, child, matrices, live, rows, upwards)
+        pieces = 1 if end - begin < _SMALL_LEVEL else _LEVEL_PIECES
+        over_rows(_between_levels, pieces, 1, begin, end, pieces, child, matrices, live, rows, upwards)
 
 
 def move_up(tree, to_parent, live, rows):
@@ -241,12 +241,15 @@ def move_down(tree, to_child, rows):
     _between_all_levels(tree.level_first, tree.child, to_child, np.ones(rows.shape[:2], np.bool_), rows, _DOWNWARDS)
 
 
-@njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
-def move_across(far_first, far_target, far_source, far_degree, matrix_first, matrices, live, rows_from, rows_to):
+@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
+def move_across(
+    far_first, far_target, far_source, far_degree, matrix_first, matrices, live, rows_from, rows_to,
+    first_chunk, last_chunk,
+):  # fmt: skip
     """Multipoles of source boxes into the locals of far target boxes."""
     count = rows_from.shape[2]
-    for chunk in prange(len(far_first)):
-        gathered, moved = np.empty(_BATCH * count, np.float32), np.empty(_BATCH * count, np.float32)
+    gathered, moved = np.empty(_BATCH * count, np.float32), np.empty(_BATCH * count, np.float32)
+    for chunk in range(first_chunk, last_chunk):
         for offset in range(far_first.shape[1] - 1):
             begin, end = far_first[chunk, offset], far_first[chunk, offset + 1]
             if end > begin:
@@ -294,9 +297,12 @@ def _to_points(slopes):
     They add to out (values, n), by `_add_values` or with `slopes` by `_add_slopes`.
     """
 
-    @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
-    def at_leaves(degree, factors, chunks, leaves, first, last, centres, scales, points, shape, local, out):
-        for chunk in prange(len(chunks) - 1):
+    @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
+    def at_leaves(
+        degree, factors, chunks, leaves, first, last, centres, scales, points, shape, local, out,
+        first_chunk, last_chunk,
+    ):  # fmt: skip
+        for chunk in range(first_chunk, last_chunk):
             block, series, column, weight = _work(degree, 3 if slopes else 1)
             leaf = np.empty(BLOCK, np.int64)
             number = chunks[chunk]
@@ -320,12 +326,13 @@ def _to_points(slopes):
                     begin = end
                 start += size
 
-    @njit(cache=True, parallel=True, fastmath=True, error_model="numpy")
+    @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
     def from_smaller(
-        degree, factors, chunks, leaves, item_first, items, first, last, points, shape, centres, scales, multipole, out
-    ):
+        degree, factors, chunks, leaves, item_first, items, first, last, points, shape, centres, scales, multipole, out,
+        first_chunk, last_chunk,
+    ):  # fmt: skip
         """The points of leaf leaves[number] see the boxes items[item_first[number]: …]."""
-        for chunk in prange(len(chunks) - 1):
+        for chunk in range(first_chunk, last_chunk):
             block, series, column, weight = _work(degree, 3 if slopes else 1)
             for number in range(chunks[chunk], chunks[chunk + 1]):
                 leaf = leaves[number]

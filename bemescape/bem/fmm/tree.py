@@ -22,6 +22,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.fmm.balance import even_chunks
+from bemescape.bem.tree import morton_codes
 
 __all__ = ["FAR_OFFSETS", "Lists", "Octree", "RootCube", "build_lists", "build_octree", "root_cube"]
 
@@ -130,24 +131,9 @@ class Octree:
         return np.ldexp(1.0, self.level.astype(np.int32))
 
 
-def _spread_bits(value: NDArray[np.uint64]) -> NDArray[np.uint64]:
-    """Insert two zero bits between the lowest 21 bits of each value (n,)."""
-    x = value
-    for shift, mask in (
-        (32, 0x1F00000000FFFF),
-        (16, 0x1F0000FF0000FF),
-        (8, 0x100F00F00F00F00F),
-        (4, 0x10C30C30C30C30C3),
-        (2, 0x1249249249249249),
-    ):
-        x = (x | (x << np.uint64(shift))) & np.uint64(mask)
-    return x
-
-
 def _codes(unit: Floats) -> Ints:
-    cells = np.clip((unit * 2**_DEPTH).astype(np.int64), 0, 2**_DEPTH - 1).astype(np.uint64)
-    code = sum(_spread_bits(cells[:, k]) << np.uint64(k) for k in range(3))
-    return np.asarray(code, dtype=np.int64)
+    cells = np.clip((unit * 2**_DEPTH).astype(np.int64), 0, 2**_DEPTH - 1)
+    return morton_codes(cells).astype(np.int64)
 
 
 def build_octree(unit: Floats, radii: Floats, cap: int) -> Octree:
@@ -242,8 +228,10 @@ def _touch(t, s, t_level, t_place, s_level, s_place):
 
 @njit(cache=True)
 def _grown(pairs):
+    # Element by element, here and below: assignments of whole rows take seconds to compile.
     larger = np.empty((2 * len(pairs), 2), np.int64)
-    larger[: len(pairs)] = pairs
+    for i in range(len(pairs)):
+        larger[i, 0], larger[i, 1] = pairs[i, 0], pairs[i, 1]
     return larger
 
 
@@ -257,29 +245,29 @@ def _walk(
     down, up = np.empty((64, 2), np.int64), np.empty((64, 2), np.int64)
     n_near = n_far = n_down = n_up = 0
     stack = np.empty((4096, 2), np.int64)
-    stack[0] = 0
+    stack[0, 0] = stack[0, 1] = 0
     top = 1
     while top > 0:
         top -= 1
-        t, s = stack[top]
+        t, s = stack[top, 0], stack[top, 1]
         targets, sources = t_last[t] - t_first[t], s_last[s] - s_first[s]
         if not _touch(t, s, t_level, t_place, s_level, s_place):
             if t_level[t] == s_level[s] and sources * targets >= few_pairs:
                 if n_far == len(far):
                     far = _grown(far)
-                far[n_far] = t, s
+                far[n_far, 0], far[n_far, 1] = t, s
                 n_far += 1
                 continue
             if t_level[t] < s_level[s] and sources >= few_sources:
                 if n_down == len(down):
                     down = _grown(down)
-                down[n_down] = t, s
+                down[n_down, 0], down[n_down, 1] = t, s
                 n_down += 1
                 continue
             if t_level[t] > s_level[s] and targets >= few_targets:
                 if n_up == len(up):
                     up = _grown(up)
-                up[n_up] = t, s
+                up[n_up, 0], up[n_up, 1] = t, s
                 n_up += 1
                 continue
         elif not (t_leaf[t] and s_leaf[s]):
@@ -291,7 +279,7 @@ def _walk(
                     for b in range(8):
                         below_s = s if s_leaf[s] else s_child[s, b]
                         if below_s >= 0:
-                            stack[top] = below_t, below_s
+                            stack[top, 0], stack[top, 1] = below_t, below_s
                             top += 1
                         if s_leaf[s]:
                             break
@@ -300,7 +288,7 @@ def _walk(
             continue
         if n_near == len(near):
             near = _grown(near)
-        near[n_near] = t, s
+        near[n_near, 0], near[n_near, 1] = t, s
         n_near += 1
     return near[:n_near], far[:n_far], down[:n_down], up[:n_up]
 

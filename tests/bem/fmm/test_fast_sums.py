@@ -4,7 +4,6 @@ import subprocess
 import sys
 
 import fmm_sets
-import numba
 import numpy as np
 import pytest
 
@@ -14,6 +13,7 @@ from bemescape.bem.far import Targets, panel_targets, point_targets
 from bemescape.bem.fmm import FastSums, harmonics, near, passes
 from bemescape.bem.panels import make_panels
 from bemescape.errors import SettingsError
+from bemescape.threads import use_threads
 from bemescape.windows.grade import Fineness, graded, place_windows
 from bemescape.windows.window import Window
 
@@ -114,17 +114,14 @@ def test_results_are_the_same_to_the_last_bit_whatever_the_threads(graded_mesh):
     panels, density = graded_mesh
     every = np.arange(len(panels))
     densities = np.column_stack([density, density**2])
-    threads, found = numba.get_num_threads(), []
-    try:
-        for count in (1, threads, 1):
-            numba.set_num_threads(count)
+    found = []
+    for count in (1, 2, 5):
+        with use_threads(count):
             sums = FastSums(panels)
             found.append(
                 [getattr(sums, kind)(every, density).tobytes() for kind in DIRECT]
                 + [sums.double_many(every, densities).tobytes()]
             )
-    finally:
-        numba.set_num_threads(threads)
     assert found[0] == found[1] == found[2]
 
 
