@@ -26,7 +26,9 @@ if TYPE_CHECKING:
     from bemescape.results.starts import Ball
     from bemescape.results.summary import summary_schema
     from bemescape.surface import Surface, check_surface, heal_surface, read_surface
+    from bemescape.threads import use_threads
     from bemescape.version import __version__
+    from bemescape.warm import warm_up
     from bemescape.windows.window import Window
 
 #: Public name -> the module that holds it; loaded on first use, so that `bemescape --help` answers at once.
@@ -51,6 +53,8 @@ _HOME = {
     "read_surface": "bemescape.surface",
     "solve_escape": "bemescape.escape",
     "summary_schema": "bemescape.results.summary",
+    "use_threads": "bemescape.threads",
+    "warm_up": "bemescape.warm",
 }
 
 __all__ = [
@@ -74,6 +78,8 @@ __all__ = [
     "read_surface",
     "solve_escape",
     "summary_schema",
+    "use_threads",
+    "warm_up",
 ]
 
 

@@ -24,7 +24,8 @@ MAY_IMPORT = {
     "results": BASE | {"surface", "windows", "bem"},
     "escape": BASE | {"surface", "windows", "bem", "results"},
     "case": BASE | {"surface", "windows", "results", "escape"},
-    "cli": BASE | {"surface", "windows", "results", "escape", "case", "viz"},
+    "warm": BASE | {"surface", "windows", "bem", "escape"},
+    "cli": BASE | {"surface", "windows", "results", "escape", "case", "warm", "viz"},
     "viz": BASE | {"results"},
 }
 #: Imports against the direction, each with its reason. They are made inside functions.

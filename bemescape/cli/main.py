@@ -17,6 +17,7 @@ from bemescape.cli.check import check
 from bemescape.cli.progress import Stopped
 from bemescape.cli.solve import solve
 from bemescape.cli.view import view
+from bemescape.cli.warm import warm
 from bemescape.errors import AccuracyError, ConvergenceError, EscapeError
 
 __all__ = ["app", "main"]
@@ -38,6 +39,7 @@ app = typer.Typer(
 app.command()(check)
 app.command()(solve)
 app.command()(view)
+app.command()(warm)
 
 
 def _print_version(wanted: bool) -> None:  # noqa: FBT001 (typer calls it so)
