@@ -26,7 +26,7 @@ def wall_clusters(centroids: Floats, neighbours: Ints, is_window: NDArray[np.boo
         Pairs of panels that share an edge.
     is_window : (m,) bool
     wanted : int
-        About this many clusters.
+        This many clusters at most, half as many if the shape allows.
     """
     m = len(centroids)
     none = np.full(m, -1)
@@ -52,6 +52,8 @@ def wall_clusters(centroids: Floats, neighbours: Ints, is_window: NDArray[np.boo
         if wanted // 2 <= len(kept) or len(kept) > wanted:
             break
         slices *= 2
+    if len(kept) > wanted:  # thin slices of a round body fall to pieces: the largest serve
+        kept = kept[np.sort(np.argsort(-size[np.isin(numbers, kept)], kind="stable")[:wanted])]
     number = np.full(int(label.max()) + 1, -1)
     number[kept] = np.arange(len(kept))
     return np.where(label >= 0, number[label], -1)

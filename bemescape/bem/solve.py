@@ -22,7 +22,7 @@ Singles = NDArray[np.float32]
 Ints = NDArray[np.int64]
 
 #: Largest dense block of V that the preconditioner factors.
-LARGEST_BLOCK = 4000
+LARGEST_BLOCK = 6000
 
 
 @dataclass(frozen=True)
