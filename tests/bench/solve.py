@@ -127,9 +127,10 @@ def _scaling(largest: int) -> list[dict[str, Any]]:
 
 def _against_peers() -> dict[str, Any]:
     """The ball with a cap of half-angle 0.5 (exact mean known), each at the size that brings it below 0.5 %."""
+    from reference.tetrahedra import DiscWindow
+
     from tests.bench.peers_bem import bem_peer
     from tests.bench.peers_fem import fem_peer
-    from reference.tetrahedra import DiscWindow
 
     value = exact.CAP_MEAN[CAP]
     mine = in_child(ours, "ball", 2_000)
