@@ -50,6 +50,8 @@ _MOST_COARSE = 0.75
 _WINDOW_ERROR, _VOLUME_ERROR = 0.5, 1.0
 #: No Galerkin answer is believed below this.
 _FLOOR = 1e-3
+#: Where more than this is allowed, agreement is no confirmation, and the sentence says so.
+_DECISIVE = 0.1
 #: Two-sided probability of a false alarm that three standard errors leave, shared among all numbers compared.
 _FALSE_ALARM = 0.0027
 
@@ -94,10 +96,10 @@ class CrossCheck:
     def line(self) -> str:
         """One sentence for a reader."""
         return (
-            f"{_verdict(self.agrees)} a Galerkin solution by bempp-cl on up to {self.panels} panels within "
+            f"{_verdict(self.agrees, self.allowed)} a Galerkin solution by bempp-cl on up to {self.panels} panels within "
             f"{self.allowed:.2%}: {format_time(self.mean_time_s)} ± {self.relative_error:.2%}, off by "
             f"{self.difference:+.2%}; shares off by at most {self.share_difference:.2g} (allowed "
-            f"{self.share_allowed:.2g})"
+            f"{self.share_allowed:.2g}){_reservation(self.allowed)}"
         )
 
 
@@ -143,15 +145,21 @@ class WalkerEstimate:
         """One sentence for a reader."""
         lost = f"; {self.lost} more were lost and are not counted" if self.lost else ""
         return (
-            f"{_verdict(self.agrees)} {self.walkers} walkers within {self.allowed:.2%}: "
+            f"{_verdict(self.agrees, self.allowed)} {self.walkers} walkers within {self.allowed:.2%}: "
             f"{format_time(self.mean_time_s)} ± {self.standard_error_s / self.mean_time_s:.2%} (standard error), "
             f"off by {self.difference:+.2%}; shares off by at most {self.share_difference:.2g} (allowed "
-            f"{self.share_allowed:.2g}){lost}"
+            f"{self.share_allowed:.2g}){lost}{_reservation(self.allowed)}"
         )
 
 
-def _verdict(agrees: bool) -> str:  # noqa: FBT001 (one word or the other)
-    return "agrees with" if agrees else "does NOT agree with"
+def _verdict(agrees: bool, allowed: float) -> str:  # noqa: FBT001 (one phrase or another)
+    if not agrees:
+        return "does NOT agree with"
+    return "agrees with" if allowed <= _DECISIVE else "is not contradicted by"
+
+
+def _reservation(allowed: float) -> str:
+    return "" if allowed <= _DECISIVE else f"; within {allowed:.0%} an agreement confirms little"
 
 
 def cross_check(result: EscapeResult, *, panels: int = CROSSCHECK_PANELS, progress: Progress = silent) -> CrossCheck:

@@ -94,6 +94,15 @@ def test_a_galerkin_answer_within_both_errors_agrees(galerkin_says):
     assert opinion.line.startswith("agrees with a Galerkin solution by bempp-cl on")
 
 
+def test_an_agreement_within_a_wide_margin_is_not_called_one(galerkin_says):
+    galerkin_says(0.40, 0.36)
+    opinion = prism_result(cells=20).crosscheck()
+    assert opinion.agrees
+    assert opinion.allowed > 0.1
+    assert opinion.line.startswith("is not contradicted by a Galerkin solution")
+    assert opinion.line.endswith("an agreement confirms little")
+
+
 def test_a_galerkin_answer_beyond_both_errors_does_not_agree(galerkin_says):
     galerkin_says(0.334, 0.3336)
     assert not prism_result(mean=0.35, cells=20).crosscheck().agrees
