@@ -13,7 +13,7 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 
-def wall_clusters(centroids: Floats, neighbours: Ints, is_window: NDArray[np.bool_], *, wanted: int = 100) -> Ints:
+def wall_clusters(centroids: Floats, neighbours: Ints, is_window: NDArray[np.bool_], *, wanted: int = 160) -> Ints:
     """Cluster number (m,) of each wall panel, −1 in none: slices of the wall between equal distances to the windows.
 
     Distances run along the wall, so the slices of a branched shape are connected pieces of its branches: along a
@@ -26,7 +26,7 @@ def wall_clusters(centroids: Floats, neighbours: Ints, is_window: NDArray[np.boo
         Pairs of panels that share an edge.
     is_window : (m,) bool
     wanted : int
-        This many clusters at most, half as many if the shape allows.
+        This many clusters at most, half as many at least, if the shape allows.
     """
     m = len(centroids)
     none = np.full(m, -1)
@@ -38,22 +38,31 @@ def wall_clusters(centroids: Floats, neighbours: Ints, is_window: NDArray[np.boo
     # A shell without a window (an obstacle) is sliced by height instead.
     apart = ~np.isfinite(distance)
     distance[apart] = centroids[apart, 2] - centroids[apart, 2].min(initial=0.0)
-    slices = max(2, wanted // 4)
-    for _ in range(8):
-        band = np.floor(distance / (distance.max() * (1.0 + 1e-9)) * slices).astype(np.int64)
-        band[is_window] = -1
-        same = band[neighbours[:, 0]] == band[neighbours[:, 1]]
-        pairs = neighbours[same]
-        joined = coo_matrix((np.ones(len(pairs)), pairs.T), shape=(m, m))
-        label = connected_components(joined, directed=False)[1]
-        label = np.where(is_window, -1, label)
-        numbers, size = np.unique(label[label >= 0], return_counts=True)
-        kept = numbers[size >= max(4, m // (20 * wanted))]
-        if wanted // 2 <= len(kept) or len(kept) > wanted:
+    slices, best = max(2, wanted // 16), none
+    for _ in range(16):
+        found = _sliced(distance, neighbours, is_window, slices, m // (20 * wanted))
+        # Thin slices of a round body fall to pieces, and pieces that leave gaps serve worse than fewer whole ones.
+        if best is not none and found.max() >= wanted:
             break
-        slices *= 2
-    if len(kept) > wanted:  # thin slices of a round body fall to pieces: the largest serve
-        kept = kept[np.sort(np.argsort(-size[np.isin(numbers, kept)], kind="stable")[:wanted])]
+        best = found
+        if best.max() >= wanted // 2:
+            break
+        slices = int(1.3 * slices) + 1
+    return best
+
+
+def _sliced(distance: Floats, neighbours: Ints, is_window: NDArray[np.bool_], slices: int, smallest: int) -> Ints:
+    """Connected pieces (m,) of so many slices; −1 on windows and in pieces of few panels."""
+    m = len(distance)
+    band = np.floor(distance / (distance.max() * (1.0 + 1e-9)) * slices).astype(np.int64)
+    band[is_window] = -1
+    same = band[neighbours[:, 0]] == band[neighbours[:, 1]]
+    pairs = neighbours[same]
+    joined = coo_matrix((np.ones(len(pairs)), pairs.T), shape=(m, m))
+    label = connected_components(joined, directed=False)[1]
+    label = np.where(is_window, -1, label)
+    numbers, size = np.unique(label[label >= 0], return_counts=True)
+    kept = numbers[size >= max(4, smallest)]
     number = np.full(int(label.max()) + 1, -1)
     number[kept] = np.arange(len(kept))
     return np.where(label >= 0, number[label], -1)

@@ -27,11 +27,11 @@ from bemescape.threads import over_rows
 __all__ = ["NearField", "build_near_field", "fill_single_rows"]
 
 #: Pairs with centroids closer than this many radii (of the larger panel) are integrated in closed form.
-EXACT = 2.5
+EXACT = 2.0
 #: Pairs closer than this many radii use three points on each panel.
 FINE = 4.5
 #: The finer average over a test panel serves sources closer than this many radii of the test panel.
-CLOSE = 1.5
+CLOSE = 1.0
 
 #: Rows that a thread takes at a time.
 _ROWS = 256

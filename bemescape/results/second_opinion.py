@@ -96,8 +96,8 @@ class CrossCheck:
     def line(self) -> str:
         """One sentence for a reader."""
         return (
-            f"{_verdict(self.agrees, self.allowed)} a Galerkin solution by bempp-cl on up to {self.panels} panels within "
-            f"{self.allowed:.2%}: {format_time(self.mean_time_s)} ± {self.relative_error:.2%}, off by "
+            f"{_verdict(self.agrees, self.allowed)} a Galerkin solution by bempp-cl on up to {self.panels} panels "
+            f"within {self.allowed:.2%}: {format_time(self.mean_time_s)} ± {self.relative_error:.2%}, off by "
             f"{self.difference:+.2%}; shares off by at most {self.share_difference:.2g} (allowed "
             f"{self.share_allowed:.2g}){_reservation(self.allowed)}"
         )
