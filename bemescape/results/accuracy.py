@@ -40,7 +40,7 @@ _RIM_REST, _RIM_ERROR = 0.2, 0.35
 _WALL_REST, _WALL_ERROR = 0.5, 1.0
 #: The mean time is off by a few times what the windows' outflow is off by (measured: 2 on boxes, 3.5 at a neck).
 _BALANCE_ERROR = 2.5
-#: Below this no estimate is believed: what the far-field formula leaves out (measured against a near field twice as
+#: Added to every estimate, which knows nothing of it: what the far-field formula leaves out (measured against a near field twice as
 #: wide: 1e-4 to 2e-4 at a few thousand panels), single-precision sums and the iteration's tolerance.
 _FLOOR = 3e-4
 
@@ -152,4 +152,4 @@ class Ladder:
         if self._wall_change is not None:
             extrapolated += _WALL_REST * wall
         parts = (_RIM_ERROR * abs(rim / mean), _WALL_ERROR * abs(wall / mean), _BALANCE_ERROR * abs(balance))
-        return Estimate(extrapolated, max(sum(parts), _FLOOR), *parts)
+        return Estimate(extrapolated, sum(parts) + _FLOOR, *parts)
