@@ -40,8 +40,8 @@ _RIM_REST, _RIM_ERROR = 0.2, 0.35
 _WALL_REST, _WALL_ERROR = 0.5, 1.0
 #: The mean time is off by a few times what the windows' outflow is off by (measured: 2 on boxes, 3.5 at a neck).
 _BALANCE_ERROR = 2.5
-#: Added to every estimate, which knows nothing of it: what the far-field formula leaves out (measured against a near field twice as
-#: wide: 1e-4 to 2e-4 at a few thousand panels), single-precision sums and the iteration's tolerance.
+#: Added to every estimate, which knows nothing of it: what the far-field formula leaves out (measured against a near
+#: field twice as wide: 1e-4 to 2e-4 at a few thousand panels), single-precision sums and the iteration's tolerance.
 _FLOOR = 3e-4
 
 
