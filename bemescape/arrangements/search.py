@@ -45,7 +45,7 @@ class SearchOutcome:
 
 
 def clustered(places: Floats, k: int) -> Ints:
-    """k sites close together (k,): around each site in turn its nearest, of these the set with the least distances."""
+    """Sites close together (k,): around each site in turn its nearest, of these the set with the least distances."""
     gap = np.linalg.norm(places[:, None] - places[None], axis=2)
     nearest = np.argsort(gap, axis=1, kind="stable")[:, :k]
     total = gap[nearest[:, :, None], nearest[:, None, :]].sum(axis=(1, 2))
@@ -53,7 +53,7 @@ def clustered(places: Floats, k: int) -> Ints:
 
 
 def spread_out(places: Floats, k: int) -> Ints:
-    """k sites far apart (k,): the next is the one farthest from all before it, from each first site in turn.
+    """Sites far apart (k,): the next is the one farthest from all before it, from each first site in turn.
 
     Of these sets the one with the largest least distance is taken (Gonzalez 1985, doi:10.1016/0304-3975(85)90224-5).
     """

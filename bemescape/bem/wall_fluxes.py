@@ -10,11 +10,12 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.kernels import panel_integrals, spread_dipole, spread_inverse, spread_lifted
 from bemescape.bem.panels import Panels, make_panels
+from bemescape.threads import over_rows
 
 __all__ = ["TestedFluxes", "dense_single_layer", "flux_couplings", "fluxes_on_panels"]
 
@@ -27,6 +28,8 @@ _EXACT = 5.0
 _IN_PLANE = 1e-9
 #: Averages over a panel of a window that lies closer to the source than this part of both radii use the fine rule.
 _CLOSE = 1.0
+#: Beyond this many of both radii the formula of the far field serves.
+_FAR = 3.0
 _FOUR_PI = 4.0 * math.pi
 
 
@@ -49,10 +52,12 @@ class TestedFluxes:
     volume: Floats
 
 
-@njit(cache=True, parallel=True, error_model="numpy")
-def _test(points, weights, first, corners, centroids, normals, areas, radii, spread, single, double, volume):
-    sites, modes = single.shape[0], single.shape[1]
-    for site in prange(sites):
+@njit(cache=True, nogil=True, error_model="numpy")
+def _test(
+    points, weights, first, corners, centroids, normals, areas, radii, spread, single, double, volume, begin, end
+):
+    modes = single.shape[1]
+    for site in range(begin, end):
         for s in range(first[site], first[site + 1]):
             x, y, z = points[s, 0], points[s, 1], points[s, 2]
             for j in range(len(areas)):
@@ -96,17 +101,17 @@ def fluxes_on_panels(panels: Panels, points: Floats, weights: Floats, first: Int
     """
     sites, modes, m = len(first) - 1, len(weights), len(panels)
     out = TestedFluxes(np.zeros((sites, modes, m)), np.zeros((sites, modes, m)), np.zeros((sites, modes)))
-    _test(
-        np.ascontiguousarray(points), np.ascontiguousarray(weights), first, panels.corners, panels.centroids,
-        panels.normals, panels.areas, panels.radii, panels.spread, out.single, out.double, out.volume,
+    over_rows(
+        _test, sites, 1, np.ascontiguousarray(points), np.ascontiguousarray(weights), first, panels.corners,
+        panels.centroids, panels.normals, panels.areas, panels.radii, panels.spread, out.single, out.double, out.volume,
     )  # fmt: skip
     return out
 
 
-@njit(cache=True, parallel=True, error_model="numpy")
-def _couple(points, weights, first, out):
+@njit(cache=True, nogil=True, error_model="numpy")
+def _couple(points, weights, first, out, begin, end):
     sites, modes = len(first) - 1, len(weights)
-    for i in prange(sites):
+    for i in range(begin, end):
         along = np.empty(modes)
         for j in range(sites):
             if i == j:
@@ -132,7 +137,7 @@ def flux_couplings(points: Floats, weights: Floats, first: Ints) -> Floats:
     """
     sites, modes = len(first) - 1, len(weights)
     out = np.zeros((sites, modes, sites, modes))
-    _couple(np.ascontiguousarray(points), np.ascontiguousarray(weights), first, out)
+    over_rows(_couple, sites, 1, np.ascontiguousarray(points), np.ascontiguousarray(weights), first, out)
     return out
 
 
@@ -152,17 +157,26 @@ def _mean_potential(points, weights, corners, normals, j):
     return total
 
 
-@njit(cache=True, parallel=True, error_model="numpy")
-def _dense(three_points, close_points, close_weights, first, corners, centroids, radii, normals, out):
+@njit(cache=True, nogil=True, error_model="numpy")
+def _dense(
+    three_points, close_points, close_weights, first, corners, centroids, normals, areas, radii, spread, out, begin, end
+):
     m = len(normals)
-    for i in prange(m):
-        thirds = np.full(3, 1.0 / 3.0)
+    thirds = np.full(3, 1.0 / 3.0)
+    for i in range(begin, end):
         own = slice(first[i], first[i + 1])
         for j in range(m):
             dx = centroids[i, 0] - centroids[j, 0]
             dy = centroids[i, 1] - centroids[j, 1]
             dz = centroids[i, 2] - centroids[j, 2]
-            if math.sqrt(dx * dx + dy * dy + dz * dz) < _CLOSE * (radii[i] + radii[j]):
+            square = dx * dx + dy * dy + dz * dz
+            reach = (radii[i] + radii[j]) ** 2
+            if square > _FAR * _FAR * reach:
+                hs = normals[j, 0] * dx + normals[j, 1] * dy + normals[j, 2] * dz
+                ht = normals[i, 0] * dx + normals[i, 1] * dy + normals[i, 2] * dz
+                inverse = 1.0 / math.sqrt(square + spread[j])
+                mean = areas[j] * spread_inverse(ht, hs, spread[i], spread[j], inverse)
+            elif square < _CLOSE * _CLOSE * reach:
                 mean = _mean_potential(close_points[own], close_weights[own], corners, normals, j)
             else:
                 mean = _mean_potential(three_points[i], thirds, corners, normals, j)
@@ -179,9 +193,9 @@ def dense_single_layer(corners: Floats) -> tuple[Floats, Panels]:
     """
     panels = make_panels(corners)
     out = np.empty((len(panels), len(panels)))
-    _dense(
-        panels.three_points, panels.close_points, panels.close_weights, panels.close_first, panels.corners,
-        panels.centroids, panels.radii, panels.normals, out,
+    over_rows(
+        _dense, len(panels), 32, panels.three_points, panels.close_points, panels.close_weights, panels.close_first,
+        panels.corners, panels.centroids, panels.normals, panels.areas, panels.radii, panels.spread, out,
     )  # fmt: skip
     out *= panels.areas[:, None]
     return 0.5 * (out + out.T), panels

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 from typing import TYPE_CHECKING
 
@@ -13,6 +13,8 @@ from numpy.typing import NDArray
 from bemescape.bem.averages import enclosed_volume
 from bemescape.bem.clusters import wall_clusters
 from bemescape.bem.moments import SourcePotential
+from bemescape.bem.near import NearField, build_near_field
+from bemescape.bem.near_reuse import EarlierNearField, near_field_from
 from bemescape.bem.operator import assemble
 from bemescape.bem.panels import Panels, make_panels
 from bemescape.bem.solve import BoundarySolution, BoundarySolver
@@ -41,12 +43,18 @@ class Prepared:
         Of the iteration.
     progress : callable
         Receives a ProgressEvent for every step.
+    near : NearField or None
+        Where it is wanted for another mesh later.
+    kept_rows : float
+        Part of its rows that were taken over from an earlier mesh.
     """
 
     panels: Panels
     solver: BoundarySolver
     tolerance: float
     progress: Progress
+    near: NearField | None = None
+    kept_rows: float = 0.0
 
     @cached_property
     def back(self) -> Ints:
@@ -71,6 +79,15 @@ class Prepared:
         self.progress(ProgressEvent("near field", None, "of the second moment"))
         return SourcePotential(self.solver.operator)
 
+    def with_resistance(self, resistance_of_window: Floats, progress: Progress) -> Prepared:
+        """The same mesh with other D/κ of each window (k,): everything but the windows' own blocks is shared."""
+        resistance = np.where(self.window_of >= 0, resistance_of_window[self.window_of], 0.0)
+        other = replace(self, solver=self.solver.with_resistance(resistance), progress=progress, kept_rows=1.0)
+        for known in ("back", "volume", "source_potential"):
+            if known in self.__dict__:
+                other.__dict__[known] = self.__dict__[known]
+        return other
+
     def solve(self, right: Floats, stage: str, *, given: Floats | None = None) -> BoundarySolution:
         """Solve for one right-hand side; see `BoundarySolver.solve`."""
         return self.solver.solve(right, given=given, tell=iteration_teller(self.progress, self.tolerance, stage))
@@ -94,6 +111,8 @@ def prepare(
     resistance_of_window: Floats,
     *,
     tolerance: float,
+    earlier: EarlierNearField | None = None,
+    keep: bool = False,
     progress: Progress = silent,
 ) -> Prepared:
     """Near field, preconditioner and outer space of a mesh.
@@ -108,17 +127,28 @@ def prepare(
         D/κ of each window in µm, 0 where it absorbs perfectly.
     tolerance : float
         Relative residual at which an iteration ends.
+    earlier : EarlierNearField, optional
+        Of a mesh that shares panels with this one: rows among unchanged panels are taken over.
+    keep : bool
+        Whether the near field is kept in `near` for a later mesh.
     progress : callable, optional
     """
     panels = make_panels(vertices[faces])
     sorted_window = window_of[panels.order]
     resistance = np.where(sorted_window >= 0, resistance_of_window[sorted_window], 0.0)
     progress(ProgressEvent("near field", None, f"{len(panels)} panels"))
-    operator = assemble(panels, sorted_window, resistance)
+    near, kept_rows = None, 0.0
+    if earlier is not None:
+        near, kept = near_field_from(panels, sorted_window >= 0, earlier)
+        kept_rows = float(kept.mean())
+    elif keep:
+        near = build_near_field(panels, sorted_window >= 0)
+    operator = assemble(panels, sorted_window, resistance, near)
     number = np.empty_like(panels.order)
     number[panels.order] = np.arange(len(panels))
     clusters = wall_clusters(panels.centroids, number[face_pairs(faces)], operator.is_window)
-    return Prepared(panels, BoundarySolver(operator, cluster_of=clusters, tolerance=tolerance), tolerance, progress)
+    solver = BoundarySolver(operator, cluster_of=clusters, tolerance=tolerance)
+    return Prepared(panels, solver, tolerance, progress, near if keep else None, kept_rows)
 
 
 def prepare_again(result: EscapeResult, progress: Progress = silent) -> Prepared:

@@ -15,7 +15,7 @@ from numpy.typing import ArrayLike, NDArray
 from bemescape.errors import SettingsError
 from bemescape.progress import Progress, silent
 from bemescape.surface.surface import triangle_areas_normals
-from bemescape.units import format_time, quantity
+from bemescape.units import Quantity, format_time, quantity
 
 if TYPE_CHECKING:
     import pint
@@ -214,6 +214,20 @@ class EscapeResult:
         placed = PlacedPoints(self, _as_points(points), outside=outside)
         variance = placed.second_moments(self.spread) - placed.times() ** 2
         return np.sqrt(np.where(variance < 0.0, 0.0, variance))
+
+    def with_diffusion(self, diffusion: Quantity) -> EscapeResult:
+        """The result for another D, without solving: with absorbing windows every time is in proportion to 1/D.
+
+        Second opinions are left out, as they were given on the other numbers.
+
+        Raises
+        ------
+        SettingsError
+            D is no such quantity, or a window is partly open: then only D/κ together scale.
+        """
+        from bemescape.results.scaled import with_diffusion
+
+        return with_diffusion(self, diffusion)
 
     def with_ways_out(self, windows: Sequence[str] | None = None, *, progress: Progress = silent) -> EscapeResult:
         """A copy that holds `ways_out` for the named windows, or for all of up to twelve; solved on the same panels.
