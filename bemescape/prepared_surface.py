@@ -38,7 +38,7 @@ class PreparedSurface:
     - another radius or place keeps the rows of the near field whose panels, and all panels close to them, are the
       same as before.
 
-    Memory: the near fields of all resolutions stay, about 2 kB per panel. Not for several threads at a time.
+    Memory: the near fields of all resolutions stay, a few kB per panel. Not for several threads at a time.
 
     Attributes
     ----------
@@ -73,8 +73,8 @@ class PreparedSurface:
         """
         d = diffusion_um2_s(diffusion)
         asked = self._asked
-        rest = {"target": target, "start": start, "ways_out": ways_out}
-        if asked is not None and asked.windows == tuple(windows) and asked.rest == rest:
+        rest = {"target": target, "ways_out": ways_out}
+        if start is None and asked is not None and asked.windows == tuple(windows) and asked.rest == rest:
             absorbing = all(window.permeability_um_s == float("inf") for window in windows)
             if absorbing or d == asked.result.diffusion_um2_s:
                 return replace(asked.result.with_diffusion(d), name=name or self.surface.name)
@@ -82,7 +82,7 @@ class PreparedSurface:
             self.surface, windows, d, target=target, start=start, ways_out=ways_out, name=name,
             settings=self.settings, progress=progress or self._progress, kept=self._kept,
         )  # fmt: skip
-        self._asked = _Asked(tuple(windows), rest, result)
+        self._asked = _Asked(tuple(windows), rest, result) if start is None else None
         return result
 
 

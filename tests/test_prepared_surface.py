@@ -107,7 +107,7 @@ def test_another_d_with_absorbing_windows_is_answered_without_solving(prism, mon
     surface, (absorbing, _, _) = prism
     prepared = prepare(surface)
     prepared._asked = prepared_surface._Asked(
-        (top(),), {"target": TARGET, "start": None, "ways_out": None}, absorbing
+        (top(),), {"target": TARGET, "ways_out": None}, absorbing
     )  # fmt: skip
     monkeypatch.setattr(prepared_surface, "solve_on", None)
     assert prepared.solve([top()], 10.0, target=TARGET).mean_time_s == pytest.approx(absorbing.mean_time_s / 10.0)

@@ -6,7 +6,7 @@ import base64
 from collections.abc import Sequence
 from html import escape
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from matplotlib.axes import Axes
@@ -44,7 +44,7 @@ def sites_figure(found: Exploration) -> Figure:
     factor, unit = time_scale(float(found.site_time_s.max()))
     side = ((found.places_um - centre) @ towards) >= 0.0
     figure = Figure(figsize=(10.5, 5.0), dpi=150, layout="constrained")
-    drawn = None
+    drawn: Any = None
     for axis, front in zip(figure.subplots(1, 2), (True, False), strict=True):
         turn = 1.0 if front else -1.0
         flat = np.column_stack([turn * ((surface.vertices - centre) @ along), (surface.vertices - centre) @ up])

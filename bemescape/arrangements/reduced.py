@@ -212,7 +212,7 @@ def _wall_panels(sites: CandidateSites) -> tuple[Wall, Floats]:
 
     def size_at(points: Floats) -> Floats:
         away = tree.query(points)[0]
-        return np.minimum(largest, _SIZE_AT_SITE * sites.radius_um + _GROWTH * away)
+        return np.asarray(np.minimum(largest, _SIZE_AT_SITE * sites.radius_um + _GROWTH * away))
 
     mesh = bisected_to_size(Mesh(vertices, faces, np.arange(len(faces))), size_at, most_faces=_MOST_PANELS)
     wall = Wall.of(Surface(mesh.vertices, mesh.faces, name=surface.name))

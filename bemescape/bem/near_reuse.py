@@ -63,7 +63,7 @@ def near_field_from(
 
 
 @njit(cache=True, error_model="numpy")
-def _place(columns, wanted):  # type: ignore[no-untyped-def]
+def _place(columns, wanted):
     """Where `wanted` stands in ascending `columns`; it is there."""
     low, high = 0, len(columns)
     while low < high:
@@ -76,7 +76,7 @@ def _place(columns, wanted):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _copy_rows(  # type: ignore[no-untyped-def]
+def _copy_rows(
     centroids, radii, is_window, tree_first, tree_last, low, high, reach, fine, before, was_window,
     old_first, old_column, old_double, old_window_first, old_window_column, old_single, old_volume,
     first, column, double, window_first, window_column, single, volume, kept, begin, end,

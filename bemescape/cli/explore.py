@@ -88,7 +88,7 @@ def _lines(found: Exploration) -> list[str]:
         f"{format_length(summary.radius_um)}, D {summary.diffusion_um2_s:.4g} µm²/s",
         "",
     ]
-    rows = [("arrangement", "mean escape time", "reduced model", "difference", "sites")]
+    rows: list[tuple[str, ...]] = [("arrangement", "mean escape time", "reduced model", "difference", "sites")]
     for name, row in (("smallest mean time", summary.best), ("largest mean time", summary.worst)):
         solved = "" if row.solved_time_s is None else format_time(row.solved_time_s)
         if row.solved_relative_error is not None:
