@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from bemescape.errors import SettingsError, SurfaceError, WindowError
+from bemescape.errors import SettingsError, SurfaceError
 from bemescape.surface.compartments import compartments
 from bemescape.surface.surface import Surface
 from bemescape.windows.patch import disc_patch
@@ -110,18 +110,6 @@ def candidate_sites(surface: Surface, sites: Window, open_windows: int) -> Candi
         _, remarks = disc_patch(wall, disc, disc.shape)  # refuses what cannot be a window, before any work
         notes += remarks
     places = np.array([disc.shape.centre_um for disc in discs if isinstance(disc.shape, Disc)])
-    _refuse_touching(discs, places, shape.radius_um)
     return CandidateSites(
         surface, tuple(discs), places, shape.radius_um, sites.permeability_um_s, tuple(dict.fromkeys(notes))
     )
-
-
-def _refuse_touching(discs: list[Window], places: Floats, radius: float) -> None:
-    """Rims that touch leave no wall between them; pores on both sides of a thin sheet are told apart by the patches."""
-    gap = np.linalg.norm(places[:, None] - places[None], axis=2)
-    gap[np.diag_indices(len(gap))] = np.inf
-    first, second = np.unravel_index(int(gap.argmin()), gap.shape)
-    if gap[first, second] < 1e-9 * radius:
-        raise WindowError(
-            f"the sites {discs[first].name!r} and {discs[second].name!r} are the same place; remove one of them"
-        )
