@@ -33,8 +33,11 @@ def test_taken_over_rows_are_those_worked_out_anew(first, direction, radius):
     second = near_field(direction, radius)
     near, kept = near_field_from(second.panels, second.is_window, first)
     assert 0.3 < kept.mean() < 0.95
-    for part in ("first", "column", "double", "window_first", "window_column", "single", "volume"):
+    for part in ("first", "column", "double", "window_first", "window_column", "single"):
         np.testing.assert_array_equal(getattr(near, part), getattr(second.near, part), err_msg=part)
+    # A sum over the row, in the order of the panels' numbers, which may differ: rounding.
+    scale = np.abs(second.near.volume).max()
+    np.testing.assert_allclose(near.volume, second.near.volume, rtol=0.0, atol=1e-13 * scale)
 
 
 def test_rows_beside_a_panel_that_becomes_window_are_not_taken_over(first):
