@@ -15,7 +15,7 @@ from bemescape.errors import AccuracyError, SettingsError, SurfaceError, WindowE
 from bemescape.progress import Progress, ProgressEvent, silent
 from bemescape.results.accuracy import Estimate, Ladder, Rung
 from bemescape.results.kept_meshes import KeptMesh, KeptMeshes
-from bemescape.results.prepared import Prepared, prepare
+from bemescape.results.prepared import PreparedMesh, prepare_mesh
 from bemescape.results.result import EscapeResult, WindowResult
 from bemescape.results.spread import find_spread
 from bemescape.results.starts import Start, check_starts, results_from_starts
@@ -166,7 +166,7 @@ def solve_on(
     budget = settings.max_panels or max(60_000, 2 * len(surface.faces))
     ladder = Ladder(wanted, len(placement.windows))
     best: _Solution | None = None
-    prepared: Prepared | None = None
+    prepared: PreparedMesh | None = None
     limits: list[SizeLimit] = []
     levels: list[dict[str, float]] = []
     target_met = True
@@ -252,7 +252,7 @@ def _solved(
     settings: SolverSettings,
     progress: Progress,
     kept: KeptMeshes | None,
-) -> tuple[_Solution, Prepared]:
+) -> tuple[_Solution, PreparedMesh]:
     began = time.perf_counter()
     kappa = np.array([window.permeability_um_s for window in placement.windows])
     same = None if kept is None else kept.same_place(placement, rung)
@@ -260,7 +260,7 @@ def _solved(
         prepared = same.prepared.with_resistance(d / kappa, progress)
     else:
         earlier = None if kept is None else kept.latest_near_field(rung)
-        prepared = prepare(
+        prepared = prepare_mesh(
             mesh.vertices, mesh.faces, mesh.window_of, d / kappa, tolerance=settings.tolerance,
             earlier=earlier, keep=kept is not None, progress=progress,
         )  # fmt: skip

@@ -6,7 +6,7 @@ from dataclasses import dataclass, field
 
 from bemescape.bem.near_reuse import EarlierNearField
 from bemescape.results.accuracy import Rung
-from bemescape.results.prepared import Prepared
+from bemescape.results.prepared import PreparedMesh
 from bemescape.windows.grade import GradedMesh, SizeLimit
 from bemescape.windows.placement import Placement
 from bemescape.windows.window import Shape
@@ -21,7 +21,7 @@ class KeptMesh:
     rung: Rung
     mesh: GradedMesh
     limits: tuple[SizeLimit, ...]
-    prepared: Prepared
+    prepared: PreparedMesh
 
 
 @dataclass

@@ -24,14 +24,14 @@ from bemescape.windows.mesh_edits import face_pairs
 if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
 
-__all__ = ["Prepared", "iteration_teller", "prepare", "prepare_again"]
+__all__ = ["PreparedMesh", "iteration_teller", "prepare_mesh", "prepare_mesh_again"]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 
 @dataclass(frozen=True, eq=False)
-class Prepared:
+class PreparedMesh:
     """A solver and what belongs to it; everything is for D = 1 and in the order of `panels`.
 
     Attributes
@@ -79,7 +79,7 @@ class Prepared:
         self.progress(ProgressEvent("near field", None, "of the second moment"))
         return SourcePotential(self.solver.operator)
 
-    def with_resistance(self, resistance_of_window: Floats, progress: Progress) -> Prepared:
+    def with_resistance(self, resistance_of_window: Floats, progress: Progress) -> PreparedMesh:
         """The same mesh with other D/κ of each window (k,): everything but the windows' own blocks is shared."""
         resistance = np.where(self.window_of >= 0, resistance_of_window[self.window_of], 0.0)
         other = replace(self, solver=self.solver.with_resistance(resistance), progress=progress, kept_rows=1.0)
@@ -104,7 +104,7 @@ def iteration_teller(progress: Progress, tolerance: float, stage: str) -> Callab
     return tell
 
 
-def prepare(
+def prepare_mesh(
     vertices: Floats,
     faces: Ints,
     window_of: Ints,
@@ -114,7 +114,7 @@ def prepare(
     earlier: EarlierNearField | None = None,
     keep: bool = False,
     progress: Progress = silent,
-) -> Prepared:
+) -> PreparedMesh:
     """Near field, preconditioner and outer space of a mesh.
 
     Parameters
@@ -148,13 +148,13 @@ def prepare(
     number[panels.order] = np.arange(len(panels))
     clusters = wall_clusters(panels.centroids, number[face_pairs(faces)], operator.is_window)
     solver = BoundarySolver(operator, cluster_of=clusters, tolerance=tolerance)
-    return Prepared(panels, solver, tolerance, progress, near if keep else None, kept_rows)
+    return PreparedMesh(panels, solver, tolerance, progress, near if keep else None, kept_rows)
 
 
-def prepare_again(result: EscapeResult, progress: Progress = silent) -> Prepared:
+def prepare_mesh_again(result: EscapeResult, progress: Progress = silent) -> PreparedMesh:
     """The solver of a result's own mesh, for questions that are asked afterwards."""
     kappa = np.array([window.permeability_um_s for window in result.windows])
-    return prepare(
+    return prepare_mesh(
         result.vertices,
         result.faces,
         result.panel_window,

@@ -237,11 +237,11 @@ class EscapeResult:
         SettingsError
             A window is unknown, or none is named and there are more than twelve.
         """
-        from bemescape.results.prepared import prepare_again
+        from bemescape.results.prepared import prepare_mesh_again
         from bemescape.results.ways_out import chosen_windows, find_ways_out
 
         chosen = chosen_windows(self.windows, windows)
-        return replace(self, ways_out=find_ways_out(prepare_again(self, progress), self, chosen))
+        return replace(self, ways_out=find_ways_out(prepare_mesh_again(self, progress), self, chosen))
 
     @cached_property
     def _known_ways_out(self) -> WaysOut:
