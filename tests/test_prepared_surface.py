@@ -46,31 +46,29 @@ def test_another_permeability_agrees_with_a_fresh_solve_within_both_errors(prism
 
 
 @pytest.fixture(scope="module")
-def places():
-    """Results on one prepared ball for a disc, a smaller one, and one elsewhere, with the fresh ones."""
-    surface = ball(3)
+def moved():
+    """A disc elsewhere and smaller than the one before it on a prepared ball, and the same on a fresh one."""
+    surface = ball(2)
     prepared = prepare(surface)
-    asked = [([0.3, 0.2, 0.9], 0.2), ([0.3, 0.2, 0.9], 0.15), ([0.3, -0.8, 0.2], 0.15)]
-    pairs = []
-    for direction, radius in asked:
-        window = [Window.disc("pore", centre=on_ball(surface, direction), radius=radius)]
-        fresh = solve_escape(surface, window, 1.0, target=0.05)
-        pairs.append((prepared.solve(window, 1.0, target=0.05), fresh))
-    return pairs
+    before, after = (
+        [Window.disc("pore", centre=on_ball(surface, direction), radius=radius)]
+        for direction, radius in (([0.3, 0.2, 0.9], 0.3), ([0.3, -0.8, 0.2], 0.25))
+    )
+    prepared.solve(before, 1.0, target=0.05)
+    return prepared.solve(after, 1.0, target=0.05), solve_escape(surface, after, 1.0, target=0.05)
 
 
-def test_another_radius_and_another_place_give_the_fresh_solve_on_the_same_meshes(places):
-    for kept, fresh in places:
-        np.testing.assert_array_equal(kept.faces, fresh.faces)
-        # The same sums in the same order: nothing but rounding may differ.
-        assert kept.mean_time_s == pytest.approx(fresh.mean_time_s, rel=1e-9)
-        assert kept.relative_error == pytest.approx(fresh.relative_error, rel=1e-6)
-        assert kept.escape_time_sd_s == pytest.approx(fresh.escape_time_sd_s, rel=1e-9)
+def test_another_radius_and_place_give_the_fresh_solve_on_the_same_meshes(moved):
+    kept, fresh = moved
+    np.testing.assert_array_equal(kept.faces, fresh.faces)
+    # Near-field rows are equal to the bit, up to the order of one sum: only rounding may differ.
+    assert kept.mean_time_s == pytest.approx(fresh.mean_time_s, rel=1e-7)
+    assert kept.relative_error == pytest.approx(fresh.relative_error, rel=1e-3)
+    assert kept.escape_time_sd_s == pytest.approx(fresh.escape_time_sd_s, rel=1e-6)
 
 
-def test_rows_away_from_the_windows_are_kept(places):
-    for kept, _ in places[1:]:
-        assert all(0.1 < row["kept_rows"] < 1.0 for row in kept.levels)
+def test_rows_away_from_the_windows_are_kept(moved):
+    assert all(0.0 < row["kept_rows"] < 1.0 for row in moved[0].levels)
 
 
 # -- another D -------------------------------------------------------------------------------------------

@@ -39,8 +39,8 @@ def sites_figure(found: Exploration) -> Figure:
     surface = found.surface
     middles = surface.vertices[surface.faces].mean(axis=1)
     centre, axes = principal_axes(middles, surface.areas)
-    # Rows of axes: longest first; seen along the last.
-    along, up, towards = axes
+    along, up = axes[:2]  # the longest first
+    towards = np.cross(along, up)  # right-handed: nothing is mirrored
     factor, unit = time_scale(float(found.site_time_s.max()))
     side = ((found.places_um - centre) @ towards) >= 0.0
     figure = Figure(figsize=(10.5, 5.0), dpi=150, layout="constrained")
