@@ -79,7 +79,8 @@ def sites_figure(found: Exploration) -> Figure:
         axis.set_xlabel("µm")
         axis.spines[["top", "right"]].set_visible(False)
     figure.colorbar(drawn, ax=figure.axes, label=f"mean escape time, one window at the site ({unit})")
-    figure.axes[0].legend(fontsize=8, frameon=False, loc="upper left", bbox_to_anchor=(0.0, -0.12))
+    handles, labels = figure.axes[0].get_legend_handles_labels()
+    figure.legend(handles, labels, fontsize=8, frameon=False, loc="outside lower left", ncols=2)
     return figure
 
 
@@ -124,8 +125,7 @@ def clustering_figure(found: Exploration) -> Figure:
             textcoords="offset points", xytext=(0, 7), ha="center",
         )  # fmt: skip
     axes.set_xticks(counts)
-    axes.set_ylim(bottom=0.0)
-    axes.margins(y=0.15)
+    axes.set_ylim(0.0, 1.15 * float(close.max()) / factor)
     axes.set_xlabel("open windows")
     axes.set_ylabel(f"mean escape time ({unit})")
     axes.legend(fontsize=8, frameon=False)
