@@ -11,6 +11,7 @@ import importlib
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from bemescape.arrangements import Exploration, explore
     from bemescape.case import Case, read_case
     from bemescape.errors import (
         AccuracyError,
@@ -21,6 +22,7 @@ if TYPE_CHECKING:
         WindowError,
     )
     from bemescape.escape import SolverSettings, solve_escape
+    from bemescape.prepared_surface import PreparedSurface, prepare
     from bemescape.progress import ProgressEvent
     from bemescape.results.result import EscapeResult
     from bemescape.results.starts import Ball
@@ -39,6 +41,8 @@ _HOME = {
     "ConvergenceError": "bemescape.errors",
     "EscapeError": "bemescape.errors",
     "EscapeResult": "bemescape.results.result",
+    "Exploration": "bemescape.arrangements",
+    "PreparedSurface": "bemescape.prepared_surface",
     "ProgressEvent": "bemescape.progress",
     "SettingsError": "bemescape.errors",
     "SolverSettings": "bemescape.escape",
@@ -48,7 +52,9 @@ _HOME = {
     "WindowError": "bemescape.errors",
     "__version__": "bemescape.version",
     "check_surface": "bemescape.surface",
+    "explore": "bemescape.arrangements",
     "heal_surface": "bemescape.surface",
+    "prepare": "bemescape.prepared_surface",
     "read_case": "bemescape.case",
     "read_surface": "bemescape.surface",
     "solve_escape": "bemescape.escape",
@@ -64,6 +70,8 @@ __all__ = [
     "ConvergenceError",
     "EscapeError",
     "EscapeResult",
+    "Exploration",
+    "PreparedSurface",
     "ProgressEvent",
     "SettingsError",
     "SolverSettings",
@@ -73,7 +81,9 @@ __all__ = [
     "WindowError",
     "__version__",
     "check_surface",
+    "explore",
     "heal_surface",
+    "prepare",
     "read_case",
     "read_surface",
     "solve_escape",

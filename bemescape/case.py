@@ -40,6 +40,8 @@ from bemescape.units import (
 if TYPE_CHECKING:
     from collections.abc import Callable
 
+    from bemescape.arrangements import Exploration
+    from bemescape.escape import SolverSettings
     from bemescape.results.result import EscapeResult
     from bemescape.results.starts import Start
     from bemescape.surface.surface import Surface
@@ -286,17 +288,45 @@ class StartSection(_Section):
         return self
 
 
+class ExploreSection(_Section):
+    """Candidate sites for equal windows, and what is asked about their arrangements."""
+
+    points: PointsSection | None = Field(default=None, description="sites at the positions of a CSV file")
+    scatter: ScatterSection | None = Field(default=None, description="sites at random places")
+    open_windows: int = Field(
+        strict=True, ge=1, le=400, description="how many windows are open at a time", examples=[4]
+    )
+    permeability_um_s: _Permeability = Field(default=math.inf, alias="permeability", examples=["10 um/s"])
+    sweep_um: tuple[_Radius, ...] | None = Field(
+        default=None, alias="sweep", description="radii of one window alone", examples=[["15 nm", "30 nm", "60 nm"]]
+    )
+    arrangements: int = Field(
+        default=10_000, strict=True, ge=100, le=10_000_000, description="about how many are tried", examples=[10000]
+    )
+    seed: int = Field(default=0, strict=True, ge=0, le=2**63, examples=[1])
+
+    @model_validator(mode="after")
+    def _has_one_kind(self) -> Self:
+        if (self.points is None) == (self.scatter is None):
+            given = "neither points nor scatter" if self.points is None else "points and scatter"
+            raise SettingsError(f"has {given}; candidate sites are exactly one of them")
+        return self
+
+
 class CaseDocument(_Section):
     """The content of a case file."""
 
     surface: SurfaceSection
     motion: MotionSection
-    window: tuple[WindowSection, ...]
+    window: tuple[WindowSection, ...] = ()
     accuracy: AccuracySection = AccuracySection()
     start: StartSection = StartSection()
+    explore: ExploreSection | None = None
 
     @model_validator(mode="after")
     def _windows_are_distinct(self) -> Self:
+        if not self.window and self.explore is not None:
+            return self
         if not self.window:
             raise SettingsError("has no [[window]]; nothing can leave, so add at least one")
         name, count = Counter(window.name for window in self.window).most_common(1)[0]
@@ -349,6 +379,34 @@ class Case:
             raise SettingsError(_sentence(error, {"accuracy": changes}, root=("accuracy",))) from error
         return replace(self, document=self.document.model_copy(update={"accuracy": accuracy}))
 
+    def with_arrangements(self, count: int) -> Case:
+        """The same case with another number of arrangements to try.
+
+        Raises
+        ------
+        SettingsError
+            The case has no [explore], or the number is out of range.
+        """
+        section = self._explore_section()
+        try:
+            checked = ExploreSection.model_validate(
+                {"open_windows": 1, "scatter": {"count": 2, "radius": "1 nm"}, "arrangements": count}
+            )
+        except ValidationError as error:
+            place = {"explore": {"arrangements": count}}
+            raise SettingsError(_sentence(error, place, root=("explore",))) from error
+        changed = section.model_copy(update={"arrangements": checked.arrangements})
+        return replace(self, document=self.document.model_copy(update={"explore": changed}))
+
+    def _explore_section(self) -> ExploreSection:
+        section = self.document.explore
+        if section is None:
+            raise SettingsError(
+                f"case {self.name!r} has no [explore]; add it with open_windows and points or scatter, the candidate "
+                "sites"
+            )
+        return section
+
     def load_surface(self, progress: Progress = silent) -> Surface:
         """Read, check and heal the mesh file.
 
@@ -382,7 +440,6 @@ class Case:
         return tuple(self._window(section, surface) for section in self.document.window)
 
     def _window(self, section: WindowSection, surface: Surface) -> Window:
-        from bemescape.windows.positions import read_positions
         from bemescape.windows.window import Window
 
         name, kappa = section.name, section.permeability_um_s
@@ -392,7 +449,7 @@ class Case:
         if (labels := section.labels) is not None:
             return Window.labels(name, array=labels.array, value=labels.value, permeability=kappa)
         if (near := section.near) is not None:
-            path = self._file_of(name, "near.file", near.file)
+            path = self._file_of(f"[[window]] {name!r}", "near.file", near.file)
             return Window.near(name, surface=path, unit=near.unit, distance=near.distance_um, permeability=kappa)
         if (lid := section.lid) is not None:
             # A direction between two positions of the file is scaled as they are.
@@ -403,34 +460,32 @@ class Case:
                 near=None if lid.near is None else _scaled(lid.near, surface),
                 permeability=kappa,
             )
-        if (points := section.points) is not None:
-            path = self._file_of(name, "points.file", points.file)
-            places, lines = read_positions(path, unit=points.unit, otherwise_um=surface.unit_um)
-            return Window.points(
-                name,
-                positions=places,
-                lines=lines,
-                radius=points.radius_um,
-                farthest=points.farthest_um,
-                permeability=kappa,
-            )
-        if (scatter := section.scatter) is not None:
-            return Window.scatter(
-                name,
-                count=scatter.count,
-                density=scatter.density_per_um2,
-                radius=scatter.radius_um,
-                gap=scatter.gap_um,
-                seed=scatter.seed,
-                permeability=kappa,
-            )
+        if section.points is not None:
+            return self._pores(f"[[window]] {name!r}", name, section.points, surface, kappa)
+        if section.scatter is not None:
+            return _scattered(name, section.scatter, kappa)
         raise SettingsError(f"window {name!r} has no kind")
 
-    def _file_of(self, name: str, key: str, file: str) -> Path:
+    def _pores(self, place: str, name: str, points: PointsSection, surface: Surface, kappa: float) -> Window:
+        from bemescape.windows.positions import read_positions
+        from bemescape.windows.window import Window
+
+        path = self._file_of(place, "points.file", points.file)
+        positions, lines = read_positions(path, unit=points.unit, otherwise_um=surface.unit_um)
+        return Window.points(
+            name,
+            positions=positions,
+            lines=lines,
+            radius=points.radius_um,
+            farthest=points.farthest_um,
+            permeability=kappa,
+        )
+
+    def _file_of(self, place: str, key: str, file: str) -> Path:
         path = self.folder / file
         if not path.is_file():
             raise SettingsError(
-                f"case {self.name!r}: [[window]] {name!r} {key} is {file!r}, but there is no file {path}; the path is "
+                f"case {self.name!r}: {place} {key} is {file!r}, but there is no file {path}; the path is "
                 "relative to the case file"
             )
         return path
@@ -453,21 +508,70 @@ class Case:
                 starts[region.name] = Window.labels(region.name, array=array, value=value)
         return starts
 
+    def explore(self, progress: Progress = silent) -> Exploration:
+        """Load the surface and compare arrangements of windows on the sites of [explore].
+
+        The case's own windows are closed; the answer says so.
+
+        Raises
+        ------
+        SettingsError
+            The case has no [explore], or an entry of it does not suit the surface.
+        EscapeError
+            As `load_surface` and `bemescape.arrangements.explore`.
+        """
+        section = self._explore_section()
+        surface = self.load_surface(progress)
+        from bemescape.arrangements import explore
+
+        kappa = section.permeability_um_s
+        if section.points is not None:
+            sites = self._pores("[explore]", "site", section.points, surface, kappa)
+        elif section.scatter is not None:
+            sites = _scattered("site", section.scatter, kappa)
+        found = explore(
+            surface,
+            sites,
+            open_windows=section.open_windows,
+            diffusion=self.document.motion.diffusion_um2_s,
+            sweep=section.sweep_um,
+            arrangements=section.arrangements,
+            seed=section.seed,
+            target=self.document.accuracy.target,
+            name=self.name,
+            settings=self._settings(),
+            progress=progress,
+        )
+        if not self.document.window:
+            return found
+        closed = ", ".join(repr(window.name) for window in self.document.window[:6])
+        return replace(found, notes=(f"the case's own windows are closed here: {closed}", *found.notes))
+
+    def _settings(self) -> SolverSettings:
+        from bemescape.escape import SolverSettings
+
+        budget = self.document.accuracy.max_panels
+        return SolverSettings() if budget is None else SolverSettings(max_panels=budget)
+
     def solve(self, progress: Progress = silent) -> EscapeResult:
         """Load the surface and solve.
 
         Raises
         ------
+        SettingsError
+            The case has no window.
         EscapeError
             As `load_surface` and `bemescape.escape.solve_escape`.
         """
+        if not self.document.window:
+            raise SettingsError(
+                f"case {self.name!r} has no [[window]]; nothing can leave, so add at least one (its [explore] is for "
+                "bemescape explore)"
+            )
         surface = self.load_surface(progress)
-        from bemescape.escape import SolverSettings, solve_escape
+        from bemescape.escape import solve_escape
 
         accuracy = self.document.accuracy
-        settings = SolverSettings()
-        if accuracy.max_panels is not None:
-            settings = replace(settings, max_panels=accuracy.max_panels)
         return solve_escape(
             surface,
             self.windows_for(surface),
@@ -476,9 +580,23 @@ class Case:
             start=self.start_um(surface) or None,
             ways_out=self.document.start.ways_out,
             name=self.name,
-            settings=settings,
+            settings=self._settings(),
             progress=progress,
         )
+
+
+def _scattered(name: str, scatter: ScatterSection, kappa: float) -> Window:
+    from bemescape.windows.window import Window
+
+    return Window.scatter(
+        name,
+        count=scatter.count,
+        density=scatter.density_per_um2,
+        radius=scatter.radius_um,
+        gap=scatter.gap_um,
+        seed=scatter.seed,
+        permeability=kappa,
+    )
 
 
 def _scaled(position: Sequence[float], surface: Surface) -> tuple[float, float, float]:

@@ -14,7 +14,8 @@ from bemescape.bem.indicator import coarse_panels
 from bemescape.errors import AccuracyError, SettingsError, SurfaceError, WindowError
 from bemescape.progress import Progress, ProgressEvent, silent
 from bemescape.results.accuracy import Estimate, Ladder, Rung
-from bemescape.results.prepared import Prepared, prepare
+from bemescape.results.kept_meshes import KeptMesh, KeptMeshes
+from bemescape.results.prepared import PreparedMesh, prepare_mesh
 from bemescape.results.result import EscapeResult, WindowResult
 from bemescape.results.spread import find_spread
 from bemescape.results.starts import Start, check_starts, results_from_starts
@@ -26,7 +27,7 @@ from bemescape.units import Quantity, diffusion_um2_s, fraction
 from bemescape.windows.grade import GradedMesh, Placement, SizeLimit, graded, place_windows
 from bemescape.windows.window import Window
 
-__all__ = ["SolverSettings", "solve_escape"]
+__all__ = ["SolverSettings", "check_closed", "solve_escape", "solve_on"]
 
 Floats = NDArray[np.float64]
 
@@ -132,11 +133,30 @@ def solve_escape(
     ----------
     .. [1] Berg & Purcell (1977), Biophys. J. 20:193, doi:10.1016/S0006-3495(77)85544-6
     """
+    check_closed(surface)
+    return solve_on(
+        surface, windows, diffusion, target=target, start=start, ways_out=ways_out, name=name,
+        settings=settings or SolverSettings(), progress=progress,
+    )  # fmt: skip
+
+
+def solve_on(
+    surface: Surface,
+    windows: Sequence[Window],
+    diffusion: Quantity,
+    *,
+    target: float | str,
+    start: Mapping[str, Start] | None,
+    ways_out: bool | Sequence[str] | None,
+    name: str | None,
+    settings: SolverSettings,
+    progress: Progress,
+    kept: KeptMeshes | None = None,
+) -> EscapeResult:
+    """`solve_escape` on a surface that is checked already; `kept` hands meshes from one solve to the next."""
     began = time.perf_counter()
-    settings = settings or SolverSettings()
     d = diffusion_um2_s(diffusion)
     wanted = fraction(target, "target error")
-    _check_surface(surface)
     progress(ProgressEvent("placing windows"))
     placement = place_windows(surface, windows)
     _check_compartments(placement)
@@ -146,20 +166,26 @@ def solve_escape(
     budget = settings.max_panels or max(60_000, 2 * len(surface.faces))
     ladder = Ladder(wanted, len(placement.windows))
     best: _Solution | None = None
-    prepared: Prepared | None = None
+    prepared: PreparedMesh | None = None
     limits: list[SizeLimit] = []
     levels: list[dict[str, float]] = []
     target_met = True
     while (rung := ladder.next_rung()) is not None:
         progress(ProgressEvent("imprinting windows", None, f"resolution {len(levels) + 1}"))
-        if best is not None and rung.wall > best.rung.wall:
-            limits.append(_finer_wall(best))
-        mesh = graded(placement, rung.fineness, limits=limits, most_faces=2 * budget)
+        same = None if kept is None else kept.same_place(placement, rung)
+        if same is not None:
+            mesh, limits = same.mesh, list(same.limits)
+        else:
+            if best is not None and rung.wall > best.rung.wall:
+                limits.append(_finer_wall(best))
+            mesh = graded(placement, rung.fineness, limits=limits, most_faces=2 * budget)
         if best is not None and len(mesh.faces) > budget:
             target_met = False
             break
         prepared = None  # two near fields at a time would double the memory
-        best, prepared = _solved(placement, rung, mesh, d, settings, progress)
+        best, prepared = _solved(placement, rung, mesh, d, settings, progress, kept)
+        if kept is not None:
+            kept.keep(placement, KeptMesh(rung, mesh, tuple(limits), prepared))
         ladder.has_rims = bool((mesh.window_of < 0).any())
         ladder.record(rung, best.mean, best.balance, best.shares)
         levels.append(
@@ -168,6 +194,7 @@ def solve_escape(
                 "mean_time_s": best.mean / d,
                 "iterations": len(best.residuals),
                 "seconds": best.seconds,
+                **({} if kept is None else {"kept_rows": prepared.kept_rows}),
             }
         )
     if best is None or prepared is None:
@@ -224,12 +251,19 @@ def _solved(
     d: float,
     settings: SolverSettings,
     progress: Progress,
-) -> tuple[_Solution, Prepared]:
+    kept: KeptMeshes | None,
+) -> tuple[_Solution, PreparedMesh]:
     began = time.perf_counter()
     kappa = np.array([window.permeability_um_s for window in placement.windows])
-    prepared = prepare(
-        mesh.vertices, mesh.faces, mesh.window_of, d / kappa, tolerance=settings.tolerance, progress=progress
-    )
+    same = None if kept is None else kept.same_place(placement, rung)
+    if same is not None:
+        prepared = same.prepared.with_resistance(d / kappa, progress)
+    else:
+        earlier = None if kept is None else kept.latest_near_field(rung)
+        prepared = prepare_mesh(
+            mesh.vertices, mesh.faces, mesh.window_of, d / kappa, tolerance=settings.tolerance,
+            earlier=earlier, keep=kept is not None, progress=progress,
+        )  # fmt: skip
     panels, volume = prepared.panels, prepared.volume
     solution = prepared.solve(prepared.solver.operator.volume_potential, "iterating")
     mean = volume_integral(panels, solution.u, solution.q, 1.0) / volume
@@ -300,7 +334,8 @@ def _packed(
     )
 
 
-def _check_surface(surface: Surface) -> None:
+def check_closed(surface: Surface) -> None:
+    """Refuse a surface that cannot be solved, in a sentence."""
     report = surface.health
     if surface.healing is not None or report is None:
         report = check_surface(surface.vertices, surface.faces, crossings=False)

@@ -118,7 +118,14 @@ CAP_AXIS_05 = {0.5: 1.3424776371, -0.5: 2.3713788929, 0.9: 0.267341569}
 #: Two equal caps: (eps, angle between the centres) -> mean. Spectral solution with the sphere's closed-form Neumann
 #: function, antipodal pairs also by dual series to 1e-12; the three-term formula of Cheviakov, Ward & Straube (2010,
 #: doi:10.1137/100782620) agrees within its own error.
-TWO_EQUAL_CAPS = {(0.1, 0.25): 6.84388629, (0.2, np.pi): 2.467394318503, (0.1, np.pi): 5.201974474248}
+TWO_EQUAL_CAPS = {
+    (0.1, 0.22): 7.0538414,
+    (0.1, 0.25): 6.84388629,
+    (0.1, 0.3): 6.57993048,
+    (0.1, 0.5): 6.02611246,
+    (0.2, np.pi): 2.467394318503,
+    (0.1, np.pi): 5.201974474248,
+}
 #: Two unequal antipodal caps (0.1, 0.2): mean and the share of the smaller; dual series, 12 digits.
 UNEQUAL_CAPS_MEAN, UNEQUAL_CAPS_SHARE = 3.402154331544, 0.3419518369677
 
@@ -134,10 +141,26 @@ NECK_ALL, NECK_HEAD = 3.943980, 4.127853
 #: Unit ball with equal caps of half-angle 0.2 at the vertices of a platonic solid: number of caps -> mean. Spectral
 #: solution with the sphere's closed-form Neumann function.
 PLATONIC_CAPS_02 = {6: 0.70005458, 8: 0.50527188, 12: 0.3141251}
+#: The same for a half-angle of 0.1.
+PLATONIC_CAPS_01 = {6: 1.60770681, 8: 1.18409492, 12: 0.76397854}
 #: Cylinder R = H = 1 with a coaxial neck, open at its end: (neck radius, length) -> average over head and neck.
 #: Head and
 #: neck are matched by a Galerkin method with edge-weighted functions, two resolutions agree to 1e-8.
 CYLINDER_NECK_ALL = {(0.2, 0.5): 15.7813822, (0.5, 1.0): 4.81056125}
+
+
+def caps_interaction(places):
+    """H = Σ_{i<j} 1/d − ½ ln d − ½ ln(2 + d) of points (n, 3) on the unit sphere, d their distances.
+
+    The mean time of n equal small caps grows with H alone: Cheviakov, Ward & Straube (2010), doi:10.1137/100782620.
+    """
+    d = np.array([np.linalg.norm(a - b) for a, b in itertools.combinations(np.asarray(places), 2)])
+    return float((1.0 / d - 0.5 * np.log(d) - 0.5 * np.log(2.0 + d)).sum())
+
+
+#: Smallest H for n points: minimised from many random starts; the paper's own table gives the same arrangements
+#: (2: antipodal, 4: tetrahedron, 6: octahedron; from memory).
+LEAST_CAPS_INTERACTION = {2: -0.539720771, 3: -1.067345254, 4: -1.667179878, 6: -2.581005544}
 
 
 # -- partly open windows, ways out, second moments -------------------------------------------------------

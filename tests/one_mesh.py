@@ -4,7 +4,7 @@ import numpy as np
 
 from bemescape.bem.averages import volume_integral
 from bemescape.results.accuracy import Rung
-from bemescape.results.prepared import prepare
+from bemescape.results.prepared import prepare_mesh
 from bemescape.results.result import EscapeResult, WindowResult
 from bemescape.results.spread import find_spread
 from bemescape.results.ways_out import find_ways_out
@@ -16,7 +16,7 @@ def solved_once(surface, windows, *, rim=1, wall=0, ways_out=False):
     placement = place_windows(surface, windows)
     mesh = graded(placement, Rung(rim, wall).fineness)
     kappa = np.array([window.permeability_um_s for window in windows])
-    prepared = prepare(mesh.vertices, mesh.faces, mesh.window_of, 1.0 / kappa, tolerance=1e-7)
+    prepared = prepare_mesh(mesh.vertices, mesh.faces, mesh.window_of, 1.0 / kappa, tolerance=1e-7)
     panels, volume = prepared.panels, prepared.volume
     solution = prepared.solve(prepared.solver.operator.volume_potential, "iterating")
     mean = volume_integral(panels, solution.u, solution.q, 1.0) / volume

@@ -262,7 +262,7 @@ def test_a_mistake_is_told_in_one_sentence_with_its_place(written, before, after
 
 def test_a_case_without_windows_is_refused(written):
     head = GOOD.split("[[window]]")[0]
-    with pytest.raises(SettingsError, match=r"\[\[window\]\] is missing"):
+    with pytest.raises(SettingsError, match=r"no \[\[window\]\]; nothing can leave"):
         read_case(written(head))
     with pytest.raises(SettingsError, match=r"no \[\[window\]\]; nothing can leave"):
         read_case(written("window = []\n" + head))

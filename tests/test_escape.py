@@ -22,7 +22,7 @@ from bemescape import (
     solve_escape,
 )
 from bemescape.bem.averages import volume_integral
-from bemescape.results.prepared import prepare
+from bemescape.results.prepared import prepare_mesh
 
 AXIS = np.array([0.3, 0.5, 0.81]) / np.linalg.norm([0.3, 0.5, 0.81])
 ACROSS = np.cross(AXIS, [1.0, 0.0, 0.0]) / np.linalg.norm(np.cross(AXIS, [1.0, 0.0, 0.0]))
@@ -207,7 +207,7 @@ def test_the_error_falls_nearly_in_proportion_to_the_panels():
     for cells in (6, 12, 24):
         surface = shapes.box(cells=cells, label=lambda c: int(c[2] < 1e-9))
         window_of = surface.face_data["label"] - 1
-        prepared = prepare(surface.vertices, surface.faces, window_of, np.zeros(1), tolerance=1e-6)
+        prepared = prepare_mesh(surface.vertices, surface.faces, window_of, np.zeros(1), tolerance=1e-6)
         solution = prepared.solve(prepared.solver.operator.volume_potential, "iterating")
         mean = volume_integral(prepared.panels, solution.u, solution.q, 1.0) / prepared.volume
         panels.append(len(surface.faces))

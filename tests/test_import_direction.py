@@ -23,14 +23,17 @@ MAY_IMPORT = {
     "bem": {"errors", "progress", "threads"},
     "results": BASE | {"surface", "windows", "bem"},
     "escape": BASE | {"surface", "windows", "bem", "results"},
-    "case": BASE | {"surface", "windows", "results", "escape"},
+    "prepared_surface": BASE | {"surface", "windows", "results", "escape"},
+    "arrangements": BASE | {"surface", "windows", "bem", "results", "escape", "prepared_surface"},
+    "case": BASE | {"surface", "windows", "results", "escape", "arrangements"},
     "warm": BASE | {"surface", "windows", "bem", "escape"},
-    "cli": BASE | {"surface", "windows", "results", "escape", "case", "warm", "viz"},
-    "viz": BASE | {"results"},
+    "cli": BASE | {"surface", "windows", "results", "escape", "case", "warm", "arrangements", "viz"},
+    "viz": BASE | {"results", "arrangements"},
 }
 #: Imports against the direction, each with its reason. They are made inside functions.
 EXCEPTIONS = {
     ("results", "viz"): "result.save writes pictures and the report",
+    ("arrangements", "viz"): "exploration.save writes pictures and the page",
 }
 
 

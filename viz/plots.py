@@ -18,7 +18,7 @@ from .scales import INK, map_colours, time_colours
 if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
 
-__all__ = ["convergence_figure", "spread_figure", "survival_figure"]
+__all__ = ["convergence_figure", "plain_axes", "spread_figure", "survival_figure"]
 
 Floats = NDArray[np.float64]
 
@@ -55,7 +55,7 @@ def spread_figure(result: EscapeResult) -> Figure:
     right.set_xlabel("straight distance to the nearest window (µm)")
     right.set_ylabel(f"mean escape time ({unit})")
     for axes in (left, right):
-        _plain(axes)
+        plain_axes(axes)
     return figure
 
 
@@ -105,7 +105,7 @@ def convergence_figure(result: EscapeResult) -> Figure:
     axes.set_ylabel(f"mean escape time ({unit})")
     axes.ticklabel_format(axis="y", useOffset=False)
     axes.margins(0.12)
-    _plain(axes)
+    plain_axes(axes)
     return figure
 
 
@@ -156,11 +156,12 @@ def survival_figure(result: EscapeResult) -> Figure:
     axes.set_ylabel("part still inside")
     axes.set_title("start uniform in the volume", fontsize=9, loc="left")
     axes.legend(fontsize=8, frameon=False)
-    _plain(axes)
+    plain_axes(axes)
     return figure
 
 
-def _plain(axes: Axes) -> None:
+def plain_axes(axes: Axes) -> None:
+    """Light grid, no box: the style of every flat figure."""
     axes.spines[["top", "right"]].set_visible(False)
     axes.grid(visible=True, color="#e2e5e9", linewidth=0.6)
     axes.set_axisbelow(True)

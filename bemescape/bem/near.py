@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numba import njit
@@ -24,7 +25,7 @@ from bemescape.bem.kernels import (
 from bemescape.bem.panels import Panels
 from bemescape.threads import over_rows
 
-__all__ = ["NearField", "build_near_field", "fill_single_rows"]
+__all__ = ["NearField", "build_near_field", "fill_near_rows", "fill_single_rows", "near_panels", "near_pattern"]
 
 #: Pairs with centroids closer than this many radii (of the larger panel) are integrated in closed form.
 EXACT = 2.0
@@ -67,7 +68,7 @@ class NearField:
 
 
 @njit(cache=True, error_model="numpy")
-def _near_panels(i, centroids, radii, first, last, low, high, reach, factor, found):
+def near_panels(i, centroids, radii, first, last, low, high, reach, factor, found):
     """Write the numbers of the panels near panel i into `found`, ascending; return how many there are."""
     stack = np.empty(128, np.int64)
     stack[0] = 0
@@ -106,7 +107,7 @@ def _near_panels(i, centroids, radii, first, last, low, high, reach, factor, fou
 def _count_pairs(centroids, radii, is_window, first, last, low, high, reach, factor, counts, window_counts, begin, end):
     found = np.empty(len(radii), np.int64)
     for i in range(begin, end):
-        counts[i] = _near_panels(i, centroids, radii, first, last, low, high, reach, factor, found)
+        counts[i] = near_panels(i, centroids, radii, first, last, low, high, reach, factor, found)
         for k in range(counts[i]):
             if is_window[found[k]]:
                 window_counts[i] += 1
@@ -171,7 +172,7 @@ def _fill_rows(
     found = np.empty(len(areas), np.int64)
     thirds = np.full(3, 1.0 / 3.0)
     for i in range(begin, end):
-        count = _near_panels(i, centroids, radii, tree_first, tree_last, low, high, reach, fine, found)
+        count = near_panels(i, centroids, radii, tree_first, tree_last, low, high, reach, fine, found)
         slot = window_first[i]
         for k in range(count):
             j = found[k]
@@ -221,6 +222,41 @@ def fill_single_rows(centroids, normals, areas, spread, block, begin, end):
             block[i, j] = math.sqrt(areas[i] * areas[j]) / _FOUR_PI * value
 
 
+def near_pattern(panels: Panels, is_window: NDArray[np.bool_], *, fine: float = FINE) -> NearField:
+    """Which pairs of `panels` are close, with room for their corrections; `is_window` (m,) as `build_near_field`."""
+    m = len(panels)
+    counts, window_counts = np.zeros(m, np.int64), np.zeros(m, np.int64)
+    over_rows(
+        _count_pairs, m, _ROWS, panels.centroids, panels.radii, is_window, *_tree(panels), fine, counts, window_counts
+    )
+    first = np.concatenate([[0], np.cumsum(counts)])
+    window_first = np.concatenate([[0], np.cumsum(window_counts)])
+    return NearField(
+        first,
+        np.empty(first[-1], np.int32),
+        np.empty(first[-1], np.float32),
+        window_first,
+        np.empty(window_first[-1], np.int32),
+        np.empty(window_first[-1], np.float32),
+        np.zeros(m),
+    )
+
+
+def fill_near_rows(
+    near: NearField,
+    panels: Panels,
+    is_window: NDArray[np.bool_],
+    begin: int,
+    end: int,
+    *,
+    exact: float = EXACT,
+    fine: float = FINE,
+    close: float = CLOSE,
+) -> None:
+    """Work out the rows from `begin` to before `end` of a pattern."""
+    _fill_rows(*_fill_arguments(near, panels, is_window, exact, fine, close), begin, end)
+
+
 def build_near_field(
     panels: Panels,
     is_window: NDArray[np.bool_],
@@ -230,26 +266,21 @@ def build_near_field(
     close: float = CLOSE,
 ) -> NearField:
     """Corrections for all close pairs of `panels`; `is_window` (m,) names the columns that V needs."""
-    tree = (panels.tree.first, panels.tree.last, panels.tree.low, panels.tree.high, panels.tree.reach)
-    m = len(panels)
-    counts, window_counts = np.zeros(m, np.int64), np.zeros(m, np.int64)
-    over_rows(_count_pairs, m, _ROWS, panels.centroids, panels.radii, is_window, *tree, fine, counts, window_counts)
-    first = np.concatenate([[0], np.cumsum(counts)])
-    window_first = np.concatenate([[0], np.cumsum(window_counts)])
-    near = NearField(
-        first,
-        np.empty(first[-1], np.int32),
-        np.empty(first[-1], np.float32),
-        window_first,
-        np.empty(window_first[-1], np.int32),
-        np.empty(window_first[-1], np.float32),
-        np.zeros(m),
-    )
-    over_rows(
-        _fill_rows, m, _ROWS,
+    near = near_pattern(panels, is_window, fine=fine)
+    over_rows(_fill_rows, len(panels), _ROWS, *_fill_arguments(near, panels, is_window, exact, fine, close))
+    return near
+
+
+def _tree(panels: Panels) -> tuple[Any, ...]:
+    return panels.tree.first, panels.tree.last, panels.tree.low, panels.tree.high, panels.tree.reach
+
+
+def _fill_arguments(
+    near: NearField, panels: Panels, is_window: NDArray[np.bool_], exact: float, fine: float, close: float
+) -> tuple[Any, ...]:
+    return (
         panels.corners, panels.centroids, panels.normals, panels.areas, panels.radii, panels.spread,
         panels.three_points, panels.close_points,
-        panels.close_weights, panels.close_first, is_window, *tree, exact, fine, close,
+        panels.close_weights, panels.close_first, is_window, *_tree(panels), exact, fine, close,
         near.first, near.column, near.double, near.window_first, near.window_column, near.single, near.volume,
     )  # fmt: skip
-    return near

@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.sparse import csr_matrix
 
-from bemescape.bem.near import build_near_field
+from bemescape.bem.near import NearField, build_near_field
 from bemescape.bem.panels import Panels
 from bemescape.bem.sums import FarSums, far_sums
 
@@ -83,10 +83,13 @@ class EscapeOperator:
         return image
 
 
-def assemble(panels: Panels, window_of: Ints, resistance: Floats) -> EscapeOperator:
-    """Operator for panels in their Morton order; `window_of` and `resistance` (m,) in the same order."""
+def assemble(panels: Panels, window_of: Ints, resistance: Floats, near: NearField | None = None) -> EscapeOperator:
+    """Operator for panels in their Morton order; `window_of` and `resistance` (m,) in the same order.
+
+    `near` is the near field of these panels where it is known already.
+    """
     is_window = window_of >= 0
-    near = build_near_field(panels, is_window)
+    near = build_near_field(panels, is_window) if near is None else near
     m = len(panels)
     near_double = csr_matrix((near.double, near.column, near.first), shape=(m, m))
     number = np.cumsum(is_window) - 1

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import copy
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -151,6 +152,17 @@ class BoundarySolver:
         else:
             self._outer, self._triangle = np.zeros((len(panels), 0)), np.zeros((0, 0))
             self._cluster_of = np.full(len(panels), -1)
+
+    def with_resistance(self, resistance: Floats) -> BoundarySolver:
+        """The solver of the same panels with other permeabilities: ρ = D/κ of each panel's window (m,) in µm.
+
+        The operator and the outer space, which knows wall panels only, are shared.
+        """
+        other = copy.copy(self)
+        other.operator = replace(self.operator, resistance=resistance)
+        with one_blas_thread():
+            other._blocks = _WindowBlocks(other.operator)
+        return other
 
     def solve(
         self,

@@ -14,7 +14,7 @@ from bemescape.units import format_length, format_time
 if TYPE_CHECKING:
     from bemescape.results.summary import Summary
 
-__all__ = ["print_json", "summary_lines"]
+__all__ = ["columns", "percent", "print_json", "summary_lines"]
 
 _MOST_SLOW_REGIONS = 5
 
@@ -41,7 +41,7 @@ def summary_lines(summary: Summary) -> list[str]:
         f"{summary.name}: mean escape time {format_time(summary.mean_time_s)} ± {percent(summary.relative_error)}",
         f"  start uniform in the volume, D {summary.diffusion_um2_s:.4g} µm²/s, V {summary.volume_um3:.4g} µm³",
         "",
-        *_columns(
+        *columns(
             [
                 ("window", "area", "share of exits", "permeability"),
                 *(
@@ -58,7 +58,7 @@ def summary_lines(summary: Summary) -> list[str]:
         ),
     ]
     if summary.start:
-        lines += ["", *_columns(_start_rows(summary))]
+        lines += ["", *columns(_start_rows(summary))]
     if summary.slow_regions:
         rows = [("slow region", "mean time", "area", "centre", "nearest window")]
         rows += [
@@ -71,7 +71,7 @@ def summary_lines(summary: Summary) -> list[str]:
             )
             for number, region in enumerate(summary.slow_regions[:_MOST_SLOW_REGIONS], start=1)
         ]
-        lines += ["", *_columns(rows)]
+        lines += ["", *columns(rows)]
         if len(summary.slow_regions) > _MOST_SLOW_REGIONS:
             lines.append(f"  and {len(summary.slow_regions) - _MOST_SLOW_REGIONS} smaller ones")
     lines += [
@@ -128,7 +128,8 @@ def percent(part: float, digits: int = 2) -> str:
     return f"{100.0 * part:.{digits}g} %"
 
 
-def _columns(rows: Iterable[Sequence[str]]) -> list[str]:
+def columns(rows: Iterable[Sequence[str]]) -> list[str]:
+    """Rows of cells as lines of a table, columns aligned."""
     table = list(rows)
     widths = [max(len(row[column]) for row in table) for column in range(len(table[0]))]
     return [

@@ -14,6 +14,7 @@ from typing import Annotated
 import typer
 
 from bemescape.cli.check import check
+from bemescape.cli.explore import explore
 from bemescape.cli.progress import Stopped
 from bemescape.cli.solve import solve
 from bemescape.cli.view import view
@@ -38,6 +39,7 @@ app = typer.Typer(
 )
 app.command()(check)
 app.command()(solve)
+app.command()(explore)
 app.command()(view)
 app.command()(warm)
 

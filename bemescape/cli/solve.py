@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import os
 from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
@@ -55,9 +54,10 @@ def solve(
     budget, or the solve failed its own checks and nothing is saved; 2: wrong input; 130: stopped by Ctrl-C.
     """
     from bemescape.case import read_case
+    from bemescape.cli.folder import refuse_foreign_folder
     from bemescape.cli.progress import Stopped, reporting
     from bemescape.progress import ProgressEvent
-    from bemescape.results.store import add_pictures, save_result
+    from bemescape.results.store import add_pictures, is_result_folder, save_result
     from bemescape.units import fraction
 
     problem = read_case(case).with_accuracy(
@@ -67,7 +67,7 @@ def solve(
     count = None if walkers is None else _walkers(walkers)
     first = _whole_number(seed, "--seed", example=1)
     folder = Path(problem.name) if out is None else out
-    _refuse_foreign_folder(folder)
+    refuse_foreign_folder(folder, is_result_folder)
     saved = False
     try:
         with reporting(quiet=quiet) as progress:
@@ -128,33 +128,6 @@ def _with_opinions(
         except EscapeError as error:
             result = replace(result, notes=(*result.notes, f"no walkers: {error}"))
     return result
-
-
-def _refuse_foreign_folder(folder: Path) -> None:
-    """Before the work, not after it: results go into a new or empty folder, or replace earlier results."""
-    from bemescape.results.store import STAGING, is_result_folder
-
-    try:
-        if folder.exists() and not folder.is_dir():
-            raise SettingsError(f"{folder} is a file, not a folder; give another one with --out")
-        ground = next((path for path in (folder, *folder.parents) if path.exists()), Path())
-        if not (ground.is_dir() and os.access(ground, os.W_OK)):
-            raise SettingsError(f"no folder can be made in {ground}; give another one with --out")
-        if not folder.exists() or is_result_folder(folder):
-            return
-        others = [entry.name for entry in folder.iterdir() if not entry.name.startswith(STAGING)]
-    except (OSError, ValueError) as error:
-        if isinstance(error, SettingsError):
-            raise
-        reason = getattr(error, "strerror", None) or "no such name can exist"
-        raise SettingsError(
-            f"folder {str(folder)[:200]!r} cannot be used: {reason}; give another one with --out"
-        ) from error
-    if others:
-        raise SettingsError(
-            f"folder {folder} holds other files ({sorted(others)[0]!r}, for one) and no earlier result; "
-            "give a new or empty folder with --out"
-        )
 
 
 def _print_answer(result: EscapeResult, folder: Path, *, json: bool) -> None:

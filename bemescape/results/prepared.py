@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 from typing import TYPE_CHECKING
 
@@ -13,6 +13,8 @@ from numpy.typing import NDArray
 from bemescape.bem.averages import enclosed_volume
 from bemescape.bem.clusters import wall_clusters
 from bemescape.bem.moments import SourcePotential
+from bemescape.bem.near import NearField, build_near_field
+from bemescape.bem.near_reuse import EarlierNearField, near_field_from
 from bemescape.bem.operator import assemble
 from bemescape.bem.panels import Panels, make_panels
 from bemescape.bem.solve import BoundarySolution, BoundarySolver
@@ -22,14 +24,14 @@ from bemescape.windows.mesh_edits import face_pairs
 if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
 
-__all__ = ["Prepared", "iteration_teller", "prepare", "prepare_again"]
+__all__ = ["PreparedMesh", "iteration_teller", "prepare_mesh", "prepare_mesh_again"]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 
 @dataclass(frozen=True, eq=False)
-class Prepared:
+class PreparedMesh:
     """A solver and what belongs to it; everything is for D = 1 and in the order of `panels`.
 
     Attributes
@@ -41,12 +43,18 @@ class Prepared:
         Of the iteration.
     progress : callable
         Receives a ProgressEvent for every step.
+    near : NearField or None
+        Where it is wanted for another mesh later.
+    kept_rows : float
+        Part of its rows that were taken over from an earlier mesh.
     """
 
     panels: Panels
     solver: BoundarySolver
     tolerance: float
     progress: Progress
+    near: NearField | None = None
+    kept_rows: float = 0.0
 
     @cached_property
     def back(self) -> Ints:
@@ -71,6 +79,15 @@ class Prepared:
         self.progress(ProgressEvent("near field", None, "of the second moment"))
         return SourcePotential(self.solver.operator)
 
+    def with_resistance(self, resistance_of_window: Floats, progress: Progress) -> PreparedMesh:
+        """The same mesh with other D/κ of each window (k,): everything but the windows' own blocks is shared."""
+        resistance = np.where(self.window_of >= 0, resistance_of_window[self.window_of], 0.0)
+        other = replace(self, solver=self.solver.with_resistance(resistance), progress=progress, kept_rows=1.0)
+        for known in ("back", "volume", "source_potential"):
+            if known in self.__dict__:
+                other.__dict__[known] = self.__dict__[known]
+        return other
+
     def solve(self, right: Floats, stage: str, *, given: Floats | None = None) -> BoundarySolution:
         """Solve for one right-hand side; see `BoundarySolver.solve`."""
         return self.solver.solve(right, given=given, tell=iteration_teller(self.progress, self.tolerance, stage))
@@ -87,15 +104,17 @@ def iteration_teller(progress: Progress, tolerance: float, stage: str) -> Callab
     return tell
 
 
-def prepare(
+def prepare_mesh(
     vertices: Floats,
     faces: Ints,
     window_of: Ints,
     resistance_of_window: Floats,
     *,
     tolerance: float,
+    earlier: EarlierNearField | None = None,
+    keep: bool = False,
     progress: Progress = silent,
-) -> Prepared:
+) -> PreparedMesh:
     """Near field, preconditioner and outer space of a mesh.
 
     Parameters
@@ -108,23 +127,34 @@ def prepare(
         D/κ of each window in µm, 0 where it absorbs perfectly.
     tolerance : float
         Relative residual at which an iteration ends.
+    earlier : EarlierNearField, optional
+        Of a mesh that shares panels with this one: rows among unchanged panels are taken over.
+    keep : bool
+        Whether the near field is kept in `near` for a later mesh.
     progress : callable, optional
     """
     panels = make_panels(vertices[faces])
     sorted_window = window_of[panels.order]
     resistance = np.where(sorted_window >= 0, resistance_of_window[sorted_window], 0.0)
     progress(ProgressEvent("near field", None, f"{len(panels)} panels"))
-    operator = assemble(panels, sorted_window, resistance)
+    near, kept_rows = None, 0.0
+    if earlier is not None:
+        near, kept = near_field_from(panels, sorted_window >= 0, earlier)
+        kept_rows = float(kept.mean())
+    elif keep:
+        near = build_near_field(panels, sorted_window >= 0)
+    operator = assemble(panels, sorted_window, resistance, near)
     number = np.empty_like(panels.order)
     number[panels.order] = np.arange(len(panels))
     clusters = wall_clusters(panels.centroids, number[face_pairs(faces)], operator.is_window)
-    return Prepared(panels, BoundarySolver(operator, cluster_of=clusters, tolerance=tolerance), tolerance, progress)
+    solver = BoundarySolver(operator, cluster_of=clusters, tolerance=tolerance)
+    return PreparedMesh(panels, solver, tolerance, progress, near if keep else None, kept_rows)
 
 
-def prepare_again(result: EscapeResult, progress: Progress = silent) -> Prepared:
+def prepare_mesh_again(result: EscapeResult, progress: Progress = silent) -> PreparedMesh:
     """The solver of a result's own mesh, for questions that are asked afterwards."""
     kappa = np.array([window.permeability_um_s for window in result.windows])
-    return prepare(
+    return prepare_mesh(
         result.vertices,
         result.faces,
         result.panel_window,

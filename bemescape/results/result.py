@@ -15,7 +15,7 @@ from numpy.typing import ArrayLike, NDArray
 from bemescape.errors import SettingsError
 from bemescape.progress import Progress, silent
 from bemescape.surface.surface import triangle_areas_normals
-from bemescape.units import format_time, quantity
+from bemescape.units import Quantity, format_time, quantity
 
 if TYPE_CHECKING:
     import pint
@@ -215,6 +215,20 @@ class EscapeResult:
         variance = placed.second_moments(self.spread) - placed.times() ** 2
         return np.sqrt(np.where(variance < 0.0, 0.0, variance))
 
+    def with_diffusion(self, diffusion: Quantity) -> EscapeResult:
+        """The result for another D, without solving: with absorbing windows every time is in proportion to 1/D.
+
+        Second opinions are left out, as they were given on the other numbers.
+
+        Raises
+        ------
+        SettingsError
+            D is no such quantity, or a window is partly open: then only D/κ together scale.
+        """
+        from bemescape.results.scaled import with_diffusion
+
+        return with_diffusion(self, diffusion)
+
     def with_ways_out(self, windows: Sequence[str] | None = None, *, progress: Progress = silent) -> EscapeResult:
         """A copy that holds `ways_out` for the named windows, or for all of up to twelve; solved on the same panels.
 
@@ -223,11 +237,11 @@ class EscapeResult:
         SettingsError
             A window is unknown, or none is named and there are more than twelve.
         """
-        from bemescape.results.prepared import prepare_again
+        from bemescape.results.prepared import prepare_mesh_again
         from bemescape.results.ways_out import chosen_windows, find_ways_out
 
         chosen = chosen_windows(self.windows, windows)
-        return replace(self, ways_out=find_ways_out(prepare_again(self, progress), self, chosen))
+        return replace(self, ways_out=find_ways_out(prepare_mesh_again(self, progress), self, chosen))
 
     @cached_property
     def _known_ways_out(self) -> WaysOut:

@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from bemescape.bem.averages import volume_integral
 from bemescape.bem.moments import volume_integral_of_chain
-from bemescape.results.prepared import Prepared
+from bemescape.results.prepared import PreparedMesh
 from bemescape.units import format_time
 
 __all__ = ["Spread", "exponential_statement", "find_spread"]
@@ -76,7 +76,7 @@ class Spread:
 
 
 def find_spread(
-    prepared: Prepared,
+    prepared: PreparedMesh,
     u: Floats,
     q: Floats,
     *,
@@ -88,7 +88,7 @@ def find_spread(
 
     Parameters
     ----------
-    prepared : Prepared
+    prepared : PreparedMesh
     u, q : (m,) float64
         Mean time and its slope for D = 1, in the order of the panels.
     diffusion_um2_s : float

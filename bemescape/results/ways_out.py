@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from bemescape.bem.averages import volume_integral
 from bemescape.bem.moments import volume_integral_of_chain
 from bemescape.errors import SettingsError
-from bemescape.results.prepared import Prepared
+from bemescape.results.prepared import PreparedMesh
 from bemescape.results.result import WindowResult
 
 if TYPE_CHECKING:
@@ -111,7 +111,7 @@ def chosen_windows(windows: Sequence[WindowResult], names: Sequence[str] | None)
 
 
 def find_ways_out(
-    prepared: Prepared,
+    prepared: PreparedMesh,
     result: EscapeResult,
     windows: Sequence[int],
 ) -> WaysOut:

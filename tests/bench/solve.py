@@ -25,7 +25,7 @@ import exact
 import shapes
 from bemescape import Window, read_case, solve_escape
 from bemescape.bem.averages import volume_integral
-from bemescape.results.prepared import prepare
+from bemescape.results.prepared import prepare_mesh
 from bemescape.windows.grade import Fineness, GradedMesh, graded, place_windows
 from tests.bench.child import in_child
 
@@ -68,7 +68,9 @@ def ours(shape: str, panels: int) -> dict[str, Any]:
     solve_escape(warm, [_cap(warm)], 1.0, target=0.5)
     mesh = _mesh_of(shape, panels)
     started = perf_counter()
-    prepared = prepare(mesh.vertices, mesh.faces, mesh.window_of, np.zeros(mesh.window_of.max() + 1), tolerance=1e-6)
+    prepared = prepare_mesh(
+        mesh.vertices, mesh.faces, mesh.window_of, np.zeros(mesh.window_of.max() + 1), tolerance=1e-6
+    )
     solution = prepared.solve(prepared.solver.operator.volume_potential, "iterating")
     mean = volume_integral(prepared.panels, solution.u, solution.q, 1.0) / prepared.volume
     return {
