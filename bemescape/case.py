@@ -47,7 +47,22 @@ if TYPE_CHECKING:
     from bemescape.surface.surface import Surface
     from bemescape.windows.window import Window
 
-__all__ = ["Case", "CaseDocument", "case_schema", "parse_case", "read_case"]
+__all__ = [
+    "WINDOW_KINDS",
+    "AccuracySection",
+    "Case",
+    "CaseDocument",
+    "FileName",
+    "LengthUnit",
+    "Name",
+    "Section",
+    "WindowSection",
+    "case_schema",
+    "parse_case",
+    "read_case",
+    "read_toml",
+    "validation_sentence",
+]
 
 #: A case file is a page of text; what is larger is another kind of file, or an attack on the reader.
 LARGEST_CASE_BYTES = 256 * 1024
@@ -92,9 +107,9 @@ def _quantity_schema(example: str) -> WithJsonSchema:
 
 _Number = Annotated[float, Field(strict=True, allow_inf_nan=False)]
 _Position = Annotated[tuple[_Number, _Number, _Number], Field(examples=[[100.0, 0.0, -620.0]])]
-_Name = Annotated[str, Field(strict=True, examples=["neck"]), AfterValidator(_checked_name)]
-_FileName = Annotated[str, Field(strict=True, examples=["bouton.ply"]), AfterValidator(_checked_file)]
-_Unit = Annotated[
+Name = Annotated[str, Field(strict=True, examples=["neck"]), AfterValidator(_checked_name)]
+FileName = Annotated[str, Field(strict=True, examples=["bouton.ply"]), AfterValidator(_checked_file)]
+LengthUnit = Annotated[
     str | tuple[str, ...],
     BeforeValidator(_checked_unit),
     WithJsonSchema(
@@ -120,47 +135,47 @@ _Target = Annotated[
 ]
 
 
-class _Section(BaseModel):
+class Section(BaseModel):
     model_config = ConfigDict(extra="forbid", frozen=True)
 
 
-class SurfaceSection(_Section):
+class SurfaceSection(Section):
     """The mesh file; its path is relative to the case file."""
 
-    file: _FileName
-    unit: _Unit = Field(examples=["nm"])
+    file: FileName
+    unit: LengthUnit = Field(examples=["nm"])
     heal: Literal["none", "auto", "rebuild"] = Field(default="auto", examples=["auto"])
 
 
-class MotionSection(_Section):
+class MotionSection(Section):
     """How the molecule moves."""
 
     diffusion_um2_s: _Diffusion = Field(alias="diffusion", examples=["20 um^2/s"])
 
 
-class DiscSection(_Section):
+class DiscSection(Section):
     """The wall within a straight-line distance of a point."""
 
     centre: _Position = Field(description="in units of the mesh file", examples=[[100.0, 0.0, -620.0]])
     radius_um: _Radius = Field(alias="radius", examples=["60 nm"])
 
 
-class LabelsSection(_Section):
+class LabelsSection(Section):
     """The faces with one value in an array of the mesh file."""
 
     array: str = Field(strict=True, min_length=1, examples=["label"])
     value: _Number = Field(examples=[1])
 
 
-class NearSection(_Section):
+class NearSection(Section):
     """The wall closer than a distance to another mesh in the same frame."""
 
-    file: _FileName = Field(examples=["psd.ply"])
-    unit: _Unit = Field(examples=["nm"])
+    file: FileName = Field(examples=["psd.ply"])
+    unit: LengthUnit = Field(examples=["nm"])
     distance_um: _Distance = Field(alias="distance", examples=["20 nm"])
 
 
-class LidSection(_Section):
+class LidSection(Section):
     """A flat lid where a plane cuts the surface; the side that the normal points to is cut off."""
 
     point: _Position = Field(description="in units of the mesh file", examples=[[0.0, 0.0, -600.0]])
@@ -176,12 +191,12 @@ class LidSection(_Section):
         return self
 
 
-class PointsSection(_Section):
+class PointsSection(Section):
     """Pores at the positions of a CSV file, moved to the wall."""
 
-    file: _FileName = Field(examples=["pores.csv"])
+    file: FileName = Field(examples=["pores.csv"])
     radius_um: _Radius = Field(alias="radius", examples=["25 nm"])
-    unit: _Unit | None = Field(
+    unit: LengthUnit | None = Field(
         default=None, description="of the positions; that of the mesh file by default", examples=["nm"]
     )
     farthest_um: _Distance | None = Field(
@@ -189,7 +204,7 @@ class PointsSection(_Section):
     )
 
 
-class ScatterSection(_Section):
+class ScatterSection(Section):
     """Pores at random places, spaced."""
 
     count: int | None = Field(default=None, strict=True, ge=1, le=10_000_000, examples=[40])
@@ -208,10 +223,10 @@ class ScatterSection(_Section):
         return self
 
 
-class WindowSection(_Section):
+class WindowSection(Section):
     """One opening: a name, one kind, and a permeability where it is not perfectly absorbing."""
 
-    name: _Name
+    name: Name
     disc: DiscSection | None = None
     labels: LabelsSection | None = None
     near: NearSection | None = None
@@ -231,28 +246,30 @@ class WindowSection(_Section):
         return self
 
 
+#: Sections that a file may hold several of, and what one of them is.
+LISTED_SECTIONS = {"window": "window", "shapes": "set of shapes"}
 #: Keys of a `[[window]]` that say which part of the wall it takes.
 WINDOW_KINDS = ("disc", "labels", "near", "lid", "points", "scatter")
 
 
-class AccuracySection(_Section):
+class AccuracySection(Section):
     """How good the answer must be, and how much it may cost."""
 
     target: _Target = Field(default=0.005, examples=["0.5 %"])
     max_panels: int | None = Field(default=None, strict=True, ge=100, le=10_000_000, examples=[60000])
 
 
-class BallSection(_Section):
+class BallSection(Section):
     """A ball inside the volume."""
 
     centre: _Position = Field(description="in units of the mesh file", examples=[[100.0, 0.0, 0.0]])
     radius_um: _Radius = Field(alias="radius", examples=["60 nm"])
 
 
-class StartRegionSection(_Section):
+class StartRegionSection(Section):
     """A part of the wall, given like a window, or a ball inside: molecules start uniformly over it."""
 
-    name: _Name
+    name: Name
     disc: DiscSection | None = None
     labels: LabelsSection | None = None
     ball: BallSection | None = None
@@ -268,12 +285,12 @@ class StartRegionSection(_Section):
         return self
 
 
-class StartSection(_Section):
+class StartSection(Section):
     """Places from which times and ways out are wanted beside the mean."""
 
-    points: dict[_Name, _Position] = Field(default_factory=dict, description="in units of the mesh file")
+    points: dict[Name, _Position] = Field(default_factory=dict, description="in units of the mesh file")
     region: tuple[StartRegionSection, ...] = ()
-    ways_out: tuple[_Name, ...] | None = Field(
+    ways_out: tuple[Name, ...] | None = Field(
         default=None,
         description="windows whose splitting is wanted; by default all, if there are 2 to 12",
         examples=[["neck"]],
@@ -288,7 +305,7 @@ class StartSection(_Section):
         return self
 
 
-class ExploreSection(_Section):
+class ExploreSection(Section):
     """Candidate sites for equal windows, and what is asked about their arrangements."""
 
     points: PointsSection | None = Field(default=None, description="sites at the positions of a CSV file")
@@ -313,7 +330,7 @@ class ExploreSection(_Section):
         return self
 
 
-class CaseDocument(_Section):
+class CaseDocument(Section):
     """The content of a case file."""
 
     surface: SurfaceSection
@@ -376,7 +393,7 @@ class Case:
         try:
             accuracy = AccuracySection.model_validate(before | changes)
         except ValidationError as error:
-            raise SettingsError(_sentence(error, {"accuracy": changes}, root=("accuracy",))) from error
+            raise SettingsError(validation_sentence(error, {"accuracy": changes}, root=("accuracy",))) from error
         return replace(self, document=self.document.model_copy(update={"accuracy": accuracy}))
 
     def with_arrangements(self, count: int) -> Case:
@@ -394,7 +411,7 @@ class Case:
             )
         except ValidationError as error:
             place = {"explore": {"arrangements": count}}
-            raise SettingsError(_sentence(error, place, root=("explore",))) from error
+            raise SettingsError(validation_sentence(error, place, root=("explore",))) from error
         changed = section.model_copy(update={"arrangements": checked.arrangements})
         return replace(self, document=self.document.model_copy(update={"explore": changed}))
 
@@ -613,21 +630,32 @@ def read_case(path: str | Path) -> Case:
         There is no such file, it is not TOML, or a line of it is wrong; the message names the place.
     """
     path = Path(path)
+    return parse_case(read_toml(path, "case"), folder=path.parent, name=path.stem, source=str(path))
+
+
+def read_toml(path: Path, kind: str) -> dict[str, Any]:
+    """The tables of a TOML file that a person wrote; `kind` says what it should be: "case", "study".
+
+    Raises
+    ------
+    SettingsError
+        There is no such file, it is too large, or it is not TOML.
+    """
     try:
         if path.is_dir():
-            raise SettingsError(f"{path} is a folder; give the case file in it")
+            raise SettingsError(f"{path} is a folder; give the {kind} file in it")
         if not path.is_file():
-            raise SettingsError(f"there is no case file {_shown(path)}; check the path")
+            raise SettingsError(f"there is no {kind} file {_shown(path)}; check the path")
         with path.open("rb") as stream:
             content = stream.read(LARGEST_CASE_BYTES + 1)
     except (OSError, ValueError) as error:
         if isinstance(error, SettingsError):
             raise
         reason = getattr(error, "strerror", None) or str(error)
-        raise SettingsError(f"case file {_shown(path)} cannot be read: {reason}") from error
+        raise SettingsError(f"{kind} file {_shown(path)} cannot be read: {reason}") from error
     if len(content) > LARGEST_CASE_BYTES:
         raise SettingsError(
-            f"{path} is larger than {LARGEST_CASE_BYTES // 1024} kB, so it is no case file; "
+            f"{path} is larger than {LARGEST_CASE_BYTES // 1024} kB, so it is no {kind} file; "
             "give the TOML file that names the mesh"
         )
     try:
@@ -643,15 +671,14 @@ def read_case(path: str | Path) -> Case:
                 "write one entry per line"
             )
     try:
-        table = tomllib.loads(text)
+        return tomllib.loads(text)
     except RecursionError as error:
-        raise SettingsError(f"{path}: the values are nested too deeply to be a case") from error
+        raise SettingsError(f"{path}: the values are nested too deeply to be a {kind}") from error
     except tomllib.TOMLDecodeError as error:
         raise SettingsError(f"{path} is not valid TOML: {' '.join(str(error).split())[:200]}") from error
     except ValueError as error:
         # Python itself refuses whole numbers of thousands of digits.
         raise SettingsError(f"{path} holds a number with too many digits to read; shorten it") from error
-    return parse_case(table, folder=path.parent, name=path.stem, source=str(path))
 
 
 def _shown(path: Path) -> str:
@@ -681,7 +708,7 @@ def parse_case(table: Mapping[str, Any], *, folder: str | Path, name: str, sourc
     try:
         document = CaseDocument.model_validate(dict(table))
     except ValidationError as error:
-        raise SettingsError(f"{source or name}: {_sentence(error, table)}") from error
+        raise SettingsError(f"{source or name}: {validation_sentence(error, table)}") from error
     except RecursionError as error:
         raise SettingsError(f"{source or name}: the values are nested too deeply to be a case") from error
     return Case(name, Path(folder), document)
@@ -691,7 +718,15 @@ def parse_case(table: Mapping[str, Any], *, folder: str | Path, name: str, sourc
 # since a misspelt key is also a missing one.
 
 
-def _sentence(error: ValidationError, table: Mapping[str, Any], root: tuple[str, ...] = ()) -> str:
+def validation_sentence(
+    error: ValidationError,
+    table: Mapping[str, Any],
+    *,
+    root: tuple[str, ...] = (),
+    document: type[BaseModel] | None = None,
+) -> str:
+    """The first of pydantic's errors on `table` as a sentence with its place, checked against `document`."""
+    document = document or CaseDocument
     items = error.errors(include_url=False)
     first = min(items, key=lambda item: item["type"] != "extra_forbidden")
     location = root + first["loc"]
@@ -700,21 +735,22 @@ def _sentence(error: ValidationError, table: Mapping[str, Any], root: tuple[str,
     if first["type"] in {"missing", "too_long"} and location and isinstance(location[-1], int):
         location = location[:-1]
     more = f" ({len(items) - 1} more error{'s' * (len(items) > 2)})" if len(items) > 1 else ""
-    return f"{_place(location, table)}{_complaint(first, location)}{more}"
+    return f"{_place(location, table)}{_complaint(first, location, document)}{more}"
 
 
-def _complaint(item: Any, location: tuple[int | str, ...]) -> str:
+def _complaint(item: Any, location: tuple[int | str, ...], document: type[BaseModel]) -> str:
     kind, value = item["type"], item["input"]
-    example = _example(location)
+    example = _example(location, document)
     if kind == "extra_forbidden":
-        return _unknown(location)
+        return _unknown(location, document)
     if kind == "value_error":
         key = next((str(part) for part in reversed(location) if isinstance(part, str)), "")
         message = str(item["ctx"]["error"]).removeprefix(f"{key} ")
         joint = " " if message.startswith(("is ", "has ", "'")) else ": "
         return f"{joint}{message}"
-    if kind in {"tuple_type", "list_type"} and location == ("window",):
-        return f" is {_shortened(value)}; each window is a table of its own, headed by [[window]]"
+    if kind in {"tuple_type", "list_type"} and len(location) == 1 and location[0] in LISTED_SECTIONS:
+        head = str(location[0])
+        return f" is {_shortened(value)}; each {LISTED_SECTIONS[head]} is a table of its own, headed by [[{head}]]"
     if kind in {"tuple_type", "too_long"} or (kind == "missing" and isinstance(value, list | tuple)):
         return f" is {_shortened(value)}; it should be a list of three numbers, like [100.0, 0.0, -620.0]"
     if kind == "missing":
@@ -728,20 +764,20 @@ def _complaint(item: Any, location: tuple[int | str, ...]) -> str:
 def _place(location: tuple[int | str, ...], table: Mapping[str, Any]) -> str:
     """Where in the file: `[motion] diffusion`, `[[window]] 'neck' disc.radius`."""
     if not location:
-        return "the case"
+        return "the file"
     head, rest = str(location[0]), location[1:]
-    if head == "window":
+    if head in LISTED_SECTIONS:
         if not rest:
-            return "[[window]]"
+            return f"[[{head}]]"
         number, *keys = rest
         entry: Any = None
-        windows = table.get("window")
-        if isinstance(windows, list | tuple) and isinstance(number, int) and number < len(windows):
-            entry = windows[number]
+        entries = table.get(head)
+        if isinstance(entries, list | tuple) and isinstance(number, int) and number < len(entries):
+            entry = entries[number]
         name = entry.get("name") if isinstance(entry, Mapping) else None
         known = isinstance(name, str) and 0 < len(name) <= LONGEST_NAME and name.isprintable()
         label = repr(name) if known else f"number {number + 1}" if isinstance(number, int) else str(number)
-        return " ".join(["[[window]]", label, _dotted(keys)]).rstrip()
+        return " ".join([f"[[{head}]]", label, _dotted(keys)]).rstrip()
     if not rest:
         # A misplaced plain key at the top reads as what it is, a table's name in brackets.
         value = table.get(head)
@@ -756,12 +792,12 @@ def _dotted(keys: Sequence[int | str]) -> str:
     return text.removeprefix(".")
 
 
-def _unknown(location: tuple[int | str, ...]) -> str:
-    key, known = str(location[-1]), list(_known_keys(location[:-1]))
+def _unknown(location: tuple[int | str, ...], document: type[BaseModel]) -> str:
+    key, known = str(location[-1]), list(_known_keys(location[:-1], document))
     near = difflib.get_close_matches(key[:LONGEST_NAME], known, n=1, cutoff=0.6)
     if near:
         return f" is not known; did you mean {near[0]!r}?"
-    homes = [name for name in _fields_of(CaseDocument) if key in _known_keys((name,))]
+    homes = [name for name in _fields_of(document) if key in _known_keys((name,), document)]
     if homes:
         return f" is not known here; it belongs in {' or '.join(_brackets(name) for name in homes)}"
     return f" is not known; known here: {', '.join(known)}"
@@ -771,10 +807,10 @@ def _fields_of(model: type[BaseModel]) -> dict[str, Any]:
     return {field.alias or name: field for name, field in model.model_fields.items()}
 
 
-def _field_at(location: Sequence[int | str]) -> tuple[Any, type[BaseModel] | None]:
-    """The field at a place of the case file and the model of its content, as far as there are any."""
+def _field_at(location: Sequence[int | str], document: type[BaseModel]) -> tuple[Any, type[BaseModel] | None]:
+    """The field at a place of the file and the model of its content, as far as there are any."""
     field: Any = None
-    model: type[BaseModel] | None = CaseDocument
+    model: type[BaseModel] | None = document
     for key in location:
         if isinstance(key, int):
             continue
@@ -789,13 +825,13 @@ def _model_in(annotation: Any) -> type[BaseModel] | None:
     return next((model for part in get_args(annotation) if (model := _model_in(part)) is not None), None)
 
 
-def _known_keys(location: Sequence[int | str]) -> Sequence[str]:
-    _, model = _field_at(location)
+def _known_keys(location: Sequence[int | str], document: type[BaseModel]) -> Sequence[str]:
+    _, model = _field_at(location, document)
     return list(_fields_of(model)) if model is not None else []
 
 
-def _example(location: tuple[int | str, ...]) -> str:
-    field, model = _field_at(location)
+def _example(location: tuple[int | str, ...], document: type[BaseModel]) -> str:
+    field, model = _field_at(location, document)
     if field is None:
         return ""
     key = str(next(part for part in reversed(location) if isinstance(part, str)))
@@ -808,7 +844,7 @@ def _example(location: tuple[int | str, ...]) -> str:
 
 
 def _brackets(key: str) -> str:
-    return "[[window]]" if key == "window" else f"[{key}]"
+    return f"[[{key}]]" if key in LISTED_SECTIONS else f"[{key}]"
 
 
 def _toml(value: Any) -> str:

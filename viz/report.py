@@ -6,15 +6,15 @@ import base64
 import json
 import math
 import tempfile
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable
 from html import escape
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from bemescape.errors import SettingsError
-from bemescape.results.summary import CAUTION
 from bemescape.units import format_length, format_time, time_scale
 
+from .html import html_caution, html_figure, html_list, html_table, percent, with_error
 from .page import PAGE
 from .pictures import save_pictures
 
@@ -22,9 +22,7 @@ if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
     from bemescape.results.summary import Summary
 
-__all__ = ["LOCAL_RULES", "write_report"]
-
-LOCAL_RULES = "Follow local rules and licensed practice."
+__all__ = ["write_report"]
 
 # What each picture shows, in the order of the report; wide ones take both columns.
 _CAPTIONS = {
@@ -50,7 +48,6 @@ _CAPTIONS = {
         True,
     ),
 }
-_MOST_ROWS = 60
 
 
 def write_report(result: EscapeResult, path: str | Path, *, pictures: Iterable[str | Path] | None = None) -> Path:
@@ -108,59 +105,6 @@ def _body(result: EscapeResult, images: dict[str, str]) -> str:
     return "\n".join(section for section in sections if section)
 
 
-# -- pieces of HTML -------------------------------------------------------------------------------------
-
-
-def _table(head: Sequence[str], rows: Sequence[Sequence[str]], *, text_columns: Iterable[int] = ()) -> str:
-    """A table; cells are plain text and are escaped here. The first column names the row."""
-    texts = set(text_columns)
-
-    def cells(tag: str, row: Sequence[str]) -> str:
-        kinds = (' class="text"' if number in texts else "" for number in range(len(row)))
-        return "".join(f"<{tag}{kind}>{escape(cell)}</{tag}>" for kind, cell in zip(kinds, row, strict=True))
-
-    lines = [f"<tr>{cells('td', row)}</tr>" for row in rows[:_MOST_ROWS]]
-    more = (
-        f'<p class="soft">and {len(rows) - _MOST_ROWS} more; all are in summary.json.</p>'
-        if len(rows) > _MOST_ROWS
-        else ""
-    )
-    return (
-        f'<div class="table"><table><thead><tr>{cells("th", head)}</tr></thead>'
-        f"<tbody>{''.join(lines)}</tbody></table></div>{more}"
-    )
-
-
-def _list(lines: Iterable[str]) -> str:
-    return "<ul>" + "".join(f"<li>{escape(line)}</li>" for line in lines) + "</ul>"
-
-
-def _figure(source: str, caption: str, *, wide: bool) -> str:
-    kind = ' class="wide"' if wide else ""
-    return (
-        f'<figure{kind}><img src="{source}" alt="{escape(caption, quote=True)}">'
-        f"<figcaption>{escape(caption)}</figcaption></figure>"
-    )
-
-
-def _percent(part: float, digits: int = 3) -> str:
-    return f"{100.0 * part:.{digits}g} %"
-
-
-def _with_error(mean_s: float, relative: float) -> str:
-    """Mean and its error in one unit, to two digits of the error.
-
-    >>> _with_error(0.01234, 0.0031), _with_error(250.0, 0.05), _with_error(0.002, 0.0)
-    ('12.340 ± 0.038 ms', '250 ± 12 s', '2 ± 0 ms')
-    """
-    factor, unit = time_scale(mean_s)
-    mean, error = mean_s / factor, abs(relative * mean_s / factor)
-    if not 1e-6 * mean < error < 10.0 * mean:
-        return f"{mean:.6g} ± {error:.2g} {unit}"
-    digits = max(0, 1 - math.floor(math.log10(error)))
-    return f"{mean:.{digits}f} ± {error:.{digits}f} {unit}"
-
-
 def _error_words(mean_s: float) -> str:
     _, unit = time_scale(mean_s)
     return {"s": "seconds", "ms": "milliseconds", "µs": "microseconds", "ns": "nanoseconds"}[unit]
@@ -173,13 +117,13 @@ def _head(result: EscapeResult, summary: Summary) -> str:
     count = len(summary.windows)
     through = f"its window {summary.windows[0].name}" if count == 1 else f"its {count} windows"
     target = (
-        f"The target of {_percent(result.target)} was met."
+        f"The target of {percent(result.target)} was met."
         if summary.target_met
-        else f"The target of {_percent(result.target)} was NOT met: the refinement ended at its panel budget."
+        else f"The target of {percent(result.target)} was NOT met: the refinement ended at its panel budget."
     )
     facts = [
-        ("Mean escape time", _with_error(summary.mean_time_s, summary.relative_error)),
-        ("Relative error (estimated)", _percent(summary.relative_error, 2)),
+        ("Mean escape time", with_error(summary.mean_time_s, summary.relative_error)),
+        ("Relative error (estimated)", percent(summary.relative_error, 2)),
         ("Slowest place on the wall", format_time(summary.slowest_time_s)),
         ("Diffusion coefficient D", f"{summary.diffusion_um2_s:.4g} µm²/s"),
         ("Volume", f"{summary.volume_um3:.4g} µm³"),
@@ -192,24 +136,17 @@ def _head(result: EscapeResult, summary: Summary) -> str:
         f"<h1>{escape(summary.name)}</h1>"
         '<p class="lead">A molecule that starts anywhere inside leaves through '
         f"{escape(through)} after "
-        f"<strong>{escape(_with_error(summary.mean_time_s, summary.relative_error))}</strong> "
+        f"<strong>{escape(with_error(summary.mean_time_s, summary.relative_error))}</strong> "
         f"({_error_words(summary.mean_time_s)}) on average.</p>"
         f'<p class="soft">Start uniform in the volume. The ± is the estimated numerical error on this mesh; '
         f"it does not cover the segmentation or D. {escape(target)}</p>"
-        f'<dl class="facts">{cards}</dl>{_caution()}'
-    )
-
-
-def _caution() -> str:
-    return (
-        f'<div class="caution" role="note"><p><strong>Caution.</strong> {escape(CAUTION)}</p>'
-        f"<p>{escape(LOCAL_RULES)}</p></div>"
+        f'<dl class="facts">{cards}</dl>{html_caution()}'
     )
 
 
 def _pictures(images: dict[str, str]) -> str:
     figures = [
-        _figure(images[name], caption, wide=wide) for name, (caption, wide) in _CAPTIONS.items() if name in images
+        html_figure(images[name], caption, wide=wide) for name, (caption, wide) in _CAPTIONS.items() if name in images
     ]
     return f'<h2>Pictures</h2><div class="pictures">{"".join(figures)}</div>' if figures else ""
 
@@ -219,8 +156,8 @@ def _windows(summary: Summary) -> str:
         (
             window.name,
             f"{window.area_um2:.4g}",
-            _percent(window.area_um2 / summary.area_um2),
-            _percent(window.share, 4) + ("" if window.share_error is None else f" ± {_percent(window.share_error, 2)}"),
+            percent(window.area_um2 / summary.area_um2),
+            percent(window.share, 4) + ("" if window.share_error is None else f" ± {percent(window.share_error, 2)}"),
             "perfectly absorbing" if window.permeability_um_s is None else f"{window.permeability_um_s:.4g} µm/s",
         )
         for window in summary.windows
@@ -228,7 +165,7 @@ def _windows(summary: Summary) -> str:
     total = sum(window.share for window in summary.windows)
     return (
         "<h2>Windows</h2>"
-        + _table(
+        + html_table(
             ("window", "area (µm²)", "part of the surface", "share of exits", "permeability"),
             rows,
         )
@@ -256,9 +193,9 @@ def _slow_regions(result: EscapeResult, summary: Summary) -> str:
     slow = result.slow_regions()
     return (
         "<h2>Slow regions</h2>"
-        f"<p>Connected parts of the slowest {_percent(slow.wall_fraction)} of the wall's area: from there "
+        f"<p>Connected parts of the slowest {percent(slow.wall_fraction)} of the wall's area: from there "
         f"the mean escape time is above {escape(format_time(slow.level_s))}.</p>"
-        + _table(
+        + html_table(
             ("region", "area (µm²)", "mean time", "centre x, y, z (µm)", "path to window", "nearest window"),
             rows,
             text_columns=(5,),
@@ -272,7 +209,7 @@ def _spread(summary: Summary, images: dict[str, str]) -> str:
     if spread is None or summary.escape_time_sd_s is None:
         return ""
     rows = [
-        ("standard deviation", _with_error(summary.escape_time_sd_s, spread.sd_relative_error)),
+        ("standard deviation", with_error(summary.escape_time_sd_s, spread.sd_relative_error)),
         ("standard deviation / mean", f"{spread.cv:.4f}"),
         ("mean remaining time of those found inside", format_time(spread.tail_time_s)),
     ]
@@ -282,10 +219,10 @@ def _spread(summary: Summary, images: dict[str, str]) -> str:
             "The part still inside as time goes on. Solid: one rate 1/τ, with its proven bound as a band. Dashed: the "
             "exponential tail that has the computed mean and second moment; it does not show the early exits."
         )
-        chart = f'<div class="pictures">{_figure(images["survival.png"], caption, wide=False)}</div>'
+        chart = f'<div class="pictures">{html_figure(images["survival.png"], caption, wide=False)}</div>'
     return (
         "<h2>Spread of the escape time</h2>"
-        + _table(("start uniform in the volume", ""), rows)
+        + html_table(("start uniform in the volume", ""), rows)
         + f"<p>{escape(spread.statement)}</p>"
         + chart
         + '<p class="soft">The bound follows from the first two moments alone (Brown 1983, Ann. Probab. 11:419).</p>'
@@ -310,7 +247,7 @@ def _start_points(summary: Summary) -> str:
         )
     return (
         "<h2>Named starts</h2>"
-        + _table(
+        + html_table(
             ("start", "kind", "mean escape time from there", "ratio to the volume mean", "standard deviation"),
             rows,
             text_columns=(1,),
@@ -326,12 +263,12 @@ def _ways_out(summary: Summary) -> str:
         times = details.conditional_time_s or {}
         for window, part in (details.splitting or {}).items():
             time = times.get(window)
-            rows.append((name, window, _percent(part, 4), "nobody" if time is None else format_time(time)))
+            rows.append((name, window, percent(part, 4), "nobody" if time is None else format_time(time)))
     if not rows:
         return ""
     return (
         "<h3>Which way out</h3>"
-        + _table(("start", "window", "leave through it", "mean time of those who do"), rows, text_columns=(1,))
+        + html_table(("start", "window", "leave through it", "mean time of those who do"), rows, text_columns=(1,))
         + '<p class="soft">The volume averages of these probabilities must be the shares above, which are found from '
         "the outflow; in this result they differ by at most "
         f"{0.0 if summary.checks.splitting_share is None else summary.checks.splitting_share:.1e}.</p>"
@@ -347,7 +284,7 @@ def _rule_of_thumb(summary: Summary) -> str:
     ]
     return (
         "<h2>Beside the rule of thumb</h2>"
-        + _table(("", "mean escape time", "ratio"), rows)
+        + html_table(("", "mean escape time", "ratio"), rows)
         + "<p>The rule is for small, round, perfectly absorbing windows, far apart on a smooth roundish "
         "wall; each window counts as a disc of its area. A neck, a constriction, a permeable or crowded "
         "window makes the computed time longer; a window that is a large part of the wall, or an elongated "
@@ -385,13 +322,13 @@ def _accuracy(result: EscapeResult, summary: Summary, images: dict[str, str]) ->
     chart = ""
     if "convergence.png" in images and len(result.levels) > 1:
         caption = "Mean escape time of each resolution, and the stated value with its error."
-        chart = f'<div class="pictures">{_figure(images["convergence.png"], caption, wide=False)}</div>'
+        chart = f'<div class="pictures">{html_figure(images["convergence.png"], caption, wide=False)}</div>'
     return (
         "<h2>How accurate</h2>"
-        + _table(("resolution", "panels", "mean escape time", "change", "iterations", "seconds"), rows)
+        + html_table(("resolution", "panels", "mean escape time", "change", "iterations", "seconds"), rows)
         + chart
         + "<h3>Checks</h3>"
-        + _list(checks)
+        + html_list(checks)
         + f'<p class="soft">The run took {summary.wall_s:.2f} s.</p>'
     )
 
@@ -399,13 +336,13 @@ def _accuracy(result: EscapeResult, summary: Summary, images: dict[str, str]) ->
 def _mesh(result: EscapeResult, summary: Summary) -> str:
     parts = ["<h2>The surface</h2>"]
     if result.health is not None:
-        parts += ["<h3>State as it was read</h3>", _list(result.health.lines())]
+        parts += ["<h3>State as it was read</h3>", html_list(result.health.lines())]
     if result.healing is not None:
-        parts += ["<h3>Changes made by healing</h3>", _list(result.healing.lines())]
+        parts += ["<h3>Changes made by healing</h3>", html_list(result.healing.lines())]
     else:
         parts.append("<p>Healing changed nothing.</p>")
     if summary.notes:
-        parts += ["<h3>Notes</h3>", _list(summary.notes)]
+        parts += ["<h3>Notes</h3>", html_list(summary.notes)]
     return "".join(parts)
 
 

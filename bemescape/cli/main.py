@@ -14,9 +14,11 @@ from typing import Annotated
 import typer
 
 from bemescape.cli.check import check
+from bemescape.cli.compare import compare
 from bemescape.cli.explore import explore
 from bemescape.cli.progress import Stopped
 from bemescape.cli.solve import solve
+from bemescape.cli.study import study
 from bemescape.cli.view import view
 from bemescape.cli.warm import warm
 from bemescape.errors import AccuracyError, ConvergenceError, EscapeError
@@ -40,6 +42,8 @@ app = typer.Typer(
 app.command()(check)
 app.command()(solve)
 app.command()(explore)
+app.command()(study)
+app.command()(compare)
 app.command()(view)
 app.command()(warm)
 

@@ -33,7 +33,7 @@ if TYPE_CHECKING:
     from bemescape.results.second_opinion import CrossCheck, WalkerEstimate
     from bemescape.results.ways_out import WaysOut
 
-__all__ = ["Region", "SlowRegions", "find_slow_regions", "rule_of_thumb", "summarise"]
+__all__ = ["Region", "SlowRegions", "find_slow_regions", "path_graph", "rule_of_thumb", "summarise"]
 
 _Opinion = TypeVar("_Opinion", CrossCheckSummary, WalkersSummary)
 
@@ -123,21 +123,8 @@ class _PathsAlongWall:
 
     def __init__(self, result: EscapeResult) -> None:
         self._result = result
-        vertices, faces = result.vertices, result.faces
-        edges, of_face = mesh_edges(faces)
-        length = np.linalg.norm(vertices[edges[:, 1]] - vertices[edges[:, 0]], axis=1)
-        order = np.argsort(of_face.ravel(), kind="stable")
-        sorted_edges = of_face.ravel()[order]
-        paired = np.flatnonzero(sorted_edges[1:] == sorted_edges[:-1])
-        apex = np.roll(faces, 1, axis=1).ravel()[order]  # corner opposite to edge k
-        left, right, hinge = apex[paired], apex[paired + 1], edges[sorted_edges[paired]]
-        across = _unfolded_distance(vertices, left, right, hinge)
-        start = np.concatenate([edges[:, 0], left])
-        end = np.concatenate([edges[:, 1], right])
-        weight = np.concatenate([length, across])
-        keep = np.isfinite(weight)
-        n = len(vertices)
-        graph = csr_matrix(coo_matrix((weight[keep], (start[keep], end[keep])), shape=(n, n)))
+        faces = result.faces
+        graph, n = path_graph(result.vertices, faces), len(result.vertices)
         window_vertices = np.unique(faces[result.panel_window >= 0])
         self._distance, self._before, self._source = dijkstra(
             graph, directed=False, indices=window_vertices, min_only=True, return_predecessors=True
@@ -161,6 +148,27 @@ class _PathsAlongWall:
             way.append(int(self._before[way[-1]]))
         window = result.windows[int(self._owner[way[-1]])].name
         return float(length[best]), window, np.concatenate([centroid[None], result.vertices[way]])
+
+
+def path_graph(vertices: Floats, faces: Ints) -> csr_matrix:
+    """Lengths (n, n) of the edges of a surface and of the shortcuts across pairs of faces, each pair once.
+
+    Shortest paths in it, undirected, are those along the wall to a few per cent.
+    """
+    edges, of_face = mesh_edges(faces)
+    length = np.linalg.norm(vertices[edges[:, 1]] - vertices[edges[:, 0]], axis=1)
+    order = np.argsort(of_face.ravel(), kind="stable")
+    sorted_edges = of_face.ravel()[order]
+    paired = np.flatnonzero(sorted_edges[1:] == sorted_edges[:-1])
+    apex = np.roll(faces, 1, axis=1).ravel()[order]  # corner opposite to edge k
+    left, right, hinge = apex[paired], apex[paired + 1], edges[sorted_edges[paired]]
+    across = _unfolded_distance(vertices, left, right, hinge)
+    start = np.concatenate([edges[:, 0], left])
+    end = np.concatenate([edges[:, 1], right])
+    weight = np.concatenate([length, across])
+    keep = np.isfinite(weight)
+    n = len(vertices)
+    return csr_matrix(coo_matrix((weight[keep], (start[keep], end[keep])), shape=(n, n)))
 
 
 def _unfolded_distance(vertices: Floats, left: Ints, right: Ints, hinge: Ints) -> Floats:
