@@ -27,6 +27,8 @@ if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
     from bemescape.results.starts import Ball
     from bemescape.results.summary import summary_schema
+    from bemescape.study.document import Study, read_study, study_schema
+    from bemescape.study.run import StudyResult, run_study
     from bemescape.surface import Surface, check_surface, heal_surface, read_surface
     from bemescape.threads import use_threads
     from bemescape.version import __version__
@@ -46,6 +48,8 @@ _HOME = {
     "ProgressEvent": "bemescape.progress",
     "SettingsError": "bemescape.errors",
     "SolverSettings": "bemescape.escape",
+    "Study": "bemescape.study.document",
+    "StudyResult": "bemescape.study.run",
     "Surface": "bemescape.surface",
     "SurfaceError": "bemescape.errors",
     "Window": "bemescape.windows.window",
@@ -56,8 +60,11 @@ _HOME = {
     "heal_surface": "bemescape.surface",
     "prepare": "bemescape.prepared_surface",
     "read_case": "bemescape.case",
+    "read_study": "bemescape.study.document",
     "read_surface": "bemescape.surface",
+    "run_study": "bemescape.study.run",
     "solve_escape": "bemescape.escape",
+    "study_schema": "bemescape.study.document",
     "summary_schema": "bemescape.results.summary",
     "use_threads": "bemescape.threads",
     "warm_up": "bemescape.warm",
@@ -75,6 +82,8 @@ __all__ = [
     "ProgressEvent",
     "SettingsError",
     "SolverSettings",
+    "Study",
+    "StudyResult",
     "Surface",
     "SurfaceError",
     "Window",
@@ -85,8 +94,11 @@ __all__ = [
     "heal_surface",
     "prepare",
     "read_case",
+    "read_study",
     "read_surface",
+    "run_study",
     "solve_escape",
+    "study_schema",
     "summary_schema",
     "use_threads",
     "warm_up",

@@ -136,6 +136,8 @@ _Target = Annotated[
 
 
 class Section(BaseModel):
+    """A table of a case or study file; unknown keys are errors."""
+
     model_config = ConfigDict(extra="forbid", frozen=True)
 
 

@@ -12,6 +12,7 @@ neck of length L and radius a after about V L / (π a² D). The list carries V L
 from __future__ import annotations
 
 import csv
+import itertools
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -104,7 +105,7 @@ def mesh_of(spine: Spine) -> sg.Mesh:
         after = (k + 1) % AROUND
         faces.append((0, starts[0] + after, starts[0] + k))
         labels.append(MOUTH)
-        for number, (low, high) in enumerate(zip(starts[:-1], starts[1:], strict=True)):
+        for number, (low, high) in enumerate(itertools.pairwise(starts)):
             a, b, c, d = low + k, low + after, high + after, high + k
             faces += [(a, b, c), (a, c, d)]
             labels += [MOUTH if number == 0 else 0] * 2
@@ -143,8 +144,8 @@ def head_volume(mesh: sg.Mesh, spine: Spine) -> float:
     return float(mesh.trimesh.volume) - np.pi * spine.neck_radius**2 * spine.neck_length
 
 
-STUDY = """# Spines of the Harrow block: does a wider neck let a small protein out sooner? Shapes, conditions, animals and D are
-# invented for this demo. Run: bemescape study meshes/spines.study.toml --out spines_study
+STUDY = """# Spines of the Harrow block: does a wider neck let a small protein out sooner?
+# Shapes, conditions, animals and D are invented for this demo. Run: bemescape study meshes/spines.study.toml --out spines_study
 
 [[shapes]]
 list = "spines.csv"

@@ -27,13 +27,15 @@ MAY_IMPORT = {
     "arrangements": BASE | {"surface", "windows", "bem", "results", "escape", "prepared_surface"},
     "case": BASE | {"surface", "windows", "results", "escape", "arrangements"},
     "warm": BASE | {"surface", "windows", "bem", "escape"},
-    "cli": BASE | {"surface", "windows", "results", "escape", "case", "warm", "arrangements", "viz"},
-    "viz": BASE | {"results", "arrangements"},
+    "study": BASE | {"threads", "surface", "windows", "results", "escape", "case"},
+    "cli": BASE | {"surface", "windows", "results", "escape", "case", "warm", "arrangements", "study", "viz"},
+    "viz": BASE | {"results", "arrangements", "study"},
 }
 #: Imports against the direction, each with its reason. They are made inside functions.
 EXCEPTIONS = {
     ("results", "viz"): "result.save writes pictures and the report",
     ("arrangements", "viz"): "exploration.save writes pictures and the page",
+    ("study", "viz"): "run_study writes the report and the figure",
 }
 
 

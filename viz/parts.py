@@ -327,10 +327,18 @@ def middle_of(result: EscapeResult, panels: NDArray[np.int64]) -> tuple[Floats, 
     return result.panel_centroids[nearest], normal / max(float(np.linalg.norm(normal)), 1e-300)
 
 
-def look_from(plotter: pv.Plotter, points: Floats, view: View, *, narrower: float = 0.0) -> None:
+def look_from(
+    plotter: pv.Plotter,
+    points: Floats,
+    view: View,
+    *,
+    narrower: float = 0.0,
+    frame: tuple[float, float, float, float] = SHAPE_FRAME,
+) -> None:
     """Parallel projection along `view`; `points` (p, 3) fill the part of the picture meant for the shape.
 
-    `narrower` leaves this part of the width to a colour bar whose numbers need more room.
+    `narrower` leaves this part of the width to a colour bar whose numbers need more room; `frame` is the part of the
+    picture meant for the shape: left, bottom, right, top.
     """
     width, height = plotter.renderer.GetSize()
     across, along, deep = points @ view.right, points @ view.up, points @ view.towards
@@ -339,7 +347,7 @@ def look_from(plotter: pv.Plotter, points: Floats, view: View, *, narrower: floa
         + 0.5 * (along.min() + along.max()) * view.up
         + 0.5 * (deep.min() + deep.max()) * view.towards
     )
-    left, bottom, right, top = SHAPE_FRAME
+    left, bottom, right, top = frame
     right -= narrower
     half = 0.5 * max(float(np.ptp(along)) / (top - bottom), float(np.ptp(across)) / (right - left) * height / width)
     far = 2.0 * max(float(np.ptp(deep)), half)

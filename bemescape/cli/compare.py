@@ -55,7 +55,7 @@ def compare(
     if json:
         from bemescape.cli.answer import print_json
 
-        print_json(rows)
+        print_json({"results": rows})
     else:
         _print_table(rows)
         typer.echo("".join(f"\n{path}" for path in (csv, png) if path is not None).lstrip("\n"))

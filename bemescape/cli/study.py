@@ -27,7 +27,7 @@ def study(
         Path | None,
         typer.Option(help="Folder of the study. Default: one named after it, in the current folder."),
     ] = None,
-    plan: Annotated[bool, typer.Option("--plan", help="List the cases with an estimate of time; solve nothing.")] = False,
+    plan: Annotated[bool, typer.Option("--plan", help="List the cases and estimate the time; solve nothing.")] = False,
     workers: Annotated[
         str | None, typer.Option(metavar="<int>", help="Local worker processes. Default: one for each core.")
     ] = None,
@@ -123,7 +123,13 @@ def _print_plan(plan: StudyPlan, workers: int, folder: Path, *, json: bool) -> N
         )
         return
     rows = [
-        (case.name, case.shape.group or "–", str(case.faces), f"{case.estimated_s:.0f} s", f"{case.estimated_mb:.0f} MB")
+        (
+            case.name,
+            case.shape.group or "–",
+            str(case.faces),
+            f"{case.estimated_s:.0f} s",
+            f"{case.estimated_mb:.0f} MB",
+        )
         for case in plan.cases
     ]
     from bemescape.cli.answer import columns
@@ -206,7 +212,9 @@ def _print_answer(result: StudyResult) -> None:
     typer.echo(repr(result))
     for setting in result.statistics.settings:
         if setting.swept:
-            typer.echo("  " + ", ".join(f"{key} = {value:g}" for key, value in setting.swept.items() if value is not None))
+            typer.echo(
+                "  " + ", ".join(f"{key} = {value:g}" for key, value in setting.swept.items() if value is not None)
+            )
         rows = [
             (
                 group.group or "(none)",

@@ -10,7 +10,7 @@ import logging
 import os
 import queue
 import time
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
@@ -255,8 +255,8 @@ class Engine:
                 case, _ = self._running[key]
                 if key in self._begun:
                     self.events({"event": "worker_lost", "case": case.name, "worker": self._begun[key]})
-                self._begun[key] = content["worker"]
-                self.events({"event": "started", "case": case.name, "worker": content["worker"]})
+                self._begun[key] = content["by"]
+                self.events({"event": "started", "case": case.name, "worker": content["by"]})
             return
         key, future = content
         if key not in self._running:

@@ -135,8 +135,8 @@ def _matching(folder: Path, pattern: str, place: str) -> list[Path]:
         ) from (error)
     if not paths:
         raise SettingsError(
-            f"{place}: files is {pattern!r}, but no mesh file in {folder} fits it; the pattern is relative to the study "
-            f"file, and mesh files end in {', '.join(MESH_ENDINGS)}"
+            f"{place}: files is {pattern!r}, but no mesh file in {folder} fits it; the pattern is relative to the "
+            f"study file, and mesh files end in {', '.join(MESH_ENDINGS)}"
         )
     return paths
 
@@ -301,8 +301,8 @@ def overridden(windows: Sequence[Mapping[str, Any]], shape: StudyShape) -> list[
         if window is None:
             names = ", ".join(repr(entry.get("name")) for entry in changed) or "none"
             raise SettingsError(
-                f"{shape.place}: the column {OVERRIDE + target!r} names the window {name!r}, but the windows are {names}; "
-                "such a column is window.NAME.KEY"
+                f"{shape.place}: the column {OVERRIDE + target!r} names the window {name!r}, but the windows are "
+                f"{names}; such a column is window.NAME.KEY"
             )
         if key == "permeability":
             window[key] = text

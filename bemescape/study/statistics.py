@@ -258,8 +258,8 @@ def _setting(swept: dict[str, float], part: pd.DataFrame, chosen: _Chosen) -> Se
     spread = _spread(used, names)
     if error is not None and spread is not None and spread > 0.0:
         statements.append(
-            f"Numerical error against biological spread: the stated error is {100 * error:.2g} % (median of the cases), "
-            f"the interquartile range within groups is {100 * spread:.2g} % of the median"
+            f"Numerical error against biological spread: the stated error is {100 * error:.2g} % (median of the "
+            f"cases), the interquartile range within groups is {100 * spread:.2g} % of the median"
             + (f", {spread / error:.0f} times as much." if spread > error else ": the shapes differ less than that.")
         )
     return Setting(

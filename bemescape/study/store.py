@@ -13,7 +13,7 @@ import json
 import os
 import re
 import shutil
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
@@ -252,6 +252,6 @@ def _writing(folder: Path) -> Iterator[None]:
         yield
     except OSError as error:
         raise SettingsError(
-            f"study folder {folder} cannot be written: {error.strerror or error}; what was finished before is whole, so "
-            "make room or choose another folder, and run the same command again"
+            f"study folder {folder} cannot be written: {error.strerror or error}; what was finished before is whole, "
+            "so make room or choose another folder, and run the same command again"
         ) from error

@@ -85,7 +85,7 @@ def solve_order(order: Order, solve: Solve | None = None) -> Outcome:
     worker = f"{socket.gethostname()} process {os.getpid()}"
     _say_started(order, worker)
     if order.version != __version__:
-        failure = f"{worker} runs bemescape {__version__}, the study {order.version}; install the same version on every worker"
+        failure = f"{worker} runs bemescape {__version__}, the study {order.version}; install one version everywhere"
         return Outcome(order.key, failure=failure, worker=worker)
     values: Mapping[str, Any] = {}
     files: dict[str, bytes] = {}
@@ -137,6 +137,6 @@ def _say_started(order: Order, worker: str) -> None:
     from distributed import get_worker
 
     try:
-        get_worker().log_event(STARTED, {"key": order.key, "name": order.name, "worker": worker})
+        get_worker().log_event(STARTED, {"key": order.key, "by": worker})
     except ValueError:
         return

@@ -1,4 +1,4 @@
-"""Loaded by every local worker process when it starts: Ctrl-C is for the study's own process, which ends the workers."""
+"""Loaded by every local worker when it starts: Ctrl-C is for the study's own process, which ends the workers."""
 
 from __future__ import annotations
 
