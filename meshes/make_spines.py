@@ -145,7 +145,8 @@ def head_volume(mesh: sg.Mesh, spine: Spine) -> float:
 
 
 STUDY = """# Spines of the Harrow block: does a wider neck let a small protein out sooner?
-# Shapes, conditions, animals and D are invented for this demo. Run: bemescape study meshes/spines.study.toml --out spines_study
+# Shapes, conditions, animals and D are invented for this demo.
+# Run: bemescape study meshes/spines.study.toml --out spines_study
 
 [[shapes]]
 list = "spines.csv"
