@@ -730,6 +730,8 @@ def validation_sentence(
     """The first of pydantic's errors on `table` as a sentence with its place, checked against `document`."""
     document = document or CaseDocument
     items = error.errors(include_url=False)
+    # An entry that may be left out is also reported as not being None, which says nothing.
+    items = [item for item in items if item["type"] != "none_required"] or items
     first = min(items, key=lambda item: item["type"] != "extra_forbidden")
     location = root + first["loc"]
     if location and location[-1] == "[key]":

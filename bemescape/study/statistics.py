@@ -281,7 +281,7 @@ def _subject_statements(used: pd.DataFrame) -> list[str]:
     counts = used.groupby("group", sort=False)["subject"].agg(["size", "nunique"])
     lines = [
         f"{row['size']} shapes of group {name or '(none)'} come from {row['nunique']} "
-        f"subject{'s' * (row['nunique'] != 1)}: n = {row['nunique']}."
+        f"subject{'' if row['nunique'] == 1 else 's'}: n = {row['nunique']}."
         for name, row in counts.iterrows()
     ]
     homes = used.groupby("subject")["group"].nunique()
