@@ -10,6 +10,7 @@ import logging
 import os
 import queue
 import time
+from collections import deque
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass, field
@@ -86,7 +87,7 @@ def crew(
         "distributed.worker.memory.spill": False,
         "distributed.worker.memory.pause": False,
         "distributed.worker.memory.terminate": False,
-        "distributed.comm.timeouts.connect": "20s",
+        "distributed.comm.timeouts.connect": "10s",
         "distributed.admin.large-graph-warning-threshold": "1GB",
         "logging": {"distributed": "critical"},
     }
@@ -112,7 +113,7 @@ def crew(
                 yield Crew(client, workers, budget, cluster.scheduler_address)
             return
         try:
-            client = distributed.Client(scheduler, timeout="20s", set_as_default=False)
+            client = distributed.Client(scheduler, timeout="10s", set_as_default=False)
         except (OSError, ValueError, TimeoutError, RuntimeError, ImportError) as error:
             raise SettingsError(
                 f"--scheduler is {scheduler!r}, and nothing answers there ({_line(error)}); give the address that the "
@@ -179,8 +180,7 @@ class Engine:
     _arrived: queue.SimpleQueue[tuple[str, Any]] = field(default_factory=queue.SimpleQueue)
     _running: dict[str, tuple[PlannedCase, Future]] = field(default_factory=dict)
     _begun: dict[str, str] = field(default_factory=dict)
-    _estimated_s: float = 0.0
-    _taken_s: float = 0.0
+    _recent: deque[tuple[float, float]] = field(default_factory=lambda: deque(maxlen=16))
 
     def run(self, cases: Sequence[PlannedCase]) -> None:
         """Solve all; returns when each is stored or has failed.
@@ -275,8 +275,7 @@ class Engine:
         future.release()
 
     def _receive(self, case: PlannedCase, outcome: Outcome) -> None:
-        self._estimated_s += case.estimated_s
-        self._taken_s += outcome.seconds
+        self._recent.append((case.estimated_s, outcome.seconds))
         if outcome.failure:
             self._fail(case, outcome.failure)
             return
@@ -296,7 +295,10 @@ class Engine:
 
     def _tell_progress(self, total: int, waiting: Sequence[PlannedCase]) -> None:
         left = [*waiting, *(case for case, _ in self._running.values())]
-        pace = self._taken_s / self._estimated_s if self._estimated_s > 0.0 else 1.0
+        # The last cases only: the first one of each worker also loads and compiles the solver.
+        pace = (
+            sum(taken for _, taken in self._recent) / sum(known for known, _ in self._recent) if self._recent else 1.0
+        )
         seconds = pace * sum(case.estimated_s for case in left) / max(1, min(self._workers(), len(left) or 1))
         self.events(
             {
