@@ -13,7 +13,7 @@ from matplotlib.figure import Figure
 
 from bemescape.units import time_scale
 
-from .scales import INK
+from .scales import INK, round_ticks, tick_label
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -139,9 +139,13 @@ def _against(
             )
     axes.set_xscale("log")
     axes.set_yscale("log")
-    for axis in (axes.xaxis, axes.yaxis):
-        axis.set_major_formatter(mpl.ticker.FuncFormatter(lambda value, _: f"{value:g}"))
-        axis.set_minor_formatter(mpl.ticker.LogFormatter(minor_thresholds=(1.5, 0.6), labelOnlyBase=False))
+    axes.minorticks_off()
+    if len(rows):
+        for axis, values in ((axes.xaxis, rows[column]), (axes.yaxis, rows["mean_time_s"] / factor)):
+            low, high = 0.85 * float(values.min()), 1.18 * float(values.max())
+            ticks = round_ticks(low, high, log=True)
+            axis.set_ticks(ticks, labels=[tick_label(tick) for tick in ticks])
+            (axes.set_xlim if axis is axes.xaxis else axes.set_ylim)(low, high)
     if trend is not None and trend.slope is not None and trend.slope_interval is not None and len(rows):
         x = np.log(rows[column].to_numpy(float))
         y = np.log(rows["mean_time_s"].to_numpy(float) / factor)

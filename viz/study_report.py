@@ -232,7 +232,8 @@ def _head(report: _Report) -> str:
         ("Numerical error, largest", percent(float(errors.max()), 2) if len(errors) else "–"),
     ]
     cards = "".join(f"<div><dt>{escape(key)}</dt><dd>{escape(value)}</dd></div>" for key, value in facts)
-    lead = report.settings[0][0].statements if report.settings else []
+    first = report.settings[0][0] if report.settings else None
+    lead = [] if first is None else [pair.statement for pair in first.pairs] or first.statements
     return (
         f"<h1>{escape(plan.study.name)}</h1>"
         f'<p class="lead">Mean escape times of {len(plan.shapes)} shapes'
