@@ -34,8 +34,8 @@ MOST_DEATHS = 3
 #: Without any worker for so long, the study stops instead of waiting for ever.
 PATIENCE_S = 60.0
 _TICK_S = 0.5
-_ONE_THREAD = {
-    name: "1" for name in ("NUMBA_NUM_THREADS", "OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
+_ONE_THREAD = {"BEMESCAPE_THREADS": "1"} | {
+    f"{library}_NUM_THREADS": "1" for library in ("NUMBA", "OMP", "OPENBLAS", "MKL")
 }
 
 

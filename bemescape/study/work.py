@@ -113,23 +113,18 @@ def solve_order(order: Order, solve: Solve | None = None) -> Outcome:
 
 def solved_values(order: Order, folder: Path) -> Mapping[str, Any]:
     """Solve the case in `folder`, save the result in `folder/result`, and measure it."""
-    import numba
     from threadpoolctl import threadpool_limits
 
     from bemescape.case import parse_case
     from bemescape.results.store import save_result
     from bemescape.study.measures import measured
+    from bemescape.threads import use_threads
 
     # One thread a worker: the cases run side by side, and threads within them would only wait for each other.
-    before = numba.get_num_threads()
-    numba.set_num_threads(1)
-    try:
-        with threadpool_limits(1):
-            result = parse_case(order.table, folder=folder, name=order.name, source=order.place).solve()
-            save_result(result, folder / "result", pictures=False)
-            return measured(result)
-    finally:
-        numba.set_num_threads(before)
+    with use_threads(1), threadpool_limits(1):
+        result = parse_case(order.table, folder=folder, name=order.name, source=order.place).solve()
+        save_result(result, folder / "result", pictures=False)
+        return measured(result)
 
 
 def _say_started(order: Order, worker: str) -> None:
