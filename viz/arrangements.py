@@ -17,9 +17,9 @@ from numpy.typing import NDArray
 from bemescape.results.summary import CAUTION
 from bemescape.units import format_length, format_time, time_scale
 
+from .html import LOCAL_RULES
 from .page import PAGE
 from .plots import plain_axes
-from .report import LOCAL_RULES
 from .scales import INK, MAP_NAME
 from .shapes import principal_axes
 

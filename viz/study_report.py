@@ -385,7 +385,7 @@ def _ranked_row(rank: int, row: Any, others: Sequence[pd.DataFrame], pictures: _
         cells.append(
             _cell("", "") if math.isnan(time) else _cell(with_error(time, float(there["relative_error"])), time)
         )
-    for name, shown in (
+    shown_as: tuple[tuple[str, Callable[[float], str]], ...] = (
         ("cv", lambda value: f"{value:.3f}"),
         ("slow_fraction", percent),
         ("rule_of_thumb_ratio", lambda value: f"{value:.2f}"),
@@ -393,9 +393,10 @@ def _ranked_row(rank: int, row: Any, others: Sequence[pd.DataFrame], pictures: _
         ("sphericity", lambda value: f"{value:.3f}"),
         ("longest_geodesic_um", format_length),
         ("narrowest_neck_radius_um", format_length),
-    ):
-        value = float(row[name])
-        cells.append(_cell("", "") if math.isnan(value) else _cell(shown(value), value))
+    )
+    for column, words in shown_as:
+        value = float(row[column])
+        cells.append(_cell("", "") if math.isnan(value) else _cell(words(value), value))
     return f"<tr>{''.join(cells)}</tr>"
 
 

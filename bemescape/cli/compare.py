@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
@@ -68,10 +69,10 @@ def _names(folders: list[Path], results: list[EscapeResult]) -> list[str]:
     return names if len(set(names)) == len(names) else [str(folder) for folder in folders]
 
 
-def _flat(row: object) -> dict[str, object]:
-    values = dict(row)  # type: ignore[call-overload]
-    shares = values.pop("shares")
-    return values | {f"share_{name}": share for name, share in shares.items()}
+def _flat(row: Mapping[str, Any]) -> dict[str, object]:
+    values: dict[str, object] = dict(row)
+    del values["shares"]
+    return values | {f"share_{name}": share for name, share in row["shares"].items()}
 
 
 def _print_table(rows: list[dict[str, object]]) -> None:

@@ -25,7 +25,7 @@ from bemescape.version import __version__
 if TYPE_CHECKING:
     from distributed import Client, Future
 
-__all__ = ["Crew", "Engine", "crew", "default_workers"]
+__all__ = ["Crew", "Engine", "crew", "default_workers", "refuse_unguarded_script"]
 
 #: Part of the free memory that a study may take.
 MEMORY_PART = 0.8
@@ -94,7 +94,6 @@ def crew(
     with dask.config.set(settings):
         _quiet_distributed()
         if scheduler is None:
-            _refuse_unguarded_script()
             try:
                 cluster = distributed.LocalCluster(
                     n_workers=workers,
@@ -107,7 +106,10 @@ def crew(
                     preload=["bemescape.study.worker_setup"],
                 )
             except (OSError, RuntimeError, TimeoutError) as error:
-                raise SettingsError(f"no worker processes can be started here: {_line(error)}") from error
+                raise SettingsError(
+                    f"no worker processes can be started here: {_line(error)}; a script must call run_study under "
+                    'if __name__ == "__main__":'
+                ) from error
             with cluster, distributed.Client(cluster, set_as_default=False) as client:
                 budget = memory_mb if memory_mb is not None else MEMORY_PART * _free_mb()
                 yield Crew(client, workers, budget, cluster.scheduler_address)
@@ -146,7 +148,7 @@ def _free_mb() -> float:
     return float(psutil.virtual_memory().available) / 1e6
 
 
-def _refuse_unguarded_script() -> None:
+def refuse_unguarded_script() -> None:
     """A worker that is being started runs the caller's script again; there it must not start workers itself."""
     import multiprocessing
 

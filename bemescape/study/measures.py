@@ -73,7 +73,7 @@ def sphericity(volume_um3: float, area_um2: float) -> float:
     >>> round(sphericity(1.0, 6.0), 4)  # a cube: (π/6)^(1/3)
     0.806
     """
-    return math.pi ** (1.0 / 3.0) * (6.0 * volume_um3) ** (2.0 / 3.0) / area_um2
+    return float(np.cbrt(math.pi * (6.0 * volume_um3) ** 2)) / area_um2
 
 
 def longest_geodesic_um(vertices: Floats, faces: Ints) -> float:
@@ -161,7 +161,7 @@ def _cross_section(result: EscapeResult, vectors: Floats, near: NDArray[np.bool_
     middle = np.column_stack(
         [np.bincount(piece[members], weights=centroids[members, axis], minlength=pieces) for axis in range(3)]
     )
-    middle /= np.maximum(weight, 1)[:, None]
+    middle = middle / np.maximum(weight, 1)[:, None]
     height = np.einsum("ij,ij->i", centroids - middle[piece], vectors) / 3.0
     volume = float(height[is_near[piece]].sum())
     return section, volume

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 
 from bemescape.errors import SettingsError
 from bemescape.study.document import Study, read_study
-from bemescape.study.engine import Engine, crew, default_workers
+from bemescape.study.engine import Engine, crew, default_workers, refuse_unguarded_script
 from bemescape.study.events import StudyEvents, unheard
 from bemescape.study.plan import PlannedCase, StudyPlan, plan_study
 from bemescape.study.store import StoredCase, StudyStore, write_atomically
@@ -104,6 +104,8 @@ def run_study(
     StudyStopped
         Ctrl-C; what was finished is stored, and the table says what remains.
     """
+    if scheduler is None:
+        refuse_unguarded_script()
     plan = plan_study(study if isinstance(study, Study) else read_study(study))
     if workers is not None and not 1 <= workers <= 1024:
         raise SettingsError(f"workers is {workers}; give a number from 1 to 1024")
