@@ -158,10 +158,8 @@ def _cross_section(result: EscapeResult, vectors: Floats, near: NDArray[np.bool_
     members = np.where(near[border[:, 0]], border[:, 0], border[:, 1])
     centroids = result.panel_centroids
     weight = np.bincount(piece[members], minlength=pieces)
-    middle = np.column_stack(
-        [np.bincount(piece[members], weights=centroids[members, axis], minlength=pieces) for axis in range(3)]
-    )
-    middle = middle / np.maximum(weight, 1)[:, None]
+    sums = [np.bincount(piece[members], weights=centroids[members, axis], minlength=pieces) for axis in range(3)]
+    middle = np.column_stack(sums) / np.maximum(weight, 1)[:, None]
     height = np.einsum("ij,ij->i", centroids - middle[piece], vectors) / 3.0
     volume = float(height[is_near[piece]].sum())
     return section, volume
