@@ -114,7 +114,7 @@ def _share_names(stored: Mapping[str, StoredCase]) -> list[str]:
 
 def table_as_csv(table: pd.DataFrame) -> bytes:
     """UTF-8, commas, points, an empty cell for a missing number; read back by pandas and by R's read.csv."""
-    return table.to_csv(index=False, lineterminator="\n").encode()
+    return str(table.to_csv(index=False, lineterminator="\n")).encode()
 
 
 def table_as_parquet(table: pd.DataFrame) -> bytes:
