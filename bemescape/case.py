@@ -236,6 +236,12 @@ class WindowSection(Section):
     points: PointsSection | None = None
     scatter: ScatterSection | None = None
     permeability_um_s: _Permeability = Field(default=math.inf, alias="permeability", examples=["10 um/s"])
+    compact: bool | None = Field(
+        default=None,
+        strict=True,
+        description="solve round windows as compact pores; by default where they are many and small",
+        examples=[True],
+    )
 
     @model_validator(mode="after")
     def _has_one_kind(self) -> Self:
@@ -245,6 +251,8 @@ class WindowSection(Section):
                 f"has {' and '.join(given) if given else 'no kind'}; "
                 f"a window has exactly one of {', '.join(WINDOW_KINDS[:-1])} or {WINDOW_KINDS[-1]}"
             )
+        if self.compact and given[0] not in ROUND_KINDS:
+            raise SettingsError(f"is compact, which only a {', '.join(ROUND_KINDS[:-1])} or {ROUND_KINDS[-1]} can be")
         return self
 
 
@@ -252,6 +260,8 @@ class WindowSection(Section):
 LISTED_SECTIONS = {"window": "window", "shapes": "set of shapes"}
 #: Keys of a `[[window]]` that say which part of the wall it takes.
 WINDOW_KINDS = ("disc", "labels", "near", "lid", "points", "scatter")
+#: Those whose openings are round: they may be solved as compact pores.
+ROUND_KINDS = ("disc", "points", "scatter")
 
 
 class AccuracySection(Section):
@@ -461,10 +471,10 @@ class Case:
     def _window(self, section: WindowSection, surface: Surface) -> Window:
         from bemescape.windows.window import Window
 
-        name, kappa = section.name, section.permeability_um_s
+        name, kappa, compact = section.name, section.permeability_um_s, section.compact
         if (disc := section.disc) is not None:
             centre = _scaled(disc.centre, surface)
-            return Window.disc(name, centre=centre, radius=disc.radius_um, permeability=kappa)
+            return Window.disc(name, centre=centre, radius=disc.radius_um, permeability=kappa, compact=compact)
         if (labels := section.labels) is not None:
             return Window.labels(name, array=labels.array, value=labels.value, permeability=kappa)
         if (near := section.near) is not None:
@@ -480,9 +490,10 @@ class Case:
                 permeability=kappa,
             )
         if section.points is not None:
-            return self._pores(f"[[window]] {name!r}", name, section.points, surface, kappa)
+            window = self._pores(f"[[window]] {name!r}", name, section.points, surface, kappa)
+            return replace(window, compact=compact)
         if section.scatter is not None:
-            return _scattered(name, section.scatter, kappa)
+            return replace(_scattered(name, section.scatter, kappa), compact=compact)
         raise SettingsError(f"window {name!r} has no kind")
 
     def _pores(self, place: str, name: str, points: PointsSection, surface: Surface, kappa: float) -> Window:
@@ -852,6 +863,8 @@ def _brackets(key: str) -> str:
 
 
 def _toml(value: Any) -> str:
+    if isinstance(value, bool):
+        return str(value).lower()
     return f'"{value}"' if isinstance(value, str) else str(value)
 
 

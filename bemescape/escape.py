@@ -11,10 +11,12 @@ from numpy.typing import NDArray
 
 from bemescape.bem.averages import volume_integral
 from bemescape.bem.indicator import coarse_panels
+from bemescape.bem.sinks import with_discs
 from bemescape.errors import AccuracyError, SettingsError, SurfaceError, WindowError
 from bemescape.progress import Progress, ProgressEvent, silent
 from bemescape.results.accuracy import Estimate, Ladder, Rung
 from bemescape.results.kept_meshes import KeptMesh, KeptMeshes
+from bemescape.results.pores import PoreTable
 from bemescape.results.prepared import PreparedMesh, prepare_mesh
 from bemescape.results.result import EscapeResult, WindowResult
 from bemescape.results.spread import find_spread
@@ -24,7 +26,9 @@ from bemescape.surface.compartments import compartments
 from bemescape.surface.health import check_surface
 from bemescape.surface.surface import Surface, triangle_areas_normals
 from bemescape.units import Quantity, diffusion_um2_s, fraction
+from bemescape.windows.compact import pores_on_panels
 from bemescape.windows.grade import GradedMesh, Placement, SizeLimit, graded, place_windows
+from bemescape.windows.pores import PANELS_PER_PORE
 from bemescape.windows.window import Window
 
 __all__ = ["SolverSettings", "check_closed", "solve_escape", "solve_on"]
@@ -60,6 +64,9 @@ class _Solution:
     mesh: GradedMesh
     u: Floats
     q: Floats
+    smooth: Floats  # u without what is singular at compact pores
+    pores: PoreTable | None
+    outflow: Floats
     mean: float
     shares: Floats
     balance: float
@@ -158,13 +165,14 @@ def solve_on(
     d = diffusion_um2_s(diffusion)
     wanted = fraction(target, "target error")
     progress(ProgressEvent("placing windows"))
-    placement = place_windows(surface, windows)
+    budget = settings.max_panels or max(60_000, 2 * len(surface.faces))
+    placement = place_windows(surface, windows, most_meshed=budget * 5 // 6 // PANELS_PER_PORE)
     _check_compartments(placement)
+    volume = placement.surface.volume
     starts = check_starts(placement.surface, start or {})
     names = _wanted_ways_out(placement.windows, wanted=ways_out, named_starts=bool(starts))
 
-    budget = settings.max_panels or max(60_000, 2 * len(surface.faces))
-    ladder = Ladder(wanted, len(placement.windows))
+    ladder = Ladder(wanted, len(placement.patches), has_rims=bool(placement.patches))
     best: _Solution | None = None
     prepared: PreparedMesh | None = None
     limits: list[SizeLimit] = []
@@ -186,7 +194,9 @@ def solve_on(
         best, prepared = _solved(placement, rung, mesh, d, settings, progress, kept)
         if kept is not None:
             kept.keep(placement, KeptMesh(rung, mesh, tuple(limits), prepared))
-        ladder.has_rims = bool((mesh.window_of < 0).any())
+        ladder.has_rims = bool((mesh.window_of < 0).any() and (mesh.window_of >= 0).any())
+        # Refinement leaves the pores' own error as it is: it has to stay so far below the target that both fit.
+        ladder.target = max(wanted - _pores_error(best, volume), 0.5 * wanted)
         ladder.record(rung, best.mean, best.balance, best.shares)
         levels.append(
             {
@@ -199,20 +209,30 @@ def solve_on(
         )
     if best is None or prepared is None:
         raise SettingsError("no resolution was solved; raise max_panels")
-    estimate = ladder.estimate()
-    target_met = target_met and estimate.relative_error <= wanted
+    estimate, from_pores = ladder.estimate(), _pores_error(best, volume)
+    error = estimate.relative_error + from_pores
     notes = [*placement.notes, *_reading_notes(surface)]
     if not target_met:
         notes.append(
             f"the panel budget of {budget} ended the refinement at an estimated error of "
-            f"{estimate.relative_error:.2%} (target {wanted:.2%}); raise max_panels or accept the error"
+            f"{error:.2%} (target {wanted:.2%}); raise max_panels or accept the error"
         )
-    result = _packed(placement, best, estimate, ladder.share_errors(), d)
+    elif error > wanted:
+        notes.append(
+            f"{from_pores:.2%} of the estimated error of {error:.2%} (target {wanted:.2%}) is what compact pores leave "
+            "out, which no refinement lowers; give them panels with compact = false, or accept the error"
+        )
+    target_met = target_met and error <= wanted
     order = prepared.panels.order
+    raw = best
+    sinks = None if best.pores is None else best.pores.sinks(best.outflow)
+    best = replace(best, u=with_discs(prepared.panels, best.u[order], sinks, least=0.0)[prepared.back])
+    result = _packed(placement, best, replace(estimate, relative_error=error), ladder.share_errors(), d)
     spread = find_spread(
         prepared,
-        best.u[order],
-        best.q[order],
+        raw.u[order],
+        raw.q[order],
+        outflow=raw.outflow,
         diffusion_um2_s=d,
         mean_time_s=result.mean_time_s,
         relative_error=result.relative_error,
@@ -255,30 +275,38 @@ def _solved(
 ) -> tuple[_Solution, PreparedMesh]:
     began = time.perf_counter()
     kappa = np.array([window.permeability_um_s for window in placement.windows])
+    table = _pore_table(placement, mesh)
     same = None if kept is None else kept.same_place(placement, rung)
-    if same is not None:
+    if same is not None and table is None:
         prepared = same.prepared.with_resistance(d / kappa, progress)
     else:
+        # Rows of compact pores hold their permeability; the near field of their panels is taken over.
         earlier = None if kept is None else kept.latest_near_field(rung)
         prepared = prepare_mesh(
-            mesh.vertices, mesh.faces, mesh.window_of, d / kappa, tolerance=settings.tolerance,
+            mesh.vertices, mesh.faces, mesh.window_of, d / kappa,
+            pores=None if table is None else table.compact(d / kappa), tolerance=settings.tolerance,
             earlier=earlier, keep=kept is not None, progress=progress,
         )  # fmt: skip
     panels, volume = prepared.panels, prepared.volume
-    solution = prepared.solve(prepared.solver.operator.volume_potential, "iterating")
-    mean = volume_integral(panels, solution.u, solution.q, 1.0) / volume
-    balance = -float(panels.areas @ solution.q) / volume - 1.0
+    solution = prepared.solve(prepared.source, "iterating")
+    mean = volume_integral(panels, solution.u, solution.q, 1.0, prepared.sinks(solution)) / volume
+    balance = prepared.outflow(solution) / volume - 1.0
     if not (np.isfinite(mean) and abs(balance) <= settings.balance_limit):
         raise AccuracyError(
             f"the windows drain {1.0 + balance:.7g} of V/D (limit 1 ± {settings.balance_limit:g}) on {len(panels)} "
             "panels: faces cross one another or the mesh is too damaged; try heal='rebuild'"
         )
     flow = np.bincount(prepared.window_of + 1, weights=-panels.areas * solution.q, minlength=len(kappa) + 1)
+    if table is not None:
+        flow[table.window + 1] = solution.outflow
     solution_on_mesh = _Solution(
         rung=rung,
         mesh=mesh,
         u=solution.u[prepared.back],
         q=solution.q[prepared.back],
+        smooth=prepared.without_pores(solution)[prepared.back],
+        pores=table,
+        outflow=solution.outflow,
         mean=mean,
         shares=flow[1:] / volume,
         balance=balance,
@@ -288,10 +316,33 @@ def _solved(
     return solution_on_mesh, prepared
 
 
+def _pore_table(placement: Placement, mesh: GradedMesh) -> PoreTable | None:
+    pores = placement.pores
+    if pores is None:
+        return None
+    panel, places = pores_on_panels(pores, mesh.vertices, mesh.faces)
+    _, normals = triangle_areas_normals(mesh.vertices, mesh.faces[panel])
+    return PoreTable(
+        window=pores.number,
+        panel=panel,
+        centre_um=places,
+        normal=normals,
+        radius_um=pores.radius,
+        curvature_per_um=pores.curvature,
+        reach_um=pores.reach,
+        resistance_error_per_um=pores.resistance_error,
+    )
+
+
+def _pores_error(solution: _Solution, volume: float) -> float:
+    """Relative error of the mean time by what compact pores leave out."""
+    return 0.0 if solution.pores is None else solution.pores.mean_error(solution.shares, volume, solution.mean)
+
+
 def _finer_wall(solution: _Solution) -> SizeLimit:
     """Smaller panels where the last solution varies most over them; elsewhere no limit."""
     mesh = solution.mesh
-    coarse = coarse_panels(mesh.vertices, mesh.faces, solution.u, mesh.window_of >= 0)
+    coarse = coarse_panels(mesh.vertices, mesh.faces, solution.smooth, mesh.window_of >= 0)
     corners = mesh.vertices[mesh.faces]
     longest = np.linalg.norm(corners - np.roll(corners, 1, axis=1), axis=2).max(axis=1)
     return SizeLimit(corners.mean(axis=1), np.where(coarse, 0.75 * longest, np.inf))
@@ -303,10 +354,17 @@ def _packed(
     mesh = solution.mesh
     areas, _ = triangle_areas_normals(mesh.vertices, mesh.faces)
     exit_density = -solution.q / placement.surface.volume
+    window_areas = np.bincount(mesh.window_of + 1, weights=areas, minlength=len(placement.windows) + 1)[1:]
+    if (pores := solution.pores) is not None:
+        window_areas[pores.window] = np.pi * pores.radius_um**2
+        # What a pore's resistance is off by moves its own flow by as much, and the others' with the mean time.
+        own = 4.0 * pores.radius_um * pores.resistance_error_per_um * solution.shares[pores.window]
+        share_errors = share_errors + _pores_error(solution, placement.surface.volume) * solution.shares
+        share_errors[pores.window] += own
     windows = tuple(
         WindowResult(
             name=window.name,
-            area_um2=float(areas[mesh.window_of == number].sum()),
+            area_um2=float(window_areas[number]),
             share=float(solution.shares[number]),
             permeability_um_s=window.permeability_um_s,
             share_error=float(share_errors[number]),
@@ -331,6 +389,7 @@ def _packed(
         residuals=solution.residuals,
         levels=(),
         wall_s=0.0,
+        pores=solution.pores,
     )
 
 
@@ -356,6 +415,8 @@ def _check_compartments(placement: Placement) -> None:
     for patch in placement.patches:
         faces = patch.faces if patch.disc is None else np.array([patch.touchdown_face])
         served |= set(home[faces].tolist())
+    if placement.pores is not None:
+        served |= set(home[placement.pores.face].tolist())
     for body in range(int(home.max()) + 1):
         if body not in served:
             faces = np.flatnonzero(home == body)

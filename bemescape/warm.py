@@ -31,6 +31,7 @@ def warm_up(progress: Progress = silent) -> float:
     caps = [
         Window.disc("open", centre=(0.0, 0.0, 1.0), radius=0.4),
         Window.disc("partly open", centre=(0.0, 0.0, -1.0), radius=0.4, permeability=1.0),
+        Window.disc("compact", centre=(1.0, 0.0, 0.0), radius=0.02, compact=True),
     ]
     progress(ProgressEvent("compiling", 0.0, "the solve and what follows from it"))
     result = solve_escape(surface, caps, 1.0, target=0.1, start={"centre": (0.0, 0.0, 0.0)}, ways_out=True)

@@ -274,3 +274,33 @@ def cap_on_inner_shell_mean(b):
         held = (1.0 + beta * (degree + 1.0) / degree) / ((degree + 1.0) * (1.0 - beta)) - 1.0 / (degree + 1.0)
         change += (2.0 * degree + 1.0) / (4.0 * np.pi) * held
     return volume * (1.0 / (4.0 * np.pi * EXTERIOR_CAP_RATE) + change)
+
+
+#: Disc of radius a and permeability κ in a flat wall: κa/D -> its conductance over 4Da, by the same Galerkin method.
+ROBIN_DISC_TABLE = {
+    0.01: 0.0077878836,
+    0.1: 0.0724011256,
+    1.0: 0.426679706,
+    10.0: 0.858672159,
+    100.0: 0.97817952,
+}
+#: Unit ball with 50 equal caps on a Fibonacci lattice (z = 1 − (2i + 1)/50, azimuth π(1 + √5)(i + ½)): half-angle ->
+#: mean. Spectral solution with the sphere's closed-form Neumann function.
+FIBONACCI_CAPS_50 = {0.02: 1.0247041, 0.05: 0.391019, 0.1: 0.17978}
+#: Unit ball with equal caps of half-angle 0.05 at the corners of an octahedron, the same way.
+OCTAHEDRON_CAPS_005 = 3.39105707
+#: u on the axis at height z, one cap of half-angle 0.1 around +z, from the solution behind CAP_MEAN.
+CAP_AXIS_01 = {0.9: 5.479989851, 0.5: 10.0713717754, -0.5: 11.3153370886}
+
+
+def caps_by_matrix(directions, eps):
+    """Unit ball, equal caps of half-angle eps around the directions (n, 3): matrix form, relative error O(eps²).
+
+    The form of Cheviakov, Ward & Straube (2010, doi:10.1137/100782620) with one unknown flux each; their three-term
+    formula follows from it for equal fluxes.
+    """
+    d = np.linalg.norm(directions[:, None] - directions[None], axis=2)
+    np.fill_diagonal(d, 1.0)
+    matrix = (2.0 / d - 2.0 - np.log(d / 2.0 + d**2 / 4.0)) / (4.0 * np.pi)
+    np.fill_diagonal(matrix, 1.0 / (4.0 * eps) - (np.log(2.0 * eps) + 0.5) / (4.0 * np.pi))
+    return BALL_VOLUME / np.linalg.solve(matrix, np.ones(len(d))).sum() + 1.0 / 15.0

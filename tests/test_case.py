@@ -95,6 +95,7 @@ points = { file = "pores.csv", radius = "25 nm", farthest = "1 um" }
 [[window]]
 name = "crowd"
 scatter = { density = "3 /um^2", radius = "25 nm", gap = "100 nm", seed = 5 }
+compact = true
 """
 
 
@@ -121,6 +122,23 @@ def test_every_kind_of_window_is_scaled_from_the_units_of_its_file(tmp_path):
     assert pores.shape.lines == (2, 3)
     assert pores.shape.farthest_um == 1.0
     assert crowd.shape == Scatter(None, 3.0, 0.025, 0.1, 5)
+    assert (pores.compact, crowd.compact) == (None, True)
+
+
+@pytest.mark.parametrize(
+    ("window", "told"),
+    [
+        (
+            "lid = { point = [0, 0, 10], normal = [0, 0, 1] }\ncompact = true",
+            "is compact, which only a disc, points or",
+        ),
+        ('disc = { centre = [0, 0, 0], radius = "9 nm" }\ncompact = "yes"', r"'pore' compact is 'yes'.*compact = true"),
+    ],
+)
+def test_a_compact_window_is_round_and_says_so_with_true_or_false(written, window, told):
+    text = GOOD.split("[[window]]")[0] + f"[[window]]\nname = 'pore'\n{window}\n"
+    with pytest.raises(SettingsError, match=told):
+        read_case(written(text))
 
 
 def test_a_missing_file_of_a_window_is_named_with_the_window(tmp_path):
@@ -379,7 +397,8 @@ scalars = (
     | st.sampled_from(["60 nm", "20 um^2/s", "nm", "0.5 %", "auto"])
 )
 KNOWN = """surface motion window accuracy start file unit heal diffusion name disc labels centre radius array
-value permeability target max_panels points near lid scatter point normal distance count density gap seed farthest"""
+value permeability target max_panels points near lid scatter point normal distance count density gap seed farthest
+compact"""
 keys = st.sampled_from(KNOWN.split()) | st.text(max_size=5)
 tables = st.recursive(
     scalars,

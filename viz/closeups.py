@@ -24,6 +24,7 @@ from .parts import (
     new_plotter,
     window_colours,
 )
+from .pores import pore_discs, pore_shares, share_scale
 from .scales import INK, ColourScale, density_scale
 from .shapes import View, border_edges, standard_view
 
@@ -46,7 +47,8 @@ def windows_scene(
 ) -> pv.Plotter:
     """Close-ups of the windows with the largest shares (at most six), coloured by exit density.
 
-    Each is seen straight on, with the wall around it; one logarithmic scale serves all.
+    Each is seen straight on, with the wall around it; one logarithmic scale serves all. Compact pores have no panels:
+    they share one picture of the whole wall, and are coloured by their shares.
 
     Parameters
     ----------
@@ -66,15 +68,40 @@ def windows_scene(
     """
     scene = scene or Scene(result)
     present = np.unique(result.panel_window[result.panel_window >= 0])
-    order = sorted(present.tolist(), key=lambda number: -result.windows[number].share)[:_MOST_CLOSE_UPS]
-    columns = min(3, max(1, len(order))) if len(order) != 4 else 2
-    rows = max(1, -(-len(order) // columns))
+    with_pores = 0 if result.pores is None else 1
+    order = sorted(present.tolist(), key=lambda number: -result.windows[number].share)[: _MOST_CLOSE_UPS - with_pores]
+    count = len(order) + with_pores
+    columns = min(3, max(1, count)) if count != 4 else 2
+    rows = max(1, -(-count // columns))
     plotter = new_plotter(off_screen=off_screen, size=size, shape=(rows, columns))
     scale = density_scale(result)
     for place, number in enumerate(order):
         plotter.subplot(place // columns, place % columns)
         _close_up(plotter, scene, number, scale, 0.021 if rows == 1 else 0.032)
+    if with_pores:
+        plotter.subplot(len(order) // columns, len(order) % columns)
+        _all_pores(plotter, scene, 0.021 if rows == 1 else 0.032)
     return plotter
+
+
+def _all_pores(plotter: pv.Plotter, scene: Scene, text_size: float) -> None:
+    """The whole wall in grey with every compact pore in the colour of its share."""
+    result = scene.result
+    wall = scene.skin(np.arange(len(result.faces)))
+    wall.cell_data["colour"] = np.full((wall.n_cells, 3), 232, dtype=np.uint8)
+    add_skin(plotter, wall)
+    add_skin(plotter, pore_discs(result, scene.size_um, shares=True), NO_SHADING)
+    width, height = plotter.renderer.GetSize()
+    look_from(plotter, result.vertices, standard_view(result, "front"), narrower=0.09 * height / width)
+    shares = pore_shares(result)
+    Overlay(
+        plotter,
+        title=f"{len(shares)} compact pore{'s' * (len(shares) > 1)}: {100.0 * shares.sum():.4g} % of exits",
+        note=f"one takes {100.0 * shares.min():.3g} to {100.0 * shares.max():.3g} % · discs are drawn large enough to "
+        "be seen",
+        scale=share_scale(result),
+        size=text_size,
+    )
 
 
 def _close_up(plotter: pv.Plotter, scene: Scene, number: int, scale: ColourScale, text_size: float) -> None:

@@ -91,6 +91,8 @@ def _largest_windows(result: EscapeResult) -> list[Floats]:
     places = []
     for number in order[:2]:
         panels = result.panel_window == number
+        if result.pores is not None and number in result.pores.window:
+            places.append(result.pores.centre_um[int(np.flatnonzero(result.pores.window == number)[0])])
         if panels.any():
             weights = result.panel_areas_um2[panels]
             places.append(np.average(result.panel_centroids[panels], axis=0, weights=weights))

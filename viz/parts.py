@@ -19,6 +19,7 @@ from vtkmodules.vtkCommonDataModel import vtkStaticCellLocator
 from bemescape.units import format_time
 
 from .overlay import SHAPE_FRAME, Overlay, safe_text
+from .pores import pore_discs
 from .scales import (
     BACKGROUND,
     INK,
@@ -245,6 +246,9 @@ def scene_parts(
         skin = scene.skin(opening)
         skin.cell_data["colour"] = window_colours(result, opening, density=windows == "density")
         scene.actors["windows"] = present(add_skin(plotter, keep(skin)))
+    pores = pore_discs(result, scene.size_um, shares=windows == "density")
+    if pores.n_cells:
+        scene.actors["windows"] += present(add_skin(plotter, keep(pores), NO_SHADING))
     rims = border_edges(result.faces, result.panel_window)
     scene.actors["rims"] = present(add_lines(plotter, keep(line_mesh(result.vertices[rims])), INK, 3.5))
     if slow:

@@ -61,9 +61,12 @@ def spread_figure(result: EscapeResult) -> Figure:
 
 def _against_distance(axes: Axes, result: EscapeResult, wall: NDArray[np.bool_], factor: float) -> None:
     window = ~wall
-    if not (wall.any() and window.any()):
+    openings = result.panel_centroids[window]
+    if result.pores is not None:
+        openings = np.concatenate([openings, result.pores.centre_um])
+    if not (wall.any() and len(openings)):
         return
-    distance, _ = cKDTree(result.panel_centroids[window]).query(result.panel_centroids[wall])
+    distance, _ = cKDTree(openings).query(result.panel_centroids[wall])
     times, areas = result.panel_time_s[wall] / factor, result.panel_areas_um2[wall]
     edges = np.linspace(0.0, float(distance.max()) * (1.0 + 1e-9), 31)
     number = np.digitize(distance, edges) - 1

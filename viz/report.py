@@ -24,6 +24,9 @@ if TYPE_CHECKING:
 
 __all__ = ["write_report"]
 
+#: A longer table of windows would be the report; `summary.json` has all.
+_MOST_WINDOW_ROWS = 60
+
 # What each picture shows, in the order of the report; wide ones take both columns.
 _CAPTIONS = {
     "view_front.png": (
@@ -152,15 +155,24 @@ def _pictures(images: dict[str, str]) -> str:
 
 
 def _windows(summary: Summary) -> str:
+    shown, left_out = list(summary.windows), ""
+    if len(shown) > _MOST_WINDOW_ROWS:
+        by_share = sorted(shown, key=lambda window: -window.share)
+        shown = by_share[: _MOST_WINDOW_ROWS // 2] + by_share[-_MOST_WINDOW_ROWS // 2 :]
+        left_out = (
+            f"The {len(shown) // 2} with the largest and the {len(shown) // 2} with the smallest shares of "
+            f"{len(summary.windows)}; summary.json has all. "
+        )
     rows = [
         (
             window.name,
             f"{window.area_um2:.4g}",
             percent(window.area_um2 / summary.area_um2),
             percent(window.share, 4) + ("" if window.share_error is None else f" ± {percent(window.share_error, 2)}"),
-            "perfectly absorbing" if window.permeability_um_s is None else f"{window.permeability_um_s:.4g} µm/s",
+            ("perfectly absorbing" if window.permeability_um_s is None else f"{window.permeability_um_s:.4g} µm/s")
+            + (", compact pore" if window.compact else ""),
         )
-        for window in summary.windows
+        for window in shown
     ]
     total = sum(window.share for window in summary.windows)
     return (
@@ -169,7 +181,7 @@ def _windows(summary: Summary) -> str:
             ("window", "area (µm²)", "part of the surface", "share of exits", "permeability"),
             rows,
         )
-        + f'<p class="soft">Share: part of all exits, start uniform in the volume. The shares are not '
+        + f'<p class="soft">{left_out}Share: part of all exits, start uniform in the volume. The shares are not '
         f"scaled to 1; their sum, {total:.6f}, is a check of the solution.</p>"
     )
 

@@ -231,6 +231,14 @@ class DesktopWindow:
             closest, distance = _nearest(self.scene.skin(openings), place)
             name = safe_text(result.windows[int(result.panel_window[openings[closest]])].name)
             text += f", {format_length(distance)} in a straight line from {name}"
+        if result.pores is not None:
+            gap = np.linalg.norm(result.pores.centre_um - place, axis=1) - result.pores.radius_um
+            closest = int(gap.argmin())
+            pore = result.windows[int(result.pores.window[closest])]
+            text += (
+                f", {format_length(max(float(gap[closest]), 0.0))} in a straight line from {safe_text(pore.name)} "
+                f"({100.0 * pore.share:.3g} % of exits)"
+            )
         return text
 
     def _time_on(self, panel: int, place: Floats) -> float:

@@ -13,8 +13,10 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 
-def wall_clusters(centroids: Floats, neighbours: Ints, is_window: NDArray[np.bool_], *, wanted: int = 160) -> Ints:
-    """Cluster number (m,) of each wall panel, −1 in none: slices of the wall between equal distances to the windows.
+def wall_clusters(
+    centroids: Floats, neighbours: Ints, is_window: NDArray[np.bool_], start: Ints, *, wanted: int = 160
+) -> Ints:
+    """Cluster number (m,) of each wall panel, −1 in none: slices of the wall between equal distances to `start`.
 
     Distances run along the wall, so the slices of a branched shape are connected pieces of its branches: along a
     neck a slice is a ring, and u changes little within it.
@@ -25,6 +27,8 @@ def wall_clusters(centroids: Floats, neighbours: Ints, is_window: NDArray[np.boo
     neighbours : (e, 2) int64
         Pairs of panels that share an edge.
     is_window : (m,) bool
+    start : (s,) int64
+        Panels that distances count from: those of the windows.
     wanted : int
         This many clusters at most, half as many at least, if the shape allows.
     """
@@ -34,7 +38,7 @@ def wall_clusters(centroids: Floats, neighbours: Ints, is_window: NDArray[np.boo
         return none
     length = np.linalg.norm(centroids[neighbours[:, 0]] - centroids[neighbours[:, 1]], axis=1)
     graph = csr_matrix(coo_matrix((np.maximum(length, 1e-300), neighbours.T), shape=(m, m)))
-    distance = dijkstra(graph, directed=False, indices=np.flatnonzero(is_window), min_only=True)
+    distance = dijkstra(graph, directed=False, indices=start, min_only=True)
     # A shell without a window (an obstacle) is sliced by height instead.
     apart = ~np.isfinite(distance)
     distance[apart] = centroids[apart, 2] - centroids[apart, 2].min(initial=0.0)

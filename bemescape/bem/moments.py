@@ -26,6 +26,7 @@ from bemescape.bem.kernels import (
 )
 from bemescape.bem.operator import EscapeOperator
 from bemescape.bem.panels import Panels
+from bemescape.bem.sinks import Sinks
 from bemescape.threads import over_rows
 
 __all__ = ["SourcePotential", "source_potential_at", "volume_integral_of_chain"]
@@ -94,7 +95,7 @@ class SourcePotential:
 
     def __init__(self, operator: EscapeOperator) -> None:
         p = operator.panels
-        self._panels = p
+        self._panels, self._pores = p, operator.pores
         pairs = operator.near_double
         shape, rows = pairs.shape, (pairs.indices, pairs.indptr)
         lifted = np.empty(len(pairs.indices), np.float32)
@@ -112,8 +113,11 @@ class SourcePotential:
         # Ψ = r/8π is half of what the layers of r/4π give.
         self._of_constant = whole / 8.0
 
-    def of(self, f: Floats, slope: Floats, source: float) -> Floats:
-        """∫_Ω G f, (m,), from f and its slope ∂f/∂n (m,) on the panels, with Δf = −source inside."""
+    def of(self, f: Floats, slope: Floats, source: float, outflow: Floats | None = None) -> Floats:
+        """∫_Ω G f, (m + p,), from f and its slope ∂f/∂n (m,) on the panels, with Δf = −source inside.
+
+        `outflow` (p,) is that of f through the compact pores.
+        """
         p = self._panels
         used = np.flatnonzero(f)
         out = 0.5 * lifted_single_layer(panel_targets(p), p, used, f[used])
@@ -121,7 +125,13 @@ class SourcePotential:
         used = np.flatnonzero(slope)
         out -= 0.5 * distance_layer(panel_targets(p), p, used, slope[used])
         out -= 0.5 * (self._near_distance @ slope.astype(np.float32))
-        return np.asarray(out - source * self._of_constant)
+        out -= source * self._of_constant
+        if self._pores is None or outflow is None:
+            return np.asarray(out)
+        # A pore's slope adds its outflow times Ψ.
+        out += 0.5 * self._pores.distance_columns(outflow)
+        sinks = self._pores.sinks(outflow)
+        return np.concatenate([out, source_potential_at(p, f, slope, source, sinks.places, sinks)])
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -158,7 +168,9 @@ def _potential_at(
         out[i] = total / _FOUR_PI
 
 
-def source_potential_at(panels: Panels, f: Floats, slope: Floats, source: float, points: Floats) -> Floats:
+def source_potential_at(
+    panels: Panels, f: Floats, slope: Floats, source: float, points: Floats, sinks: Sinks | None = None
+) -> Floats:
     """∫_Ω G f at points (p, 3), as `SourcePotential.of`."""
     out = np.empty(len(points))
     over_rows(
@@ -166,6 +178,8 @@ def source_potential_at(panels: Panels, f: Floats, slope: Floats, source: float,
         np.ascontiguousarray(points), panels.corners, panels.centroids, panels.normals, panels.areas, panels.radii,
         panels.spread, panels.three_points, f, slope, source, out,
     )  # fmt: skip
+    if sinks is not None:
+        out += sinks.distances_at(points) / (2.0 * _FOUR_PI)
     return out
 
 
@@ -184,9 +198,18 @@ _RADON_WEIGHTS = np.array(
 
 
 def volume_integral_of_chain(
-    panels: Panels, m: Floats, m_slope: Floats, factor: float, f: Floats, slope: Floats, source: float
+    panels: Panels,
+    m: Floats,
+    m_slope: Floats,
+    factor: float,
+    f: Floats,
+    slope: Floats,
+    source: float,
+    *,
+    m_sinks: Sinks | None = None,
+    f_sinks: Sinks | None = None,
 ) -> float:
-    """∫_Ω m for Δm = −factor·f and Δf = −source, from boundary values and slopes (m,) of both.
+    """∫_Ω m for Δm = −factor·f and Δf = −source, from boundary values and slopes (m,) of both, and their sinks.
 
     Green's identity twice, with φ = |x|²/6, Δφ = 1, and χ = |x|⁴/120, Δχ = φ:
     ∫m = ∮(m ∂φ/∂n − φ ∂m/∂n) − factor·∫φf, ∫φf = ∮(f ∂χ/∂n − χ ∂f/∂n) − source·∫χ, ∫|x|⁴ = (1/7)∮|x|⁴ x·n.
@@ -201,4 +224,7 @@ def volume_integral_of_chain(
     a = panels.areas
     of_chi = float((a * fourth * heights).sum() / 840.0)
     of_phi_f = float((a * (f * second * heights / 30.0 - slope * fourth / 120.0)).sum()) - source * of_chi
-    return float((a * (m * heights / 3.0 - m_slope * second / 6.0)).sum()) - factor * of_phi_f
+    of_phi_f += 0.0 if f_sinks is None else f_sinks.power(centre, 4) / 120.0
+    of_m = float((a * (m * heights / 3.0 - m_slope * second / 6.0)).sum())
+    of_m += 0.0 if m_sinks is None else m_sinks.power(centre, 2) / 6.0
+    return of_m - factor * of_phi_f

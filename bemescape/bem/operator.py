@@ -5,7 +5,8 @@ On the boundary, with q = ∂u/∂n,
     ½u + K u − V q = b,      b(x) = (1/D) ∫_Ω G(x, y) dy,
 
 averaged over each panel. Unknown are u on the wall and q on the windows, where u = −ρ q with ρ = D/κ
-(0 when perfectly absorbing). Everything here is for D = 1.
+(0 when perfectly absorbing). Compact pores add an unknown and an equation each (`bemescape.bem.compact`).
+Everything here is for D = 1.
 """
 
 from __future__ import annotations
@@ -16,6 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.sparse import csr_matrix
 
+from bemescape.bem.compact import CompactPores, PoreRows, assemble_pores
 from bemescape.bem.near import NearField, build_near_field
 from bemescape.bem.panels import Panels
 from bemescape.bem.sums import FarSums, far_sums
@@ -42,8 +44,10 @@ class EscapeOperator:
         Near-field corrections.
     diagonal : (m,) float64
         ½ plus what makes every row sum of ½ + K vanish: a constant is in its null space, exactly.
-    volume_potential : (m,) float64
-        ∫_Ω G dy, averaged over each panel.
+    volume_potential : (m + p,) float64
+        ∫_Ω G dy, averaged over each panel, and at each compact pore.
+    pores : PoreRows or None
+        The p compact pores.
     """
 
     panels: Panels
@@ -54,6 +58,7 @@ class EscapeOperator:
     near_single: csr_matrix
     diagonal: Floats
     volume_potential: Floats
+    pores: PoreRows | None = None
 
     @property
     def is_window(self) -> NDArray[np.bool_]:
@@ -83,7 +88,13 @@ class EscapeOperator:
         return image
 
 
-def assemble(panels: Panels, window_of: Ints, resistance: Floats, near: NearField | None = None) -> EscapeOperator:
+def assemble(
+    panels: Panels,
+    window_of: Ints,
+    resistance: Floats,
+    near: NearField | None = None,
+    pores: CompactPores | None = None,
+) -> EscapeOperator:
     """Operator for panels in their Morton order; `window_of` and `resistance` (m,) in the same order.
 
     `near` is the near field of these panels where it is known already.
@@ -99,4 +110,7 @@ def assemble(panels: Panels, window_of: Ints, resistance: Floats, near: NearFiel
     sums, every, ones = far_sums(panels), np.arange(m), np.ones(m)
     row_sum = sums.double(every, ones) + near_double @ ones.astype(np.float32)
     volume = 0.5 * sums.lifted(every, ones) + near.volume
-    return EscapeOperator(panels, sums, window_of, resistance, near_double, near_single, -row_sum, volume)
+    rows = assemble_pores(panels, is_window, pores)
+    if rows is not None:
+        volume = np.concatenate([volume, rows.volume_potential])
+    return EscapeOperator(panels, sums, window_of, resistance, near_double, near_single, -row_sum, volume, rows)

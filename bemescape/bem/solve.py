@@ -4,11 +4,11 @@ from __future__ import annotations
 
 import copy
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg import cho_solve, cholesky, qr, solve_triangular
+from scipy.linalg import cho_solve, cholesky, lu_factor, lu_solve, qr, solve_triangular
 
 from bemescape.bem.blas import one_blas_thread
 from bemescape.bem.near import fill_single_rows
@@ -24,15 +24,21 @@ Ints = NDArray[np.int64]
 
 #: Largest dense block of V that the preconditioner factors.
 LARGEST_BLOCK = 6000
+#: Largest dense block of compact pores: they shield one another over the whole wall, so that pieces cost iterations.
+LARGEST_PORE_BLOCK = 4000
 
 
 @dataclass(frozen=True)
 class BoundarySolution:
-    """u on every panel (µm², for D = 1), q = ∂u/∂n on every panel (µm; 0 on the wall), and how it was reached."""
+    """u on every panel (µm², for D = 1), q = ∂u/∂n on every panel (µm; 0 on the wall), and how it was reached.
+
+    `outflow` (p,) is what each compact pore lets out, −∫ ∂u/∂n.
+    """
 
     u: Floats
     q: Floats
     residuals: tuple[float, ...]
+    outflow: Floats = field(default_factory=lambda: np.zeros(0))
 
 
 class _WindowBlocks:
@@ -58,6 +64,21 @@ class _WindowBlocks:
         for members, factor in self._blocks:
             out[members] = cho_solve((factor, True), scaled[members].astype(np.float32), check_finite=False)
         return out / self._root
+
+
+class _PoreBlocks:
+    """Dense inverses of the compact pores' equations among themselves, in pieces of neighbours."""
+
+    def __init__(self, operator: EscapeOperator) -> None:
+        rows = operator.pores
+        pieces = [] if rows is None else rows.pieces(LARGEST_PORE_BLOCK)
+        self.blocks = [] if rows is None else [(piece, lu_factor(rows.block(piece))) for piece in pieces]
+
+    def solve(self, right: Floats) -> Floats:
+        out = np.empty_like(right)
+        for members, factors in self.blocks:
+            out[members] = lu_solve(factors, right[members])
+        return out
 
 
 def _orthonormal(columns: Floats) -> tuple[Floats, Floats]:
@@ -136,21 +157,28 @@ class BoundarySolver:
         self.operator = operator
         self.tolerance = tolerance
         self.most_iterations = most_iterations
-        self._root = np.sqrt(panels.areas / panels.areas.sum())
+        weight = panels.areas / panels.areas.sum()
+        if operator.pores is not None:
+            count = len(operator.pores)
+            weight = np.concatenate([weight, np.full(count, 1.0 / count)])
+        self._root = np.sqrt(weight)
         with one_blas_thread():
             self._prepare(cluster_of)
 
     def _prepare(self, cluster_of: Ints | None) -> None:
         operator, panels = self.operator, self.operator.panels
         self._blocks = _WindowBlocks(operator)
+        self._pore_blocks = _PoreBlocks(operator)
         # Outer space: C = A Z with orthonormal columns (area-weighted).
         if cluster_of is not None and cluster_of.max() >= 0:
             count = int(cluster_of.max()) + 1
-            image = self._root[:, None] * operator.half_plus_double_of_clusters(cluster_of, count)
-            self._outer, self._triangle = _orthonormal(image)
+            image = operator.half_plus_double_of_clusters(cluster_of, count)
+            if operator.pores is not None:
+                image = np.concatenate([image, operator.pores.double_of_clusters(cluster_of, count)])
+            self._outer, self._triangle = _orthonormal(self._root[:, None] * image)
             self._cluster_of = cluster_of
         else:
-            self._outer, self._triangle = np.zeros((len(panels), 0)), np.zeros((0, 0))
+            self._outer, self._triangle = np.zeros((len(self._root), 0)), np.zeros((0, 0))
             self._cluster_of = np.full(len(panels), -1)
 
     def with_resistance(self, resistance: Floats) -> BoundarySolver:
@@ -175,10 +203,10 @@ class BoundarySolver:
 
         Parameters
         ----------
-        right : (m,) float64
-            Averages over the panels.
-        given : (m,) float64, optional
-            Known part of u, zero on the wall; zero everywhere by default.
+        right : (m + p,) float64
+            Averages over the panels, and values at the compact pores.
+        given : (m + p,) float64, optional
+            Known part of u, zero on the wall, and u on each compact pore; zero everywhere by default.
         tell : callable
             Called with the iteration and the relative residual.
 
@@ -190,17 +218,35 @@ class BoundarySolver:
         with one_blas_thread():
             if given is None:
                 return self._solved(right, tell)
-            rest = self._solved(right - self.operator.half_plus_double(given), tell)
-        return BoundarySolution(rest.u + given, rest.q, rest.residuals)
+            m = len(self.operator.panels)
+            known = self.operator.half_plus_double(given[:m])
+            if self.operator.pores is not None:
+                known = np.concatenate([known, self.operator.pores.double(given[:m]) + 0.5 * given[m:]])
+            rest = self._solved(right - known, tell)
+        return BoundarySolution(rest.u + given[:m], rest.q, rest.residuals, rest.outflow)
 
-    def _precondition(self, residual: Floats) -> tuple[Floats, Floats, Floats]:
-        """From a residual to (u, q on windows, and V q which the operator would compute again)."""
-        window = self.operator.is_window
-        q = -self._blocks.solve(residual[window])
-        v_q = self.operator.single(q)
-        u = 2.0 * (residual + v_q)
-        u[window] = -self.operator.resistance[window] * q
-        return u, q, v_q
+    def _precondition(self, residual: Floats) -> tuple[Floats, Floats, Floats, Floats]:
+        """From a residual to (u, q on windows, outflow of pores), and what the flux does to the panels, V q − Σ Q G."""
+        operator, m = self.operator, len(self.operator.panels)
+        window, on_panels = operator.is_window, residual[:m]
+        q = -self._blocks.solve(on_panels[window])
+        of_flux, outflow = operator.single(q), np.zeros(0)
+        if operator.pores is not None:
+            # As if u = 2 × residual varied slowly: K u = −½u at a pore. Without it a constant residual on the panels,
+            # which only the pores can take away, would be answered by a constant u, which has no image at all.
+            outflow = self._pore_blocks.solve(residual[m:] + on_panels[operator.pores.pores.panel])
+            of_flux -= operator.pores.columns(outflow)
+        u = 2.0 * (on_panels + of_flux)
+        u[window] = -operator.resistance[window] * q
+        return u, q, outflow, of_flux
+
+    def _applied(self, u: Floats, q: Floats, outflow: Floats, of_flux: Floats) -> Floats:
+        """The left-hand side, (m + p,)."""
+        on_panels = self.operator.half_plus_double(u) - of_flux
+        pores = self.operator.pores
+        if pores is None:
+            return on_panels
+        return np.concatenate([on_panels, pores.double(u) - pores.single(q) + pores.between(outflow)])
 
     def _solved(self, right: Floats, tell: Callable[[int, float], None]) -> BoundarySolution:
         operator, root, outer = self.operator, self._root, self._outer
@@ -208,7 +254,8 @@ class BoundarySolver:
         most_iterations = self.most_iterations
         scale = float(np.linalg.norm(root * right))
         if scale == 0.0:
-            return BoundarySolution(np.zeros(len(right)), np.zeros(len(right)), ())
+            m, pores = len(window), len(right) - len(window)
+            return BoundarySolution(np.zeros(m), np.zeros(m), (), np.zeros(pores))
         start = outer.T @ (root * right)
         residual = root * right - outer @ start
         beta = float(np.linalg.norm(residual))
@@ -216,7 +263,7 @@ class BoundarySolver:
         # Rows are filled as they come; the system hands out memory only for those.
         basis = np.empty((most_iterations + 1, len(right)))
         basis[0] = residual / beta
-        steps: list[tuple[Floats, Floats]] = []
+        steps: list[tuple[Floats, Floats, Floats]] = []
         outer_parts: list[Floats] = []
         hessenberg = np.zeros((most_iterations + 1, most_iterations))
         givens = np.zeros((most_iterations, 2))
@@ -231,9 +278,9 @@ class BoundarySolver:
                     f"(limit {self.tolerance:.0e}); the surface may have panels of very bad shape: try heal='rebuild'",
                     residuals=tuple(residuals),
                 )
-            u, q, v_q = self._precondition(basis[k] / root)
-            steps.append((u, q))
-            new = root * (operator.half_plus_double(u) - v_q)
+            u, q, outflow, of_flux = self._precondition(basis[k] / root)
+            steps.append((u, q, outflow))
+            new = root * self._applied(u, q, outflow, of_flux)
             part = outer.T @ new
             outer_parts.append(part)
             new -= outer @ part
@@ -258,20 +305,22 @@ class BoundarySolver:
             tell(k, beta / scale)
 
         weights = solve_triangular(hessenberg[:k, :k], rotated[:k]) if k else np.zeros(0)
-        u = np.zeros(len(right))
+        u = np.zeros(len(window))
         q_window = np.zeros(int(window.sum()))
+        outflow = np.zeros(len(right) - len(window))
         outer_weights = start
-        for weight, (u_step, q_step), part in zip(weights, steps, outer_parts, strict=True):
+        for weight, (u_step, q_step, outflow_step), part in zip(weights, steps, outer_parts, strict=True):
             u += weight * u_step
             q_window += weight * q_step
+            outflow += weight * outflow_step
             outer_weights = outer_weights - weight * part
         if len(self._triangle):
             in_cluster = self._cluster_of >= 0
             level = solve_triangular(self._triangle, outer_weights)
             u[in_cluster] += level[self._cluster_of[in_cluster]]
-        q = np.zeros(len(right))
+        q = np.zeros(len(window))
         q[window] = q_window
-        return BoundarySolution(u, q, tuple(residuals))
+        return BoundarySolution(u, q, tuple(residuals), outflow)
 
 
 def solve_boundary(

@@ -28,7 +28,7 @@ class KeptMesh:
 class KeptMeshes:
     """The meshes of the latest solve, one to a resolution."""
 
-    _shapes: tuple[Shape, ...] = ()
+    _shapes: tuple[tuple[Shape, bool], ...] = ()
     _latest: dict[Rung, KeptMesh] = field(default_factory=dict)
     _of_these_shapes: set[Rung] = field(default_factory=set)
 
@@ -56,5 +56,7 @@ class KeptMeshes:
         self._of_these_shapes.add(mesh.rung)
 
 
-def _shapes(placement: Placement) -> tuple[Shape, ...]:
-    return tuple(window.shape for window in placement.windows)
+def _shapes(placement: Placement) -> tuple[tuple[Shape, bool], ...]:
+    """What each window is, and whether it is a compact pore."""
+    compact = set() if placement.pores is None else set(placement.pores.number.tolist())
+    return tuple((window.shape, number in compact) for number, window in enumerate(placement.windows))

@@ -123,16 +123,26 @@ class _PathsAlongWall:
 
     def __init__(self, result: EscapeResult) -> None:
         self._result = result
-        faces = result.faces
-        graph, n = path_graph(result.vertices, faces), len(result.vertices)
-        window_vertices = np.unique(faces[result.panel_window >= 0])
+        vertices, faces = result.vertices, result.faces
+        # A compact pore is a place of its own, joined to the corners of the panel under it.
+        places, owner_of_place = _pore_places(result)
+        graph, n = path_graph(vertices, faces), len(vertices) + len(places)
+        if result.pores is not None:
+            edges, corners = graph.tocoo(), faces[result.pores.panel]
+            start = np.concatenate([edges.row, np.repeat(np.arange(len(vertices), n), 3)])
+            end = np.concatenate([edges.col, corners.ravel()])
+            gap = np.linalg.norm(vertices[corners] - places[:, None], axis=2).ravel()
+            weight = np.concatenate([edges.data, np.maximum(gap, 1e-300)])
+            graph = csr_matrix(coo_matrix((weight, (start, end)), shape=(n, n)))
+        openings = np.concatenate([np.unique(faces[result.panel_window >= 0]), np.arange(len(vertices), n)])
         self._distance, self._before, self._source = dijkstra(
-            graph, directed=False, indices=window_vertices, min_only=True, return_predecessors=True
+            graph, directed=False, indices=openings, min_only=True, return_predecessors=True
         )
         owner = np.full(n, -1)
         inside = result.panel_window >= 0
         owner[faces[inside]] = result.panel_window[inside][:, None]
-        self._owner = owner
+        owner[len(vertices) :] = owner_of_place
+        self._owner, self._places = owner, np.concatenate([vertices, places])
 
     def from_panel(self, panel: int) -> tuple[float, str, Floats]:
         """Length, name of the window and way points (k, 3) from the centroid of a panel."""
@@ -147,7 +157,14 @@ class _PathsAlongWall:
         while self._before[way[-1]] >= 0:
             way.append(int(self._before[way[-1]]))
         window = result.windows[int(self._owner[way[-1]])].name
-        return float(length[best]), window, np.concatenate([centroid[None], result.vertices[way]])
+        return float(length[best]), window, np.concatenate([centroid[None], self._places[way]])
+
+
+def _pore_places(result: EscapeResult) -> tuple[Floats, Ints]:
+    """Middles (p, 3) of the compact pores and the numbers of their windows (p,)."""
+    if result.pores is None:
+        return np.zeros((0, 3)), np.zeros(0, np.int64)
+    return result.pores.centre_um, result.pores.window
 
 
 def path_graph(vertices: Floats, faces: Ints) -> csr_matrix:
@@ -240,6 +257,7 @@ def summarise(result: EscapeResult) -> Summary:
     window_areas = np.array([window.area_um2 for window in result.windows])
     wall_time = result.panel_time_s[result.panel_window < 0]
     ways = result.ways_out
+    compact = set() if result.pores is None else set(result.pores.window.tolist())
     conditional_time = {} if ways is None else dict(zip(ways.windows, ways.mean_conditional_time_s, strict=True))
     return Summary(
         name=result.name,
@@ -257,6 +275,7 @@ def summarise(result: EscapeResult) -> Summary:
                 permeability_um_s=window.permeability_um_s if np.isfinite(window.permeability_um_s) else None,
                 share_error=window.share_error,
                 conditional_time_s=conditional_time.get(number),
+                compact=number in compact,
             )
             for number, window in enumerate(result.windows)
         ],

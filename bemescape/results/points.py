@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from functools import cached_property
 from typing import TYPE_CHECKING
 
@@ -11,6 +12,7 @@ from numpy.typing import NDArray
 from bemescape.bem.field import FieldValues, field_at
 from bemescape.bem.moments import source_potential_at
 from bemescape.bem.panels import Panels, make_panels
+from bemescape.bem.sinks import Sinks
 from bemescape.errors import SettingsError
 
 if TYPE_CHECKING:
@@ -49,7 +51,7 @@ class PlacedPoints:
         if points.ndim != 2 or points.shape[1] != 3 or not np.isfinite(points).all():
             raise SettingsError(f"points have the shape {points.shape}; give finite positions in µm, three to a point")
         self._result, self._points = result, points
-        self._times = self._field(result.panel_time_s, self._time_slope, 1.0 / result.diffusion_um2_s)
+        self._times = self._field(result.panel_time_s, self._time_slope, 1.0 / result.diffusion_um2_s, self._time_sinks)
         diagonal = float(np.linalg.norm(result.vertices.max(axis=0) - result.vertices.min(axis=0)))
         self._on_wall = self._times.gap < _ON_WALL * diagonal
         self._beyond = (self._times.winding < 0.5) & ~self._on_wall
@@ -65,14 +67,34 @@ class PlacedPoints:
     def _panels(self) -> Panels:
         return make_panels(self._result.vertices[self._result.faces])
 
+    @cached_property
+    def _place_of(self) -> NDArray[np.int64]:
+        """Where each panel of the result stands in the order of `_panels`."""
+        place = np.empty_like(self._panels.order)
+        place[self._panels.order] = np.arange(len(place))
+        return place
+
     @property
     def _time_slope(self) -> Floats:
         result = self._result
         return -result.panel_exit_density_per_um2 * result.volume_um3 / result.diffusion_um2_s
 
-    def _field(self, f: Floats, slope: Floats, source: float) -> FieldValues:
+    def _sinks(self, outflow: Floats | None) -> Sinks | None:
+        pores = self._result.pores
+        return None if pores is None or outflow is None else pores.sinks(outflow)
+
+    @property
+    def _time_sinks(self) -> Sinks | None:
+        return None if self._result.pores is None else self._result.pores.time_sinks(self._result)
+
+    def _field(self, f: Floats, slope: Floats, source: float, sinks: Sinks | None) -> FieldValues:
         order = self._panels.order
-        return field_at(self._panels, f[order], slope[order], source, self._points)
+        values = field_at(self._panels, f[order], slope[order], source, self._points)
+        if sinks is None:
+            return values
+        under = self._place_of[self._result.pores.panel] if self._result.pores is not None else np.zeros(0, np.int64)
+        of_pores = sinks.close_to_pores(self._panels, under, self._points) - sinks.potential_at(self._points)
+        return replace(values, u=values.u + of_pores)
 
     def _settled(self, inside: Floats, on_panels: Floats) -> Floats:
         values = np.where(self._on_wall, on_panels[self._panels.order[self._times.nearest]], inside)
@@ -80,12 +102,22 @@ class PlacedPoints:
         return values
 
     def _chained(
-        self, f: Floats, f_slope: Floats, factor: float, source: Floats, source_slope: Floats, constant: float
+        self,
+        f: Floats,
+        f_slope: Floats,
+        factor: float,
+        source: Floats,
+        source_slope: Floats,
+        constant: float,
+        sinks: tuple[Sinks | None, Sinks | None],
     ) -> Floats:
         """Where Δf = −factor · source and Δsource = −constant."""
         order = self._panels.order
-        potential = source_potential_at(self._panels, source[order], source_slope[order], constant, self._points)
-        return self._settled(factor * potential + self._field(f, f_slope, 0.0).u, f)
+        of_f, of_source = sinks
+        potential = source_potential_at(
+            self._panels, source[order], source_slope[order], constant, self._points, of_source
+        )
+        return self._settled(factor * potential + self._field(f, f_slope, 0.0, of_f).u, f)
 
     def times(self) -> Floats:
         """Mean escape time (p,) in s."""
@@ -97,18 +129,33 @@ class PlacedPoints:
         return self._chained(
             spread.panel_second_moment_s2, spread.panel_second_slope_s2_per_um, 2.0 / d,
             self._result.panel_time_s, self._time_slope, 1.0 / d,
+            (self._sinks(spread.pore_second_outflow), self._time_sinks),
         )  # fmt: skip
 
     def splitting(self, ways: WaysOut) -> Floats:
         """Probability (k, p) of leaving through each window."""
-        pairs = zip(ways.panel_splitting, ways.panel_splitting_slope_per_um, strict=True)
-        return np.array([self._settled(self._field(f, slope, 0.0).u, f) for f, slope in pairs])
+        rows = zip(
+            ways.panel_splitting, ways.panel_splitting_slope_per_um,
+            _rows(ways.pore_splitting_outflow, len(ways.windows)), strict=True,
+        )  # fmt: skip
+        return np.array([self._settled(self._field(f, slope, 0.0, self._sinks(flow)).u, f) for f, slope, flow in rows])
 
     def weighted_times(self, ways: WaysOut) -> Floats:
         """Probability times conditional mean time (k, p) in s."""
         d = self._result.diffusion_um2_s
         rows = zip(
             ways.panel_weighted_time_s, ways.panel_weighted_slope_s_per_um,
-            ways.panel_splitting, ways.panel_splitting_slope_per_um, strict=True,
+            ways.panel_splitting, ways.panel_splitting_slope_per_um,
+            _rows(ways.pore_weighted_outflow, len(ways.windows)), _rows(ways.pore_splitting_outflow, len(ways.windows)),
+            strict=True,
         )  # fmt: skip
-        return np.array([self._chained(g, slope, 1.0 / d, w, w_slope, 0.0) for g, slope, w, w_slope in rows])
+        return np.array(
+            [
+                self._chained(g, slope, 1.0 / d, w, w_slope, 0.0, (self._sinks(flow), self._sinks(w_flow)))
+                for g, slope, w, w_slope, flow, w_flow in rows
+            ]
+        )
+
+
+def _rows(outflow: Floats | None, count: int) -> list[Floats | None]:
+    return [None] * count if outflow is None else list(outflow)

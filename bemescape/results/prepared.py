@@ -12,11 +12,13 @@ from numpy.typing import NDArray
 
 from bemescape.bem.averages import enclosed_volume
 from bemescape.bem.clusters import wall_clusters
+from bemescape.bem.compact import CompactPores
 from bemescape.bem.moments import SourcePotential
 from bemescape.bem.near import NearField, build_near_field
 from bemescape.bem.near_reuse import EarlierNearField, near_field_from
 from bemescape.bem.operator import assemble
 from bemescape.bem.panels import Panels, make_panels
+from bemescape.bem.sinks import Sinks
 from bemescape.bem.solve import BoundarySolution, BoundarySolver
 from bemescape.progress import Progress, ProgressEvent, silent
 from bemescape.windows.mesh_edits import face_pairs
@@ -68,6 +70,25 @@ class PreparedMesh:
         """Number of the window of each panel (m,), −1 on the wall."""
         return self.solver.operator.window_of
 
+    @property
+    def source(self) -> Floats:
+        """∫_Ω G on the panels and at the compact pores, (m + p,): the right-hand side of the mean time."""
+        return self.solver.operator.volume_potential
+
+    def sinks(self, solution: BoundarySolution) -> Sinks | None:
+        """The compact pores with what they let out of a solution; None where there are none."""
+        pores = self.solver.operator.pores
+        return None if pores is None else pores.sinks(solution.outflow)
+
+    def outflow(self, solution: BoundarySolution) -> float:
+        """−∫ ∂u/∂n over all windows and pores."""
+        return float(solution.outflow.sum() - self.panels.areas @ solution.q)
+
+    def without_pores(self, solution: BoundarySolution) -> Floats:
+        """The values u (m,) without −Q/(2πr) of each compact pore: what is left varies slowly over the panels."""
+        pores = self.solver.operator.pores
+        return solution.u if pores is None else solution.u + 2.0 * pores.columns(solution.outflow)
+
     @cached_property
     def volume(self) -> float:
         """Enclosed volume in µm³."""
@@ -110,6 +131,7 @@ def prepare_mesh(
     window_of: Ints,
     resistance_of_window: Floats,
     *,
+    pores: CompactPores | None = None,
     tolerance: float,
     earlier: EarlierNearField | None = None,
     keep: bool = False,
@@ -125,6 +147,8 @@ def prepare_mesh(
         Number of the window, −1 on the wall.
     resistance_of_window : (k,) float64
         D/κ of each window in µm, 0 where it absorbs perfectly.
+    pores : CompactPores, optional
+        Their panels are faces here.
     tolerance : float
         Relative residual at which an iteration ends.
     earlier : EarlierNearField, optional
@@ -135,18 +159,23 @@ def prepare_mesh(
     """
     panels = make_panels(vertices[faces])
     sorted_window = window_of[panels.order]
-    resistance = np.where(sorted_window >= 0, resistance_of_window[sorted_window], 0.0)
+    resistance = np.append(resistance_of_window, 0.0)[sorted_window]  # −1, the wall, is the last
     progress(ProgressEvent("near field", None, f"{len(panels)} panels"))
+    number = np.empty_like(panels.order)
+    number[panels.order] = np.arange(len(panels))
+    if pores is not None:
+        pores = replace(pores, panel=number[pores.panel])
     near, kept_rows = None, 0.0
     if earlier is not None:
         near, kept = near_field_from(panels, sorted_window >= 0, earlier)
         kept_rows = float(kept.mean())
     elif keep:
         near = build_near_field(panels, sorted_window >= 0)
-    operator = assemble(panels, sorted_window, resistance, near)
-    number = np.empty_like(panels.order)
-    number[panels.order] = np.arange(len(panels))
-    clusters = wall_clusters(panels.centroids, number[face_pairs(faces)], operator.is_window)
+    operator = assemble(panels, sorted_window, resistance, near, pores)
+    openings = operator.is_window
+    # Slices of equal distance to any of many pores would be rings around each of them: one pore is as good as all.
+    start = np.flatnonzero(openings) if pores is None or openings.any() else pores.panel[:1]
+    clusters = wall_clusters(panels.centroids, number[face_pairs(faces)], openings, start)
     solver = BoundarySolver(operator, cluster_of=clusters, tolerance=tolerance)
     return PreparedMesh(panels, solver, tolerance, progress, near if keep else None, kept_rows)
 
@@ -154,11 +183,13 @@ def prepare_mesh(
 def prepare_mesh_again(result: EscapeResult, progress: Progress = silent) -> PreparedMesh:
     """The solver of a result's own mesh, for questions that are asked afterwards."""
     kappa = np.array([window.permeability_um_s for window in result.windows])
+    barrier = result.diffusion_um2_s / kappa
     return prepare_mesh(
         result.vertices,
         result.faces,
         result.panel_window,
-        result.diffusion_um2_s / kappa,
+        barrier,
+        pores=None if result.pores is None else result.pores.compact(barrier),
         tolerance=float(result.settings.get("tolerance", 1e-6)),
         progress=progress,
     )

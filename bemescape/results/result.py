@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     import pint
 
     from bemescape.results.measures import SlowRegions
+    from bemescape.results.pores import PoreTable
     from bemescape.results.second_opinion import CrossCheck, WalkerEstimate
     from bemescape.results.spread import Spread
     from bemescape.results.starts import StartResult
@@ -104,6 +105,8 @@ class EscapeResult:
         What `crosscheck` gave, where `dataclasses.replace` has put it; it is saved and reported with the result.
     walked : WalkerEstimate or None
         The same of `walkers`.
+    pores : PoreTable or None
+        The windows that are solved as compact pores and have no panels.
     """
 
     name: str
@@ -134,6 +137,7 @@ class EscapeResult:
     ways_out: WaysOut | None = None
     crosschecked: CrossCheck | None = None
     walked: WalkerEstimate | None = None
+    pores: PoreTable | None = None
 
     @cached_property
     def _areas_normals(self) -> tuple[Floats, Floats]:

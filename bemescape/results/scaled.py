@@ -5,6 +5,9 @@ from __future__ import annotations
 import math
 from dataclasses import replace
 
+import numpy as np
+from numpy.typing import NDArray
+
 from bemescape.errors import SettingsError
 from bemescape.results.result import EscapeResult
 from bemescape.results.spread import Spread
@@ -13,6 +16,8 @@ from bemescape.results.ways_out import WaysOut
 from bemescape.units import Quantity, diffusion_um2_s
 
 __all__ = ["with_diffusion"]
+
+Floats = NDArray[np.float64]
 
 
 def with_diffusion(result: EscapeResult, diffusion: Quantity) -> EscapeResult:
@@ -48,6 +53,7 @@ def _spread(spread: Spread, factor: float) -> Spread:
         panel_second_moment_s2=factor**2 * spread.panel_second_moment_s2,
         panel_second_slope_s2_per_um=factor**2 * spread.panel_second_slope_s2_per_um,
         mean_time_s=factor * spread.mean_time_s,
+        pore_second_outflow=_scaled(spread.pore_second_outflow, factor**2),
     )
 
 
@@ -69,4 +75,9 @@ def _ways_out(ways: WaysOut, factor: float) -> WaysOut:
         panel_weighted_time_s=factor * ways.panel_weighted_time_s,
         panel_weighted_slope_s_per_um=factor * ways.panel_weighted_slope_s_per_um,
         mean_weighted_time_s=factor * ways.mean_weighted_time_s,
+        pore_weighted_outflow=_scaled(ways.pore_weighted_outflow, factor),
     )
+
+
+def _scaled(values: Floats | None, factor: float) -> Floats | None:
+    return None if values is None else factor * values

@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from bemescape.bem.averages import volume_integral
 from bemescape.bem.moments import volume_integral_of_chain
+from bemescape.bem.sinks import with_discs
 from bemescape.results.prepared import PreparedMesh
 from bemescape.units import format_time
 
@@ -35,6 +36,8 @@ class Spread:
         Estimated numerical error of the standard deviation, relative.
     balance : float
         Outflow of the second moment / (2 D⁻¹ ∫ mean time) − 1: 0 for an exact solution.
+    pore_second_outflow : (p,) float64 or None
+        −∫ of its slope over each compact pore, s² µm; None where there are none.
     """
 
     panel_second_moment_s2: Floats
@@ -43,6 +46,7 @@ class Spread:
     cv: float
     relative_error: float
     balance: float
+    pore_second_outflow: Floats | None = None
 
     @property
     def sd_s(self) -> float:
@@ -80,6 +84,7 @@ def find_spread(
     u: Floats,
     q: Floats,
     *,
+    outflow: Floats | None = None,
     diffusion_um2_s: float,
     mean_time_s: float,
     relative_error: float,
@@ -91,28 +96,34 @@ def find_spread(
     prepared : PreparedMesh
     u, q : (m,) float64
         Mean time and its slope for D = 1, in the order of the panels.
+    outflow : (p,) float64, optional
+        Of the mean time through the compact pores.
     diffusion_um2_s : float
     mean_time_s, relative_error : float
         Stated mean and its error.
     """
     panels, volume = prepared.panels, prepared.volume
-    right = 2.0 * prepared.source_potential.of(u, q, 1.0)
+    right = 2.0 * prepared.source_potential.of(u, q, 1.0, outflow)
     second = prepared.solve(right, "second moment")
-    total = volume_integral(panels, u, q, 1.0)
+    pores, sinks = prepared.solver.operator.pores, prepared.sinks(second)
+    of_mean = None if pores is None or outflow is None else pores.sinks(outflow)
+    total = volume_integral(panels, u, q, 1.0, of_mean)
     mean = total / volume
-    mean_square = volume_integral_of_chain(panels, second.u, second.q, 2.0, u, q, 1.0) / volume
-    balance = -float(panels.areas @ second.q) / (2.0 * total) - 1.0
+    chain = volume_integral_of_chain(panels, second.u, second.q, 2.0, u, q, 1.0, m_sinks=sinks, f_sinks=of_mean)
+    mean_square = chain / volume
+    balance = prepared.outflow(second) / (2.0 * total) - 1.0
     variance = max(mean_square - mean**2, 0.0)
     # The mean's error moves the second moment by twice its part, and the deviation by once; the balance is what
     # this solve adds.
     own = abs(balance) * mean_square / max(2.0 * variance, 1e-300)
     return Spread(
-        panel_second_moment_s2=second.u[prepared.back] / diffusion_um2_s**2,
+        panel_second_moment_s2=with_discs(panels, second.u, sinks, least=0.0)[prepared.back] / diffusion_um2_s**2,
         panel_second_slope_s2_per_um=second.q[prepared.back] / diffusion_um2_s**2,
         mean_time_s=mean_time_s,
         cv=float(np.sqrt(variance)) / mean,
         relative_error=relative_error + own,
         balance=balance,
+        pore_second_outflow=None if pores is None else second.outflow / diffusion_um2_s**2,
     )
 
 

@@ -26,6 +26,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from bemescape.errors import EscapeError, SettingsError
+from bemescape.results.pores import PoreTable
 from bemescape.results.result import EscapeResult, WindowResult
 from bemescape.results.second_opinion import CrossCheck, WalkerEstimate
 from bemescape.results.spread import Spread
@@ -47,7 +48,7 @@ PICTURES = (
     "survival.png",
     "convergence.png",
 )
-_FORMAT = "bemescape result 2"
+_FORMAT = "bemescape result 3"
 _HEADER = "header_json"
 STAGING = ".saving-"
 
@@ -62,6 +63,7 @@ _ARRAYS: Mapping[str, tuple[type[np.generic], int]] = {
 }
 #: Parts of a result that may be missing: name -> their class, and their arrays with a value, or a row, to a panel.
 _PARTS: Mapping[str, tuple[Any, tuple[str, ...]]] = {
+    "pores": (PoreTable, ()),
     "spread": (Spread, ("panel_second_moment_s2", "panel_second_slope_s2_per_um")),
     "ways_out": (
         WaysOut,
@@ -234,6 +236,7 @@ def _read_values(path: Path) -> EscapeResult:
         }
     _check_arrays(arrays, windows=len(header["windows"]))
     parts = {name: _read_part(name, header.pop(name), on_panels.get(name, {}), arrays) for name in _PARTS}
+    _check_pores(parts, panels=len(arrays["faces"]), windows=len(header["windows"]))
     for array in arrays.values():
         array.setflags(write=False)
     return EscapeResult(**arrays, **parts, **_typed(header))
@@ -245,7 +248,7 @@ def _read_part(
     if plain is None:
         return None
     kind, _ = _PARTS[name]
-    rows = () if kind is Spread else (len(plain["windows"]),)
+    rows = (len(plain["windows"]),) if kind is WaysOut else ()
     for key, array in on_panels.items():
         if array.dtype != np.float64 or array.shape != (*rows, len(arrays["faces"])):
             raise ValueError(f"{name}.{key} is {array.dtype} {array.shape}")
@@ -254,6 +257,33 @@ def _read_part(
     if kind is WaysOut:
         values["windows"] = tuple(plain["windows"])
     return kind(**on_panels, **values)
+
+
+def _check_pores(parts: Mapping[str, Any], *, panels: int, windows: int) -> None:
+    """Shapes and ranges of what the parts hold of compact pores."""
+    table, spread, ways = parts["pores"], parts["spread"], parts["ways_out"]
+    count = 0
+    if table is not None:
+        count = len(table)
+        for entry in fields(PoreTable):
+            array = getattr(table, entry.name)
+            rows = (count, 3) if entry.name in ("centre_um", "normal") else (count,)
+            kind = np.int64 if entry.name in ("window", "panel") else np.float64
+            if array.shape != rows or array.dtype != kind or not np.isfinite(array).all():
+                raise ValueError(f"pores.{entry.name} is {array.dtype} {array.shape}")
+        for name, end in (("window", windows), ("panel", panels)):
+            array = getattr(table, name)
+            if count == 0 or array.min() < 0 or array.max() >= end:
+                raise ValueError(f"pores.{name} points outside its range")
+        if table.radius_um.min() <= 0.0:
+            raise ValueError("pores.radius_um holds a radius that is not above 0")
+    outflows: list[tuple[Any, tuple[int, ...]]] = [] if spread is None else [(spread.pore_second_outflow, (count,))]
+    if ways is not None:
+        each = (len(ways.windows), count)
+        outflows += [(ways.pore_splitting_outflow, each), (ways.pore_weighted_outflow, each)]
+    for array, shape in outflows:
+        if (array is None) != (table is None) or (array is not None and array.shape != shape):
+            raise ValueError("the outflow through compact pores does not fit them")
 
 
 def _typed(header: dict[str, Any]) -> dict[str, Any]:

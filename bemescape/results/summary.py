@@ -41,6 +41,7 @@ class WindowSummary(_Model):
     conditional_time_s: float | None = Field(
         default=None, description="mean time of those who leave through it, start uniform; null: not computed"
     )
+    compact: bool = Field(default=False, description="solved as a compact pore: one unknown, no panels")
 
 
 class SpreadSummary(_Model):

@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from bemescape.bem.averages import volume_integral
 from bemescape.bem.moments import volume_integral_of_chain
+from bemescape.bem.sinks import with_discs
 from bemescape.errors import SettingsError
 from bemescape.results.prepared import PreparedMesh
 from bemescape.results.result import WindowResult
@@ -56,6 +57,10 @@ class WaysOut:
         Estimated error of the conditional times, relative, for windows that many leave through.
     sum_error : float or None
         Largest |Σw − 1| on the panels; None where not all windows were asked for.
+    pore_splitting_outflow : (k, p) float64 or None
+        −∫ ∂w/∂n over each compact pore, µm; None where there are none.
+    pore_weighted_outflow : (k, p) float64 or None
+        The same of g, s µm.
     """
 
     windows: tuple[int, ...]
@@ -68,6 +73,8 @@ class WaysOut:
     splitting_error: Floats
     relative_error: float
     sum_error: float | None
+    pore_splitting_outflow: Floats | None = None
+    pore_weighted_outflow: Floats | None = None
 
     @property
     def mean_conditional_time_s(self) -> Floats:
@@ -116,30 +123,44 @@ def find_ways_out(
     windows: Sequence[int],
 ) -> WaysOut:
     """Solve for each of the windows with these numbers; `result` gives D, the stated errors and the shares."""
-    panels, solver, back = prepared.panels, prepared.solver, prepared.back
+    panels, pores, back = prepared.panels, prepared.solver.operator.pores, prepared.back
+    unknowns = len(prepared.source)
+    count = unknowns - len(panels)
+    of_pores = np.zeros((2, len(windows), count))
     d = result.diffusion_um2_s
     k = len(windows)
     fields = np.zeros((4, k, len(panels)))
     means = np.zeros((2, k))
     for row, number in enumerate(windows):
         name = result.windows[number].name
-        f, slope = np.ones(len(panels)), np.zeros(len(panels))
+        f, slope, outflow = np.ones(len(panels)), np.zeros(len(panels)), np.zeros(count)
         if len(result.windows) > 1:
-            given = (prepared.window_of == number).astype(np.float64)
-            ways = prepared.solve(np.zeros(len(panels)), f"ways out: {name}", given=given)
-            f, slope = ways.u, ways.q
-        times = prepared.solve(prepared.source_potential.of(f, slope, 0.0), f"times out: {name}")
-        fields[:, row] = f[back], slope[back], times.u[back] / d, times.q[back] / d
-        means[0, row] = volume_integral(panels, f, slope, 0.0) / prepared.volume
-        of_chain = volume_integral_of_chain(panels, times.u, times.q, 1.0, f, slope, 0.0)
+            given = np.zeros(unknowns)
+            given[: len(panels)] = prepared.window_of == number
+            if result.pores is not None:
+                given[len(panels) :] = result.pores.window == number
+            ways = prepared.solve(np.zeros(unknowns), f"ways out: {name}", given=given)
+            f, slope, outflow = ways.u, ways.q, ways.outflow
+        f_sinks = None if pores is None else pores.sinks(outflow)
+        times = prepared.solve(prepared.source_potential.of(f, slope, 0.0, outflow), f"times out: {name}")
+        of_pores[:, row] = outflow, times.outflow / d
+        fields[0, row] = with_discs(panels, f, f_sinks)[back]
+        fields[1, row] = slope[back]
+        fields[2, row] = with_discs(panels, times.u, prepared.sinks(times), least=0.0)[back] / d
+        fields[3, row] = times.q[back] / d
+        means[0, row] = volume_integral(panels, f, slope, 0.0, f_sinks) / prepared.volume
+        of_chain = volume_integral_of_chain(
+            panels, times.u, times.q, 1.0, f, slope, 0.0, m_sinks=prepared.sinks(times), f_sinks=f_sinks
+        )
         means[1, row] = of_chain / prepared.volume / d
     shares = np.array([result.windows[number].share for number in windows])
     share_errors = np.array([result.windows[number].share_error or 0.0 for number in windows])
     splitting_error = share_errors + np.abs(means[0] - shares)
-    order = solver.operator.panels.order
+    order = panels.order
     u = result.panel_time_s[order] * d
     q = -result.panel_exit_density_per_um2[order] * prepared.volume
-    own_mean = volume_integral(panels, u, q, 1.0) / prepared.volume / d
+    sinks = None if pores is None or result.pores is None else result.pores.time_sinks(result, per_diffusion=False)
+    own_mean = volume_integral(panels, u, q, 1.0, sinks) / prepared.volume / d
     return WaysOut(
         windows=tuple(windows),
         panel_splitting=fields[0],
@@ -152,6 +173,8 @@ def find_ways_out(
         # The fields are those of one mesh, the mean is extrapolated: their difference counts too.
         relative_error=result.relative_error + abs(own_mean / result.mean_time_s - 1.0) + float(splitting_error.max()),
         sum_error=float(np.abs(fields[0].sum(axis=0) - 1.0).max()) if k == len(result.windows) else None,
+        pore_splitting_outflow=None if pores is None else of_pores[0],
+        pore_weighted_outflow=None if pores is None else of_pores[1],
     )
 
 
@@ -160,4 +183,10 @@ def conductance_um3_s(result: EscapeResult, ways_out: WaysOut) -> Floats:
     areas = result.panel_areas_um2
     owner = [result.panel_window == number for number in ways_out.windows]
     flow = ways_out.panel_splitting_slope_per_um * areas
-    return result.diffusion_um2_s * np.array([[row[mask].sum() for mask in owner] for row in flow])
+    conductance = np.array([[row[mask].sum() for mask in owner] for row in flow])
+    if result.pores is not None and ways_out.pore_splitting_outflow is not None:
+        column = {number: k for k, number in enumerate(ways_out.windows)}
+        for pore, number in enumerate(result.pores.window.tolist()):
+            if number in column:
+                conductance[:, column[number]] -= ways_out.pore_splitting_outflow[:, pore]
+    return np.asarray(result.diffusion_um2_s * conductance)

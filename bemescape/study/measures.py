@@ -110,6 +110,8 @@ def narrowest_neck_radius_um(result: EscapeResult) -> float:
         float(np.linalg.norm(vectors[result.panel_window == number].sum(axis=0)))
         for number in range(len(result.windows))
     )
+    if result.pores is not None:
+        flat += math.pi * float((result.pores.radius_um**2).sum())
     wall_times = result.panel_time_s[~window]
     if not len(wall_times):
         return math.sqrt(float(areas.sum()) / math.pi)

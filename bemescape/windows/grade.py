@@ -115,7 +115,8 @@ def graded(
         _refuse_overlap(mesh, window_of, members[number], patch, patches)
         window_of[members[number]] = number
     layered = _layered(Mesh(mesh.vertices, mesh.faces, np.arange(len(mesh.faces))), window_of, patches, fineness)
-    return GradedMesh(layered.vertices, layered.faces, mesh.parent[layered.parent], window_of[layered.parent])
+    numbers = placement.numbered(window_of[layered.parent])
+    return GradedMesh(layered.vertices, layered.faces, mesh.parent[layered.parent], numbers)
 
 
 def _rim_size(patch: Patch, fineness: Fineness) -> float:

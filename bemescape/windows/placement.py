@@ -10,16 +10,34 @@ from numpy.typing import NDArray
 
 from bemescape.errors import WindowError
 from bemescape.surface.surface import Surface
+from bemescape.windows.compact import PlacedPores, fits_compact, placed_pores
 from bemescape.windows.contact import contact_patch
 from bemescape.windows.lid import with_lid
 from bemescape.windows.patch import Patch, disc_patch, label_patch, patch_of_faces
-from bemescape.windows.pores import pores_at_points, refuse_many_pores, scattered_pores
+from bemescape.windows.pores import (
+    MOST_MESHED_PORES,
+    PANELS_PER_PORE,
+    pore_count,
+    pores_at_points,
+    refuse_many_meshed,
+    refuse_many_pores,
+    scattered_pores,
+)
 from bemescape.windows.wall import Wall
 from bemescape.windows.window import Disc, Labels, Lid, Near, Points, Scatter, Window
 
 __all__ = ["Placement", "place_windows"]
 
 Ints = NDArray[np.int64]
+
+#: Round windows that get panels of their own unasked: their rims take about five sixths of the usual budget of 60 000
+#: panels.
+MESHED_UNASKED = 50_000 // PANELS_PER_PORE
+_ROUND = Disc | Points | Scatter
+_DO_NOT_FIT = (
+    "they are too large, too close or too near sharp edges to be compact pores unasked: solve fewer, or ask for "
+    "compact = true and mind the stated error"
+)
 
 
 @dataclass(frozen=True, eq=False)
@@ -33,11 +51,15 @@ class Placement:
     windows : tuple of Window
         In the order given, each group of pores taken apart into its pores.
     patches : tuple of Patch
-        Where each of them lies.
+        Where those lie that get panels of their own.
     notes : tuple of str
         Remarks for the reader.
     source_face : (m,) int64 or None
         The face of the surface given in which each face of `surface` lies, −1 on lids; None where it is the same.
+    meshed : (k,) int64 or None
+        The numbers of the windows that `patches` belong to; None where all have panels.
+    pores : PlacedPores or None
+        The other windows.
     """
 
     surface: Surface
@@ -45,16 +67,24 @@ class Placement:
     patches: tuple[Patch, ...]
     notes: tuple[str, ...]
     source_face: Ints | None = None
+    meshed: Ints | None = None
+    pores: PlacedPores | None = None
+
+    def numbered(self, patch_of: Ints) -> Ints:
+        """Numbers of windows (m,) from those of patches (m,); −1 stays."""
+        return patch_of if self.meshed is None else np.append(self.meshed, -1)[patch_of]
 
     def faces_given(self, faces: Ints) -> Ints:
         """Faces of the surface given (k,) from faces of `surface` (k,); −1 on lids."""
         return faces if self.source_face is None else self.source_face[faces]
 
 
-def place_windows(surface: Surface, windows: Sequence[Window]) -> Placement:
+def place_windows(surface: Surface, windows: Sequence[Window], *, most_meshed: int | None = None) -> Placement:
     """Find every window on the wall, or refuse with names, distances and a remedy.
 
-    Lids come first, since they change the surface; scattered pores last, since they keep clear of all others.
+    Lids come first, since they change the surface; scattered pores last, since they keep clear of all others. Where
+    there are more than `most_meshed` round windows (`MESHED_UNASKED` by default), those that
+    are small enough become compact pores; `Window.compact` decides otherwise.
 
     Raises
     ------
@@ -75,27 +105,62 @@ def place_windows(surface: Surface, windows: Sequence[Window]) -> Placement:
             wall, remarks = with_lid(wall, window, window.shape, lids)
             lids.append(window.name)
             notes += remarks
-    found: dict[int, list[tuple[Window, Patch]]] = {}
+    most_meshed = MESHED_UNASKED if most_meshed is None else min(most_meshed, MOST_MESHED_PORES)
+    many = sum(pore_count(surface, window) for window in windows if isinstance(window.shape, _ROUND)) > most_meshed
+    found: dict[int, list[tuple[Window, Patch | None]]] = {}
     for number, window in enumerate(windows):
         if not isinstance(window.shape, Scatter):
-            found[number], remarks = _found(wall, window, lids)
+            found[number], remarks = _found(wall, window, lids, many=many)
             notes += remarks
     for number, window in enumerate(windows):
         if isinstance(window.shape, Scatter):
-            taken = [patch for pairs in found.values() for _, patch in pairs]
-            discs, remarks = scattered_pores(wall, window, window.shape, taken)
+            discs, remarks = scattered_pores(wall, window, window.shape, *_taken(found))
             notes += remarks
-            found[number], remarks = _discs(wall, window, discs)
+            found[number], remarks = _pores(wall, window, discs, many=many)
             notes += remarks
     pairs = [pair for number in range(len(windows)) for pair in found[number]]
     _refuse_equal_names([window.name for window, _ in pairs])
+    meshed = [number for number, (_, patch) in enumerate(pairs) if patch is not None]
+    compact = [number for number, (_, patch) in enumerate(pairs) if patch is None]
+    _refuse_many_that_do_not_fit(pairs)
+    patches = tuple(patch for _, patch in pairs if patch is not None)
+    pores = placed_pores(wall, compact, [pairs[number][0] for number in compact], patches)
+    if compact:
+        notes.append(_compact_note(len(compact), len(meshed)))
     return Placement(
         wall.surface,
         tuple(window for window, _ in pairs),
-        tuple(patch for _, patch in pairs),
+        patches,
         tuple(notes),
         wall.source_face if lids else None,
+        np.asarray(meshed, np.int64) if compact else None,
+        pores,
     )
+
+
+def _compact_note(compact: int, meshed: int) -> str:
+    rest = f"; the other {meshed} have panels of their own" if meshed else ""
+    return (
+        f"{compact} round window{'s are' if compact > 1 else ' is'} solved as compact pore{'s' * (compact > 1)}, one "
+        f"unknown each, by their radius and the wall's curvature around them{rest}"
+    )
+
+
+def _taken(found: dict[int, list[tuple[Window, Patch | None]]]) -> tuple[list[Patch], list[Disc]]:
+    """What a new pore must keep clear of: patches of meshed windows, and compact pores."""
+    pairs = [pair for several in found.values() for pair in several]
+    discs = [window.shape for window, patch in pairs if patch is None and isinstance(window.shape, Disc)]
+    return [patch for _, patch in pairs if patch is not None], discs
+
+
+def _refuse_many_that_do_not_fit(pairs: Sequence[tuple[Window, Patch | None]]) -> None:
+    round_ones = [window for window, patch in pairs if patch is not None and patch.disc is not None]
+    if len(round_ones) > MOST_MESHED_PORES:
+        refuse_many_meshed(
+            round_ones[-1].name,
+            len(round_ones),
+            _DO_NOT_FIT,
+        )
 
 
 def _refuse_equal_names(names: Sequence[str]) -> None:
@@ -106,31 +171,48 @@ def _refuse_equal_names(names: Sequence[str]) -> None:
         seen.add(name)
 
 
-def _found(wall: Wall, window: Window, lids: Sequence[str]) -> tuple[list[tuple[Window, Patch]], list[str]]:
+def _found(
+    wall: Wall, window: Window, lids: Sequence[str], *, many: bool
+) -> tuple[list[tuple[Window, Patch | None]], list[str]]:
     shape = window.shape
     notes: list[str] = []
     if isinstance(shape, Disc):
-        patch, notes = disc_patch(wall, window, shape)
-    elif isinstance(shape, Labels):
+        return _pores(wall, window, [window], many=many)
+    if window.compact and not isinstance(shape, Points):
+        raise WindowError(
+            f"window {window.name!r} is of the kind {type(shape).__name__.lower()}, and only round windows (disc, "
+            "points, scatter) can be compact pores; leave compact out"
+        )
+    if isinstance(shape, Labels):
         patch = label_patch(wall, window, shape)
     elif isinstance(shape, Near):
         patch, notes = contact_patch(wall, window, shape)
     elif isinstance(shape, Points):
         discs, notes = pores_at_points(wall, window, shape)
-        pores, remarks = _discs(wall, window, discs)
+        pores, remarks = _pores(wall, window, discs, many=many)
         return pores, notes + remarks
     else:
         patch = _lid_patch(wall, window, lids)
     return [(window, patch)], notes
 
 
-def _discs(wall: Wall, group: Window, pores: Sequence[Window]) -> tuple[list[tuple[Window, Patch]], list[str]]:
-    """The patches of a group's pores; what many of them have to say is said once."""
-    pairs, remarked = [], []
-    for pore in pores:
-        if not isinstance(pore.shape, Disc):
-            raise TypeError(f"a pore of {group.name!r} is no disc")
-        patch, remarks = disc_patch(wall, pore, pore.shape)
+def _pores(
+    wall: Wall, group: Window, pores: Sequence[Window], *, many: bool
+) -> tuple[list[tuple[Window, Patch | None]], list[str]]:
+    """A group's pores, with patches unless they are compact; what many of them have to say is said once."""
+    discs = [pore.shape for pore in pores if isinstance(pore.shape, Disc)]
+    compact = np.full(len(pores), group.compact is True)
+    if group.compact is None and many:
+        compact = fits_compact(wall, pores, discs)
+    pairs: list[tuple[Window, Patch | None]] = []
+    remarked: list[str] = []
+    if (~compact).sum() > MOST_MESHED_PORES:
+        refuse_many_meshed(group.name, int((~compact).sum()), _DO_NOT_FIT)
+    for pore, disc, is_compact in zip(pores, discs, compact, strict=True):
+        if is_compact:
+            pairs.append((pore, None))
+            continue
+        patch, remarks = disc_patch(wall, pore, disc)
         pairs.append((pore, patch))
         if remarks:
             remarked.append(remarks[0])

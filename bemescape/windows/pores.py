@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import NoReturn
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,13 +16,24 @@ from bemescape.windows.patch import Patch
 from bemescape.windows.wall import Wall
 from bemescape.windows.window import Disc, Points, Scatter, Window, pore_name, shown_place
 
-__all__ = ["MOST_MESHED_PORES", "PANELS_PER_PORE", "pores_at_points", "refuse_many_pores", "scattered_pores"]
+__all__ = [
+    "MOST_COMPACT_PORES",
+    "MOST_MESHED_PORES",
+    "PANELS_PER_PORE",
+    "pore_count",
+    "pores_at_points",
+    "refuse_many_meshed",
+    "refuse_many_pores",
+    "scattered_pores",
+]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-#: Each pore is a window with panels of its own; above this many the panels of the pores leave none for the wall.
+#: Of pores with panels of their own: above this many the panels of the pores leave none for the wall.
 MOST_MESHED_PORES = 200
+#: Of compact pores: each meets each other and every panel in each iteration.
+MOST_COMPACT_PORES = 20_000
 #: Panels that the rim of one pore takes at the first resolution, about (measured).
 PANELS_PER_PORE = 1000
 #: Trials in a row that find no free place before a surface counts as full.
@@ -42,14 +54,15 @@ def pore_count(surface: Surface, window: Window) -> int:
 
 
 def refuse_many_pores(surface: Surface, windows: Sequence[Window]) -> None:
-    """Refuse what would need too many panels, before any pore is placed.
+    """Refuse what would need too many panels or pairs, before any pore is placed.
 
     Raises
     ------
     WindowError
-        More pores than `MOST_MESHED_PORES`, or a density that gives less than one.
+        More pores than `MOST_COMPACT_PORES`, or than `MOST_MESHED_PORES` that must have panels; a density that gives
+        less than one.
     """
-    pores = 0
+    pores = meshed = 0
     for window in windows:
         if not isinstance(window.shape, Points | Scatter):
             continue
@@ -60,12 +73,28 @@ def refuse_many_pores(surface: Surface, windows: Sequence[Window]) -> None:
                 "is less than one pore; raise the density or give a count"
             )
         pores += count
-        if pores > MOST_MESHED_PORES:
+        meshed += count if window.compact is False else 0
+        if meshed > MOST_MESHED_PORES:
+            refuse_many_meshed(window.name, meshed, "leave compact = false out")
+        if pores > MOST_COMPACT_PORES:
             raise WindowError(
-                f"window {window.name!r} brings the pores to {pores} (limit {MOST_MESHED_PORES}): with about "
-                f"{PANELS_PER_PORE} panels for each they would take {pores * PANELS_PER_PORE} panels; solve fewer "
-                "pores, or lump neighbours into larger ones"
+                f"window {window.name!r} brings the pores to {pores} (limit {MOST_COMPACT_PORES}, of which each meets "
+                "each other in every iteration); solve a part of the wall, or lump neighbours into larger pores"
             )
+
+
+def refuse_many_meshed(name: str, count: int, remedy: str) -> NoReturn:
+    """Refuse pores that would all need panels of their own.
+
+    Raises
+    ------
+    WindowError
+        Always.
+    """
+    raise WindowError(
+        f"window {name!r} brings the pores with panels of their own to {count} (limit {MOST_MESHED_PORES}): with about "
+        f"{PANELS_PER_PORE} panels for each they would take {count * PANELS_PER_PORE} panels; {remedy}"
+    )
 
 
 def pores_at_points(wall: Wall, window: Window, points: Points) -> tuple[list[Window], list[str]]:
@@ -128,14 +157,14 @@ def _discs(group: Window, places: Floats, radius_um: float) -> list[Window]:
     for number, place in enumerate(places):
         x, y, z = (float(value) for value in place)
         name = pore_name(group.name, number)
-        discs.append(Window(name, Disc((x, y, z), radius_um), group.permeability_um_s))
+        discs.append(Window(name, Disc((x, y, z), radius_um), group.permeability_um_s, group.compact))
     return discs
 
 
 def scattered_pores(
-    wall: Wall, window: Window, scatter: Scatter, taken: Sequence[Patch]
+    wall: Wall, window: Window, scatter: Scatter, taken: Sequence[Patch], pores: Sequence[Disc] = ()
 ) -> tuple[list[Window], list[str]]:
-    """Discs at random places of the wall, clear of one another and of the patches `taken`.
+    """Discs at random places of the wall, clear of one another, of the patches `taken` and of other `pores`.
 
     Strategy: places come evenly over the area; each is kept if all pores before it and all other windows are far
     enough, until there are enough or none has fitted for long. Distances are straight lines, so that a pore also
@@ -156,6 +185,9 @@ def scattered_pores(
     while len(kept) < wanted and failed < _TRIALS_TO_GIVE_UP:
         places, face = _random_places(wall, cumulative, random)
         free = _clear_of(places, face, taken, scatter.radius_um + scatter.gap_um)
+        for pore_radius in {pore.radius_um for pore in pores}:
+            middles = cKDTree([pore.centre_um for pore in pores if pore.radius_um == pore_radius])
+            free &= middles.query(places)[0] >= pore_radius + scatter.radius_um + scatter.gap_um
         for place, is_free in zip(places, free, strict=True):
             if is_free and _fits(place, kept, cells, spacing):
                 cells.setdefault(_cell(place, spacing), []).append(len(kept))

@@ -102,6 +102,9 @@ class Window:
         Which part of the wall it takes.
     permeability_um_s : float
         κ in µm/s; infinite for a perfectly absorbing window.
+    compact : bool or None
+        Of round windows: True, solved without panels of its own, as a compact pore; False, with them; None, decided by
+        how many there are and how small.
 
     Examples
     --------
@@ -112,16 +115,27 @@ class Window:
     name: str
     shape: Shape
     permeability_um_s: float = math.inf
+    compact: bool | None = None
 
     def __post_init__(self) -> None:
+        if self.compact not in (None, True, False):
+            raise SettingsError(f"compact of window {self.name!r} is {self.compact!r}; it must be True, False or None")
         if not self.name.strip():
             raise WindowError("a window has an empty name; give it a short name, such as 'neck'")
 
     @classmethod
     def disc(
-        cls, name: str, *, centre: Sequence[float], radius: Quantity, permeability: Quantity | None = None
+        cls,
+        name: str,
+        *,
+        centre: Sequence[float],
+        radius: Quantity,
+        permeability: Quantity | None = None,
+        compact: bool | None = None,
     ) -> Window:
         """The wall within `radius` (straight line) of `centre`, (3,) in µm, connected to the nearest wall point.
+
+        `compact` says whether it is solved as a compact pore; with few windows it is not, unless asked for.
 
         Raises
         ------
@@ -131,7 +145,8 @@ class Window:
             The radius or the permeability is not a positive quantity.
         """
         place = _position(centre, f"the centre of window {name!r}")
-        return cls(name, Disc(place, length_um(radius, f"radius of window {name!r}")), permeability_um_s(permeability))
+        disc = Disc(place, length_um(radius, f"radius of window {name!r}"))
+        return cls(name, disc, permeability_um_s(permeability), compact)
 
     @classmethod
     def labels(cls, name: str, *, array: str, value: Any, permeability: Quantity | None = None) -> Window:
@@ -236,6 +251,7 @@ class Window:
         farthest: Quantity | None = None,
         lines: Sequence[int] = (),
         permeability: Quantity | None = None,
+        compact: bool | None = None,
     ) -> Window:
         """Round pores at given positions, moved to the nearest point of the wall.
 
@@ -254,6 +270,8 @@ class Window:
             Lines of a file that the positions come from, for messages; found out where `positions` is a path.
         permeability : quantity, optional
             Of each pore.
+        compact : bool, optional
+            Solve each pore as a compact pore, or with panels of its own; by default many small ones are compact.
 
         Raises
         ------
@@ -273,7 +291,7 @@ class Window:
                 raise SettingsError(f"window {name!r}: positions given as numbers are in µm; leave out unit={unit!r}")
             places = _positions(positions, name)
         places.setflags(write=False)
-        return cls(name, Points(places, radius_um, limit, tuple(lines)), permeability_um_s(permeability))
+        return cls(name, Points(places, radius_um, limit, tuple(lines)), permeability_um_s(permeability), compact)
 
     @classmethod
     def scatter(
@@ -286,6 +304,7 @@ class Window:
         gap: Quantity | None = None,
         seed: int = 0,
         permeability: Quantity | None = None,
+        compact: bool | None = None,
     ) -> Window:
         """Round pores placed at random over the whole wall, with a distance between their rims.
 
@@ -304,6 +323,8 @@ class Window:
             The same seed gives the same places on the same surface.
         permeability : quantity, optional
             Of each pore.
+        compact : bool, optional
+            As for `points`.
 
         Raises
         ------
@@ -321,12 +342,13 @@ class Window:
                 )
         per_um2 = None if density is None else density_per_um2(density, f"density of window {name!r}")
         gap_um = radius_um if gap is None else length_um(gap, f"gap of window {name!r}")
-        return cls(name, Scatter(count, per_um2, radius_um, gap_um, seed), permeability_um_s(permeability))
+        return cls(name, Scatter(count, per_um2, radius_um, gap_um, seed), permeability_um_s(permeability), compact)
 
     def described(self) -> dict[str, Any]:
         """What was asked for in plain values, to be written beside a result; κ is None where infinite."""
         kappa = self.permeability_um_s if math.isfinite(self.permeability_um_s) else None
-        return {"name": self.name, **_plain(self.shape), "permeability_um_s": kappa}
+        plain = {"name": self.name, **_plain(self.shape), "permeability_um_s": kappa}
+        return plain if self.compact is None else {**plain, "compact": self.compact}
 
 
 def _plain(shape: Shape) -> dict[str, Any]:

@@ -12,7 +12,7 @@ from bemescape.errors import SettingsError, WindowError
 from bemescape.escape import solve_escape
 from bemescape.surface.surface import triangle_areas_normals
 from bemescape.windows.grade import Fineness, graded, place_windows
-from bemescape.windows.pores import MOST_MESHED_PORES
+from bemescape.windows.pores import MOST_COMPACT_PORES, MOST_MESHED_PORES
 from bemescape.windows.window import Window
 
 FINE = Fineness(24.0, 4, 800.0)
@@ -131,10 +131,14 @@ def test_a_hundred_thousand_pores_are_refused_at_once_with_the_panels_they_take(
         Window.points("pore", positions=many, radius=0.001),
         Window.scatter("pore", count=100_000, radius=0.001),
     ):
-        with pytest.raises(
-            WindowError, match=rf"'pore' brings the pores to 100000 \(limit {MOST_MESHED_PORES}\).* panels"
-        ):
+        with pytest.raises(WindowError, match=rf"'pore' brings the pores to 100000 \(limit {MOST_COMPACT_PORES}, "):
             place_windows(ball, [window])
+
+
+def test_more_pores_with_panels_than_there_are_panels_for_are_refused(ball):
+    window = Window.scatter("pore", count=300, radius=0.001, compact=False)
+    with pytest.raises(WindowError, match=rf"panels of their own to 300 \(limit {MOST_MESHED_PORES}\).* 300000 panels"):
+        place_windows(ball, [window])
 
 
 def test_scattered_pores_keep_their_distance_from_one_another_and_from_other_windows(ball):
