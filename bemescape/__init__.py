@@ -24,6 +24,7 @@ if TYPE_CHECKING:
     from bemescape.escape import SolverSettings, solve_escape
     from bemescape.prepared_surface import PreparedSurface, prepare
     from bemescape.progress import ProgressEvent
+    from bemescape.remote import connect
     from bemescape.results.result import EscapeResult
     from bemescape.results.starts import Ball
     from bemescape.results.summary import summary_schema
@@ -57,6 +58,7 @@ _HOME = {
     "__version__": "bemescape.version",
     "check_surface": "bemescape.surface",
     "explore": "bemescape.arrangements",
+    "connect": "bemescape.remote",
     "heal_surface": "bemescape.surface",
     "prepare": "bemescape.prepared_surface",
     "read_case": "bemescape.case",
@@ -91,6 +93,7 @@ __all__ = [
     "__version__",
     "check_surface",
     "explore",
+    "connect",
     "heal_surface",
     "prepare",
     "read_case",

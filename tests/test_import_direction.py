@@ -30,6 +30,10 @@ MAY_IMPORT = {
     "study": BASE | {"threads", "surface", "windows", "results", "escape", "case"},
     "cli": BASE | {"surface", "windows", "results", "escape", "case", "warm", "arrangements", "study", "viz"},
     "viz": BASE | {"results", "arrangements", "study"},
+    "remote": BASE | {"surface", "windows", "results", "escape", "case"},
+    "service": BASE | {"surface", "windows", "results", "escape", "case"},
+    "cli": BASE | {"surface", "windows", "results", "escape", "case", "warm", "remote", "service", "viz"},
+    "viz": BASE | {"results"},
 }
 #: Imports against the direction, each with its reason. They are made inside functions.
 EXCEPTIONS = {

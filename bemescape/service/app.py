@@ -27,8 +27,14 @@ from bemescape.version import __version__
 __all__ = ["create_app"]
 
 
-def create_app(settings: Settings) -> FastAPI:
-    """The service as an ASGI application; it opens its data folder when it starts and lets go of it when it stops.
+def create_app(settings: Settings, crew: Crew | None = None) -> FastAPI:
+    """The service as an ASGI application; it holds its data folder from now until it stops.
+
+    Parameters
+    ----------
+    settings : Settings
+    crew : Crew, optional
+        Who does the work; by default dask workers, as the settings say.
 
     Raises
     ------
@@ -36,7 +42,7 @@ def create_app(settings: Settings) -> FastAPI:
         The data folder is used by another service or cannot be written.
     """
     store = Store(settings.data, settings.limits)
-    crew, hub = Crew(settings), Hub(settings.limits.streams)
+    crew, hub = crew or Crew(settings), Hub(settings.limits.streams)
     jobs = Jobs(settings, store, crew, hub)
     keys = Keys(settings.tokens)
 

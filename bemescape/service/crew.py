@@ -10,6 +10,7 @@ from __future__ import annotations
 import asyncio
 import concurrent.futures
 import logging
+import os
 import threading
 from collections.abc import Callable
 from typing import Any, Literal
@@ -26,6 +27,8 @@ Place = Literal["run", "desk"]
 #: What one worker of this machine may use before it is restarted.
 _DESK_MEMORY, _RUN_MEMORY = "3 GB", "auto"
 _START_S = 120.0
+#: Set by whoever starts the service, and meant for the workers.
+_PASSED = ("BEMESCAPE_THREADS", "NUMBA_CACHE_DIR", "NUMBA_NUM_THREADS")
 #: Tasks of the desk go first where both share workers.
 _PRIORITY: dict[Place, int] = {"run": 0, "desk": 100}
 
@@ -84,6 +87,7 @@ class Crew:
         import dask
         from distributed import Client
 
+        logging.getLogger("distributed").setLevel(logging.ERROR)
         # A worker that dies takes its task along: whether it is done again is for the store to decide.
         dask.config.set(
             {
@@ -91,7 +95,12 @@ class Crew:
                 "distributed.worker.memory.spill": False,
                 "distributed.worker.memory.target": False,
                 "distributed.admin.log-length": 100,
+                "distributed.scheduler.http.routes": [],
+                "distributed.worker.http.routes": [],
+                "distributed.nanny.http.routes": [],
                 "distributed.comm.timeouts.connect": "10s",
+                # A compiled loop holds a busy machine's worker for seconds; that is no news.
+                "logging.distributed": "error",
             }
         )
         if self._settings.scheduler is None:
@@ -203,7 +212,14 @@ def _workers_here(slots: int) -> Any:
     """A scheduler in this process and workers in their own, on loopback only."""
     from distributed import Nanny, Scheduler, SpecCluster
 
-    common = {"nthreads": 1, "host": "127.0.0.1", "dashboard": False, "dashboard_address": None, "lifetime": None}
+    threads = max(1, (os.cpu_count() or 1) // slots)
+    common = {
+        "nthreads": 1,
+        "host": "127.0.0.1",
+        "dashboard": False,
+        "silence_logs": logging.ERROR,
+        "env": {"BEMESCAPE_THREADS": str(threads), **{name: os.environ[name] for name in _PASSED if name in os.environ}},
+    }
     workers: dict[str, Any] = {
         f"run-{number}": {
             "cls": Nanny,
@@ -215,5 +231,6 @@ def _workers_here(slots: int) -> Any:
         "cls": Nanny,
         "options": {**common, "nthreads": 2, "resources": {"desk": 2}, "memory_limit": _DESK_MEMORY},
     }
-    scheduler = {"cls": Scheduler, "options": {"host": "127.0.0.1", "port": 0, "dashboard": False}}
+    options = {"host": "127.0.0.1", "port": 0, "dashboard": False, "dashboard_address": "127.0.0.1:0"}
+    scheduler = {"cls": Scheduler, "options": options}
     return SpecCluster(workers=workers, scheduler=scheduler, silence_logs=logging.ERROR, name="bemescape")

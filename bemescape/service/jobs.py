@@ -156,9 +156,9 @@ class Jobs:
             self._changed(run.id)
         future.add_done_callback(lambda done: self._over(key, done))
 
-    def _give_up(self, kind: Kind, run_id: str, reason: str) -> None:
+    def _give_up(self, kind: Kind, run_id: str, reason: str, fault: str = "service") -> None:
         if kind == "solve":
-            self._store.ended(run_id, "failed", reason)
+            self._store.ended(run_id, "failed", reason, fault)
         elif kind == "draw":
             self._store.drawn(run_id, None)
         else:
@@ -198,7 +198,7 @@ class Jobs:
         if "stopped" in answer:
             self._stopped(job, answer["stopped"])
         elif "refused" in answer:
-            self._give_up(job.kind, run_id, answer["refused"])
+            self._give_up(job.kind, run_id, answer["refused"], answer["kind"])
         elif job.kind == "solve":
             self._store.solved(
                 run_id, answer["files"], answer["summary"], second_opinion=self._settings.second_opinion
@@ -219,7 +219,7 @@ class Jobs:
     def _stopped(self, job: _Active, reason: str) -> None:
         if job.kind == "solve":
             state = job.stop_state if job.stopped_at is not None else "failed"
-            self._store.ended(job.run_id, state, reason)
+            self._store.ended(job.run_id, state, reason, "no answer" if state == "failed" else None)
         elif job.kind == "check":
             waiting = job.stopped_at is not None and job.stop_state == "waiting"
             self._store.checked(job.run_id, "waiting" if waiting else "failed", None if waiting else reason)

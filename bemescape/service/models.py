@@ -79,6 +79,7 @@ class Run(Base):
     finished: Mapped[float | None]
     state: Mapped[str]  # queued | running | done | failed | cancelled
     reason: Mapped[str | None]
+    fault: Mapped[str | None]  # of a failed run: input | no answer | service
     attempts: Mapped[int] = mapped_column(default=0)
     summary: Mapped[str | None]  # JSON
     pictures: Mapped[str] = mapped_column(default="none")  # none | waiting | running | done | failed

@@ -91,6 +91,7 @@ class RunRecord(_Record):
     study: str | None
     state: State
     reason: str | None = Field(description="why it failed or was cancelled")
+    fault: Literal["input", "no answer", "service"] | None = Field(description="what a failed run failed by")
     created: float
     started: float | None
     finished: float | None
@@ -172,6 +173,7 @@ def run_record(
         study=run.study_id,
         state=run.state,  # type: ignore[arg-type]
         reason=run.reason,
+        fault=run.fault,  # type: ignore[arg-type]
         created=run.created,
         started=run.started,
         finished=run.finished,

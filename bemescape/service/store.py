@@ -110,7 +110,7 @@ class Store:
             run.state, run.started = "queued", None
             return True
         run.state, run.finished = "failed", time.time()
-        run.reason = INTERRUPTED.format(count=run.attempts)
+        run.reason, run.fault = INTERRUPTED.format(count=run.attempts), "service"
         return False
 
     # -- files -----------------------------------------------------------------------------------------------------------
@@ -467,12 +467,12 @@ class Store:
                 entry.sha256 = sha256
         return replaced
 
-    def ended(self, run_id: str, state: str, reason: str) -> None:
-        """A run failed or was cancelled."""
+    def ended(self, run_id: str, state: str, reason: str, fault: str | None) -> None:
+        """A run failed, by whose fault, or was cancelled."""
         with self._writing() as session:
             run = session.get(Run, run_id)
             if run is not None and run.state == "running":
-                run.state, run.finished, run.reason = state, time.time(), reason
+                run.state, run.finished, run.reason, run.fault = state, time.time(), reason, fault
 
     def interrupted(self, run_id: str) -> str | None:
         """The worker of a run died: it waits again, or fails. Its new state; None if it was not computing."""

@@ -83,15 +83,13 @@ class _Telling:
         if event.stage == self._stage and now - self._told_at < _PROGRESS_EVERY_S:
             return
         self._told_at, self._stage = now, event.stage
-        from distributed import get_worker
+        _send(self._key, {"stage": event.stage, "done": event.done, "detail": event.detail})
 
-        try:
-            worker = get_worker()
-        except ValueError:  # called directly, by a test
-            return
-        worker.log_event(
-            self._key, {"stage": event.stage, "done": event.done, "detail": event.detail, "at": time.time()}
-        )
+
+def _send(key: str, event: dict[str, Any]) -> None:
+    from distributed import get_worker
+
+    get_worker().log_event(key, event)
 
 
 def _answers(task: Callable[..., Answer]) -> Callable[..., Answer]:
@@ -108,7 +106,8 @@ def _answers(task: Callable[..., Answer]) -> Callable[..., Answer]:
             except StoppedByRequest as error:
                 return {"stopped": str(error)}
             except (MemoryError, RecursionError):
-                return {"refused": "it needs more memory than the service gives one task; make it smaller"}
+                reason = "it needs more memory than the service gives one task; make it smaller"
+                return {"refused": reason, "kind": "input"}
 
     return guarded
 
