@@ -121,12 +121,14 @@ class Remote:
         try:
             answer = self._client.request(method, path, **options)
         except httpx.HTTPError as error:
-            raise ServiceError(f"{self.url} does not answer ({type(error).__name__}); is the service running?") from error
+            raise ServiceError(
+                f"{self.url} does not answer ({type(error).__name__}); is the service running?"
+            ) from error
         if answer.is_success:
             return answer
         raise _refusal(answer)
 
-    # -- surfaces --------------------------------------------------------------------------------------------------------
+    # -- surfaces ----------------------------------------------------------------------------------
 
     def read_surface(
         self,
@@ -152,9 +154,7 @@ class Remote:
         return self._upload(path.name, data, text, heal)
 
     def _upload(self, name: str, data: bytes, unit: str, heal: str) -> RemoteSurface:
-        record = self.ask(
-            "POST", "surfaces", files={"file": (name, data)}, data={"unit": unit, "heal": heal}
-        ).json()
+        record = self.ask("POST", "surfaces", files={"file": (name, data)}, data={"unit": unit, "heal": heal}).json()
         return RemoteSurface(
             record["id"], record["name"], tuple(record["unit_um"]), record["faces"], record["solvable"], record
         )  # fmt: skip
@@ -165,7 +165,7 @@ class Remote:
             return surface
         return self._upload(f"{surface.name or 'surface'}.ply", _as_ply(surface), "um", "none")
 
-    # -- solving -----------------------------------------------------------------------------------------------------------
+    # -- solving -----------------------------------------------------------------------------------
 
     def solve_escape(
         self,
@@ -257,7 +257,9 @@ class Remote:
                 "farthest": _um(shape.farthest_um),
             }
         else:
-            size = {"count": shape.count} if shape.count is not None else {"density": f"{shape.density_per_um2!r} /um^2"}
+            size = (
+                {"count": shape.count} if shape.count is not None else {"density": f"{shape.density_per_um2!r} /um^2"}
+            )
             entry["scatter"] = {**size, "radius": _um(shape.radius_um), "gap": _um(shape.gap_um), "seed": shape.seed}
         return entry
 
@@ -302,7 +304,7 @@ class Remote:
                 elif line.startswith("data: "):
                     yield kind, json.loads(line.removeprefix("data: "))
 
-    # -- results -----------------------------------------------------------------------------------------------------------
+    # -- results -----------------------------------------------------------------------------------
 
     def runs(self) -> list[dict[str, Any]]:
         """What the service says of your runs, newest first."""

@@ -22,9 +22,7 @@ def serve(
     scheduler: Annotated[
         str | None, typer.Option(help="A dask scheduler that runs already, like tcp://10.0.0.5:8786.")
     ] = None,
-    token_file: Annotated[
-        Path | None, typer.Option(help="Private file with one token a line: name token.")
-    ] = None,
+    token_file: Annotated[Path | None, typer.Option(help="Private file with one token a line: name token.")] = None,
     slots: Annotated[int, typer.Option(min=1, max=256, help="Runs that compute at a time.")] = 2,
     keep_days: Annotated[
         float | None, typer.Option(min=0.0, help="Delete runs this long after they ended. Default: keep them.")

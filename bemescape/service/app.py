@@ -81,9 +81,7 @@ def create_app(settings: Settings, crew: Crew | None = None) -> FastAPI:
 def _description(app: FastAPI) -> dict[str, Any]:
     """The OpenAPI description, with the model of an order, which a route reads as a case file is read."""
     if app.openapi_schema is None:
-        description = get_openapi(
-            title=app.title, version=app.version, description=app.description, routes=app.routes
-        )
+        description = get_openapi(title=app.title, version=app.version, description=app.description, routes=app.routes)
         order = RunOrder.model_json_schema(ref_template="#/components/schemas/{model}")
         schemas = description["components"]["schemas"]
         schemas.update(order.pop("$defs"))

@@ -113,7 +113,7 @@ class Crew:
         if self._settings.scheduler is None:
             self.submit(warm_up, place="desk", key="warm-up")
 
-    # -- tasks -----------------------------------------------------------------------------------------------------------
+    # -- tasks -------------------------------------------------------------------------------------
 
     def submit(
         self, task: Callable[..., Any], *args: Any, place: Place, key: str, watched: bool = False
@@ -171,7 +171,9 @@ class Crew:
             answer = await asyncio.wait_for(asyncio.wrap_future(future), timeout)
         except TimeoutError as error:
             self.restart_desk()
-            raise Refusal(422, f"this took longer than {timeout:g} s, the limit here; make the surface smaller") from error
+            raise Refusal(
+                422, f"this took longer than {timeout:g} s, the limit here; make the surface smaller"
+            ) from error
         except WorkerLost as error:
             raise Refusal(
                 422, "this needed more memory or time than the service gives it; make the surface smaller"
@@ -218,7 +220,10 @@ def _workers_here(slots: int) -> Any:
         "host": "127.0.0.1",
         "dashboard": False,
         "silence_logs": logging.ERROR,
-        "env": {"BEMESCAPE_THREADS": str(threads), **{name: os.environ[name] for name in _PASSED if name in os.environ}},
+        "env": {
+            "BEMESCAPE_THREADS": str(threads),
+            **{name: os.environ[name] for name in _PASSED if name in os.environ},
+        },
     }
     workers: dict[str, Any] = {
         f"run-{number}": {

@@ -78,7 +78,10 @@ def _put(queue: asyncio.Queue[Any], item: Any) -> None:
 
 
 async def stream(
-    queue: asyncio.Queue[Any], end: Callable[[], None], record: Callable[[], Any], over: Callable[[dict[str, Any]], bool]
+    queue: asyncio.Queue[Any],
+    end: Callable[[], None],
+    record: Callable[[], Any],
+    over: Callable[[dict[str, Any]], bool],
 ) -> AsyncIterator[str]:
     """Server-sent events: first the run as it is (`record`), then what happens, until it is `over`."""
     try:

@@ -95,7 +95,7 @@ class Jobs:
     def _changed(self, run_id: str) -> None:
         self._hub.tell(run_id, "run", {})
 
-    # -- the thread --------------------------------------------------------------------------------------------------------
+    # -- the thread --------------------------------------------------------------------------------
 
     def _work(self) -> None:
         while not self._closing.is_set():
@@ -200,9 +200,7 @@ class Jobs:
         elif "refused" in answer:
             self._give_up(job.kind, run_id, answer["refused"], answer["kind"])
         elif job.kind == "solve":
-            self._store.solved(
-                run_id, answer["files"], answer["summary"], second_opinion=self._settings.second_opinion
-            )
+            self._store.solved(run_id, answer["files"], answer["summary"], second_opinion=self._settings.second_opinion)
         elif job.kind == "draw":
             self._store.drawn(run_id, answer["files"])
         else:

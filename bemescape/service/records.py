@@ -216,6 +216,4 @@ def study_row(run: Run, surface: Surface) -> dict[str, Any]:
 
 def study_record(study: Study, rows: list[dict[str, Any]]) -> StudyRecord:
     """Of a row and its runs."""
-    return StudyRecord(
-        id=study.id, name=study.name, created=study.created, rule=json.loads(study.rule), rows=rows
-    )
+    return StudyRecord(id=study.id, name=study.name, created=study.created, rule=json.loads(study.rule), rows=rows)

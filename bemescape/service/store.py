@@ -82,7 +82,7 @@ class Store:
         with self._reader() as session:
             yield session
 
-    # -- start ---------------------------------------------------------------------------------------------------------
+    # -- start -------------------------------------------------------------------------------------
 
     def recover(self) -> list[str]:
         """After a start: runs that were computing wait again or fail, left-over files go. Runs that wait again."""
@@ -92,9 +92,7 @@ class Store:
                 if self._again_or_failed(run):
                     again.append(run.id)
             for column in ("pictures", "opinion"):
-                session.execute(
-                    update(Run).where(getattr(Run, column) == "running").values({column: "waiting"})
-                )
+                session.execute(update(Run).where(getattr(Run, column) == "running").values({column: "waiting"}))
             known = set(session.scalars(select(Blob.sha256)))
             self.files.sweep(known)
             return again
@@ -113,7 +111,7 @@ class Store:
         run.reason, run.fault = INTERRUPTED.format(count=run.attempts), "service"
         return False
 
-    # -- files -----------------------------------------------------------------------------------------------------------
+    # -- files -------------------------------------------------------------------------------------
 
     def _keep(self, session: Session, data: bytes) -> str:
         sha256 = self.files.write(data)
@@ -166,7 +164,7 @@ class Store:
                 f"{self._limits.owner_bytes / 1e9:.3g} GB; delete runs or surfaces first",
             )
 
-    # -- surfaces and positions --------------------------------------------------------------------------------------------
+    # -- surfaces and positions --------------------------------------------------------------------
 
     def add_surface(
         self,
@@ -202,9 +200,7 @@ class Store:
     def surfaces(self, owner: str) -> Sequence[Surface]:
         """Surfaces of an owner, newest first."""
         with self._reading() as session:
-            return session.scalars(
-                select(Surface).where(Surface.owner == owner).order_by(Surface.created.desc())
-            ).all()
+            return session.scalars(select(Surface).where(Surface.owner == owner).order_by(Surface.created.desc())).all()
 
     def surface(self, owner: str, surface_id: str) -> Surface:
         """One surface, or a refusal."""
@@ -253,7 +249,7 @@ class Store:
         with self._reading() as session:
             return _owned(session.get(PositionList, list_id), owner, "list of positions", list_id)
 
-    # -- runs ----------------------------------------------------------------------------------------------------------
+    # -- runs --------------------------------------------------------------------------------------
 
     def add_runs(
         self, owner: str, orders: Sequence[tuple[str, str, Mapping[str, Any]]], study: tuple[str, Any] | None = None
@@ -367,7 +363,7 @@ class Store:
         session.execute(delete(Run).where(Run.id.in_(ids)))
         return checksums
 
-    # -- studies ---------------------------------------------------------------------------------------------------------
+    # -- studies -----------------------------------------------------------------------------------
 
     def studies(self, owner: str) -> Sequence[Study]:
         """Studies of an owner, newest first."""
@@ -391,7 +387,7 @@ class Store:
                 unused = self._drop_unused(session, checksums)
             self.files.remove(unused)
 
-    # -- the queue -------------------------------------------------------------------------------------------------------
+    # -- the queue ---------------------------------------------------------------------------------
 
     def next_to_solve(self) -> Run | None:
         """Claim the next run in fair order: the owner who computes least, then who waited longest since a start."""
@@ -402,9 +398,7 @@ class Store:
             if not queued:
                 return None
             busy: dict[str, int] = dict(
-                session.execute(
-                    select(Run.owner, func.count()).where(Run.state == "running").group_by(Run.owner)
-                ).all()  # type: ignore[arg-type]
+                session.execute(select(Run.owner, func.count()).where(Run.state == "running").group_by(Run.owner)).all()  # type: ignore[arg-type]
             )
             last: dict[str, float] = dict(
                 session.execute(select(Run.owner, func.max(Run.started)).group_by(Run.owner)).all()  # type: ignore[arg-type]

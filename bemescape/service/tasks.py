@@ -18,7 +18,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from bemescape.errors import AccuracyError, ConvergenceError, EscapeError
-from bemescape.progress import Progress, ProgressEvent
+from bemescape.progress import ProgressEvent
 
 if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
@@ -57,7 +57,7 @@ class StoppedByRequest(Exception):
     """The run was cancelled, or ran into its time limit; the message says which."""
 
 
-# -- stopping and telling ---------------------------------------------------------------------------------------------
+# -- stopping and telling --------------------------------------------------------------------------
 
 _stop_reasons: dict[str, str] = {}
 
@@ -117,7 +117,7 @@ def without_folder(message: str, folder: str) -> str:
     return message.replace(f"{folder}/", "").replace(folder, "the upload")
 
 
-# -- short work: uploads and previews ----------------------------------------------------------------------------------
+# -- short work: uploads and previews --------------------------------------------------------------
 
 
 @dataclass(frozen=True)
@@ -307,7 +307,7 @@ def place_run_windows(
     return {"buffers": windows_buffers(mesh, windows, list(placement.notes))}
 
 
-# -- runs -------------------------------------------------------------------------------------------------------------
+# -- runs ------------------------------------------------------------------------------------------
 
 
 def _write_files(folder: Path, files: Mapping[str, bytes]) -> None:
@@ -355,11 +355,9 @@ def _loaded_result(folder: Path, run: Mapping[str, Any]) -> EscapeResult:
 @_answers
 def draw_run(folder: Path, run: Mapping[str, Any]) -> Answer:
     """Pictures and report of a result."""
-    from bemescape.results.store import PICTURES, REPORT, add_pictures
+    from bemescape.results.store import PICTURES, REPORT, add_pictures, load_result
 
     _write_files(folder, run["files"])
-    from bemescape.results.store import load_result
-
     add_pictures(load_result(folder), folder)
     return {"files": {name: (folder / name).read_bytes() for name in (*PICTURES, REPORT) if (folder / name).is_file()}}
 
@@ -378,7 +376,7 @@ def check_run(folder: Path, key: str, run: Mapping[str, Any], limit_s: float) ->
     return {**_packed_result(replace(result, crosschecked=opinion), folder / "out"), "statement": opinion.line}
 
 
-# -- questions to a result ----------------------------------------------------------------------------------------------
+# -- questions to a result -------------------------------------------------------------------------
 
 
 @_answers

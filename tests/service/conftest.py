@@ -44,8 +44,6 @@ def solved(client, surface):
 def guarded(tmp_path_factory):
     """A service with two tokens."""
     tokens = {"anna": "anna-token-0123456789", "bela": "bela-token-0123456789"}
-    server = Live(
-        Settings(data=tmp_path_factory.mktemp("guarded"), tokens=tokens, second_opinion=False, limits=SMALL)
-    )
+    server = Live(Settings(data=tmp_path_factory.mktemp("guarded"), tokens=tokens, second_opinion=False, limits=SMALL))
     yield server
     server.close()

@@ -4,6 +4,7 @@ import asyncio
 import concurrent.futures
 import threading
 import time
+from typing import ClassVar
 
 import httpx
 import uvicorn
@@ -16,7 +17,7 @@ from bemescape.service.crew import Crew
 class ThreadCrew(Crew):
     """A crew whose workers are threads."""
 
-    listeners = []
+    listeners: ClassVar[list] = []
 
     def __init__(self, settings):
         super().__init__(settings)

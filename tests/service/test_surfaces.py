@@ -123,9 +123,7 @@ def test_positions_become_pores(client, surface):
     answer = client.post("/api/positions", files={"file": ("pores.csv", rows.encode())})
     assert answer.json()["rows"] == 3
     window = {"name": "pores", "points": {"file": answer.json()["id"], "radius": "150 nm"}}
-    header, _ = raw_buffers(
-        client, f"/api/surfaces/{surface['id']}/windows", method="POST", json={"window": [window]}
-    )
+    header, _ = raw_buffers(client, f"/api/surfaces/{surface['id']}/windows", method="POST", json={"window": [window]})
     assert [entry["name"] for entry in header["windows"]] == ["pores[1]", "pores[2]", "pores[3]"]
     wrong = client.post("/api/positions", files={"file": ("pores.csv", b"x,y,z\n1,nan,0\n")})
     assert wrong.status_code == 422

@@ -146,7 +146,9 @@ def test_a_unit_that_is_no_length_is_refused(client, unit):
     assert "unit" in answer.json()["detail"]
 
 
-@pytest.mark.parametrize("name", ["../../../etc/cron.d/x.ply", "..\\..\\x.ply", "a\0b.ply", "x" * 300 + ".ply", "-rf .ply"])
+@pytest.mark.parametrize(
+    "name", ["../../../etc/cron.d/x.ply", "..\\..\\x.ply", "a\0b.ply", "x" * 300 + ".ply", "-rf .ply"]
+)
 def test_names_of_files_never_reach_the_disk(client, live, name):
     answer = upload(client, name=name)
     assert answer.status_code in (201, 400, 415, 422), answer.text

@@ -133,7 +133,9 @@ async def run_events(run_id: Id, parts: Parts, me: Me) -> StreamingResponse:
 def _finished(parts: Service, me: str, run_id: str) -> dict[str, str]:
     run = parts.store.run(me, run_id)
     if run.state != "done":
-        raise Refusal(409, f"run {run.name!r} is {run.state}, so it has no answer{' yet' * (run.state not in FINISHED)}")
+        raise Refusal(
+            409, f"run {run.name!r} is {run.state}, so it has no answer{' yet' * (run.state not in FINISHED)}"
+        )
     return parts.store.run_files(run_id)
 
 
@@ -189,16 +191,19 @@ def csv_answer(rows: list[list[Any]], filename: str) -> Response:
 
 
 def csv_text(rows: list[list[Any]]) -> str:
-    """Comma-separated rows; text that a spreadsheet would run as a formula gets a leading apostrophe.
+    r"""Comma-separated rows; text that a spreadsheet would run as a formula gets a leading apostrophe.
 
     >>> csv_text([["=1+1", -2.5]])
-    "'=1+1,-2.5\\r\\n"
+    "'=1+1,-2.5\r\n"
     """
     stream = io.StringIO()
     writer = csv.writer(stream)
     for row in rows:
         writer.writerow(
-            ["'" + cell if isinstance(cell, str) and cell[:1] in ("=", "+", "-", "@", "\t", "\r") else cell for cell in row]
+            [
+                "'" + cell if isinstance(cell, str) and cell[:1] in ("=", "+", "-", "@", "\t", "\r") else cell
+                for cell in row
+            ]
         )
     return stream.getvalue()
 
@@ -210,9 +215,7 @@ async def _asked(parts: Service, me: str, run_id: str, task: Any, *arguments: An
 
     run = await run_in_threadpool(gathered)
     key = f"question-{secrets.token_hex(8)}"
-    answer: dict[str, Any] = await parts.crew.ask(
-        task, run, *arguments, key=key, timeout=parts.settings.limits.read_s
-    )
+    answer: dict[str, Any] = await parts.crew.ask(task, run, *arguments, key=key, timeout=parts.settings.limits.read_s)
     return answer
 
 
@@ -239,9 +242,7 @@ class Section(BaseModel):
 @router.post("/runs/{run_id}/section", responses=_BINARY, response_class=Response)
 async def run_section(run_id: Id, section: Section, request: Request, parts: Parts, me: Me) -> Response:
     """Time inside on a plane, as samples for the page."""
-    answer = await _asked(
-        parts, me, run_id, tasks.section_of_run, section.point_um, section.normal, section.pixels
-    )
+    answer = await _asked(parts, me, run_id, tasks.section_of_run, section.point_um, section.normal, section.pixels)
     return buffers(answer["buffers"], request)
 
 

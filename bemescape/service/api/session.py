@@ -51,7 +51,7 @@ async def sign_in(request: Request, parts: Parts) -> Response:
     body = await json_body(request)
     token = body.get("token") if isinstance(body, dict) else None
     if not isinstance(token, str):
-        raise Refusal(422, "the body should be {\"token\": \"...\"}")
+        raise Refusal(422, 'the body should be {"token": "..."}')
     if not parts.keys.needed:
         return Response(status_code=204)
     owner = parts.keys.owner_of_token(token)

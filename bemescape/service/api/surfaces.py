@@ -157,13 +157,13 @@ _WINDOWS_BODY = {
             "application/json": {
                 "schema": {
                     "type": "object",
-                    "properties": {"window": {"type": "array", "items": {"$ref": "#/components/schemas/WindowSection"}}},
+                    "properties": {
+                        "window": {"type": "array", "items": {"$ref": "#/components/schemas/WindowSection"}}
+                    },
                     "required": ["window"],
                     "additionalProperties": False,
                 },
-                "example": {
-                    "window": [{"name": "neck", "disc": {"centre": [100.0, 0.0, -620.0], "radius": "60 nm"}}]
-                },
+                "example": {"window": [{"name": "neck", "disc": {"centre": [100.0, 0.0, -620.0], "radius": "60 nm"}}]},
             }
         },
     }
