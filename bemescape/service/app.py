@@ -19,6 +19,7 @@ from bemescape.service.events import Hub
 from bemescape.service.jobs import Jobs
 from bemescape.service.orders import RunOrder
 from bemescape.service.problems import install_handlers
+from bemescape.service.records import finite
 from bemescape.service.security import Guard, Keys, SizeLimit
 from bemescape.service.settings import Settings
 from bemescape.service.store import Store
@@ -88,5 +89,6 @@ def _description(app: FastAPI) -> dict[str, Any]:
         schemas["RunOrder"] = order
         description["components"]["securitySchemes"] = {"token": {"type": "http", "scheme": "bearer"}}
         description["security"] = [{"token": []}]
-        app.openapi_schema = description
+        # A permeability is infinite by default, which JSON cannot say.
+        app.openapi_schema = finite(description)
     return app.openapi_schema

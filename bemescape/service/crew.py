@@ -98,7 +98,7 @@ class Crew:
                 "distributed.scheduler.http.routes": [],
                 "distributed.worker.http.routes": [],
                 "distributed.nanny.http.routes": [],
-                "distributed.comm.timeouts.connect": "10s",
+                "distributed.comm.timeouts.connect": "60s",
                 # A compiled loop holds a busy machine's worker for seconds; that is no news.
                 "logging.distributed": "error",
             }

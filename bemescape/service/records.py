@@ -18,6 +18,7 @@ __all__ = [
     "SessionRecord",
     "StudyRecord",
     "SurfaceRecord",
+    "finite",
     "run_record",
     "short_answer",
     "study_record",
@@ -134,14 +135,14 @@ class ComparisonRecord(_Record):
     high_s: float
 
 
-def _finite(value: Any) -> Any:
+def finite(value: Any) -> Any:
     """NaN and infinity, which JSON does not know, become null."""
     if isinstance(value, float):
         return value if value - value == 0.0 else None
     if isinstance(value, dict):
-        return {key: _finite(entry) for key, entry in value.items()}
+        return {key: finite(entry) for key, entry in value.items()}
     if isinstance(value, list):
-        return [_finite(entry) for entry in value]
+        return [finite(entry) for entry in value]
     return value
 
 
@@ -154,7 +155,7 @@ def surface_record(surface: Surface) -> SurfaceRecord:
         unit=json.loads(surface.unit),
         heal=surface.heal,
         demo=surface.demo,
-        **_finite(json.loads(surface.report)),
+        **finite(json.loads(surface.report)),
     )
 
 

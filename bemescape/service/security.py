@@ -169,6 +169,8 @@ class SizeLimit:
         too_large = problem(
             413, f"the request is larger than {limit / 1e6:.3g} MB, the limit here; send a smaller file"
         )
+        # The rest of the body is not listened to.
+        too_large.headers["connection"] = "close"
         declared = headers.get("content-length", "0")
         if not (declared.isascii() and declared.isdigit() and len(declared) < 16):
             await problem(400, "the Content-Length is no number")(scope, receive, send)

@@ -10,7 +10,7 @@ SMALL = Limits(upload_bytes=2_000_000, faces=50_000, panels=30_000, run_s=600.0,
 @pytest.fixture(scope="session")
 def live(tmp_path_factory):
     """A service without tokens."""
-    server = Live(Settings(data=tmp_path_factory.mktemp("service"), second_opinion=False, limits=SMALL))
+    server = Live(Settings(data=tmp_path_factory.mktemp("service"), second_opinion=False, limits=SMALL), draws=False)
     yield server
     server.close()
 
@@ -44,6 +44,9 @@ def solved(client, surface):
 def guarded(tmp_path_factory):
     """A service with two tokens."""
     tokens = {"anna": "anna-token-0123456789", "bela": "bela-token-0123456789"}
-    server = Live(Settings(data=tmp_path_factory.mktemp("guarded"), tokens=tokens, second_opinion=False, limits=SMALL))
+    server = Live(
+        Settings(data=tmp_path_factory.mktemp("guarded"), tokens=tokens, second_opinion=False, limits=SMALL),
+        draws=False,
+    )
     yield server
     server.close()

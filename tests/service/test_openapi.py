@@ -17,7 +17,7 @@ EXAMPLES = int(os.environ.get("BEMESCAPE_API_EXAMPLES", "15"))
 
 @pytest.fixture(scope="module")
 def generated(tmp_path_factory):
-    server = Live(Settings(data=tmp_path_factory.mktemp("generated"), second_opinion=False))
+    server = Live(Settings(data=tmp_path_factory.mktemp("generated"), second_opinion=False), draws=False)
     with server.client() as client:
         upload(client, ply_bytes(*ball()))
     yield server

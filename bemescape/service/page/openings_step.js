@@ -39,6 +39,7 @@ export class OpeningsStep {
     this.target = given?.accuracy?.target ?? "0.5 %";
     this.placing = null;
     if (!surface.solvable) { this.lock(); return; }
+    this.step.state("place the windows");
     this.step.open();
     this.draw();
     this.ask();

@@ -4,8 +4,8 @@ import { choice, h, labelled, say } from "./dom.js";
 import { lengthText } from "./scales.js";
 import { Step } from "./step.js";
 
-const UNITS = [["nm", "nanometres (nm)"], ["um", "micrometres (µm)"], ["other", "another length, or voxels"]];
-const HEALING = [["auto", "mend what is safe to mend"], ["none", "change nothing"], ["rebuild", "rebuild from voxels"]];
+const UNITS = [["nm", "nanometres (nm)"], ["um", "micrometres (µm)"], ["other", "another length"]];
+const HEALING = [["auto", "mend it safely"], ["none", "change nothing"], ["rebuild", "rebuild from voxels"]];
 
 export class ShapeStep {
   constructor(app) {

@@ -37,6 +37,7 @@ export function drawLengthBar(stage) {
 export function drawTools(app) {
   const { view, stage } = app;
   const place = byId("tools");
+  place.hidden = !stage.panes.length;
   const result = Boolean(view.run) || view.compare.length > 1;
   const single = Boolean(view.run) && view.compare.length < 2;
   const tool = (text, control) => h("label", {}, text, control);
