@@ -4,7 +4,7 @@ import { choice, h, labelled, later, say } from "./dom.js";
 import { lengthText } from "./scales.js";
 import { Step } from "./step.js";
 
-const KINDS = [["disc", "round, at a place"], ["labels", "labelled faces"], ["points", "pores from a CSV file"], ["scatter", "pores at random"], ["lid", "flat cut (lid)"]];
+const KINDS = [["disc", "round"], ["labels", "by label"], ["points", "pores (CSV)"], ["scatter", "pores, random"], ["lid", "flat lid"]];
 const ACCURACY = [["5 %", "quick look (5 %)"], ["1 %", "good (1 %)"], ["0.5 %", "fine (0.5 %)"], ["other", "another error"]];
 
 const number = (value, name) => {
@@ -39,7 +39,7 @@ export class OpeningsStep {
     this.target = given?.accuracy?.target ?? "0.5 %";
     this.placing = null;
     if (!surface.solvable) { this.lock(); return; }
-    this.step.state("place the windows");
+    this.step.state(given ? `${this.windows.length} given` : "place the windows", { done: Boolean(given) });
     this.step.open();
     this.draw();
     this.ask();
@@ -243,7 +243,7 @@ export class OpeningsStep {
         })),
         h("button", { type: "button", class: "plain", "aria-label": `remove ${w.name}`, onclick: () => { this.windows.splice(k, 1); this.placing = null; this.draw(); this.ask(); } }, "remove")),
       content,
-      labelled("permeability κ (µm/s); empty: perfectly absorbing", this.input(w, "permeability", { inputmode: "decimal" }, changed)));
+      labelled("permeability κ (µm/s); empty: absorbs all", this.input(w, "permeability", { inputmode: "decimal" }, changed)));
   }
 
   clicker(k) {

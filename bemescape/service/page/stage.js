@@ -41,7 +41,7 @@ void main() {
 }`;
 const SECTION_FRAGMENT = `
 uniform sampler2D map; varying vec2 vUv;
-void main() { vec4 c = texture2D(map, vUv); if (c.a < 0.5) discard; gl_FragColor = vec4(c.rgb, 1.0); }`;
+void main() { vec4 c = texture2D(map, vUv); if (c.a < 0.5) discard; gl_FragColor = vec4(c.rgb / c.a, 1.0); }`;
 const SECTION_VERTEX = `varying vec2 vUv; void main() { vUv = uv; gl_Position = projectionMatrix * modelViewMatrix * vec4(position, 1.0); }`;
 
 function mapTexture(table) {
@@ -252,6 +252,8 @@ export class Stage {
       pixels.set([MAPS.time[3 * t], MAPS.time[3 * t + 1], MAPS.time[3 * t + 2], 255], 4 * k);
     });
     const texture = new T.DataTexture(pixels, columns, rows, T.RGBAFormat, T.UnsignedByteType);
+    // Between samples, so that the border of the cut is smooth: outside, colour and opacity are 0.
+    texture.magFilter = T.LinearFilter;
     texture.needsUpdate = true;
     const corner = pane.toScene(header.corner_um);
     const geometry = new T.BufferGeometry();

@@ -18,9 +18,9 @@ export function drawBar(scale, exits, regions) {
     mark.style.bottom = `${100 * position(scale, value * scale.factor)}%`;
     return mark;
   });
-  place.replaceChildren(h("div", { class: "title" }, scale.title), h("div", { class: "scale" }, strip, h("div", { class: "ticks" }, marks)),
+  place.replaceChildren(...[h("div", { class: "title" }, scale.title), h("div", { class: "scale" }, strip, h("div", { class: "ticks" }, marks)),
     exits ? null : h("div", { class: "key" }, h("i", { class: "window-colour" }), "window"),
-    regions && !exits ? h("div", { class: "key" }, h("i", { class: "slow-colour" }), "slow region") : null);
+    regions && !exits ? h("div", { class: "key" }, h("i", { class: "slow-colour" }), "slow region") : null].filter(Boolean));
   place.setAttribute("role", "img");
   place.setAttribute("aria-label", `${scale.title}, from ${tickText(scale.low / scale.factor)} to ${tickText(scale.high / scale.factor)}, ${scale.log ? "logarithmic" : "linear"}`);
 }
