@@ -131,7 +131,7 @@ class Store:
             PositionList.file_sha256,
             RunFile.sha256,
         ):
-            used |= set(session.scalars(select(column).where(column.in_(checksums))))  # type: ignore[arg-type]
+            used |= set(session.scalars(select(column).where(column.in_(checksums))))
         unused = checksums - used
         session.execute(delete(Blob).where(Blob.sha256.in_(unused)))
         return unused
@@ -321,7 +321,7 @@ class Store:
     def run_files(self, run_id: str) -> dict[str, str]:
         """Name -> checksum of the files of a run."""
         with self._reading() as session:
-            return dict(session.execute(select(RunFile.name, RunFile.sha256).where(RunFile.run_id == run_id)).all())  # type: ignore[arg-type]
+            return dict(session.execute(select(RunFile.name, RunFile.sha256).where(RunFile.run_id == run_id)).all())
 
     def cancel(self, owner: str, run_id: str) -> Run:
         """A waiting run is cancelled at once; one that computes stays "running" until its worker has stopped."""
@@ -398,7 +398,7 @@ class Store:
             if not queued:
                 return None
             busy: dict[str, int] = dict(
-                session.execute(select(Run.owner, func.count()).where(Run.state == "running").group_by(Run.owner)).all()  # type: ignore[arg-type]
+                session.execute(select(Run.owner, func.count()).where(Run.state == "running").group_by(Run.owner)).all()
             )
             last: dict[str, float] = dict(
                 session.execute(select(Run.owner, func.max(Run.started)).group_by(Run.owner)).all()  # type: ignore[arg-type]

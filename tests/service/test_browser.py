@@ -18,7 +18,7 @@ CHROMIUM = Path("/usr/bin/chromium")
 SIZES = [(1280, 720), (1680, 1050)]
 #: Where screenshots are kept, if someone wants to look at them.
 SHOTS = os.environ.get("BEMESCAPE_SHOTS")
-PATIENCE_MS = 180_000
+PATIENCE_MS = 600_000
 
 
 @pytest.fixture(scope="module")
