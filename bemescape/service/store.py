@@ -16,7 +16,7 @@ from contextlib import contextmanager
 from pathlib import Path
 from typing import Any, TypeVar
 
-from sqlalchemy import create_engine, delete, event, func, select, text, update
+from sqlalchemy import create_engine, delete, event, func, select, text, union, update
 from sqlalchemy.orm import Session, sessionmaker
 
 from bemescape.errors import SettingsError
@@ -139,20 +139,15 @@ class Store:
     def bytes_of(self, owner: str) -> int:
         """Bytes that an owner keeps."""
         with self._reading() as session:
-            named: set[str] = set()
-            for query in (
+            named = union(
                 select(Surface.file_sha256).where(Surface.owner == owner),
                 select(Surface.mesh_sha256).where(Surface.owner == owner),
-                select(Surface.healed_sha256).where(Surface.owner == owner, Surface.healed_sha256.is_not(None)),
+                select(Surface.healed_sha256).where(Surface.owner == owner),
                 select(PositionList.file_sha256).where(PositionList.owner == owner),
                 select(RunFile.sha256).join(Run, Run.id == RunFile.run_id).where(Run.owner == owner),
-            ):
-                named |= set(session.scalars(query))
-            total = 0
-            for sha256 in named:
-                blob = session.get(Blob, sha256)
-                total += 0 if blob is None else blob.size
-            return total
+            ).subquery()
+            size = select(func.coalesce(func.sum(Blob.size), 0)).where(Blob.sha256.in_(select(named.c[0])))
+            return int(session.execute(size).scalar_one())
 
     def check_room(self, owner: str, more: int) -> None:
         """Refuse what would pass the owner's limit."""
