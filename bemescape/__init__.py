@@ -24,6 +24,7 @@ if TYPE_CHECKING:
     from bemescape.escape import SolverSettings, solve_escape
     from bemescape.prepared_surface import PreparedSurface, prepare
     from bemescape.progress import ProgressEvent
+    from bemescape.remote import connect
     from bemescape.results.result import EscapeResult
     from bemescape.results.starts import Ball
     from bemescape.results.summary import summary_schema
@@ -56,6 +57,7 @@ _HOME = {
     "WindowError": "bemescape.errors",
     "__version__": "bemescape.version",
     "check_surface": "bemescape.surface",
+    "connect": "bemescape.remote",
     "explore": "bemescape.arrangements",
     "heal_surface": "bemescape.surface",
     "prepare": "bemescape.prepared_surface",
@@ -90,6 +92,7 @@ __all__ = [
     "WindowError",
     "__version__",
     "check_surface",
+    "connect",
     "explore",
     "heal_surface",
     "prepare",

@@ -28,8 +28,11 @@ MAY_IMPORT = {
     "case": BASE | {"surface", "windows", "results", "escape", "arrangements"},
     "warm": BASE | {"surface", "windows", "bem", "escape"},
     "study": BASE | {"threads", "surface", "windows", "results", "escape", "case"},
-    "cli": BASE | {"surface", "windows", "results", "escape", "case", "warm", "arrangements", "study", "viz"},
+    "cli": BASE
+    | {"surface", "windows", "results", "escape", "case", "warm", "arrangements", "study", "remote", "service", "viz"},
     "viz": BASE | {"results", "arrangements", "study"},
+    "remote": BASE | {"surface", "windows", "results", "escape", "case"},
+    "service": BASE | {"surface", "windows", "results", "escape", "case"},
 }
 #: Imports against the direction, each with its reason. They are made inside functions.
 EXCEPTIONS = {

@@ -17,6 +17,7 @@ from bemescape.cli.check import check
 from bemescape.cli.compare import compare
 from bemescape.cli.explore import explore
 from bemescape.cli.progress import Stopped
+from bemescape.cli.serve import serve
 from bemescape.cli.solve import solve
 from bemescape.cli.study import study
 from bemescape.cli.view import view
@@ -44,6 +45,7 @@ app.command()(solve)
 app.command()(explore)
 app.command()(study)
 app.command()(compare)
+app.command()(serve)
 app.command()(view)
 app.command()(warm)
 

@@ -11,6 +11,7 @@ import typer
 from bemescape.errors import EscapeError, SettingsError
 
 if TYPE_CHECKING:
+    from bemescape.case import Case
     from bemescape.progress import Progress
     from bemescape.results.result import EscapeResult
 
@@ -42,6 +43,9 @@ def solve(
         ),
     ] = None,
     seed: Annotated[str, typer.Option(metavar="<int>", help="Where the random numbers of the walkers begin.")] = "0",
+    server: Annotated[
+        str | None, typer.Option(metavar="URL", help="Have this service solve it; its token in BEMESCAPE_TOKEN.")
+    ] = None,
     pictures: Annotated[bool, typer.Option("--pictures/--no-pictures", help="Render pictures and report.html.")] = True,
     json: Annotated[bool, typer.Option("--json", help="Print the content of summary.json, alone, on stdout.")] = False,
     quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress on stderr.")] = False,
@@ -71,7 +75,7 @@ def solve(
     saved = False
     try:
         with reporting(quiet=quiet) as progress:
-            result = problem.solve(progress)
+            result = problem.solve(progress) if server is None else _solved_by(server, problem, progress)
             progress(ProgressEvent("saving", None, str(folder)))
             save_result(result, folder, pictures=False)
             saved = True
@@ -88,6 +92,13 @@ def solve(
         raise
     _print_answer(result, folder, json=json)
     return 0 if result.target_met else 1
+
+
+def _solved_by(url: str, problem: Case, progress: Progress) -> EscapeResult:
+    from bemescape.remote import connect
+
+    with connect(url) as service:
+        return service.solve_case(problem, progress=progress)
 
 
 def _number_or_text(text: str) -> str | float:

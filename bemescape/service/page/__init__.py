@@ -1,0 +1,1 @@
+"""The page: static files, served as they are."""

@@ -1,0 +1,1 @@
+"""Libraries of the page, bundled; see README.md beside this file."""
