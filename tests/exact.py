@@ -163,15 +163,9 @@ CYLINDER_DISC = {0.1: 7.0845936474, 0.2: 3.1654450563, 0.5: 0.86716833941}
 #: twice that disc's, to the order (window / body).
 CORNER_TO_MIDDLE = 2.0
 #: Slope of ln(T/V) against ln(a) for a funnel of neck radius a + z²/(2R), a ≪ R: quasi-one-dimensional,
-#: T = V/(πD) ∫ dz/r² = V √(2R) / (4 D a^(3/2)); Holcman & Schuss (2014), doi:10.1137/120898395, have this exponent.
+#: T = V/(πD) ∫ dz/r² = V √(2R) / (4 D a^(3/2)); Holcman & Schuss (2014, SIAM Rev. 56:213) have this exponent.
+#: The prefactor depends on where the funnel ends and is not tested.
 FUNNEL_EXPONENT = -1.5
-
-
-def funnel_mean_over_volume(neck_radius, curvature_radius=1.0):
-    """√(2R)/(4 D a^(3/2)), D = 1: the same integral taken to infinity; right to O(a/R)."""
-    return np.sqrt(2.0 * curvature_radius) / (4.0 * neck_radius**1.5)
-
-
 #: Unit cube, all faces absorbing: eigenfunction series. By its mirror planes also the tetrahedron (0, 0, 0),
 #: (1/2, 0, 0), (1/2, 1/2, 0), (1/2, 1/2, 1/2) with only the face x = 1/2 absorbing.
 CUBE_ALL_ABSORBING = 0.02016850031879

@@ -10,12 +10,12 @@ import pytest
 import exact
 import verification
 import verification_cases as cases
+from bemescape.bem import sums
+from bemescape.bem.panels import make_panels
 
 HERE = Path(__file__).parent
 #: Reference values that are no answer of a solve, and where they are used.
 USED_ELSEWHERE = {
-    "BALL_VOLUME": "a volume",
-    "CAP_AREA": "an area",
     "CAP_UNIFORM_FLUX": "limit κ → 0, tests/test_robin.py",
     "ROBIN_DISC": "flat wall, tests/test_robin.py",
     "ROBIN_DISC_IN_SERIES": "flat wall, tests/test_robin.py",
@@ -75,6 +75,22 @@ def test_rows_above_what_is_stated_or_wanted_are_flagged(change, remark):
     text = verification.page([row], fast_sums=False)
     assert f"1 rows, {int(bool(remark))} flagged" in text
     assert ("**ABOVE" in text or "**NOT" in text) == bool(remark)
+
+
+def test_forcing_the_fast_sums_leaves_nothing_to_the_direct_ones(monkeypatch):
+    class Fast:
+        def __init__(self, panels, tolerance):
+            self.double = self.lifted = self.single = self.double_many = lambda *arguments: "fast"
+
+    for limit in ("FAST_FROM", "FAST_ONCE_FROM", "_FEW"):
+        monkeypatch.setattr(sums, limit, getattr(sums, limit))  # put back after the test
+    monkeypatch.setattr("bemescape.bem.fmm.FastSums", Fast)
+    verification.force_fast_sums()
+    corners = np.random.default_rng(0).random((4, 3, 3))
+    chosen = sums.far_sums(make_panels(corners))
+    used = np.arange(4)
+    assert chosen.single(used, used) == chosen.double(used, used) == chosen.lifted(used, used) == "fast"
+    assert chosen.double_of_clusters(used, 4) == "fast"
 
 
 def test_the_average_over_a_head_and_its_neck_follows_from_that_over_the_head():
