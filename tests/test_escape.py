@@ -38,10 +38,12 @@ def assert_within_both_errors(check, results, *, mesh=0.0):
         assert true <= stated + mesh, f"{check.quantity}: true {true:.2e}, stated {stated:.2e}"
 
 
-@pytest.mark.parametrize(
-    "case",
-    [pytest.param(case, id=case.name, marks=() if case.quick else pytest.mark.slow) for case in cases.CASES],
-)
+def marks(case):
+    known = [pytest.mark.xfail(reason=case.defect)] if case.defect else []
+    return known + ([] if case.quick else [pytest.mark.slow])
+
+
+@pytest.mark.parametrize("case", [pytest.param(case, id=case.name, marks=marks(case)) for case in cases.CASES])
 def test_exact_and_published_values_are_within_the_target_and_the_stated_error(case):
     result = case.solve()
     assert result.target_met

@@ -46,11 +46,11 @@ def test_names_are_distinct():
     assert len(set(names)) == len(names)
 
 
-def test_the_page_shows_every_row_of_the_table_and_none_is_flagged():
+def test_the_page_shows_every_row_of_the_table_and_flags_only_known_defects():
     lines = verification.lines_of((HERE / "verification.md").read_text(encoding="utf-8")).values()
     wanted = [(case.name, check.quantity, f"{check.exact:.7g}") for case, check in table_rows()]
     assert [line[:3] for line in lines] == wanted, "run tests/verification.py"
-    assert [line for line in lines if line[6]] == []
+    assert {line[0] for line in lines if line[6]} == {case.name for case in cases.CASES if case.defect}
 
 
 ROW = verification.Row("ball", "mean time", "by hand", 1.0, 1.001, 0.002, 0.001, 0.0, 0.005, 100, 1.0)

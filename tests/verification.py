@@ -3,6 +3,7 @@
     python tests/verification.py                 # all cases: a quarter of an hour
     python tests/verification.py --fast-sums     # the same with the fast multipole sums forced on: another page
     python tests/verification.py --only ball     # only cases whose name holds a word; the page keeps its other rows
+    python tests/verification.py --missing       # only cases without a row, as after an interruption
 
 Exit 1 if a row is above the error it states, or above its target.
 """
@@ -15,7 +16,7 @@ import math
 import platform
 import sys
 import time
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -88,9 +89,10 @@ def row_of(case: Case | Comparison, check: Check, results: tuple[EscapeResult, .
     )
 
 
-def computed_rows(only: str = "") -> Iterator[Row]:
+def computed_rows(wanted: Callable[[Case | Comparison], bool]) -> Iterator[Row]:
     """Solve case by case; comparisons take up what was solved and solve what was not."""
-    compared = {id(case) for comparison in cases.COMPARISONS for case in comparison.cases}
+    comparisons = [comparison for comparison in cases.COMPARISONS if wanted(comparison)]
+    compared = {id(case) for comparison in comparisons for case in comparison.cases}
     kept: dict[int, tuple[EscapeResult | None, float]] = {}
 
     def solved(case: Case) -> tuple[EscapeResult | None, float]:
@@ -108,16 +110,14 @@ def computed_rows(only: str = "") -> Iterator[Row]:
         return answer
 
     for case in cases.CASES:
-        if only not in case.name:
+        if not wanted(case):
             continue
         result, seconds = solved(case)
         for number, check in enumerate(case.checks):
             yield row_of(case, check, () if result is None else (result,), seconds if number == 0 else 0.0)
         del result
         gc.collect()
-    for comparison in cases.COMPARISONS:
-        if only not in comparison.name:
-            continue
+    for comparison in comparisons:
         answers = [solved(case) for case in comparison.cases]
         results = tuple(result for result, _ in answers if result is not None)
         complete = results if len(results) == len(answers) else ()
@@ -204,14 +204,17 @@ def main() -> int:
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
     parser.add_argument("--fast-sums", action="store_true", help="force the fast multipole sums on")
     parser.add_argument("--only", default="", metavar="WORD", help="solve the cases whose name holds this")
+    parser.add_argument("--missing", action="store_true", help="solve the cases that the page has no row of")
     options = parser.parse_args()
     file = HERE / ("verification_fast_sums.md" if options.fast_sums else "verification.md")
     if options.fast_sums:
         force_fast_sums()
     cases.SLABS[0].solved_once(rim=0, ways_out=True)  # compiles: the seconds below are without that
-    lines = lines_of(file.read_text(encoding="utf-8")) if options.only and file.exists() else {}
+    keep = (options.only or options.missing) and file.exists()
+    lines = lines_of(file.read_text(encoding="utf-8")) if keep else {}
+    known = {name for name, _ in lines} if options.missing else set()
     sound = True
-    for row in computed_rows(options.only):
+    for row in computed_rows(lambda case: options.only in case.name and case.name not in known):
         stated = "" if row.stated is None else percent(row.stated + row.mesh)
         print(
             f"{row.case[:60]:60} {row.quantity[:34]:34} {row.exact:14.8g} {row.computed:14.8g} {stated:>8} "

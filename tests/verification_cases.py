@@ -57,6 +57,8 @@ class Check:
         What errors are relative to, if not the exact value.
     limit : float
         Relative error wanted.
+    ways_out : bool
+        Whether the result must hold ways out: they cost a solve a window.
     """
 
     quantity: str
@@ -66,6 +68,7 @@ class Check:
     stated: Reader | None = None
     scale: float | None = None
     limit: float = 0.005
+    ways_out: bool = False
 
     def true_error(self, *results: EscapeResult) -> float:
         """Relative to `scale`."""
@@ -95,6 +98,8 @@ class Case:
         Asked of the solve.
     quick : bool
         Whether the default test run solves it to its target.
+    defect : str
+        What is known to be wrong with the answer; the row is flagged until it is mended.
     """
 
     name: str
@@ -104,6 +109,7 @@ class Case:
     mesh: float = 0.0
     target: float = 0.005
     quick: bool = False
+    defect: str = ""
 
     def __str__(self) -> str:
         return self.name
@@ -123,9 +129,10 @@ class Case:
         return surface, self.windows(surface)
 
     def solve(self) -> EscapeResult:
-        """To the target, with the ways out where a check asks for more than shares."""
+        """To the target, with the ways out where a check asks for them."""
         surface, windows = self.problem()
-        return solve_escape(surface, windows, 1.0, target=self.target, ways_out=len(windows) == 2, name=self.name)
+        ways_out = any(check.ways_out for check in self.checks)
+        return solve_escape(surface, windows, 1.0, target=self.target, ways_out=ways_out, name=self.name)
 
     def solved_once(self, **options: object) -> EscapeResult:
         """On one coarse mesh: see `one_mesh.solved_once`."""
@@ -207,6 +214,7 @@ def splitting(place: str, point: object, value: float, source: str) -> Check:
         lambda r: float(r.splitting_at([point])[0, 0]),
         lambda r: float(r.ways_out.splitting_error[0]),
         1.0,
+        ways_out=True,
     )
 
 
@@ -217,11 +225,12 @@ def conditional_time(place: str, point: object, value: float, source: str) -> Ch
         source,
         lambda r: float(r.conditional_time_at([point])[0, 0]),
         lambda r: r.ways_out.relative_error * value,
+        ways_out=True,
     )
 
 
 def conductance(value: float, source: str) -> Check:
-    return Check("conductance", value, source, lambda r: -float(r.conductance_um3_s()[0, 1]))
+    return Check("conductance", value, source, lambda r: -float(r.conductance_um3_s()[0, 1]), ways_out=True)
 
 
 # -- bodies and windows ------------------------------------------------------------------------------------
@@ -337,8 +346,9 @@ FLAT = (
     _box("cube, corner window 0.1", lambda: shapes.box(cells=10, label=corner_square(0.1)),
          exact.CUBE_CORNER_WINDOW[0.1], BOX_GALERKIN + "; by images"),
     _box("cube with a square neck", shapes.box_with_neck, exact.NECK_ALL, BOX_GALERKIN, quick=True),
-    _box("cube, all faces open", lambda: shapes.box(cells=10, label=lambda c: 1), exact.CUBE_ALL_ABSORBING,
-         "eigenfunction series"),
+    Case("cube, all faces open", lambda: shapes.box(cells=10, label=lambda c: 1), one_label(),
+         (mean(exact.CUBE_ALL_ABSORBING, "eigenfunction series"),),
+         defect="stated 0.107 %, true 0.109 %: of even squares cut in two, every other cut changes little"),
     _box("tetrahedron between a cube's mirror planes", shapes.tetrahedron_of_the_cube, exact.CUBE_ALL_ABSORBING,
          "eigenfunction series; by images"),
 )  # fmt: skip
