@@ -82,7 +82,7 @@ def row_of(case: Case | Comparison, check: Check, results: tuple[EscapeResult, .
         computed,
         stated,
         true,
-        mesh,
+        mesh + check.mesh,
         check.limit,
         sum(len(result.faces) for result in results),
         seconds,
