@@ -109,6 +109,7 @@ CAP_MEAN = {
     0.2: 5.426881311052,
     0.5: 1.972025502625,
     1.0: 0.7183925858575,
+    2.0: 0.1354060740581,
 }
 #: Time from the wall point opposite the cap, from the same solution.
 CAP_ANTIPODE = {0.1: 11.39728525842, 0.2: 5.92178780637, 0.5: 2.451883377238}
@@ -123,11 +124,15 @@ TWO_EQUAL_CAPS = {
     (0.1, 0.25): 6.84388629,
     (0.1, 0.3): 6.57993048,
     (0.1, 0.5): 6.02611246,
+    (0.1, 1.0): 5.556524621,
     (0.2, np.pi): 2.467394318503,
     (0.1, np.pi): 5.201974474248,
 }
 #: Two unequal antipodal caps (0.1, 0.2): mean and the share of the smaller; dual series, 12 digits.
 UNEQUAL_CAPS_MEAN, UNEQUAL_CAPS_SHARE = 3.402154331544, 0.3419518369677
+#: The same two with 0.4 between their centres, 0.1 between their rims: mean, share of the smaller, conductance;
+#: spectral solution as for TWO_EQUAL_CAPS.
+CLOSE_UNEQUAL_CAPS = (4.31419478, 0.29212085, 0.328026)
 
 #: Unit cube, square window of side s on one face: mean = 1/3 + window resistance. Piecewise constant Galerkin,
 #: graded and extrapolated to ~1e-6, cross-checked by cosine modes to 2e-5.
@@ -138,15 +143,46 @@ CUBE_CORNER_WINDOW = {0.1: 7.778242, 0.4: 1.317342}
 #: over the head alone. Galerkin ~1e-6, mode cross-check 1e-5.
 NECK_ALL, NECK_HEAD = 3.943980, 4.127853
 
-#: Unit ball with equal caps of half-angle 0.2 at the vertices of a platonic solid: number of caps -> mean. Spectral
-#: solution with the sphere's closed-form Neumann function.
-PLATONIC_CAPS_02 = {6: 0.70005458, 8: 0.50527188, 12: 0.3141251}
-#: The same for a half-angle of 0.1.
-PLATONIC_CAPS_01 = {6: 1.60770681, 8: 1.18409492, 12: 0.76397854}
+#: Unit ball with equal caps at the vertices of a platonic solid: (number, half-angle) -> mean. Spectral solution with
+#: the sphere's closed-form Neumann function.
+PLATONIC_CAPS = {
+    (6, 0.2): 0.70005458,
+    (8, 0.2): 0.50527188,
+    (12, 0.2): 0.3141251,
+    (6, 0.1): 1.60770681,
+    (8, 0.1): 1.18409492,
+    (12, 0.1): 0.76397854,
+}
 #: Cylinder R = H = 1 with a coaxial neck, open at its end: (neck radius, length) -> average over head and neck.
-#: Head and
-#: neck are matched by a Galerkin method with edge-weighted functions, two resolutions agree to 1e-8.
-CYLINDER_NECK_ALL = {(0.2, 0.5): 15.7813822, (0.5, 1.0): 4.81056125}
+#: Head and neck are matched by a Galerkin method with edge-weighted functions, two resolutions agree to 1e-8; the same
+#: method gives the flanged end correction 0.8217 (King 1936) and Fok's function (CYLINDER_DISC).
+CYLINDER_NECK_ALL = {
+    (0.1, 0.1): 17.4394678,
+    (0.2, 0.2): 8.31885720,
+    (0.2, 0.5): 15.7813822,
+    (0.2, 1.0): 28.2294967,
+    (0.5, 1.0): 4.81056125,
+}
+#: Cylinder R = H = 1 with a concentric disc window of radius a in one end: a -> mean; spectral to 1e-12. Less H²/(3D)
+#: they follow V/(4aD) times Fok's function of a/R (Fok 1941, C. R. Acad. Sci. URSS 31:305; its series from memory:
+#: 1 − 1.40925 x + 0.33818 x³ + …) as far as a flat end may be taken for a long cylinder.
+CYLINDER_DISC = {0.1: 7.0845936474, 0.2: 3.1654450563, 0.5: 0.86716833941}
+#: A quarter disc in a right-angled corner has a quarter of the conductance of the whole disc, Da (images), against 2Da
+#: for the disc of the same area, half as wide, in the middle of a wall (Rayleigh: 4Da per disc): its resistance is
+#: twice that disc's, to the order (window / body).
+CORNER_TO_MIDDLE = 2.0
+#: Slope of ln(T/V) against ln(a) for a funnel of neck radius a + z²/(2R), a ≪ R: quasi-one-dimensional,
+#: T = V/(πD) ∫ dz/r² = V √(2R) / (4 D a^(3/2)); Holcman & Schuss (2014, SIAM Rev. 56:213) have this exponent.
+#: The prefactor depends on where the funnel ends and is not tested.
+FUNNEL_EXPONENT = -1.5
+#: Unit cube, all faces absorbing: eigenfunction series. By its mirror planes also the tetrahedron (0, 0, 0),
+#: (1/2, 0, 0), (1/2, 1/2, 0), (1/2, 1/2, 1/2) with only the face x = 1/2 absorbing.
+CUBE_ALL_ABSORBING = 0.02016850031879
+
+
+def ellipsoid_mean(a, b, c):
+    """1/(5D (a⁻² + b⁻² + c⁻²)), all absorbing, D = 1: u = (1 − Σ xᵢ²/aᵢ²)/(2 Σ aᵢ⁻²)."""
+    return 1.0 / (5.0 * (a**-2.0 + b**-2.0 + c**-2.0))
 
 
 def caps_interaction(places):

@@ -157,3 +157,144 @@ def half_oblate_spheroid(around=64, disc_rings=8, ring_rings=4, dome_rings=12):
     mesh = Surface(np.array(vertices), np.array(faces), {"label": np.array(labels)})
     scale = BALL_VOLUME / mesh.volume
     return Surface(mesh.vertices * [1.0, 1.0, scale], mesh.faces, mesh.face_data)
+
+
+def revolved(profile, step=np.inf, around=48):
+    """Body of revolution about z, scaled to the cross-sections of the round one.
+
+    `profile` is a line of (radius, z) from pole to pole, its pieces divided to be no longer than `step`.
+    """
+    line = [profile[0]]
+    for start, end in itertools.pairwise(np.array(profile, float)):
+        count = max(1, int(np.ceil(np.linalg.norm(end - start) / step)))
+        line += [start + (end - start) * k / count for k in range(1, count + 1)]
+    mesh = trimesh.creation.revolve(np.array(line), sections=around)
+    vertices = mesh.vertices * (np.sqrt(2 * np.pi / (around * np.sin(2 * np.pi / around))) * np.array([1, 1, 0]))
+    vertices[:, 2] = mesh.vertices[:, 2]
+    return Surface(vertices, mesh.faces if mesh.volume > 0 else mesh.faces[:, ::-1])
+
+
+def cylinder_with_neck(neck_radius, neck_length, step=0.12, around=48):
+    """Cylinder R = H = 1 with a coaxial neck on its upper end."""
+    a, top = neck_radius, 1.0 + neck_length
+    return revolved([(0, 0), (1, 0), (1, 1), (a, 1), (a, top), (0, top)], step, around)
+
+
+def funnel(neck_radius, around=32):
+    """Neck of revolution r(z) = a + z²/2, narrowest at z = 0, widening over 0 < z < 1 into a ball that it touches.
+
+    Below z = 0 the neck goes on for the length of its radius, so that a lid can cut it at its narrowest.
+    """
+    a = neck_radius
+    heights = [0.0]
+    while heights[-1] < 1.0:
+        heights.append(heights[-1] + 0.35 * (a + 0.5 * heights[-1] ** 2))
+    heights = np.array(heights) / heights[-1]
+    heights = np.concatenate([[-a, -0.5 * a], heights])
+    neck = np.column_stack([a + 0.5 * heights**2, heights])
+    # The neck ends at 45°: the ball's centre lies on its normal there.
+    width = a + 0.5
+    angles = np.radians(np.linspace(-45.0, 90.0, 14)[1:])
+    ball_part = np.column_stack([np.cos(angles), np.sin(angles)]) * np.sqrt(2.0) * width + [0.0, 1.0 + width]
+    ball_part[-1, 0] = 0.0
+    return revolved([(0.0, -a), *neck, *ball_part], around=around)
+
+
+def corner_face(window_radius, outline, rays=16, inner=5, outer=8):
+    """Flat triangulation of a quarter plane around the origin: points (n, 2), triangles (m, 3), inside (m,) bool.
+
+    Rays at even angles, rings up to `window_radius`, whose triangles are inside, and on to `outline(angle)`, (2,).
+    The quarter circle is a polygon of the circle's area.
+    """
+    angles = np.linspace(0.0, np.pi / 2.0, rays + 1)
+    directions = np.column_stack([np.cos(angles), np.sin(angles)])
+    directions[0, 1] = directions[-1, 0] = 0.0
+    rim = window_radius * polygon_of_equal_area(4 * rays) * directions
+    end = np.array([outline(angle) for angle in angles])
+    rings = [rim * k / inner for k in range(1, inner + 1)]
+    rings += [rim + (end - rim) * (k / outer) ** 1.5 for k in range(1, outer + 1)]
+    points, triangles, inside = [np.zeros((1, 2)), *rings], [], []
+    for number in range(len(rings)):
+        low, high = 1 + (number - 1) * (rays + 1), 1 + number * (rays + 1)
+        for k in range(rays):
+            pieces = [(high + k, high + k + 1, 0 if number == 0 else low + k + 1)]
+            if number > 0:
+                pieces.append((low + k, high + k, low + k + 1))
+            triangles += pieces
+            inside += [number < inner] * len(pieces)
+    return np.concatenate(points), np.array(triangles), np.array(inside)
+
+
+def polygon_of_equal_area(corners):
+    """Radius of the corners of a regular polygon of area π."""
+    return np.sqrt(2.0 * np.pi / (corners * np.sin(2.0 * np.pi / corners)))
+
+
+def square_outline(angle):
+    """Border of the unit square seen from its corner."""
+    direction = np.array([np.cos(angle), np.sin(angle)])
+    return np.round(direction / direction.max(), 12)
+
+
+def circle_outline(rays=16):
+    """Quarter of the unit circle as a polygon of the circle's area."""
+    radius = polygon_of_equal_area(4 * rays)
+    return lambda angle: radius * np.round([np.cos(angle), np.sin(angle)], 12)
+
+
+def prism_over(points, triangles, inside, height=1.0, cells=8):
+    """Prism 0 < z < height over a flat triangulation; label 1 on those triangles of the top that are `inside`."""
+    edges = np.concatenate([triangles[:, [0, 1]], triangles[:, [1, 2]], triangles[:, [2, 0]]])
+    both, count = np.unique(np.sort(edges, axis=1), axis=0, return_counts=True)
+    single = {tuple(edge) for edge in both[count == 1]}
+    border = np.array([edge for edge in edges if tuple(np.sort(edge)) in single])
+    levels = np.linspace(0.0, height, cells + 1)
+    vertices = np.concatenate([np.column_stack([points, np.full(len(points), z)]) for z in levels])
+    faces, labels = [triangles[:, ::-1], triangles + cells * len(points)], [np.zeros(len(triangles)), inside]
+    for level in range(cells):
+        a, b = (border + level * len(points)).T
+        c, d = b + len(points), a + len(points)
+        faces += [np.column_stack([a, b, c]), np.column_stack([a, c, d])]
+        labels += [np.zeros(2 * len(border))]
+    used, index = np.unique(np.concatenate(faces), return_inverse=True)
+    label = np.concatenate(labels).astype(int)
+    return Surface(vertices[used], index.reshape(-1, 3), {"label": label})
+
+
+def tetrahedron_of_the_cube(cells=8):
+    """(0, 0, 0), (½, 0, 0), (½, ½, 0), (½, ½, ½), one of the 48 pieces a cube's mirror planes cut; label 1 at x = ½."""
+    corners = 0.5 * np.array([(0, 0, 0), (1, 0, 0), (1, 1, 0), (1, 1, 1)], dtype=float)
+    triangles, labels = [], []
+    for face in itertools.combinations(range(4), 3):
+        a, b, c = corners[list(face)]
+        opposite = corners[({0, 1, 2, 3} - set(face)).pop()]
+        if np.dot(np.cross(b - a, c - a), opposite - a) > 0.0:
+            b, c = c, b
+
+        def point(i, j, a=a, b=b, c=c):
+            return a + (b - a) * i / cells + (c - a) * j / cells
+
+        for i in range(cells):
+            for j in range(cells - i):
+                pieces = [(point(i, j), point(i + 1, j), point(i, j + 1))]
+                if i + j < cells - 1:
+                    pieces.append((point(i + 1, j), point(i + 1, j + 1), point(i, j + 1)))
+                triangles += pieces
+                labels += [int(0 not in face)] * len(pieces)
+    flat = np.round(np.array(triangles).reshape(-1, 3), 12)
+    vertices, index = np.unique(flat, axis=0, return_inverse=True)
+    return Surface(vertices, index.reshape(-1, 3), {"label": np.array(labels)})
+
+
+def platonic(count):
+    """Corners of an octahedron (6), a cube (8) or an icosahedron (12) on the unit sphere, off the mesh's axes."""
+    golden = (1 + 5**0.5) / 2
+    if count == 6:
+        corners = np.concatenate([np.eye(3), -np.eye(3)])
+    elif count == 8:
+        corners = np.stack(np.meshgrid(*[[-1.0, 1.0]] * 3), axis=-1).reshape(-1, 3)
+    else:
+        plane = np.array([(0.0, a, b * golden) for a in (1, -1) for b in (1, -1)])
+        corners = np.concatenate([np.roll(plane, k, axis=1) for k in range(3)])
+    turn = np.linalg.qr(np.random.default_rng(1).normal(size=(3, 3)))[0]
+    return corners / np.linalg.norm(corners, axis=1)[:, None] @ turn.T

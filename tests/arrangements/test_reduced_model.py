@@ -7,7 +7,7 @@ from scipy.spatial.transform import Rotation
 from bemescape import Window
 from bemescape.arrangements.reduced import reduced_model
 from bemescape.arrangements.sites import candidate_sites
-from exact import BALL_VOLUME, CAP_MEAN, PLATONIC_CAPS_01, ROBIN_CAP_MEAN, TWO_EQUAL_CAPS
+from exact import BALL_VOLUME, CAP_MEAN, PLATONIC_CAPS, ROBIN_CAP_MEAN, TWO_EQUAL_CAPS
 from shapes import ball, on_ball
 
 #: Half-angle of the caps; a disc window is given by its chord.
@@ -56,7 +56,7 @@ def test_two_windows_close_together_lose_what_the_exact_solution_says(thirteen):
 
 def test_windows_on_an_icosahedron_have_the_time_of_the_spectral_solution(thirteen):
     model, _ = thirteen
-    assert model.mean_times(np.arange(12)[None])[0] == pytest.approx(PLATONIC_CAPS_01[12], rel=WITHIN)
+    assert model.mean_times(np.arange(12)[None])[0] == pytest.approx(PLATONIC_CAPS[12, 0.1], rel=WITHIN)
 
 
 def test_shares_of_equal_windows_in_equal_places_are_equal_and_sum_to_one(thirteen):

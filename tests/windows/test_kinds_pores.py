@@ -6,14 +6,13 @@ import trimesh
 from scipy.spatial import cKDTree
 from scipy.spatial.distance import pdist
 
-import exact
 import shapes
 from bemescape.errors import SettingsError, WindowError
-from bemescape.escape import solve_escape
 from bemescape.surface.surface import triangle_areas_normals
 from bemescape.windows.grade import Fineness, graded, place_windows
 from bemescape.windows.pores import MOST_COMPACT_PORES, MOST_MESHED_PORES
 from bemescape.windows.window import Window
+from shapes import platonic
 
 FINE = Fineness(24.0, 4, 800.0)
 
@@ -21,20 +20,6 @@ FINE = Fineness(24.0, 4, 800.0)
 @pytest.fixture(scope="module")
 def ball():
     return shapes.ball(4)
-
-
-def platonic(count):
-    """Corners of an octahedron (6), a cube (8) or an icosahedron (12) on the unit sphere, off the mesh's axes."""
-    golden = (1 + 5**0.5) / 2
-    if count == 6:
-        corners = np.concatenate([np.eye(3), -np.eye(3)])
-    elif count == 8:
-        corners = np.stack(np.meshgrid(*[[-1.0, 1.0]] * 3), axis=-1).reshape(-1, 3)
-    else:
-        plane = np.array([(0.0, a, b * golden) for a in (1, -1) for b in (1, -1)])
-        corners = np.concatenate([np.roll(plane, k, axis=1) for k in range(3)])
-    turn = np.linalg.qr(np.random.default_rng(1).normal(size=(3, 3)))[0]
-    return corners / np.linalg.norm(corners, axis=1)[:, None] @ turn.T
 
 
 def centres(placement):
@@ -249,16 +234,3 @@ def test_no_two_scattered_pores_of_a_crowd_are_closer_than_the_spacing():
     box = shapes.box(cells=4)
     placement = place_windows(box, [Window.scatter("pore", count=190, radius=0.04, gap=0.01, seed=2)])
     assert cKDTree(centres(placement)).query(centres(placement), k=2)[0][:, 1].min() >= 0.09
-
-
-@pytest.mark.slow
-@pytest.mark.parametrize("count", sorted(exact.PLATONIC_CAPS_02))
-def test_caps_at_platonic_corners_have_the_spectral_mean_and_equal_shares(count):
-    window = Window.points("cap", positions=platonic(count), radius=2 * np.sin(0.1))
-    result = solve_escape(shapes.ball(4), [window], 1.0, target=0.03)
-    error = abs(result.mean_time_s / exact.PLATONIC_CAPS_02[count] - 1.0)
-    assert error < 0.01
-    # What is left of the icosphere of 5120 faces, scaled to the ball's volume, is about 1e-3.
-    assert error <= result.relative_error + 1e-3
-    shares = np.array([window.share for window in result.windows])
-    np.testing.assert_allclose(shares, 1 / count, rtol=0.01)  # equal by symmetry; the meshes of the caps differ
