@@ -19,6 +19,8 @@ from bemescape.study.engine import MOST_DEATHS
 from bemescape.study.run import run_study
 from study_processes import DRIVER, driver, environment, without_timings
 
+pytestmark = pytest.mark.slow  # schedulers, workers and drivers are started and killed: minutes
+
 
 def finished_run(study, out, dask_here, *, solve=study_stubs.quick, events=None):
     heard = [] if events is None else events
