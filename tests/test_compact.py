@@ -7,6 +7,7 @@ import numpy as np
 import pytest
 from one_mesh import solved_once
 
+import bemescape as be
 import exact
 import shapes
 from bemescape import EscapeResult, SettingsError, Surface, Window, WindowError, solve_escape
@@ -192,6 +193,22 @@ def test_a_solve_states_errors_that_hold_what_pores_leave_out(ball, solved):
     assert abs(fifty.mean_time_s / exact.FIBONACCI_CAPS_50[0.1] - 1.0) <= fifty.relative_error
     assert not fifty.target_met
     assert any("is what compact pores leave out, which no refinement lowers" in note for note in fifty.notes)
+
+
+def test_a_prepared_surface_follows_the_permeability_and_d_of_compact_pores():
+    surface, place = shapes.ball(2), AXIS[None]
+    prepared = be.prepare(surface)
+    first = prepared.solve([caps(place, 0.1)], 1.0, target=0.1)
+    scaled = prepared.solve([caps(place, 0.1)], 4.0, target=0.1)
+    assert scaled.mean_time_s == pytest.approx(first.mean_time_s / 4.0, rel=1e-12)
+    point = [[0.1, 0.2, 0.3]]
+    np.testing.assert_allclose(scaled.time_at(point), first.time_at(point) / 4.0, rtol=1e-12)
+    np.testing.assert_allclose(scaled.time_sd_at(point), first.time_sd_at(point) / 4.0, rtol=1e-9)
+    partly = [caps(place, 0.1, permeability=10.0)]
+    again = prepared.solve(partly, 1.0, target=0.1)
+    assert again.levels[-1]["kept_rows"] == 1.0
+    assert again.mean_time_s == pytest.approx(solve_escape(surface, partly, 1.0, target=0.1).mean_time_s, rel=1e-4)
+    assert again.mean_time_s > 2.0 * first.mean_time_s
 
 
 def test_slow_regions_lead_to_compact_pores(ball):

@@ -16,6 +16,7 @@ from bemescape.units import time_scale
 
 from .overlay import Overlay
 from .parts import Scene, add_lines, add_skin, line_mesh, look_from, new_plotter, paint_time, window_colours
+from .pores import pore_discs
 from .scales import INK, OUTLINE, ColourScale, map_colours, round_ticks, time_colours
 from .shapes import border_edges, standard_view
 
@@ -88,6 +89,9 @@ def _with_parts(plotter: pv.Plotter, scene: Scene, *, slow: bool) -> pv.PolyData
         skin = scene.skin(opening)
         skin.cell_data["colour"] = window_colours(result, opening, density=False)
         add_skin(plotter, skin)
+    pores = pore_discs(result, scene.size_um, shares=False)
+    if pores.n_cells:
+        add_skin(plotter, pores)
     add_lines(plotter, line_mesh(result.vertices[border_edges(result.faces, result.panel_window)]), INK, 1.5)
     if slow:
         add_lines(plotter, line_mesh(scene.slow_outline), OUTLINE, 2.5)
