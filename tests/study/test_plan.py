@@ -148,7 +148,7 @@ def test_a_list_that_is_not_utf_8_is_refused_with_its_row(tmp_path):
 @pytest.mark.parametrize(
     ("old", "new", "sentence"),
     [
-        ('unit = "um"', 'unit = "parsnips"', r"\[\[shapes\]\] number 1 unit: of the file 'parsnips' is not .*'nm'$"),
+        ('unit = "um"', 'unit = "parsnips"', r"\[\[shapes\]\] number 1 unit: of the file 'parsnips' is not .*'nm'"),
         ('unit = "um"', "", r"row 2: no unit, neither in the row nor in \[\[shapes\]\]"),
         (
             'list = "shapes.csv"',

@@ -150,7 +150,7 @@ def test_a_long_list_of_windows_is_cut_with_a_hint(make_ball, small_pictures, tm
     ball = make_ball()
     many = dataclasses.replace(ball, windows=ball.windows * 90)
     _, text = read(write_report(many, tmp_path / "r.html", pictures=small_pictures))
-    assert "and 30 more; all are in summary.json" in text
+    assert "The 30 with the largest and the 30 with the smallest shares of 90; summary.json has all." in text
 
 
 def test_text_is_readable_in_light_and_in_dark(report):
