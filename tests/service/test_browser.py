@@ -1,5 +1,6 @@
 """The whole path in a real browser: upload, click, run, look, compare, download."""
 
+import copy
 import json
 import os
 import re
@@ -10,7 +11,7 @@ import numpy as np
 import pytest
 
 from bemescape.service.settings import Settings
-from service.helpers import ball, ply_bytes, upload
+from service.helpers import ball, order, ply_bytes, upload, wait_until_over
 from service.in_process import Live
 
 pytestmark = pytest.mark.slow
@@ -40,6 +41,20 @@ def own(tmp_path_factory):
     server = Live(Settings(data=tmp_path_factory.mktemp("browser"), second_opinion=False, slots=1))
     yield server
     server.close()
+
+
+@pytest.fixture(scope="module")
+def finished(own):
+    """A run that is done, ordered over HTTP."""
+    towards = np.array([0.55, -0.75, 0.45])
+    disc = {"centre": list(towards / np.linalg.norm(towards)), "radius": "400 nm"}
+    vertices, faces, _ = ball(3)
+    with own.client() as client:
+        surface = upload(client, ply_bytes(vertices, faces)).json()["id"]
+        run = client.post("/api/runs", json=order(surface, window=[{"name": "pore", "disc": disc}])).json()
+        record = wait_until_over(client, run["id"], seconds=900)
+    assert record["state"] == "done", record["reason"]
+    return record
 
 
 @pytest.fixture
@@ -146,10 +161,8 @@ def test_from_upload_to_report(page, own, tmp_path):
     assert Path(download.value.path()).read_bytes().startswith(b"\x89PNG")
 
 
-def test_looking_at_a_result_and_sharing_the_view(page, own, browser):
-    with own.client() as client:
-        run = next(run for run in client.get("/api/runs").json() if run["state"] == "done")
-    page.goto(f"{own.url}/#run={run['id']}")
+def test_looking_at_a_result_and_sharing_the_view(page, own, browser, finished):
+    page.goto(f"{own.url}/#run={finished['id']}")
     wait_for(page, "window.bemescape.shown !== null && window.bemescape.scale !== null")
     canvas = page.locator("#view").bounding_box()
     middle = (canvas["x"] + canvas["width"] / 2, canvas["y"] + (canvas["height"] - 56) / 2)
@@ -183,15 +196,13 @@ def test_looking_at_a_result_and_sharing_the_view(page, own, browser):
     np.testing.assert_allclose(seen["camera"], view["camera"], rtol=1e-3, atol=1e-3)
 
 
-def test_two_runs_side_by_side_have_one_scale(page, own):
+def test_two_runs_side_by_side_have_one_scale(page, own, finished):
+    first = finished
     with own.client() as client:
-        first = next(run for run in client.get("/api/runs").json() if run["state"] == "done")
         vertices, faces, _ = ball(3)
         double = upload(client, ply_bytes(2 * vertices, faces), name="twice.ply").json()
-        body = {**first["order"], "surface": double["id"], "name": "twice as wide"}
+        body = {**copy.deepcopy(first["order"]), "surface": double["id"], "name": "twice as wide"}
         body["window"][0]["disc"]["centre"] = [2 * x for x in body["window"][0]["disc"]["centre"]]
-        from service.helpers import wait_until_over
-
         second = wait_until_over(client, client.post("/api/runs", json=body).json()["id"])
         assert second["state"] == "done", second["reason"]
     page.goto(own.url)
