@@ -53,6 +53,7 @@ def test_names_are_distinct():
     assert len(set(names)) == len(names)
 
 
+@pytest.mark.slow  # the page takes a quarter of an hour to write: between two writings it lags behind the table
 def test_the_page_shows_every_row_of_the_table_and_flags_only_known_defects():
     lines = verification.lines_of((HERE / "verification.md").read_text(encoding="utf-8")).values()
     wanted = [(case.name, check.quantity, f"{check.exact:.7g}") for case, check in table_rows()]
