@@ -106,7 +106,8 @@ def test_a_reader_that_leaves_causes_no_traceback(workplace):
 @pytest.mark.skipif(sys.platform == "win32", reason="signals are sent differently there")
 def test_ctrl_c_ends_a_solve_with_130_and_without_a_traceback(workplace):
     code = """
-import sys, time
+import signal, sys, time
+signal.signal(signal.SIGINT, signal.default_int_handler)  # a run in the background inherits that it is ignored
 from bemescape.case import Case
 from bemescape.cli.main import main
 def endless(self, progress):
