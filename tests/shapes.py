@@ -298,3 +298,10 @@ def platonic(count):
         corners = np.concatenate([np.roll(plane, k, axis=1) for k in range(3)])
     turn = np.linalg.qr(np.random.default_rng(1).normal(size=(3, 3)))[0]
     return corners / np.linalg.norm(corners, axis=1)[:, None] @ turn.T
+
+
+def fibonacci(count):
+    """Points (count, 3) of a Fibonacci lattice on the unit sphere."""
+    i = np.arange(count)
+    z, azimuth = 1.0 - (2 * i + 1) / count, np.pi * (1 + 5**0.5) * (i + 0.5)
+    return np.column_stack([np.sqrt(1 - z**2) * np.cos(azimuth), np.sqrt(1 - z**2) * np.sin(azimuth), z])

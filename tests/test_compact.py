@@ -22,12 +22,6 @@ def chord(eps):
     return 2.0 * np.sin(eps / 2.0)
 
 
-def fibonacci(count):
-    i = np.arange(count)
-    z, azimuth = 1.0 - (2 * i + 1) / count, np.pi * (1 + 5**0.5) * (i + 0.5)
-    return np.column_stack([np.sqrt(1 - z**2) * np.cos(azimuth), np.sqrt(1 - z**2) * np.sin(azimuth), z])
-
-
 def caps(directions, eps, name="cap", **options):
     return Window.points(name, positions=directions, radius=chord(eps), compact=True, farthest=0.2, **options)
 
@@ -79,8 +73,8 @@ def test_a_cap_on_a_concave_wall():
 
 @pytest.mark.parametrize("eps", [0.02, 0.05, 0.1])
 def test_fifty_caps_are_as_good_as_the_matrix_form(ball, eps):
-    result = solved_once(ball, [caps(fibonacci(50), eps)], spread=False)
-    by_matrix, true = exact.caps_by_matrix(fibonacci(50), eps), exact.FIBONACCI_CAPS_50[eps]
+    result = solved_once(ball, [caps(shapes.fibonacci(50), eps)], spread=False)
+    by_matrix, true = exact.caps_by_matrix(shapes.fibonacci(50), eps), exact.FIBONACCI_CAPS_50[eps]
     own_error = abs(by_matrix / true - 1.0)
     assert abs(result.mean_time_s / by_matrix - 1.0) < 0.01 + own_error
     # 1e-3 for the faces; at 0.1, where 12 % of the wall is open, the finite size of neighbours is in it too.
@@ -189,7 +183,7 @@ def test_a_solve_states_errors_that_hold_what_pores_leave_out(ball, solved):
     placed = place_windows(ball, [caps(OCTAHEDRON[:3], 0.06)]).pores
     assert placed.resistance_error.min() > 0.0
     assert all(window.share_error > 0.0 for window in solved.windows)
-    fifty = solve_escape(ball, [caps(fibonacci(50), 0.1)], 1.0)
+    fifty = solve_escape(ball, [caps(shapes.fibonacci(50), 0.1)], 1.0)
     assert abs(fifty.mean_time_s / exact.FIBONACCI_CAPS_50[0.1] - 1.0) <= fifty.relative_error
     assert not fifty.target_met
     assert any("is what compact pores leave out, which no refinement lowers" in note for note in fifty.notes)
@@ -267,7 +261,7 @@ def test_many_small_pores_become_compact_unasked_and_few_do_not(ball):
 
 
 def test_large_or_crowded_pores_keep_their_panels(ball):
-    apart = np.concatenate([fibonacci(60), [fibonacci(60)[0] + [0.03, 0.03, -0.02]]])
+    apart = np.concatenate([shapes.fibonacci(60), [shapes.fibonacci(60)[0] + [0.03, 0.03, -0.02]]])
     placement = place_windows(ball, [Window.points("pore", positions=apart, radius=0.02, farthest=0.2)])
     assert sorted(set(range(61)) - set(placement.pores.number.tolist())) == [0, 60]
     assert len(placement.patches) == 2
@@ -278,7 +272,7 @@ def test_large_or_crowded_pores_keep_their_panels(ball):
 
 
 def test_the_wall_s_curvature_is_found(ball):
-    placed = place_windows(ball, [caps(fibonacci(50), 0.02)]).pores
+    placed = place_windows(ball, [caps(shapes.fibonacci(50), 0.02)]).pores
     np.testing.assert_allclose(placed.curvature, 1.0, rtol=0.02)
     box = place_windows(shapes.box(cells=4), [Window.disc("p", centre=(0.3, 0.4, 0.0), radius=0.01, compact=True)])
     assert box.pores.curvature[0] == 0.0

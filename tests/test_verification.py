@@ -21,11 +21,8 @@ USED_ELSEWHERE = {
     "ROBIN_DISC_IN_SERIES": "flat wall, tests/test_robin.py",
     "EXTERIOR_CAP_RATE": "enters cap_on_inner_shell_mean",
     "NECK_HEAD": "below: NECK_ALL follows from it",
-    "CAP_AXIS_01": "values close to a compact pore, tests/test_compact.py",
-    "FIBONACCI_CAPS_50": "compact pores at their own target, tests/test_compact.py",
-    "caps_by_matrix": "compact pores, tests/test_compact.py",
+    "caps_by_matrix": "less exact than FIBONACCI_CAPS_50, tests/test_compact.py",
     "ROBIN_DISC_TABLE": "resistance of one disc, tests/bem/test_disc.py",
-    "OCTAHEDRON_CAPS_005": "reduced model of arrangements, tests/arrangements",
     "LEAST_CAPS_INTERACTION": "search for arrangements, tests/arrangements",
     "caps_interaction": "search for arrangements, tests/arrangements",
 }

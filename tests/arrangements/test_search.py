@@ -11,17 +11,10 @@ from bemescape.arrangements.reduced import reduced_model
 from bemescape.arrangements.search import clustered, searched, spread_out
 from bemescape.arrangements.sites import candidate_sites
 from exact import LEAST_CAPS_INTERACTION, caps_interaction
-from shapes import ball, on_ball
+from shapes import ball, fibonacci, on_ball
 
 TETRAHEDRON = np.array([[1, 1, 1], [1, -1, -1], [-1, 1, -1], [-1, -1, 1]]) / 3.0**0.5
 OCTAHEDRON = np.concatenate([np.eye(3), -np.eye(3)])
-
-
-def fibonacci(count):
-    z = 1.0 - (2.0 * np.arange(count) + 1.0) / count
-    turn = np.pi * (1.0 + 5.0**0.5) * (np.arange(count) + 0.5)
-    root = np.sqrt(1.0 - z * z)
-    return np.column_stack([root * np.cos(turn), root * np.sin(turn), z])
 
 
 def interactions(places):
