@@ -17,8 +17,10 @@ def coarse_panels(
     """Wall panels (m,) that carry `part` of the error of taking u as constant on each panel.
 
     The mean time is an energy (∫|∇u|² = ∫u for Δu = −1), so its error is the square of the energy norm of the
-    error of u: on a boundary, about panel size × area × |∇u|². Panels are taken from the largest down (bulk
-    chasing, Dörfler 1996, doi:10.1137/0733054).
+    error of u: on a boundary, about panel size × area × |∇u|². The size that counts is the panel's extent along ∇u,
+    so that size × |∇u| is the range of u over its corners: of two equally long slivers, the one that u changes
+    along is coarse and the one that it changes across is not. Panels are taken from the largest down (bulk chasing,
+    Dörfler 1996, doi:10.1137/0733054).
     """
     corners = vertices[faces]
     cross = np.cross(corners[:, 1] - corners[:, 0], corners[:, 2] - corners[:, 0])
@@ -30,8 +32,9 @@ def coarse_panels(
     at_vertex = weighted / np.maximum(total, 1e-300)
     # Gradient of the linear function through the three corner values.
     opposite = corners[:, [2, 0, 1]] - corners[:, [1, 2, 0]]
-    gradient = np.einsum("ik,ikx->ix", at_vertex[faces], np.cross(normal[:, None], opposite)) / double[:, None]
-    share = area**1.5 * np.einsum("ij,ij->i", gradient, gradient)
+    at_corners = at_vertex[faces]
+    gradient = np.einsum("ik,ikx->ix", at_corners, np.cross(normal[:, None], opposite)) / double[:, None]
+    share = area * np.linalg.norm(gradient, axis=1) * np.ptp(at_corners, axis=1)
     share[is_window] = 0.0
     order = np.argsort(-share)
     covered = np.cumsum(share[order])
