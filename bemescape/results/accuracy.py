@@ -31,12 +31,16 @@ _RIM_STEPS = (
 )
 #: Panels over the whole wall at the first step; each step doubles them, which halves a second-order error.
 _FIRST_WALL_PANELS = 800.0
-#: With more windows than this the first rims are the coarsest: their errors do not add up.
-_FEW_WINDOWS = 8
+#: The first rims are the coarsest with more windows than this, whose errors do not add up, and for targets from this
+#: one on.
+_FEW_WINDOWS, _LOOSE_TARGET = 8, 0.02
 #: Part of the last step that is added to extrapolate, and part that stays as the error of doing so.
 #: Measured on boxes, balls, a neck and a strip: what is left after a step at the rims was 0.05 to 0.25 of the step,
 #: after a step of the wall 0.2 (smooth bodies) to 1 (sharp edges beside the window).
 _RIM_REST, _RIM_ERROR = 0.2, 0.35
+#: The same after a step from the coarsest rims of few windows, which may leave twice the step (measured: up to 1.6, on
+#: a ball with two caps).
+_COARSEST_RIM_ERROR = 2.0
 _WALL_REST, _WALL_ERROR = 0.5, 1.0
 #: The mean time is off by a few times what the windows' outflow is off by (measured: 2 on boxes, 3.5 at a neck).
 _BALANCE_ERROR = 2.5
@@ -102,7 +106,7 @@ class Ladder:
     def next_rung(self) -> Rung | None:
         """The resolution to solve next; None when the estimate is below the target or nothing finer is left."""
         if not self._solved:
-            return Rung(1 if self.windows <= _FEW_WINDOWS else 0, 0)
+            return Rung(1 if self.windows <= _FEW_WINDOWS and self.target < _LOOSE_TARGET else 0, 0)
         rung = self._solved[-1][0]
         finer_rim = Rung(rung.rim + 1, rung.wall) if self.has_rims and rung.rim + 1 < len(_RIM_STEPS) else None
         finer_wall = Rung(rung.rim, rung.wall + 1)
@@ -129,6 +133,11 @@ class Ladder:
         self._solved.append((rung, mean, balance))
         self._shares = shares
 
+    @property
+    def _rim_error(self) -> float:
+        from_coarsest = self._solved[-1][0].rim <= 1 and self.windows <= _FEW_WINDOWS
+        return _COARSEST_RIM_ERROR if from_coarsest else _RIM_ERROR
+
     def share_errors(self) -> Floats:
         """Estimated absolute error (k,) of the last shares, which are not extrapolated."""
         if self._shares is None:
@@ -138,7 +147,7 @@ class Ladder:
         rim = self._share_rim_change if self._share_rim_change is not None else (unknown if self.has_rims else none)
         wall = self._share_wall_change if self._share_wall_change is not None else unknown
         balance = _BALANCE_ERROR * abs(self._solved[-1][2]) + _FLOOR
-        steps = (_RIM_REST + _RIM_ERROR) * np.abs(rim) + (_WALL_REST + _WALL_ERROR) * np.abs(wall)
+        steps = (_RIM_REST + self._rim_error) * np.abs(rim) + (_WALL_REST + _WALL_ERROR) * np.abs(wall)
         return np.asarray(steps + balance * np.abs(self._shares))
 
     def estimate(self) -> Estimate:
@@ -151,5 +160,5 @@ class Ladder:
             extrapolated += _RIM_REST * rim
         if self._wall_change is not None:
             extrapolated += _WALL_REST * wall
-        parts = (_RIM_ERROR * abs(rim / mean), _WALL_ERROR * abs(wall / mean), _BALANCE_ERROR * abs(balance))
+        parts = (self._rim_error * abs(rim / mean), _WALL_ERROR * abs(wall / mean), _BALANCE_ERROR * abs(balance))
         return Estimate(extrapolated, sum(parts) + _FLOOR, *parts)
