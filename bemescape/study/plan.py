@@ -55,6 +55,8 @@ class PlannedCase:
         These names -> where the files are.
     key : str
         Checksum of everything that the answer depends on: files, windows, settings, version.
+    solve_key : str
+        The same without D where all windows absorb perfectly: one solve then serves every D.
     mesh_sha256 : str
     faces : int
         Faces of the mesh file, from its header or size.
@@ -68,6 +70,7 @@ class PlannedCase:
     table: Mapping[str, Any]
     files: Mapping[str, Path]
     key: str
+    solve_key: str
     mesh_sha256: str
     faces: int
     estimated_s: float
@@ -105,7 +108,8 @@ class StudyPlan:
 
     def estimated_s(self, workers: int, skip: frozenset[str] = frozenset()) -> float:
         """Seconds on so many workers for the cases whose key is not in `skip`."""
-        left = [case.estimated_s for key, case in self.distinct.items() if key not in skip]
+        solves = {case.solve_key: case.estimated_s for key, case in self.distinct.items() if key not in skip}
+        left = list(solves.values())
         return max([sum(left) / workers, *left]) if left else 0.0
 
 
@@ -215,6 +219,7 @@ def _planned(
         table=table,
         files=files,
         key=_key(document, table, checksums),
+        solve_key=_key(document, table, checksums, any_diffusion=_scales_with_diffusion(document)),
         mesh_sha256=checksums[shape.path.name],
         faces=faces,
         estimated_s=_BASE_S + _S_PER_PANEL * panels,
@@ -283,9 +288,18 @@ def _sha256(path: Path, known: dict[Path, str]) -> str:
     return known[path]
 
 
-def _key(document: CaseDocument, table: Mapping[str, Any], checksums: Mapping[str, str]) -> str:
+def _scales_with_diffusion(document: CaseDocument) -> bool:
+    """Whether every time of the case is in proportion to 1/D."""
+    return all(math.isinf(window.permeability_um_s) for window in document.window)
+
+
+def _key(
+    document: CaseDocument, table: Mapping[str, Any], checksums: Mapping[str, str], *, any_diffusion: bool = False
+) -> str:
     """Names of files are replaced by checksums: a renamed or moved copy is the same case."""
     content = document.model_dump(mode="json")
+    if any_diffusion:
+        del content["motion"]
     content["surface"]["file"] = checksums[table["surface"]["file"]]
     for entry, written in zip(content["window"], table["window"], strict=True):
         for kind, part in entry.items():

@@ -182,3 +182,22 @@ def test_the_regression_recovers_the_known_answer_of_the_demo_spines(tmp_path):
     np.testing.assert_allclose(fast["mean_time_s"].to_numpy() * 4.0, table["mean_time_s"].to_numpy(), rtol=1e-6)
     # The generator's neck is found in the shape alone.
     np.testing.assert_allclose(table["narrowest_neck_radius_um"] * 1e3, table["neck_radius_nm"], rtol=0.03)
+
+
+def test_one_solve_serves_every_diffusion_coefficient_and_gives_the_digits_of_a_solve_alone(solved, tmp_path):
+    """Times of absorbing windows are in proportion to 1/D; with a permeability they are not, and each D is solved."""
+    folder = solved.plan.study.folder
+    text = STUDY.replace('list = "balls.csv"', 'files = "ball_0.ply"')
+    swept = folder / "swept.study.toml"
+    swept.write_text(text + '[sweep]\ndiffusion = ["2 um^2/s", "6 um^2/s"]\n')
+    result = run_study(swept, tmp_path / "out", workers=1, report=False)
+    assert len({case.solve_key for case in result.plan.cases}) == 1
+    two, six = result.table["mean_time_s"]
+    assert two / six == pytest.approx(3.0, rel=1e-12)
+    # Solved in another run and without a twin: the same to the last digit.
+    assert two == solved.table["mean_time_s"][0]
+    swept.write_text(text + '[sweep]\ndiffusion = ["2 um^2/s", "6 um^2/s"]\npermeability = ["5 um/s"]\n')
+    from bemescape.study.document import read_study
+    from bemescape.study.plan import plan_study
+
+    assert len({case.solve_key for case in plan_study(read_study(swept)).cases}) == 2
