@@ -316,13 +316,8 @@ class Engine:
 
     def _tell_progress(self, total: int, waiting: Sequence[Sequence[PlannedCase]]) -> None:
         left = [*waiting, *(group for group, _ in self._running.values())]
-        # The last cases only: the first one of each worker also loads and compiles the solver.
-        pace = (
-            sum(taken for _, taken in self._recent) / sum(known for known, _ in self._recent) if self._recent else 1.0
-        )
-        seconds = (
-            taken / known * sum(group[0].estimated_s for group in left) / max(1, min(self._workers(), len(left) or 1))
-        )
+        seconds = self._pace() * sum(group[0].estimated_s for group in left)
+        seconds /= max(1, min(self._workers(), len(left) or 1))
         running = [case.name for group, _ in self._running.values() for case in group if case.key in self._begun]
         self.events(
             {
@@ -334,6 +329,12 @@ class Engine:
                 "left_s": round(seconds, 1),
             }
         )
+
+    def _pace(self) -> float:
+        """Seconds taken per second estimated, of the last cases: the first ones also loaded and compiled the solver."""
+        if not self._recent:
+            return 1.0
+        return sum(taken for _, taken in self._recent) / sum(estimated for estimated, _ in self._recent)
 
     def _workers(self) -> int:
         try:
