@@ -46,6 +46,8 @@ table.sortable th button { font: inherit; color: inherit; background: none; bord
 table.sortable th button::after { content: " ↕"; color: var(--soft); }
 table.sortable th[aria-sort="ascending"] button::after { content: " ↑"; }
 table.sortable th[aria-sort="descending"] button::after { content: " ↓"; }
+table.sortable th, table.sortable td { overflow-wrap: normal; padding-left: .4rem; padding-right: .4rem; }
+table.sortable td:not(.picture) { white-space: nowrap; }
 td.picture { padding: .1rem .3rem; }
 td.picture img { display: block; width: 9.5rem; height: auto; background: #fff; border-radius: .3rem; }
 .tiles { display: grid; grid-template-columns: repeat(3, 1fr); gap: .8rem; }

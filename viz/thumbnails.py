@@ -75,6 +75,7 @@ def thumbnails(
         for scale in scales:
             if skin is not None:
                 paint_time(skin, scale or time_colours(result))
+                plotter.render()
             pictures.append(_png(plotter.screenshot(return_img=True)))
     finally:
         plotter.close()

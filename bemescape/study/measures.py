@@ -23,8 +23,8 @@ __all__ = ["longest_geodesic_um", "measured", "narrowest_neck_radius_um", "spher
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-#: Levels of time at which the neck is measured.
-_NECK_LEVELS = 64
+#: Levels of time at which the neck is looked for, equally far apart in area and in time, and then beside the best one.
+_NECK_LEVELS, _NECK_LEVELS_AGAIN = 16, 28
 #: A slow place of the wall is one whose time is above the mean by this factor.
 SLOW_FACTOR = 1.1
 
@@ -117,15 +117,26 @@ def narrowest_neck_radius_um(result: EscapeResult) -> float:
         return math.sqrt(float(areas.sum()) / math.pi)
     narrowest = flat if flat > 0.0 else float(areas[window].sum())
     pairs = _touching(result.faces)
-    order = np.quantile(wall_times, np.linspace(0.0, 1.0, _NECK_LEVELS + 2)[1:-1])
-    steps = np.linspace(float(wall_times.min()), float(wall_times.max()), _NECK_LEVELS + 2)[1:-1]
-    for level in np.unique(np.concatenate([order, steps])):
-        near = window | (result.panel_time_s <= level)
+    by_area = np.quantile(wall_times, np.linspace(0.0, 1.0, _NECK_LEVELS + 2)[1:-1])
+    by_time = np.linspace(float(wall_times.min()), float(wall_times.max()), _NECK_LEVELS + 2)[1:-1]
+    levels = np.unique(np.concatenate([[float(wall_times.min())], by_area, by_time]))
+    sections = _sections(result, vectors, pairs, levels)
+    best = int(np.argmin(sections))
+    again = np.linspace(levels[max(best - 1, 0)], levels[min(best + 1, len(levels) - 1)], _NECK_LEVELS_AGAIN + 2)[1:-1]
+    narrowest = min(narrowest, float(sections[best]), float(_sections(result, vectors, pairs, again).min()))
+    return math.sqrt(narrowest / math.pi)
+
+
+def _sections(result: EscapeResult, vectors: Floats, pairs: Ints, levels: Floats) -> Floats:
+    """Cross-section (k,) at each level; infinite where less than half of the volume lies beyond it."""
+    sections = np.full(len(levels), np.inf)
+    for number, level in enumerate(levels):
+        near = (result.panel_window >= 0) | (result.panel_time_s <= level)
         section, volume = _cross_section(result, vectors, near, pairs)
         if volume > 0.5 * result.volume_um3:
             break
-        narrowest = min(narrowest, section)
-    return math.sqrt(narrowest / math.pi)
+        sections[number] = section
+    return sections
 
 
 def _touching(faces: Ints) -> Ints:

@@ -91,6 +91,10 @@ def test_the_report_stands_alone_and_says_what_a_reader_needs(solved):
     assert "http" not in re.sub(r"data:[^\"]+", "", page)
     for words in ("Research tool", "no test is meaningful", "balls.csv row 5", "aria-sort", "Settings, and how"):
         assert words in page
+    # The scale of the largest ball is not that of the smallest: their pictures in both scales differ.
+    rows = re.findall(r'<td class="picture"><img src="([^"]+)".*?<td class="picture"><img src="([^"]+)"', page)
+    assert len(rows) == 3
+    assert any(common != own for common, own in rows)
     # Two pictures a solved shape, one of its slow regions, the figure and the colour bar.
     assert page.count("<img") == 2 * 3 + 3 + 2
     assert (solved.folder / "figure.pdf").read_bytes().startswith(b"%PDF")
