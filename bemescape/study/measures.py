@@ -122,7 +122,9 @@ def narrowest_neck_radius_um(result: EscapeResult) -> float:
     levels = np.unique(np.concatenate([[float(wall_times.min())], by_area, by_time]))
     sections = _sections(result, vectors, pairs, levels)
     best = int(np.argmin(sections))
-    again = np.linspace(levels[max(best - 1, 0)], levels[min(best + 1, len(levels) - 1)], _NECK_LEVELS_AGAIN + 2)[1:-1]
+    # Two places on: the neighbour may be all but the same level, of the other series.
+    low, high = levels[max(best - 2, 0)], levels[min(best + 2, len(levels) - 1)]
+    again = np.linspace(low, high, _NECK_LEVELS_AGAIN + 2)[1:-1]
     narrowest = min(narrowest, float(sections[best]), float(_sections(result, vectors, pairs, again).min()))
     return math.sqrt(narrowest / math.pi)
 
