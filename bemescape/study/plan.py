@@ -149,7 +149,7 @@ def _windows_of(study: Study, shape: StudyShape) -> tuple[list[dict[str, Any]], 
     """The rules for the windows of one shape as tables, and the folder that their files are relative to."""
     sidecar = shape.path.with_name(shape.path.stem + SIDECAR)
     windows, folder = list(study.table.get("window", [])), study.folder
-    if sidecar.is_file():
+    if sidecar.exists():
         windows, folder = _sidecar_windows(sidecar), sidecar.parent
     if not windows:
         raise SettingsError(
@@ -165,7 +165,8 @@ def _sidecar_windows(path: Path) -> list[dict[str, Any]]:
     except (OSError, UnicodeDecodeError, tomllib.TOMLDecodeError, RecursionError, ValueError) as error:
         raise SettingsError(f"{path} is not valid TOML: {' '.join(str(error).split())[:200]}") from error
     windows = table.get("window")
-    if set(table) != {"window"} or not isinstance(windows, list) or not windows:
+    listed = isinstance(windows, list) and windows and all(isinstance(window, dict) for window in windows)
+    if set(table) != {"window"} or not listed:
         others = sorted(set(table) - {"window"})
         raise SettingsError(
             f"{path} holds {', '.join(map(repr, others)) if others else 'no [[window]]'}; a windows file beside a mesh "
@@ -202,11 +203,10 @@ def _planned(
                     )
                 part["file"] = _free_name(path, files)
                 files[part["file"]] = path
-    if not window_has_counterpart(study, table["window"], chosen):
-        swept = next(key for key in ("radius", "count", "seed") if key in chosen)
+    for key in _idle_sweeps(study, table["window"], chosen):
+        needs = "" if key == "permeability" else f"it needs a window with a {key}, and "
         raise SettingsError(
-            f"{shape.place}: [sweep] {swept} has no window to act on; it needs a window with a {swept}, and "
-            f"[sweep] window, if given, must be its name"
+            f"{shape.place}: [sweep] {key} has no window to act on; {needs}[sweep] window, if given, must be its name"
         )
     checksums = {name: _sha256(path, sums) for name, path in files.items()}
     document = case.document
@@ -253,8 +253,8 @@ def _swept_windows(
     return made
 
 
-def window_has_counterpart(study: Study, windows: Sequence[Mapping[str, Any]], chosen: Mapping[str, Any]) -> bool:
-    """Whether each swept key of a window acts on at least one window."""
+def _idle_sweeps(study: Study, windows: Sequence[Mapping[str, Any]], chosen: Mapping[str, Any]) -> list[str]:
+    """The swept keys of windows that act on none of them."""
     only = study.document.sweep.window
     parts = [
         part
@@ -263,13 +263,14 @@ def window_has_counterpart(study: Study, windows: Sequence[Mapping[str, Any]], c
         for part in window.values()
         if isinstance(part, dict)
     ]
-    has_radius = any("radius" in part for part in parts)
     is_scatter = any("count" in part for part in parts)
-    return (
-        ("radius" not in chosen or has_radius)
-        and (not {"count", "seed"} & set(chosen) or is_scatter)
-        and ("permeability" not in chosen or bool(parts))
-    )
+    acts = {
+        "radius": any("radius" in part for part in parts),
+        "permeability": bool(parts),
+        "count": is_scatter,
+        "seed": is_scatter,
+    }
+    return [key for key in acts if key in chosen and not acts[key]]
 
 
 def _free_name(path: Path, files: Mapping[str, Path]) -> str:

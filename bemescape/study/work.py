@@ -134,23 +134,26 @@ def _outcome(order: Order, solve: Solve) -> Outcome:
 
 
 class _Solver:
-    """Solves at D = 1 where times only scale with D, and keeps the result for the twins."""
+    """Solves at D = 1 where times only scale with D, and keeps what the twins have in common."""
 
     def __init__(self) -> None:
         self._known: EscapeResult | None = None
+        self._lengths: Mapping[str, float] | None = None
 
     def __call__(self, order: Order, folder: Path) -> Mapping[str, Any]:
         from threadpoolctl import threadpool_limits
 
         from bemescape.results.store import save_result
-        from bemescape.study.measures import measured
+        from bemescape.study.measures import measured, shape_lengths
         from bemescape.threads import use_threads
 
         # One thread a worker: the cases run side by side, and threads within them would only wait for each other.
         with use_threads(1), threadpool_limits(1):
             result = self._result(order, folder)
             save_result(result, folder / "result", pictures=False)
-            return measured(result)
+            if self._known is not None and self._lengths is None:
+                self._lengths = shape_lengths(self._known)
+            return measured(result, self._lengths)
 
     def _result(self, order: Order, folder: Path) -> EscapeResult:
         from bemescape.case import parse_case
