@@ -179,7 +179,7 @@ def _against(
         axes.set_title(
             f"Spearman {trend.spearman:+.2f}; slope {trend.slope:.2f} ({low:.2f} to {high:.2f})", fontsize=8, loc="left"
         )
-    if len(marks) > 1:
+    if len(marks) > 1 and len(rows):
         axes.legend(fontsize=8, frameon=False)
 
 

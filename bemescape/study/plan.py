@@ -132,10 +132,10 @@ def plan_study(study: Study) -> StudyPlan:
     sums: dict[Path, str] = {}
     cases = []
     for shape in shapes:
-        windows, folder = _windows_of(study, shape)
+        rules = _windows_of(study, shape)
         faces = estimated_faces(shape.path)
         for chosen in combinations:
-            cases.append(_planned(study, shape, windows, folder, chosen, faces, sums))
+            cases.append(_planned(study, shape, rules, chosen, faces, sums))
     return StudyPlan(study, shapes, tuple(cases))
 
 
@@ -145,18 +145,26 @@ def _combinations(study: Study) -> Sequence[dict[str, Any]]:
     return [dict(zip(swept, values, strict=True)) for values in itertools.product(*swept.values())]
 
 
-def _windows_of(study: Study, shape: StudyShape) -> tuple[list[dict[str, Any]], Path]:
-    """The rules for the windows of one shape as tables, and the folder that their files are relative to."""
+@dataclass(frozen=True)
+class _Rules:
+    """The windows of one shape as tables, the folder that their files are relative to, and where they are written."""
+
+    windows: Sequence[Mapping[str, Any]]
+    folder: Path
+    place: str
+
+
+def _windows_of(study: Study, shape: StudyShape) -> _Rules:
     sidecar = shape.path.with_name(shape.path.stem + SIDECAR)
-    windows, folder = list(study.table.get("window", [])), study.folder
+    windows, folder, place = list(study.table.get("window", [])), study.folder, shape.place
     if sidecar.exists():
-        windows, folder = _sidecar_windows(sidecar), sidecar.parent
+        windows, folder, place = _sidecar_windows(sidecar), sidecar.parent, f"{shape.place}, {sidecar.name}"
     if not windows:
         raise SettingsError(
             f"{shape.place}: shape {shape.name!r} has no window; add a [[window]] to the study, or a file "
             f"{sidecar.name} beside the mesh"
         )
-    return overridden(windows, shape), folder
+    return _Rules(overridden(windows, shape), folder, place)
 
 
 def _sidecar_windows(path: Path) -> list[dict[str, Any]]:
@@ -178,8 +186,7 @@ def _sidecar_windows(path: Path) -> list[dict[str, Any]]:
 def _planned(
     study: Study,
     shape: StudyShape,
-    windows: Sequence[Mapping[str, Any]],
-    folder: Path,
+    rules: _Rules,
     chosen: Mapping[str, Any],
     faces: int,
     sums: dict[Path, str],
@@ -187,18 +194,18 @@ def _planned(
     table: dict[str, Any] = {
         "surface": {"file": shape.path.name, "unit": _listed(shape.unit), "heal": shape.heal},
         "motion": {"diffusion": chosen["diffusion"]} if "diffusion" in chosen else dict(study.table["motion"]),
-        "window": _swept_windows(study, windows, chosen),
+        "window": _swept_windows(study, rules.windows, chosen),
         "accuracy": dict(study.table.get("accuracy", {})),
     }
-    case = parse_case(table, folder=folder, name=shape.name, source=shape.place)
+    case = parse_case(table, folder=rules.folder, name=shape.name, source=rules.place)
     files = {shape.path.name: shape.path}
     for window in table["window"]:
         for part in window.values():
             if isinstance(part, dict) and isinstance(part.get("file"), str):
-                path = folder / part["file"]
+                path = rules.folder / part["file"]
                 if not path.is_file():
                     raise SettingsError(
-                        f"{shape.place}: window {window.get('name')!r} names the file {part['file']!r}, but there is "
+                        f"{rules.place}: window {window.get('name')!r} names the file {part['file']!r}, but there is "
                         f"no file {path}"
                     )
                 part["file"] = _free_name(path, files)
