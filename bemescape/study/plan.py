@@ -172,9 +172,9 @@ def _sidecar_windows(path: Path) -> list[dict[str, Any]]:
         table = tomllib.loads(path.read_text(encoding="utf-8-sig"))
     except (OSError, UnicodeDecodeError, tomllib.TOMLDecodeError, RecursionError, ValueError) as error:
         raise SettingsError(f"{path} is not valid TOML: {' '.join(str(error).split())[:200]}") from error
-    windows: Any = table.get("window")
-    is_list = isinstance(windows, list) and len(windows) > 0
-    if set(table) != {"window"} or not is_list or not all(isinstance(window, dict) for window in windows):
+    found = table.get("window")
+    windows = [window for window in found if isinstance(window, dict)] if isinstance(found, list) else []
+    if set(table) != {"window"} or not windows or len(windows) < len(found):
         others = sorted(set(table) - {"window"})
         raise SettingsError(
             f"{path} holds {', '.join(map(repr, others)) if others else 'no [[window]]'}; a windows file beside a mesh "
