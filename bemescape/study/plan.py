@@ -172,7 +172,7 @@ def _sidecar_windows(path: Path) -> list[dict[str, Any]]:
         table = tomllib.loads(path.read_text(encoding="utf-8-sig"))
     except (OSError, UnicodeDecodeError, tomllib.TOMLDecodeError, RecursionError, ValueError) as error:
         raise SettingsError(f"{path} is not valid TOML: {' '.join(str(error).split())[:200]}") from error
-    found = table.get("window")
+    found: Any = table.get("window")
     windows = [window for window in found if isinstance(window, dict)] if isinstance(found, list) else []
     if set(table) != {"window"} or not windows or len(windows) < len(found):
         others = sorted(set(table) - {"window"})
