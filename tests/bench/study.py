@@ -5,8 +5,8 @@
 The same small spines are solved by one worker and by two, each after a first case per worker that compiles. Overhead of
 a case: the time of all workers for all cases, less the solves, over the number of cases; it holds reading, measuring,
 saving, travel, writing and waiting at the end. Numbers are comparable within one run on a quiet machine only. The
-processors' seconds, of workers and of the study's own process, are given too: they say on a busy machine too whether two
-workers do more work than one, and what the study itself takes.
+processors' seconds, of workers and of the study's own process, are given too: they say on a busy machine too whether
+two workers do more work than one, and what the study itself takes.
 """
 
 from __future__ import annotations
