@@ -53,10 +53,10 @@ table.sortable th[aria-sort="ascending"] button::after { content: "\u00a0↑"; c
 table.sortable th[aria-sort="descending"] button::after { content: "\u00a0↓"; content: "\u00a0↓" / ""; }
 table.sortable th { vertical-align: bottom; }
 table.sortable td { vertical-align: middle; }
-table.sortable th, table.sortable td { overflow-wrap: normal; padding-left: .25rem; padding-right: .25rem; }
+table.sortable th, table.sortable td { overflow-wrap: normal; padding-left: .2rem; padding-right: .2rem; }
 table.sortable td:not(.picture) { white-space: nowrap; }
 td.picture { padding: .1rem; }
-td.picture img { display: block; width: 6.4rem; height: auto; background: #fff; border-radius: .3rem; }
+td.picture img { display: block; width: 6.1rem; height: auto; background: #fff; border-radius: .3rem; }
 .tiles { display: grid; grid-template-columns: repeat(3, 1fr); gap: .8rem; }
 .bar { max-width: 32rem; background: #fff; }
 .bar img { width: 100%; display: block; }
