@@ -767,6 +767,8 @@ def _complaint(item: Any, location: tuple[int | str, ...], document: type[BaseMo
         head = str(location[0])
         return f" is {_shortened(value)}; each {LISTED_SECTIONS[head]} is a table of its own, headed by [[{head}]]"
     if kind in {"tuple_type", "too_long"} or (kind == "missing" and isinstance(value, list | tuple)):
+        if _is_list_of_another_kind(location, document):
+            return f" is {_shortened(value)}; it should be a list; {example}"
         return f" is {_shortened(value)}; it should be a list of three numbers, like [100.0, 0.0, -620.0]"
     if kind == "missing":
         return f" is missing; {example or 'add it'}"
@@ -856,6 +858,13 @@ def _example(location: tuple[int | str, ...], document: type[BaseModel]) -> str:
     if model is not None:
         return f"{_brackets(key)} takes {', '.join(_fields_of(model))}"
     return ""
+
+
+def _is_list_of_another_kind(location: Sequence[int | str], document: type[BaseModel]) -> bool:
+    """Whether the example of the field says that it is a list and no position."""
+    field, _ = _field_at(location, document)
+    example = field.examples[0] if field is not None and field.examples else None
+    return isinstance(example, list) and not all(isinstance(value, float) for value in example)
 
 
 def _brackets(key: str) -> str:

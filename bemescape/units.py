@@ -70,6 +70,18 @@ def _parsed(text: str, *, bare_unit: bool) -> pint.Quantity[Any]:
     return quantity(float(match["number"] or 1.0), unit)
 
 
+# A study says the same few quantities for each of its shapes, and pint takes about a millisecond.
+@lru_cache(maxsize=4096)
+def _text_in(unit: str, text: str, *, bare_unit: bool) -> float:
+    return _in(unit, _parsed(text, bare_unit=bare_unit))
+
+
+def _in(unit: str, parsed: pint.Quantity[Any]) -> float:
+    """Magnitude in `unit`; a quantity without a unit is dimensionless and refused, since its unit would be a guess."""
+    # Fifteen digits: 60 nm is 0.06 µm, not 0.060000000000000005.
+    return float(f"{float(parsed.to(unit).magnitude):.15g}")
+
+
 def _magnitude(value: object, unit: str, what: str, example: str, *, bare_unit: bool = False) -> float:
     if isinstance(value, bool | np.bool_):
         raise SettingsError(f"{what} is {value}, not a quantity; write it like {example!r}")
@@ -77,15 +89,11 @@ def _magnitude(value: object, unit: str, what: str, example: str, *, bare_unit: 
         if isinstance(value, numbers.Real):
             return float(value)
         if isinstance(value, str):
-            parsed = _parsed(value, bare_unit=bare_unit)
-        elif isinstance(value, pint.Quantity):
+            return _text_in(unit, value, bare_unit=bare_unit)
+        if isinstance(value, pint.Quantity):
             # Rebuilt, since a quantity of another registry cannot be converted by this one.
-            parsed = quantity(float(value.magnitude), f"{value.units:D}")
-        else:
-            raise TypeError(type(value).__name__)
-        # A quantity without a unit is dimensionless and refused here: its unit would be a guess.
-        # Fifteen digits: 60 nm is 0.06 µm, not 0.060000000000000005.
-        return float(f"{float(parsed.to(unit).magnitude):.15g}")
+            return _in(unit, quantity(float(value.magnitude), f"{value.units:D}"))
+        raise TypeError(type(value).__name__)
     except (pint.PintError, ValueError, TypeError, AttributeError, ArithmeticError, LookupError) as error:
         kind = f"quantity in {unit}" if unit else "plain number or percentage"
         raise SettingsError(f"{what} {_shortened(value)} is not a {kind}; write it like {example!r}") from error

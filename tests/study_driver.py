@@ -1,6 +1,7 @@
 """Runs a study with a stand-in for the solver, as a process that tests may kill: STUDY OUT SCHEDULER STUB."""
 
 import json
+import signal
 import sys
 
 import study_stubs
@@ -8,6 +9,8 @@ from bemescape.errors import EscapeError
 from bemescape.study.run import StudyStopped, run_study
 
 if __name__ == "__main__":
+    # A shell without job control starts what stands in the background with interrupts ignored.
+    signal.signal(signal.SIGINT, signal.default_int_handler)
     study, out, scheduler, stub = sys.argv[1:]
     try:
         run_study(

@@ -11,7 +11,8 @@ DRIVER = TESTS / "study_driver.py"
 
 def environment():
     one_thread = {f"{name}_NUM_THREADS": "1" for name in ("NUMBA", "OMP", "OPENBLAS", "MKL")}
-    return os.environ | one_thread | {"PYTHONPATH": str(TESTS), "PYTHONUNBUFFERED": "1"}
+    paths = os.pathsep.join(filter(None, [str(TESTS), os.environ.get("PYTHONPATH")]))
+    return os.environ | one_thread | {"PYTHONPATH": paths, "PYTHONUNBUFFERED": "1"}
 
 
 def without_timings(folder):

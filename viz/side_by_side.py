@@ -15,8 +15,8 @@ from matplotlib.image import imread
 from bemescape.errors import SettingsError
 from bemescape.units import format_time
 
-from .scales import bar_length_um, map_colours, round_ticks
-from .thumbnails import common_scale, thumbnails
+from .scales import map_colours, round_ticks
+from .thumbnails import common_scale, picture_width_um, thumbnails
 
 if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
@@ -35,8 +35,7 @@ def save_side_by_side(results: Sequence[EscapeResult], names: Sequence[str], pat
         The file cannot be written.
     """
     scale = common_scale([result.summary.slowest_time_s for result in results])
-    size = max(float(np.linalg.norm(np.ptp(result.vertices, axis=0))) for result in results)
-    width_um = 1.05 * size * _TILE[0] / _TILE[1]
+    width_um = max(picture_width_um(result, _TILE) for result in results)
     columns = min(4, math.ceil(math.sqrt(len(results))))
     rows = math.ceil(len(results) / columns)
     figure = Figure(figsize=(4.2 * columns, 3.6 * rows + 0.9), dpi=120, layout="constrained")
@@ -49,10 +48,6 @@ def save_side_by_side(results: Sequence[EscapeResult], names: Sequence[str], pat
         axes.set_title(
             f"{name[-40:]}\n{format_time(result.mean_time_s)} ± {100.0 * result.relative_error:.2g} %", fontsize=10
         )
-    length = bar_length_um(width_um)
-    first = tiles[0, 0]
-    first.plot([20, 20 + length / width_um * _TILE[0]], [_TILE[1] - 20] * 2, color="black", linewidth=3)
-    first.text(20, _TILE[1] - 32, f"{length:g} µm", fontsize=9)
     for axes in tiles[-1, 1:]:
         axes.remove()
     bar = figure.add_subplot(tiles[-1, 0].get_gridspec()[-1, :])

@@ -21,7 +21,7 @@ if TYPE_CHECKING:
 
     from bemescape.study.statistics import Setting, Trend
 
-__all__ = ["figure_as", "group_marks", "study_figure"]
+__all__ = ["drawn_for_groups", "figure_as", "group_marks", "study_figure"]
 
 # Okabe & Ito's colours that stay apart for every kind of colour vision and in grey; the marks differ too.
 _COLOURS = ("#0072b2", "#d55e00", "#009e73", "#cc79a7", "#e69f00", "#56b4e9")
@@ -71,20 +71,39 @@ def study_figure(part: pd.DataFrame, setting: Setting, *, groups: Sequence[str],
     return figure
 
 
+def drawn_for_groups(part: pd.DataFrame) -> str:
+    """What the line and the band of a group are, in words."""
+    if _by_subject(part):
+        return "open: subjects; line, band: their median, middle half"
+    return "line: median, band: middle half"
+
+
+def _by_subject(part: pd.DataFrame) -> bool:
+    return bool((part["subject"] != "").any())
+
+
 def _groups(
     axes: Axes, used: pd.DataFrame, setting: Setting, marks: Mapping[str, tuple[str, str]], factor: float
 ) -> None:
     present = [group for group in marks if (used["group"] == group).any()]
     summaries = {group.group: group for group in setting.groups}
+    by_subject = _by_subject(used)
     for place, group in enumerate(present):
         colour, mark = marks[group]
         members = used[used["group"] == group]
         times = members["mean_time_s"].to_numpy(float) / factor
         errors = members["mean_time_error_s"].to_numpy(float) / factor
         at = place + _apart(times)
+        if by_subject:
+            medians = members[members["subject"] != ""].groupby("subject")["mean_time_s"].median()
+            at -= 0.12
+            beside = np.full(len(medians), place + 0.22)
+            axes.plot(beside, medians / factor, mark, color=colour, fillstyle="none", markersize=8, mew=1.6, zorder=5)
         axes.errorbar(
             at, times, yerr=errors, fmt=mark, color=colour, markersize=4.5, alpha=0.8, linewidth=0.8, zorder=3
         )
+        if group not in summaries:
+            continue  # nobody in it has a subject, so that it takes no part in the comparison
         summary = summaries[group]
         axes.hlines(summary.median_s / factor, place - 0.34, place + 0.34, color=INK, linewidth=1.8, zorder=4)
         axes.fill_between(
@@ -95,10 +114,13 @@ def _groups(
             alpha=0.14,
             linewidth=0.0,
         )
-    axes.set_xticks(range(len(present)), [f"{group or '(none)'}\nn = {summaries[group].units}" for group in present])
+    unit = " subjects" if by_subject else ""
+    units = {group: summaries[group].units if group in summaries else 0 for group in present}
+    labels = [f"{group or '(none)'}\nn = {units[group]}{unit}" for group in present]
+    axes.set_xticks(range(len(present)), labels)
     axes.set_xlim(-0.6, max(len(present) - 0.4, 0.6))
     axes.set_ylim(bottom=0.0)
-    axes.set_title("every case; line: median, band: middle half", fontsize=8, loc="left")
+    axes.set_title(drawn_for_groups(used), fontsize=8, loc="left")
 
 
 def _apart(values: Any) -> Any:
@@ -157,7 +179,7 @@ def _against(
         axes.set_title(
             f"Spearman {trend.spearman:+.2f}; slope {trend.slope:.2f} ({low:.2f} to {high:.2f})", fontsize=8, loc="left"
         )
-    if len(marks) > 1:
+    if len(marks) > 1 and len(rows):
         axes.legend(fontsize=8, frameon=False)
 
 

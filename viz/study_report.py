@@ -19,7 +19,7 @@ from bemescape.version import __version__
 
 from .html import html_caution, html_figure, html_list, html_table, percent, with_error
 from .page import PAGE
-from .study_plots import figure_as, study_figure
+from .study_plots import drawn_for_groups, figure_as, study_figure
 from .thumbnails import colour_bar, common_scale, thumbnails
 
 if TYPE_CHECKING:
@@ -38,16 +38,25 @@ _MOST_FAILURES = 200
 #: With more shapes the pictures get smaller, so that the file can still be sent by mail.
 _MANY_SHAPES = 120
 
+#: Columns of the ranked table that hold pictures, and those that hold text.
+_PICTURED, _TEXTS = ("one scale for all", "own scale"), ("shape", "group", "subject")
+
 _STYLE = """
 <style>
 main { max-width: 76rem; }
+table.sortable { font-size: .79rem; }
 table.sortable th button { font: inherit; color: inherit; background: none; border: 0; padding: 0; cursor: pointer;
   text-align: inherit; }
-table.sortable th button::after { content: " ↕"; color: var(--soft); }
-table.sortable th[aria-sort="ascending"] button::after { content: " ↑"; }
-table.sortable th[aria-sort="descending"] button::after { content: " ↓"; }
-td.picture { padding: .1rem .3rem; }
-td.picture img { display: block; width: 9.5rem; height: auto; background: #fff; border-radius: .3rem; }
+/* The mark is for the eye; aria-sort tells the rest. Browsers that do not know "/" keep the first line. */
+table.sortable th button::after { content: "\u00a0↕"; content: "\u00a0↕" / ""; color: var(--soft); }
+table.sortable th[aria-sort="ascending"] button::after { content: "\u00a0↑"; content: "\u00a0↑" / ""; }
+table.sortable th[aria-sort="descending"] button::after { content: "\u00a0↓"; content: "\u00a0↓" / ""; }
+table.sortable th { vertical-align: bottom; }
+table.sortable td { vertical-align: middle; }
+table.sortable th, table.sortable td { overflow-wrap: normal; padding-left: .2rem; padding-right: .2rem; }
+table.sortable td:not(.picture) { white-space: nowrap; }
+td.picture { padding: .1rem; }
+td.picture img { display: block; width: 6.1rem; height: auto; background: #fff; border-radius: .3rem; }
 .tiles { display: grid; grid-template-columns: repeat(3, 1fr); gap: .8rem; }
 .bar { max-width: 32rem; background: #fff; }
 .bar img { width: 100%; display: block; }
@@ -247,12 +256,12 @@ def _figures(report: _Report) -> str:
     figures = [
         html_figure(
             source,
-            f"{f'{title}. ' if title else ''}Left: every case with its numerical error; line: median, band: "
-            "middle half. Middle and right: mean escape time against volume and narrowest neck; dashed: least "
-            "squares on logarithms.",
+            f"{f'{title}. ' if title else ''}Left: every shape with its numerical error; {drawn_for_groups(part)}. "
+            "Middle and right: mean escape time against volume and narrowest neck; dashed: least squares on "
+            "logarithms.",
             wide=True,
         )
-        for source, (_, _, title) in zip(report.figures, report.settings, strict=True)
+        for source, (_, part, title) in zip(report.figures, report.settings, strict=True)
     ]
     more = len(report.result.statistics.settings) - len(report.settings)
     note = f'<p class="soft">and {more} more combinations of swept values; all are in cases.csv.</p>' if more else ""
@@ -326,19 +335,23 @@ def _slowest(report: _Report) -> str:
         tiles.append(
             html_figure(
                 pictures.slow,
-                f"{row['shape']} ({row['group'] or 'no group'}): mean {format_time(row['mean_time_s'], 3)}, slowest "
-                f"place {format_time(row['slowest_time_s'], 3)}; in its own scale, red: its slowest 10 % of the wall.",
+                f"{row['shape']} ({row['group'] or 'no group'}): mean {_unbroken(row['mean_time_s'])}, slowest place "
+                f"{_unbroken(row['slowest_time_s'])}; in its own scale, red: its slowest 10 % of the wall.",
                 wide=False,
             )
         )
     return f'<h2>Slowest shapes and their slow regions</h2><div class="tiles">{"".join(tiles)}</div>' if tiles else ""
 
 
+def _unbroken(seconds: float) -> str:
+    return format_time(seconds, 3).replace(" ", "\u00a0")
+
+
 def _ranked(report: _Report) -> str:
     if not report.settings:
         return ""
     _, part, title = report.settings[0]
-    heads = ["rank", "one scale for all", "own scale", "shape", "group", "subject"]
+    heads = ["rank", *_PICTURED, *_TEXTS]
     heads += [f"mean time{f', {name}' if name else ''}" for _, _, name in report.settings]
     heads += [
         "CV",
@@ -349,11 +362,7 @@ def _ranked(report: _Report) -> str:
         "longest path",
         "neck radius",
     ]
-    pictured = {1, 2}
-    head = "".join(
-        f"<th>{escape(name)}</th>" if k in pictured else f'<th><button type="button">{escape(name)}</button></th>'
-        for k, name in enumerate(heads)
-    )
+    head = "".join(_head_cell(name) for name in heads)
     others = [rows.set_index("shape") for _, rows, _ in report.settings]
     lines = []
     ranked = part[part["mean_time_s"].notna()].sort_values("mean_time_s", ascending=False)
@@ -373,12 +382,18 @@ def _ranked(report: _Report) -> str:
     )
 
 
+def _head_cell(name: str) -> str:
+    kind = ' class="text"' if name in (*_PICTURED, *_TEXTS) else ""
+    inside = escape(name) if name in _PICTURED else f'<button type="button">{escape(name)}</button>'
+    return f"<th{kind}>{inside}</th>"
+
+
 def _ranked_row(rank: int, row: Any, others: Sequence[pd.DataFrame], pictures: _Pictures | None) -> str:
     cells = [_cell(str(rank), rank)]
     for source in (None, None) if pictures is None else (pictures.common, pictures.own):
         shown = f'<img src="{source}" alt="{escape(str(row["shape"]), quote=True)}">' if source else ""
         cells.append(f'<td class="picture">{shown}</td>')
-    cells += [f'<td class="text">{escape(str(row[name]))}</td>' for name in ("shape", "group", "subject")]
+    cells += [f'<td class="text">{escape(str(row[name]))}</td>' for name in _TEXTS]
     for table in others:
         there = table.loc[row["shape"]]
         time = float(there["mean_time_s"])

@@ -23,7 +23,7 @@ from .shapes import border_edges, standard_view
 if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
 
-__all__ = ["colour_bar", "common_scale", "thumbnails"]
+__all__ = ["colour_bar", "common_scale", "picture_width_um", "thumbnails"]
 
 #: Above this ratio of the slowest shape to the fastest, a linear scale would leave the fast ones in one colour.
 _WIDE = 20.0
@@ -39,6 +39,14 @@ def common_scale(slowest_s: Sequence[float]) -> ColourScale:
     if high > _WIDE * low:
         return ColourScale(0.1 * low, high, factor, label, log=True, clipped=True)
     return ColourScale(0.0, high, factor, label)
+
+
+def picture_width_um(result: EscapeResult, size: tuple[int, int]) -> float:
+    """Width in µm of a picture of so many pixels that the shape just fills."""
+    view = standard_view(result, "front")
+    left, bottom, right, top = _WHOLE_FRAME
+    across, along = float(np.ptp(result.vertices @ view.right)), float(np.ptp(result.vertices @ view.up))
+    return max(across / (right - left), along / (top - bottom) * size[0] / size[1])
 
 
 def thumbnails(
@@ -75,6 +83,7 @@ def thumbnails(
         for scale in scales:
             if skin is not None:
                 paint_time(skin, scale or time_colours(result))
+                plotter.render()
             pictures.append(_png(plotter.screenshot(return_img=True)))
     finally:
         plotter.close()

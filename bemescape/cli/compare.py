@@ -30,6 +30,7 @@ def compare(
     """Put 2 to 12 saved results side by side: times, shapes, shares; nothing is solved."""
     from bemescape.results.store import load_result
     from bemescape.study.measures import measured
+    from bemescape.study.table import share_columns
 
     if not FEWEST <= len(results) <= MOST:
         raise SettingsError(f"{len(results)} results are given; compare takes {FEWEST} to {MOST}, a study takes more")
@@ -38,9 +39,11 @@ def compare(
             raise SettingsError(f"--{ending[1:]} is {path}; give a file that ends in {ending} in an existing folder")
     loaded = [load_result(folder) for folder in results]
     names = _names(results, loaded)
+    found = [measured(result) for result in loaded]
+    shares = share_columns(name for row in found for name in row["shares"])
     rows = [
-        {"result": name, "diffusion_um2_s": result.diffusion_um2_s, **_flat(measured(result))}
-        for name, result in zip(names, loaded, strict=True)
+        {"result": name, "diffusion_um2_s": result.diffusion_um2_s, **_flat(row, shares)}
+        for name, result, row in zip(names, loaded, found, strict=True)
     ]
     if csv is not None:
         import pandas as pd
@@ -69,10 +72,10 @@ def _names(folders: list[Path], results: list[EscapeResult]) -> list[str]:
     return names if len(set(names)) == len(names) else [str(folder) for folder in folders]
 
 
-def _flat(row: Mapping[str, Any]) -> dict[str, object]:
-    values: dict[str, object] = dict(row)
-    del values["shares"]
-    return values | {f"share_{name}": share for name, share in row["shares"].items()}
+def _flat(row: Mapping[str, Any], shares: Mapping[str, str]) -> dict[str, object]:
+    """The row with a column for each window, by its name in the table of a study."""
+    values = {key: value for key, value in row.items() if key != "shares"}
+    return values | {shares[name]: share for name, share in row["shares"].items()}
 
 
 def _print_table(rows: list[dict[str, object]]) -> None:

@@ -5,9 +5,9 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, Literal, Self
+from typing import Annotated, Any, Literal, Self
 
-from pydantic import Field, ValidationError, field_validator, model_validator
+from pydantic import BeforeValidator, Field, ValidationError, WithJsonSchema, field_validator, model_validator
 
 from bemescape.case import (
     AccuracySection,
@@ -29,10 +29,26 @@ __all__ = ["Study", "StudyDocument", "read_study", "study_schema"]
 MOST_VALUES = 1000
 
 
+#: One pattern or several.
+_Patterns = Annotated[
+    tuple[FileName, ...],
+    BeforeValidator(lambda value: (value,) if isinstance(value, str) else value),
+    WithJsonSchema(
+        {
+            "oneOf": [{"type": "string"}, {"type": "array", "items": {"type": "string"}, "minItems": 1}],
+            "description": "mesh files; * and ** stand for any name",
+            "examples": ["control/*.ply"],
+        }
+    ),
+    Field(min_length=1),
+]
+_WholeNumber = Annotated[int, Field(strict=True)]
+
+
 class ShapesSection(Section):
     """A set of shapes: mesh files by pattern, or a CSV list of them. Paths are relative to the study file."""
 
-    files: FileName | tuple[FileName, ...] | None = Field(
+    files: _Patterns | None = Field(
         default=None, description="mesh files; * and ** stand for any name", examples=["control/*.ply"]
     )
     listed: FileName | None = Field(
@@ -57,8 +73,8 @@ class SweepSection(Section):
     diffusion: tuple[str, ...] = Field(default=(), examples=[["10 um^2/s", "20 um^2/s"]])
     radius: tuple[str, ...] = Field(default=(), examples=[["25 nm", "50 nm"]])
     permeability: tuple[str, ...] = Field(default=(), examples=[["1 um/s", "inf"]])
-    count: tuple[int, ...] = Field(default=(), examples=[[10, 20, 40]])
-    seed: tuple[int, ...] = Field(default=(), examples=[[1, 2, 3]])
+    count: tuple[_WholeNumber, ...] = Field(default=(), examples=[[10, 20, 40]])
+    seed: tuple[_WholeNumber, ...] = Field(default=(), examples=[[1, 2, 3]])
     window: Name | None = Field(
         default=None, description="the one window whose radius, permeability, count or seed is swept; all by default"
     )
@@ -95,7 +111,7 @@ class Swept:
 SWEPT: Mapping[str, Swept] = {
     "diffusion": Swept("diffusion_um2_s", "D", diffusion_um2_s),
     "radius": Swept("swept_radius_um", "a", lambda value: length_um(value, "radius")),
-    "permeability": Swept("swept_permeability_um_s", "κ", permeability_um_s),
+    "permeability": Swept("swept_permeability_um_s", "kappa", permeability_um_s),
     "count": Swept("swept_count", "count", int),
     "seed": Swept("swept_seed", "seed", int),
 }

@@ -6,6 +6,7 @@ may die at any moment, and its case is given to another one.
 
 from __future__ import annotations
 
+import contextlib
 import logging
 import os
 import queue
@@ -99,7 +100,7 @@ def crew(
                     n_workers=workers,
                     threads_per_worker=1,
                     processes=True,
-                    dashboard_address=None,
+                    dashboard_address=":0",
                     memory_limit=None,
                     silence_logs=logging.CRITICAL,
                     env=_ONE_THREAD,
@@ -110,9 +111,16 @@ def crew(
                     f"no worker processes can be started here: {_line(error)}; a script must call run_study under "
                     'if __name__ == "__main__":'
                 ) from error
-            with cluster, distributed.Client(cluster, set_as_default=False) as client:
+            client = distributed.Client(cluster, set_as_default=False)
+            try:
                 budget = memory_mb if memory_mb is not None else MEMORY_PART * _free_mb()
                 yield Crew(client, workers, budget, cluster.scheduler_address)
+            finally:
+                # A busy machine may not end its workers in time; they end with this process, and all is stored.
+                with contextlib.suppress(TimeoutError, OSError, RuntimeError):
+                    client.close()
+                with contextlib.suppress(TimeoutError, OSError, RuntimeError):
+                    cluster.close()
             return
         try:
             client = distributed.Client(scheduler, timeout="10s", set_as_default=False)
@@ -180,7 +188,7 @@ class Engine:
     patience_s: float = PATIENCE_S
     failures: dict[str, str] = field(default_factory=dict)
     _arrived: queue.SimpleQueue[tuple[str, Any]] = field(default_factory=queue.SimpleQueue)
-    _running: dict[str, tuple[PlannedCase, Future]] = field(default_factory=dict)
+    _running: dict[str, tuple[list[PlannedCase], Future]] = field(default_factory=dict)
     _begun: dict[str, str] = field(default_factory=dict)
     _recent: deque[tuple[float, float]] = field(default_factory=lambda: deque(maxlen=16))
 
@@ -194,9 +202,12 @@ class Engine:
         KeyboardInterrupt
             Outcomes that had arrived are stored first.
         """
+        twins: dict[str, list[PlannedCase]] = {}
+        for case in cases:
+            twins.setdefault(case.solve_key, []).append(case)
         # The longest first: what is left to wait for at the end is then short.
-        waiting = sorted(cases, key=lambda case: -case.estimated_s)
-        total, last_tick, last_seen = len(waiting), 0.0, time.monotonic()
+        waiting = sorted(twins.values(), key=lambda group: -group[0].estimated_s)
+        total, last_tick, last_seen = len(cases), 0.0, time.monotonic()
         client = self.crew.client
         client.subscribe_topic(STARTED, lambda event: self._arrived.put(("started", event[1])))
         try:
@@ -221,17 +232,17 @@ class Engine:
         finally:
             self._let_go()
 
-    def _hand_out(self, waiting: list[PlannedCase]) -> None:
-        """Give out cases: one beyond the workers that there are, and none that would exceed the memory together."""
+    def _hand_out(self, waiting: list[list[PlannedCase]]) -> None:
+        """Give out solves: one beyond the workers that there are, and none beyond the memory with the others."""
         workers = max(1, self._workers())
         while waiting and len(self._running) < workers + 1:
-            sizes = sorted((case.estimated_mb for case, _ in self._running.values()), reverse=True)
+            sizes = sorted((group[0].estimated_mb for group, _ in self._running.values()), reverse=True)
             fits = next(
                 (
                     number
-                    for number, case in enumerate(waiting)
+                    for number, group in enumerate(waiting)
                     if not sizes
-                    or sum(sorted([*sizes, case.estimated_mb], reverse=True)[:workers]) <= self.crew.memory_mb
+                    or sum(sorted([*sizes, group[0].estimated_mb], reverse=True)[:workers]) <= self.crew.memory_mb
                 ),
                 None,
             )
@@ -239,36 +250,33 @@ class Engine:
                 return
             self._submit(waiting.pop(fits))
 
-    def _submit(self, case: PlannedCase) -> None:
+    def _submit(self, group: list[PlannedCase]) -> None:
+        case = group[0]
         try:
             files = {name: path.read_bytes() for name, path in case.files.items()}
         except OSError as error:
-            self._fail(case, f"{case.shape.place}: {error.filename} cannot be read: {error.strerror}")
+            self._fail(group, f"{case.shape.place}: {error.filename} cannot be read: {error.strerror}")
             return
-        order = Order(case.key, case.shape.name, case.shape.place, case.table, files, __version__)
+        twins = tuple((twin.key, twin.table) for twin in group[1:])
+        order = Order(case.key, case.shape.name, case.shape.place, case.table, files, __version__, twins)
         future = self.crew.client.submit(solve_order, order, self.solve, key=f"case-{case.key}", pure=False)
-        self._running[case.key] = (case, future)
+        self._running[case.key] = (group, future)
         future.add_done_callback(lambda done, key=case.key: self._arrived.put(("done", (key, done))))
 
     def _take(self, kind: str, content: Any) -> None:
         if kind == "started":
-            key = content["key"]
-            if key in self._running:
-                case, _ = self._running[key]
-                if key in self._begun:
-                    self.events({"event": "worker_lost", "case": case.name, "worker": self._begun[key]})
-                self._begun[key] = content["by"]
-                self.events({"event": "started", "case": case.name, "worker": content["by"]})
+            self._take_start(content["key"], content["by"])
             return
         key, future = content
         if key not in self._running:
             return
-        case, _ = self._running.pop(key)
-        self._begun.pop(key, None)
+        group, _ = self._running.pop(key)
+        for case in group:
+            self._begun.pop(case.key, None)
         if future.status == "finished":
-            self._receive(case, future.result())
+            self._receive(group, future.result())
         elif future.status == "error":
-            self._fail(case, f"{case.shape.place}: {_why(future.exception())}")
+            self._fail(group, f"{group[0].shape.place}: {_why(future.exception())}")
         else:
             raise SettingsError(
                 f"the scheduler {self.crew.address} is gone; finished cases are kept, so start it and run the same "
@@ -276,42 +284,57 @@ class Engine:
             )
         future.release()
 
-    def _receive(self, case: PlannedCase, outcome: Outcome) -> None:
-        self._recent.append((case.estimated_s, outcome.seconds))
-        if outcome.failure:
-            self._fail(case, outcome.failure)
+    def _take_start(self, key: str, worker: str) -> None:
+        case = next((case for group, _ in self._running.values() for case in group if case.key == key), None)
+        if case is None:
             return
-        self.keep(outcome, case)
-        self.events(
-            {
-                "event": "finished",
-                "case": case.name,
-                "mean_time_s": outcome.values.get("mean_time_s"),
-                "seconds": round(outcome.seconds, 3),
-            }
-        )
+        if key in self._begun:
+            self.events({"event": "worker_lost", "case": case.name, "worker": self._begun[key]})
+        self._begun[key] = worker
+        self.events({"event": "started", "case": case.name, "worker": worker})
 
-    def _fail(self, case: PlannedCase, reason: str) -> None:
-        self.failures[case.key] = reason
-        self.events({"event": "failed", "case": case.name, "reason": reason})
+    def _receive(self, group: Sequence[PlannedCase], outcomes: Sequence[Outcome]) -> None:
+        self._recent.append((group[0].estimated_s, sum(outcome.seconds for outcome in outcomes)))
+        for case, outcome in zip(group, outcomes, strict=True):
+            if outcome.failure:
+                self._fail([case], outcome.failure)
+                continue
+            self.keep(outcome, case)
+            self.events(
+                {
+                    "event": "finished",
+                    "case": case.name,
+                    "mean_time_s": outcome.values.get("mean_time_s"),
+                    "seconds": round(outcome.seconds, 3),
+                }
+            )
 
-    def _tell_progress(self, total: int, waiting: Sequence[PlannedCase]) -> None:
-        left = [*waiting, *(case for case, _ in self._running.values())]
-        # The last cases only: the first one of each worker also loads and compiles the solver.
-        pace = (
-            sum(taken for _, taken in self._recent) / sum(known for known, _ in self._recent) if self._recent else 1.0
-        )
-        seconds = pace * sum(case.estimated_s for case in left) / max(1, min(self._workers(), len(left) or 1))
+    def _fail(self, group: Sequence[PlannedCase], reason: str) -> None:
+        for case in group:
+            self.failures[case.key] = reason
+            self.events({"event": "failed", "case": case.name, "reason": reason})
+
+    def _tell_progress(self, total: int, waiting: Sequence[Sequence[PlannedCase]]) -> None:
+        left = [*waiting, *(group for group, _ in self._running.values())]
+        seconds = self._pace() * sum(group[0].estimated_s for group in left)
+        seconds /= max(1, min(self._workers(), len(left) or 1))
+        running = [case.name for group, _ in self._running.values() for case in group if case.key in self._begun]
         self.events(
             {
                 "event": "progress",
-                "done": total - len(left),
+                "done": total - sum(len(group) for group in left),
                 "cases": total,
                 "failed": len(self.failures),
-                "running": [self._running[key][0].name for key in self._begun if key in self._running],
+                "running": running,
                 "left_s": round(seconds, 1),
             }
         )
+
+    def _pace(self) -> float:
+        """Seconds taken per second estimated, of the last cases: the first ones also loaded and compiled the solver."""
+        if not self._recent:
+            return 1.0
+        return sum(taken for _, taken in self._recent) / sum(estimated for estimated, _ in self._recent)
 
     def _workers(self) -> int:
         try:

@@ -18,19 +18,34 @@ if TYPE_CHECKING:
 
     from bemescape.results.result import EscapeResult
 
-__all__ = ["longest_geodesic_um", "measured", "narrowest_neck_radius_um", "sphericity"]
+__all__ = ["longest_geodesic_um", "measured", "narrowest_neck_radius_um", "shape_lengths", "sphericity"]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-#: Levels of time at which the neck is measured.
-_NECK_LEVELS = 64
+#: Levels of time at which the neck is looked for, equally far apart in area and in time, and then beside the best one.
+_NECK_LEVELS, _NECK_LEVELS_AGAIN = 16, 28
 #: A slow place of the wall is one whose time is above the mean by this factor.
 SLOW_FACTOR = 1.1
 
 
-def measured(result: EscapeResult) -> Mapping[str, Any]:
-    """One row of the table: numbers in µm and s, without the labels that the study file gives the shape."""
+def shape_lengths(result: EscapeResult) -> Mapping[str, float]:
+    """Lengths in µm that take a while to find and that the diffusion coefficient does not change."""
+    return {
+        "longest_geodesic_um": longest_geodesic_um(result.vertices, result.faces),
+        "narrowest_neck_radius_um": narrowest_neck_radius_um(result),
+    }
+
+
+def measured(result: EscapeResult, lengths: Mapping[str, float] | None = None) -> Mapping[str, Any]:
+    """One row of the table: numbers in µm and s, without the labels that the study file gives the shape.
+
+    Parameters
+    ----------
+    result : EscapeResult
+    lengths : mapping, optional
+        Its `shape_lengths`, where they are known from the same shape at another diffusion coefficient.
+    """
     summary = result.summary
     wall = result.panel_window < 0
     wall_area = float(result.panel_areas_um2[wall].sum())
@@ -49,8 +64,7 @@ def measured(result: EscapeResult) -> Mapping[str, Any]:
         "volume_um3": summary.volume_um3,
         "area_um2": summary.area_um2,
         "sphericity": sphericity(summary.volume_um3, summary.area_um2),
-        "longest_geodesic_um": longest_geodesic_um(result.vertices, result.faces),
-        "narrowest_neck_radius_um": narrowest_neck_radius_um(result),
+        **(shape_lengths(result) if lengths is None else lengths),
         "window_count": len(summary.windows),
         "window_area_um2": sum(window.area_um2 for window in summary.windows),
         "rule_of_thumb_s": rule,
@@ -117,15 +131,29 @@ def narrowest_neck_radius_um(result: EscapeResult) -> float:
         return math.sqrt(float(areas.sum()) / math.pi)
     narrowest = flat if flat > 0.0 else float(areas[window].sum())
     pairs = _touching(result.faces)
-    order = np.quantile(wall_times, np.linspace(0.0, 1.0, _NECK_LEVELS + 2)[1:-1])
-    steps = np.linspace(float(wall_times.min()), float(wall_times.max()), _NECK_LEVELS + 2)[1:-1]
-    for level in np.unique(np.concatenate([order, steps])):
-        near = window | (result.panel_time_s <= level)
-        section, volume = _cross_section(result, vectors, near, pairs)
+    by_area = np.quantile(wall_times, np.linspace(0.0, 1.0, _NECK_LEVELS + 2)[1:-1])
+    by_time = np.linspace(float(wall_times.min()), float(wall_times.max()), _NECK_LEVELS + 2)[1:-1]
+    levels = np.unique(np.concatenate([[float(wall_times.min())], by_area, by_time]))
+    centroids = result.panel_centroids
+    sections = _sections(result, vectors, centroids, pairs, levels)
+    best = int(np.argmin(sections))
+    # Two places on: the neighbour may be all but the same level, of the other series.
+    low, high = levels[max(best - 2, 0)], levels[min(best + 2, len(levels) - 1)]
+    again = np.linspace(low, high, _NECK_LEVELS_AGAIN + 2)[1:-1]
+    narrowest = min(narrowest, float(sections[best]), float(_sections(result, vectors, centroids, pairs, again).min()))
+    return math.sqrt(narrowest / math.pi)
+
+
+def _sections(result: EscapeResult, vectors: Floats, centroids: Floats, pairs: Ints, levels: Floats) -> Floats:
+    """Cross-section (k,) at each level; infinite where less than half of the volume lies beyond it."""
+    sections = np.full(len(levels), np.inf)
+    for number, level in enumerate(levels):
+        near = (result.panel_window >= 0) | (result.panel_time_s <= level)
+        section, volume = _cross_section(vectors, centroids, near, pairs)
         if volume > 0.5 * result.volume_um3:
             break
-        narrowest = min(narrowest, section)
-    return math.sqrt(narrowest / math.pi)
+        sections[number] = section
+    return sections
 
 
 def _touching(faces: Ints) -> Ints:
@@ -137,7 +165,7 @@ def _touching(faces: Ints) -> Ints:
     return np.column_stack([panel[:-1][same], panel[1:][same]])
 
 
-def _cross_section(result: EscapeResult, vectors: Floats, near: NDArray[np.bool_], pairs: Ints) -> tuple[float, float]:
+def _cross_section(vectors: Floats, centroids: Floats, near: NDArray[np.bool_], pairs: Ints) -> tuple[float, float]:
     """Area of the cross-sections between near and far panels, and the volume on the near side.
 
     Both sides fall into connected pieces. A piece with one border is closed by the cross-section −∫n dS; a piece with
@@ -158,7 +186,6 @@ def _cross_section(result: EscapeResult, vectors: Floats, near: NDArray[np.bool_
     # cross-section adds nothing.
     border = pairs[~same]
     members = np.where(near[border[:, 0]], border[:, 0], border[:, 1])
-    centroids = result.panel_centroids
     weight = np.bincount(piece[members], minlength=pieces)
     sums = [np.bincount(piece[members], weights=centroids[members, axis], minlength=pieces) for axis in range(3)]
     middle = np.column_stack(sums) / np.maximum(weight, 1)[:, None]

@@ -55,6 +55,8 @@ class PlannedCase:
         These names -> where the files are.
     key : str
         Checksum of everything that the answer depends on: files, windows, settings, version.
+    solve_key : str
+        The same without D where all windows absorb perfectly: one solve then serves every D.
     mesh_sha256 : str
     faces : int
         Faces of the mesh file, from its header or size.
@@ -68,6 +70,7 @@ class PlannedCase:
     table: Mapping[str, Any]
     files: Mapping[str, Path]
     key: str
+    solve_key: str
     mesh_sha256: str
     faces: int
     estimated_s: float
@@ -105,7 +108,8 @@ class StudyPlan:
 
     def estimated_s(self, workers: int, skip: frozenset[str] = frozenset()) -> float:
         """Seconds on so many workers for the cases whose key is not in `skip`."""
-        left = [case.estimated_s for key, case in self.distinct.items() if key not in skip]
+        solves = {case.solve_key: case.estimated_s for key, case in self.distinct.items() if key not in skip}
+        left = list(solves.values())
         return max([sum(left) / workers, *left]) if left else 0.0
 
 
@@ -128,10 +132,10 @@ def plan_study(study: Study) -> StudyPlan:
     sums: dict[Path, str] = {}
     cases = []
     for shape in shapes:
-        windows, folder = _windows_of(study, shape)
+        rules = _windows_of(study, shape)
         faces = estimated_faces(shape.path)
         for chosen in combinations:
-            cases.append(_planned(study, shape, windows, folder, chosen, faces, sums))
+            cases.append(_planned(study, shape, rules, chosen, faces, sums))
     return StudyPlan(study, shapes, tuple(cases))
 
 
@@ -141,18 +145,26 @@ def _combinations(study: Study) -> Sequence[dict[str, Any]]:
     return [dict(zip(swept, values, strict=True)) for values in itertools.product(*swept.values())]
 
 
-def _windows_of(study: Study, shape: StudyShape) -> tuple[list[dict[str, Any]], Path]:
-    """The rules for the windows of one shape as tables, and the folder that their files are relative to."""
+@dataclass(frozen=True)
+class _Rules:
+    """The windows of one shape as tables, the folder that their files are relative to, and where they are written."""
+
+    windows: Sequence[Mapping[str, Any]]
+    folder: Path
+    place: str
+
+
+def _windows_of(study: Study, shape: StudyShape) -> _Rules:
     sidecar = shape.path.with_name(shape.path.stem + SIDECAR)
-    windows, folder = list(study.table.get("window", [])), study.folder
-    if sidecar.is_file():
-        windows, folder = _sidecar_windows(sidecar), sidecar.parent
+    windows, folder, place = list(study.table.get("window", [])), study.folder, shape.place
+    if sidecar.exists():
+        windows, folder, place = _sidecar_windows(sidecar), sidecar.parent, f"{shape.place}, {sidecar.name}"
     if not windows:
         raise SettingsError(
             f"{shape.place}: shape {shape.name!r} has no window; add a [[window]] to the study, or a file "
             f"{sidecar.name} beside the mesh"
         )
-    return overridden(windows, shape), folder
+    return _Rules(overridden(windows, shape), folder, place)
 
 
 def _sidecar_windows(path: Path) -> list[dict[str, Any]]:
@@ -160,8 +172,9 @@ def _sidecar_windows(path: Path) -> list[dict[str, Any]]:
         table = tomllib.loads(path.read_text(encoding="utf-8-sig"))
     except (OSError, UnicodeDecodeError, tomllib.TOMLDecodeError, RecursionError, ValueError) as error:
         raise SettingsError(f"{path} is not valid TOML: {' '.join(str(error).split())[:200]}") from error
-    windows = table.get("window")
-    if set(table) != {"window"} or not isinstance(windows, list) or not windows:
+    found: Any = table.get("window")
+    windows = [window for window in found if isinstance(window, dict)] if isinstance(found, list) else []
+    if set(table) != {"window"} or not windows or len(windows) < len(found):
         others = sorted(set(table) - {"window"})
         raise SettingsError(
             f"{path} holds {', '.join(map(repr, others)) if others else 'no [[window]]'}; a windows file beside a mesh "
@@ -173,8 +186,7 @@ def _sidecar_windows(path: Path) -> list[dict[str, Any]]:
 def _planned(
     study: Study,
     shape: StudyShape,
-    windows: Sequence[Mapping[str, Any]],
-    folder: Path,
+    rules: _Rules,
     chosen: Mapping[str, Any],
     faces: int,
     sums: dict[Path, str],
@@ -182,27 +194,26 @@ def _planned(
     table: dict[str, Any] = {
         "surface": {"file": shape.path.name, "unit": _listed(shape.unit), "heal": shape.heal},
         "motion": {"diffusion": chosen["diffusion"]} if "diffusion" in chosen else dict(study.table["motion"]),
-        "window": _swept_windows(study, windows, chosen),
+        "window": _swept_windows(study, rules.windows, chosen),
         "accuracy": dict(study.table.get("accuracy", {})),
     }
-    case = parse_case(table, folder=folder, name=shape.name, source=shape.place)
+    case = parse_case(table, folder=rules.folder, name=shape.name, source=rules.place)
     files = {shape.path.name: shape.path}
     for window in table["window"]:
         for part in window.values():
             if isinstance(part, dict) and isinstance(part.get("file"), str):
-                path = folder / part["file"]
+                path = rules.folder / part["file"]
                 if not path.is_file():
                     raise SettingsError(
-                        f"{shape.place}: window {window.get('name')!r} names the file {part['file']!r}, but there is "
+                        f"{rules.place}: window {window.get('name')!r} names the file {part['file']!r}, but there is "
                         f"no file {path}"
                     )
                 part["file"] = _free_name(path, files)
                 files[part["file"]] = path
-    if not window_has_counterpart(study, table["window"], chosen):
-        swept = next(key for key in ("radius", "count", "seed") if key in chosen)
+    for key in _idle_sweeps(study, table["window"], chosen):
+        needs = "" if key == "permeability" else f"it needs a window with a {key}, and "
         raise SettingsError(
-            f"{shape.place}: [sweep] {swept} has no window to act on; it needs a window with a {swept}, and "
-            f"[sweep] window, if given, must be its name"
+            f"{shape.place}: [sweep] {key} has no window to act on; {needs}[sweep] window, if given, must be its name"
         )
     checksums = {name: _sha256(path, sums) for name, path in files.items()}
     document = case.document
@@ -215,6 +226,7 @@ def _planned(
         table=table,
         files=files,
         key=_key(document, table, checksums),
+        solve_key=_key(document, table, checksums, any_diffusion=_scales_with_diffusion(document)),
         mesh_sha256=checksums[shape.path.name],
         faces=faces,
         estimated_s=_BASE_S + _S_PER_PANEL * panels,
@@ -248,8 +260,8 @@ def _swept_windows(
     return made
 
 
-def window_has_counterpart(study: Study, windows: Sequence[Mapping[str, Any]], chosen: Mapping[str, Any]) -> bool:
-    """Whether each swept key of a window acts on at least one window."""
+def _idle_sweeps(study: Study, windows: Sequence[Mapping[str, Any]], chosen: Mapping[str, Any]) -> list[str]:
+    """The swept keys of windows that act on none of them."""
     only = study.document.sweep.window
     parts = [
         part
@@ -258,13 +270,14 @@ def window_has_counterpart(study: Study, windows: Sequence[Mapping[str, Any]], c
         for part in window.values()
         if isinstance(part, dict)
     ]
-    has_radius = any("radius" in part for part in parts)
     is_scatter = any("count" in part for part in parts)
-    return (
-        ("radius" not in chosen or has_radius)
-        and (not {"count", "seed"} & set(chosen) or is_scatter)
-        and ("permeability" not in chosen or bool(parts))
-    )
+    acts = {
+        "radius": any("radius" in part for part in parts),
+        "permeability": bool(parts),
+        "count": is_scatter,
+        "seed": is_scatter,
+    }
+    return [key for key in acts if key in chosen and not acts[key]]
 
 
 def _free_name(path: Path, files: Mapping[str, Path]) -> str:
@@ -283,9 +296,18 @@ def _sha256(path: Path, known: dict[Path, str]) -> str:
     return known[path]
 
 
-def _key(document: CaseDocument, table: Mapping[str, Any], checksums: Mapping[str, str]) -> str:
+def _scales_with_diffusion(document: CaseDocument) -> bool:
+    """Whether every time of the case is in proportion to 1/D."""
+    return all(math.isinf(window.permeability_um_s) for window in document.window)
+
+
+def _key(
+    document: CaseDocument, table: Mapping[str, Any], checksums: Mapping[str, str], *, any_diffusion: bool = False
+) -> str:
     """Names of files are replaced by checksums: a renamed or moved copy is the same case."""
     content = document.model_dump(mode="json")
+    if any_diffusion:
+        del content["motion"]
     content["surface"]["file"] = checksums[table["surface"]["file"]]
     for entry, written in zip(content["window"], table["window"], strict=True):
         for kind, part in entry.items():

@@ -25,6 +25,9 @@ KNOWN_COLUMNS = ("file", "name", "unit", "group", "subject")
 OVERRIDE = "window."
 LARGEST_LIST_BYTES = 20_000_000
 MOST_SHAPES = 100_000
+LONGEST_NAME = 100
+#: Of a path in a message.
+LONGEST_PATH = 300
 _DECIMAL_COMMA = re.compile(r"\s*[+-]?\d+,\d+(?:[eE][+-]?\d+)?\s*")
 
 
@@ -97,11 +100,10 @@ def _refuse_equal_names(shapes: Sequence[StudyShape]) -> None:
 
 
 def _from_patterns(study: Study, section: ShapesSection, place: str) -> list[StudyShape]:
-    patterns = section.files if isinstance(section.files, tuple) else (section.files or "",)
     if section.unit is None:
         raise SettingsError(f'{place}: unit is missing; mesh files carry none, so write unit = "nm"')
     shapes: list[StudyShape] = []
-    for pattern in patterns:
+    for pattern in section.files or ():
         paths = _matching(study.folder, pattern, place)
         for path in paths:
             if any(path == shape.path for shape in shapes):
@@ -154,21 +156,16 @@ def _from_list(study: Study, section: ShapesSection, place: str) -> list[StudySh
     shapes = []
     for row, cells in _rows(path, place):
         where = f"{label} row {row}"
-        file = cells.get("file", "")
-        if not file:
-            raise SettingsError(f"{where}: the column 'file' is empty; name the mesh file")
-        mesh = path.parent / file
-        if not mesh.is_file():
-            raise SettingsError(f"{where}: there is no file {mesh}; the path is relative to the list")
+        mesh = _mesh_of_row(path.parent, cells["file"], where)
         shapes.append(
             StudyShape(
-                name=_checked_name(cells.get("name") or mesh.stem, where),
+                name=_checked_name("name", cells.get("name") or mesh.stem, where),
                 path=mesh,
                 file=_as_written(mesh, study.folder),
                 unit=_unit_of_row(cells.get("unit"), section, where),
                 heal=section.heal,
-                group=cells.get("group") or section.group or "",
-                subject=cells.get("subject") or section.subject or "",
+                group=_checked_name("group", cells.get("group") or section.group or "", where),
+                subject=_checked_name("subject", cells.get("subject") or section.subject or "", where),
                 covariates={
                     column: _covariate(text, f"{where}, column {column!r}")
                     for column, text in cells.items()
@@ -250,9 +247,26 @@ def _check_columns(columns: Sequence[str], path: Path) -> None:
             raise SettingsError(f"{path.name} row 1 names the column {column!r} twice; rename one of them")
 
 
-def _checked_name(name: str, where: str) -> str:
-    if len(name) > 100 or not name.isprintable():
-        raise SettingsError(f"{where}: the name {name[:40]!r} is too long or not printable (limit 100 characters)")
+def _mesh_of_row(folder: Path, file: str, where: str) -> Path:
+    if not file:
+        raise SettingsError(f"{where}: the column 'file' is empty; name the mesh file")
+    mesh = folder / file
+    try:
+        found = mesh.is_file()
+    except (OSError, ValueError):  # longer than a name can be, for instance
+        found = False
+    if not found:
+        raise SettingsError(f"{where}: there is no file {str(mesh)[:LONGEST_PATH]}; the path is relative to the list")
+    if mesh.suffix.lower() not in MESH_ENDINGS:
+        raise SettingsError(f"{where}: {file!r} is no mesh file; such files end in {', '.join(MESH_ENDINGS)}")
+    return mesh
+
+
+def _checked_name(column: str, name: str, where: str) -> str:
+    if len(name) > LONGEST_NAME or not name.isprintable():
+        raise SettingsError(
+            f"{where}: the {column} {name[:40]!r} is too long or not printable (limit {LONGEST_NAME} characters)"
+        )
     return name
 
 

@@ -366,7 +366,9 @@ def _pair_statement(row: dict[str, Any], chosen: _Chosen) -> str:
         least = smallest_p(*row["sizes"])
         why = f"no p below {least:.2g} could come out" if least > LEVEL else "all values are equal"
         return f"{line}. With so few no test is meaningful ({why})."
-    return f"{line}; Mann–Whitney p = {row['p']:.2g}, after Holm {row['p_holm']:.2g}; effect {row['effect']:+.2f}."
+    return (
+        f"{line}; Mann–Whitney p = {row['p']:.2g}, after Holm {row['p_holm']:.2g}; Cliff's delta {row['effect']:+.2f}."
+    )
 
 
 def _mixed_model(used: pd.DataFrame, names: Sequence[str]) -> MixedModel | None:

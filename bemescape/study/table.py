@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import io
-from collections.abc import Mapping
+import itertools
+import re
+from collections.abc import Iterable, Mapping
 from typing import TYPE_CHECKING, Any
 
 from bemescape.study.plan import StudyPlan
@@ -12,7 +14,7 @@ from bemescape.study.store import StoredCase
 if TYPE_CHECKING:
     import pandas as pd
 
-__all__ = ["COVARIATE", "MEASURES", "TIMINGS", "make_table", "table_as_csv", "table_as_parquet"]
+__all__ = ["COVARIATE", "MEASURES", "TIMINGS", "make_table", "share_columns", "table_as_csv", "table_as_parquet"]
 
 #: Columns of numbers that differ from run to run.
 TIMINGS = ("solve_wall_s", "case_wall_s")
@@ -52,11 +54,14 @@ def make_table(plan: StudyPlan, stored: Mapping[str, StoredCase], failures: Mapp
     """One row for every planned case, in the order of the plan; a case without a result has its reason in `failure`.
 
     Columns: names and labels, covariates of the list, swept values, measures (`MEASURES`), `share_NAME` for each
-    window, checks, `failure`, and last the timings, which alone differ between equal runs.
+    window, checks, `failure`, and last the timings, which alone differ between equal runs. Apart from covariates,
+    which keep the names that the list gives them, columns are names in R and in Python.
     """
     import pandas as pd
 
-    shares = _share_names(stored)
+    shares = share_columns(name for case in stored.values() for name in case.values.get("shares", {}))
+    if len(shares) > MOST_SHARE_COLUMNS:
+        shares = {}
     rows = []
     for case in plan.cases:
         done = stored.get(case.key)
@@ -72,7 +77,7 @@ def make_table(plan: StudyPlan, stored: Mapping[str, StoredCase], failures: Mapp
         if "diffusion_um2_s" not in row and plan.study.document.motion is not None:
             row["diffusion_um2_s"] = plan.study.document.motion.diffusion_um2_s
         row |= {name: values.get(name) for name in MEASURES}
-        row |= {f"share_{name}": values.get("shares", {}).get(name) for name in shares}
+        row |= {column: values.get("shares", {}).get(name) for name, column in shares.items()}
         row |= {
             "notes": values.get("notes", ""),
             "failure": "" if done is not None else failures.get(case.key, "not solved yet"),
@@ -89,7 +94,7 @@ def make_table(plan: StudyPlan, stored: Mapping[str, StoredCase], failures: Mapp
         table[name] = table[name].astype("Int64")
     table["target_met"] = table["target_met"].astype("boolean")
     numbers = [name for name in (*MEASURES, *TIMINGS) if name not in (*_WHOLE_NUMBERS, "target_met")]
-    numbers += [f"share_{name}" for name in shares]
+    numbers += shares.values()
     table[numbers] = table[numbers].astype("float64")
     # Timings last: a reader of two tables compares all before them.
     return table[[name for name in table.columns if name not in TIMINGS] + list(TIMINGS)]
@@ -105,11 +110,18 @@ def _column_of_covariate(name: str, row: Mapping[str, Any]) -> str:
     return f"{COVARIATE}{name}" if name in row or name in MEASURES else name
 
 
-def _share_names(stored: Mapping[str, StoredCase]) -> list[str]:
-    names: dict[str, None] = {}
-    for key in sorted(stored):
-        names |= dict.fromkeys(stored[key].values.get("shares", {}))
-    return sorted(names) if len(names) <= MOST_SHARE_COLUMNS else []
+def share_columns(names: Iterable[str]) -> dict[str, str]:
+    """Name of a window -> its column, of letters, digits and underscores; equal ones are told apart by a number.
+
+    >>> share_columns(["neck end", "neck-end", "pore"])
+    {'neck end': 'share_neck_end', 'neck-end': 'share_neck_end_2', 'pore': 'share_pore'}
+    """
+    columns: dict[str, str] = {}
+    for name in sorted(set(names)):
+        plain = "share_" + (re.sub(r"\W+", "_", name).strip("_") or "window")
+        candidates = itertools.chain([plain], (f"{plain}_{number}" for number in itertools.count(2)))
+        columns[name] = next(column for column in candidates if column not in columns.values())
+    return columns
 
 
 def table_as_csv(table: pd.DataFrame) -> bytes:

@@ -1,13 +1,22 @@
 """Study files and lists: what is planned, and what is refused in one sentence with its row."""
 
+import dataclasses
 import json
+import math
 
+import numpy as np
 import pytest
+import trimesh
 
 import study_stubs
+from bemescape.case import parse_case
 from bemescape.errors import SettingsError
 from bemescape.study.document import read_study
 from bemescape.study.plan import plan_study
+from bemescape.study.work import Order, solve_order
+from bemescape.version import __version__
+
+LABELS = {"label": np.array([1, 1] + [0] * 10)}
 
 
 def planned(study):
@@ -40,6 +49,57 @@ def test_every_shape_is_planned_with_every_combination_of_swept_values(tmp_path)
     assert plan.cases[0].table["window"][0]["disc"]["radius"] == "100 nm"
     assert plan.cases[5].swept["swept_radius_um"] == 0.3
     assert all(case.estimated_s > 0.0 and case.faces == 12 for case in plan.cases)
+
+
+def test_number_seed_and_permeability_are_swept_in_the_window_that_is_named(tmp_path):
+    study = with_study(
+        tmp_path,
+        "[accuracy]",
+        '[[window]]\nname = "release"\nscatter = { count = 9, radius = "20 nm" }\n[sweep]\nwindow = "release"\n'
+        'permeability = ["2 um/s", "inf"]\ncount = [3, 5]\nseed = [7]\n[accuracy]',
+    )
+    cases = planned(study).cases[:4]
+    assert [case.name for case in cases][:2] == [
+        "box_00 kappa=2 um/s count=3 seed=7",
+        "box_00 kappa=2 um/s count=5 seed=7",
+    ]
+    assert [case.swept["swept_permeability_um_s"] for case in cases] == [2.0, 2.0, math.inf, math.inf]
+    for case, count in zip(cases, (3, 5, 3, 5), strict=True):
+        pore, release = case.table["window"]
+        assert "permeability" not in pore
+        assert release["scatter"] == {"count": count, "radius": "20 nm", "seed": 7}
+
+
+def test_every_kind_of_window_is_a_rule_and_its_files_travel_with_the_order(tmp_path):
+    """All six kinds, in a study whose worker sees nothing but its own folder."""
+    box = trimesh.creation.box((1.0, 1.0, 1.0))
+    box.apply_translation((1.0, 0.0, 0.0))
+    (tmp_path / "axons").mkdir()
+    box.export(tmp_path / "axons" / "box_00.ply")  # the name of a shape, to be told apart in the worker's folder
+    (tmp_path / "sites.csv").write_text("x,y,z\n0,0.5,0\n")
+    study = with_study(
+        tmp_path,
+        "[accuracy]",
+        '[[window]]\nname = "face"\nlabels = { array = "label", value = 1 }\n'
+        '[[window]]\nname = "contact"\nnear = { file = "axons/box_00.ply", unit = "um", distance = "10 nm" }\n'
+        '[[window]]\nname = "cut"\nlid = { point = [0, 0, -0.4], normal = [0, 0, -1] }\n'
+        '[[window]]\nname = "sites"\npoints = { file = "sites.csv", radius = "20 nm" }\n'
+        '[[window]]\nname = "pores"\nscatter = { count = 2, radius = "20 nm" }\n[accuracy]',
+    )
+    case = planned(study).cases[0]
+    seen = []
+
+    def look(order, folder):
+        found = parse_case(order.table, folder=folder, name=order.name)
+        surface = found.load_surface()
+        seen.extend(window.name for window in found.windows_for(dataclasses.replace(surface, face_data=LABELS)))
+        return {}
+
+    files = {name: path.read_bytes() for name, path in case.files.items()}
+    order = Order(case.key, case.name, case.shape.place, case.table, files, __version__)
+    (outcome,) = solve_order(order, look)
+    assert not outcome.failure
+    assert seen == ["pore", "face", "contact", "cut", "sites", "pores"]
 
 
 def test_groups_subjects_and_covariates_come_from_the_list(tmp_path):
@@ -123,6 +183,11 @@ def test_the_key_follows_everything_that_the_answer_depends_on_and_nothing_else(
         ("mesh,group\nbox_00.ply,A\n", r"row 1 names the columns 'mesh', 'group'; one of them must be 'file'"),
         ("file,age,age\nbox_00.ply,1,2\n", r"row 1 names the column 'age' twice"),
         ("file,group\n,A\n", r"row 2: the column 'file' is empty"),
+        ("file\n" + 5000 * "x" + ".ply\n", r"row 2: there is no file"),
+        ("file\n.\n", r"row 2: there is no file"),
+        ("file\nshapes.csv\n", r"row 2: 'shapes\.csv' is no mesh file; such files end in \.ply"),
+        ("file,group\nbox_00.ply,A\0\n", r"row 2: the group 'A\\x00' is too long or not printable"),
+        ("file,subject\nbox_00.ply," + 101 * "m" + "\n", r"row 2: the subject 'm+' is too long"),
         ("file,group\n", r"names no shape"),
         ("", r"row 1 names the columns nothing"),
         ('file,group\n"box_00.ply,A\n', r"row \d is not CSV"),
@@ -163,11 +228,57 @@ def test_a_list_that_is_not_utf_8_is_refused_with_its_row(tmp_path):
         ("[accuracy]", '[sweep]\ndiffusion = ["1 nm"]\n[accuracy]', r"\[sweep\] diffusion.*'1 nm' is not"),
         ("[accuracy]", '[sweep]\nradius = ["1 nm", "0.001 um"]\n[accuracy]', r"has the value '0\.001 um' twice"),
         ("[accuracy]", "[sweep]\nseed = [1, 2]\n[accuracy]", r"row 2: \[sweep\] seed has no window to act on"),
+        (
+            "[accuracy]",
+            '[sweep]\npermeability = ["1 um/s"]\nwindow = "hole"\n[accuracy]',
+            r"row 2: \[sweep\] permeability has no window to act on; \[sweep\] window, if given, must be its name",
+        ),
+        ("[accuracy]", "[sweep]\nseed = [true]\n[accuracy]", r"\[sweep\] seed\[0\] is True"),
+        (
+            "[accuracy]",
+            '[sweep]\ndiffusion = "1 um^2/s"\n[accuracy]',
+            r"\[sweep\] diffusion is '1 um\^2/s'; it should be a list; write",
+        ),
+        ('list = "shapes.csv"', 'files = ""', r"\[\[shapes\]\] number 1 files\[0\] is ''; give the path"),
+        ('list = "shapes.csv"', 'list = "."', r"\[\[shapes\]\] number 1: list is .*, but there is no file"),
+        (
+            'disc = { centre = [0, 0, 0.5], radius = "200 nm" }',
+            'near = { file = "axon.ply", unit = "um", distance = "9 nm" }',
+            r"row 2: window 'pore' names the file 'axon.ply', but there is no file",
+        ),
     ],
 )
 def test_a_wrong_study_file_is_refused_with_its_place(tmp_path, old, new, sentence):
     with pytest.raises(SettingsError, match=sentence):
         planned(with_study(tmp_path, old, new))
+
+
+@pytest.mark.parametrize(
+    ("content", "sentence"),
+    [
+        (b"\x89PNG\r\n\xff", r"box_01\.windows\.toml is not valid TOML"),
+        (b"window = [1, 2]\n", r"box_01\.windows\.toml holds no \[\[window\]\]"),
+        (b'[motion]\ndiffusion = "1 um^2/s"\n', r"box_01\.windows\.toml holds 'motion'"),
+        (b'[[window]]\nname = "a"\ndisk = {}\n', r"row 3, box_01\.windows\.toml: \[\[window\]\] 'a' disk is not known"),
+        (None, r"box_01\.windows\.toml is not valid TOML.*directory"),
+    ],
+)
+def test_a_damaged_file_of_windows_beside_a_mesh_is_refused_by_name(tmp_path, content, sentence):
+    study = study_stubs.write_shapes(tmp_path, 3)
+    beside = tmp_path / "box_01.windows.toml"
+    beside.mkdir() if content is None else beside.write_bytes(content)
+    with pytest.raises(SettingsError, match=sentence):
+        planned(study)
+
+
+@pytest.mark.parametrize("content", [b"", b"\x89PNG\r\n\x1a\n\0\xff", "# fötal".encode("latin-1"), b"[[shapes"])
+def test_a_study_file_of_another_kind_is_refused(tmp_path, content):
+    study = tmp_path / "x.study.toml"
+    study.write_bytes(content)
+    with pytest.raises(SettingsError, match=r"x\.study\.toml"):
+        planned(study)
+    with pytest.raises(SettingsError, match="is a folder; give the study file in it"):
+        planned(tmp_path)
 
 
 def test_a_study_without_windows_names_the_shape(tmp_path):

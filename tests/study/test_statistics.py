@@ -11,7 +11,7 @@ from bemescape.study.document import StatisticsSection
 from bemescape.study.statistics import smallest_p, study_statistics
 
 
-def statistics_of(groups, *, subjects=None, how="medians", failures=(), **columns):
+def statistics_of(groups, *, subjects=None, how="medians", failures=(), keep_table=False, **columns):
     """`groups`: name -> mean times; `columns`: name -> values in the same order."""
     rows = [
         {"case": f"{name}{number}", "shape": f"{name}{number}", "group": name, "mean_time_s": float(time)}
@@ -30,7 +30,8 @@ def statistics_of(groups, *, subjects=None, how="medians", failures=(), **column
         table.loc[row, ["mean_time_s", "failure"]] = [np.nan, reason]
     document = SimpleNamespace(statistics=StatisticsSection(subjects=how))
     plan = SimpleNamespace(study=SimpleNamespace(document=document), swept_columns=(), cases=())
-    return study_statistics(plan, table)
+    found = study_statistics(plan, table)
+    return (found, table) if keep_table else found
 
 
 def test_ranks_of_a_published_example_give_its_u_and_p():
@@ -42,6 +43,74 @@ def test_ranks_of_a_published_example_give_its_u_and_p():
     assert pair.p == pytest.approx(0.1111111, abs=1e-6)
     assert pair.effect == pytest.approx(2.0 * 17.0 / 20.0 - 1.0)
     assert pair.median_difference_s == pytest.approx(22.0 - 14.5)
+
+
+def test_three_groups_of_a_published_example_give_its_kruskal_wallis_statistic():
+    """Hollander & Wolfe (1973), mucociliary efficiency: H = 0.77143, 2 degrees of freedom, p = 0.68.
+
+    Rates of removal of dust in normal subjects, in obstructive airway disease and in asbestosis; data and result as
+    R's reference page of kruskal.test gives them (from memory; H follows from the ranks by hand).
+    """
+    groups = {
+        "normal": [2.9, 3.0, 2.5, 2.6, 3.2],
+        "obstructive": [3.8, 2.7, 4.0, 2.4],
+        "asbestosis": [2.8, 3.4, 3.7, 2.2, 2.0],
+    }
+    overall = statistics_of(groups).settings[0].overall
+    assert overall.statistic == pytest.approx(0.77143, abs=5e-6)
+    assert overall.p == pytest.approx(0.6800, abs=5e-5)
+
+
+def test_ranks_of_a_published_example_give_its_spearman_correlation():
+    """Hollander & Wolfe (1973), lightness of tuna against a panel's scores: ρ = 0.6 (R's page of cor.test)."""
+    lightness = [44.4, 45.9, 41.9, 53.3, 44.7, 44.1, 50.7, 45.2, 60.1]
+    scores = [2.6, 3.1, 2.5, 5.0, 3.6, 4.0, 5.2, 2.8, 3.8]
+    setting = statistics_of({"tuna": scores}, volume_um3=lightness).settings[0]
+    assert next(trend for trend in setting.trends if trend.column == "volume_um3").spearman == pytest.approx(0.6)
+
+
+#: NIST Statistical Reference Datasets, linear regression, "Norris": y, x (public domain).
+NORRIS = """
+0.1 0.2  338.8 337.4  118.1 118.2  888.0 884.6  9.2 10.1  228.1 226.5  668.5 666.3  998.5 996.3  449.1 448.6
+778.9 777.0  559.2 558.2  0.3 0.4  0.1 0.6  778.1 775.5  668.8 666.9  339.3 338.0  448.9 447.5  10.8 11.6
+557.7 556.0  228.3 228.1  998.0 995.8  888.8 887.6  119.6 120.2  0.3 0.3  0.6 0.3  557.6 556.8  339.3 339.1
+888.0 887.2  998.5 999.0  778.9 779.0  10.2 11.1  117.6 118.3  228.9 229.2  668.4 669.1  449.2 448.9  0.2 0.5
+"""
+
+
+def test_slope_and_interval_on_logarithms_are_those_that_nist_certifies():
+    """Norris: slope 1.00211681802045, its standard deviation 0.429796848199937E-03, 34 degrees of freedom.
+
+    Both logarithms are a hundredth of the data, which leaves the slope; the 97.5 % point of Student's t with 34
+    degrees of freedom is 2.0322 (tables).
+    """
+    y, x = np.array(NORRIS.split(), dtype=float).reshape(-1, 2).T
+    setting = statistics_of({"norris": np.exp(0.01 * y)}, volume_um3=np.exp(0.01 * x)).settings[0]
+    trend = next(trend for trend in setting.trends if trend.column == "volume_um3")
+    assert trend.slope == pytest.approx(1.00211681802045, rel=1e-10)
+    low, high = trend.slope_interval
+    assert 0.5 * (high - low) == pytest.approx(2.0322 * 0.429796848199937e-3, rel=1e-4)
+    assert 0.5 * (high + low) == pytest.approx(trend.slope)
+
+
+def test_a_balanced_mixed_model_gives_the_closed_form_of_its_subjects_means():
+    """With m shapes in every subject, REML's contrast is that of the subjects' means and its z is their t.
+
+    Searle, Casella & McCulloch (1992), Variance Components, ch. 4: F = MS(groups) / MS(subjects) in a balanced nested
+    layout, so that the Wald z equals Student's t of the subjects' mean logarithms (scipy.stats.ttest_ind).
+    """
+    rng = np.random.default_rng(21)
+    subjects, times, means = [], {}, {}
+    for group, level in (("a", 0.0), ("b", 0.3)):
+        logs = level + rng.normal(0.0, 0.2, (8, 1)) + rng.normal(0.0, 0.1, (8, 5))
+        times[group], means[group] = np.exp(logs).ravel(), logs.mean(axis=1)
+        subjects += [f"{group}{k}" for k in range(8) for _ in range(5)]
+    mixed = statistics_of(times, subjects=subjects, how="mixed model").settings[0].mixed
+    student = stats.ttest_ind(means["b"], means["a"])
+    assert mixed.ratios["b"] == pytest.approx(np.exp(means["b"].mean() - means["a"].mean()), rel=1e-6)
+    # REML stops at its own tolerance; the p follows the normal law, Student's own is larger with 14 degrees of freedom.
+    assert mixed.p["b"] == pytest.approx(2.0 * stats.norm.sf(abs(student.statistic)), rel=1e-3)
+    assert mixed.p["b"] < student.pvalue
 
 
 def test_holm_corrects_for_all_pairs_of_a_setting():
@@ -125,6 +194,24 @@ def test_a_mixed_model_finds_a_known_ratio_and_subjects_without_a_name_are_left_
     assert high / low < 1.4
     assert setting.mixed.converged
     assert [entry.reason for entry in setting.excluded] == ["no subject is named"]
+
+
+def test_a_group_whose_shapes_name_no_subject_is_left_out_and_can_still_be_drawn():
+    from bemescape.viz.study_plots import figure_as, study_figure
+
+    found = statistics_of(
+        {"a": [1.0, 2.0, 3.0], "b": [2.0, 3.0, 4.0]}, subjects=["m1", "m2", "m3", "", "", ""], keep_table=True
+    )
+    statistics, table = found
+    setting = statistics.settings[0]
+    assert [group.group for group in setting.groups] == ["a"]
+    assert [entry.reason for entry in setting.excluded] == ["no subject is named"] * 3
+    table["mean_time_error_s"] = 0.01
+    figure = study_figure(table, setting, groups=["a", "b"])
+    labels = [label.get_text() for label in figure.axes[0].get_xticklabels()]
+    assert labels == ["a\nn = 3 subjects", "b\nn = 0 subjects"]
+    assert "open: subjects" in figure.axes[0].get_title(loc="left")
+    assert figure_as(figure, "png").startswith(b"\x89PNG")
 
 
 def test_failed_cases_are_excluded_with_their_reason():

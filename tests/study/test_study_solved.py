@@ -35,7 +35,24 @@ max_panels = 100
 
 
 @pytest.fixture(scope="module")
-def solved(tmp_path_factory):
+def worker_here():
+    """Address of a scheduler with a worker in this process, where the solver is loaded already."""
+    from distributed import LocalCluster
+
+    with LocalCluster(
+        n_workers=1, threads_per_worker=1, processes=False, dashboard_address=":0", memory_limit=None
+    ) as cluster:
+        yield cluster.scheduler_address
+
+
+@pytest.fixture(scope="module")
+def heard():
+    """The events of `solved`."""
+    return []
+
+
+@pytest.fixture(scope="module")
+def solved(tmp_path_factory, worker_here, heard):
     """Three balls at one resolution and one mesh that the window misses: the folder and the result."""
     folder = tmp_path_factory.mktemp("balls")
     rows = ["file,group,subject"]
@@ -46,7 +63,7 @@ def solved(tmp_path_factory):
         rows.append(f"ball_{number}.ply,{'AABB'[number]},")
     (folder / "balls.csv").write_text("\n".join(rows) + "\n")
     (folder / "balls.study.toml").write_text(STUDY)
-    return run_study(folder / "balls.study.toml", folder / "out", workers=2)
+    return run_study(folder / "balls.study.toml", folder / "out", scheduler=worker_here, events=heard.append)
 
 
 def test_every_shape_has_a_row_and_the_failure_its_reason(solved):
@@ -83,6 +100,21 @@ def test_csv_and_parquet_hold_the_same_table_with_units_in_the_names(solved):
     pd.testing.assert_frame_equal(csv[numbers].astype(float), parquet[numbers].astype(float), check_exact=True)
     for column in ("mean_time_s", "volume_um3", "area_um2", "longest_geodesic_um", "diffusion_um2_s", "cv", "balance"):
         assert column in csv.columns
+    # Names in R and in Python: read.csv and attribute access leave them as they are.
+    assert all(re.fullmatch(r"[A-Za-z][A-Za-z0-9_]*", column) for column in csv.columns)
+    assert csv["mean_time_s"].isna().sum() == 1  # the failed case: an empty cell, not a zero
+
+
+def test_progress_says_what_runs_what_is_left_and_what_failed(heard, solved):
+    progress = [event for event in heard if event["event"] == "progress"]
+    assert all(event["cases"] == 4 and event["left_s"] >= 0.0 for event in progress)
+    assert progress[0]["done"] == 0
+    assert any(event["running"] for event in progress)
+    order = [event["event"] for event in heard if event["event"] != "progress"]
+    assert order[:2] == ["planned", "workers"]
+    assert [order.count(kind) for kind in ("started", "finished", "failed")] == [4, 3, 1]
+    assert order[-1] == "done"
+    json.dumps(heard)  # what --json prints
 
 
 def test_the_report_stands_alone_and_says_what_a_reader_needs(solved):
@@ -91,15 +123,60 @@ def test_the_report_stands_alone_and_says_what_a_reader_needs(solved):
     assert "http" not in re.sub(r"data:[^\"]+", "", page)
     for words in ("Research tool", "no test is meaningful", "balls.csv row 5", "aria-sort", "Settings, and how"):
         assert words in page
+    # The scale of the largest ball is not that of the smallest: their pictures in both scales differ.
+    rows = re.findall(r'<td class="picture"><img src="([^"]+)".*?<td class="picture"><img src="([^"]+)"', page)
+    assert len(rows) == 3
+    assert any(common != own for common, own in rows)
     # Two pictures a solved shape, one of its slow regions, the figure and the colour bar.
     assert page.count("<img") == 2 * 3 + 3 + 2
     assert (solved.folder / "figure.pdf").read_bytes().startswith(b"%PDF")
     assert b"<svg" in (solved.folder / "figure.svg").read_bytes()
 
 
-def test_the_command_goes_on_where_a_run_ended_and_prints_events_alone(solved, capsys):
+@pytest.mark.slow
+def test_the_table_of_the_report_sorts_in_a_browser_without_a_network(solved):
+    playwright = pytest.importorskip("playwright.sync_api")
+    chromium = Path("/usr/bin/chromium")
+    if not chromium.exists():
+        pytest.skip("no chromium here")
+    with playwright.sync_playwright() as started:
+        browser = started.chromium.launch(executable_path=str(chromium), args=["--no-sandbox"])
+        page = browser.new_context(offline=True, viewport={"width": 1280, "height": 900}).new_page()
+        faults, asked = [], []
+        page.on("pageerror", lambda error: faults.append(str(error)))
+        page.on("request", lambda request: asked.append(request.url))
+        page.goto((solved.folder / "report.html").as_uri())
+
+        def column(name):
+            found = page.evaluate(
+                """name => { const table = document.querySelector("table.sortable");
+                const at = [...table.querySelectorAll("th")].findIndex(head => head.textContent === name);
+                return [...table.tBodies[0].rows].map(row => row.cells[at].textContent); }""",
+                name,
+            )
+            assert len(found) == 3
+            return found
+
+        assert column("rank") == ["1", "2", "3"]
+        assert column("shape") == ["ball_1", "ball_0", "ball_2"]  # the slowest first: the largest, by its radius
+        page.get_by_role("button", name="volume (µm³)", exact=True).click()
+        assert column("shape") == ["ball_2", "ball_0", "ball_1"]
+        page.get_by_role("button", name="shape", exact=True).click()
+        assert column("shape") == ["ball_0", "ball_1", "ball_2"]
+        page.get_by_role("button", name="shape", exact=True).click()
+        assert column("shape") == ["ball_2", "ball_1", "ball_0"]
+        assert page.locator("th[aria-sort=descending]").count() == 1
+        # Nothing is wider than the window of a laptop.
+        assert page.evaluate("document.documentElement.scrollWidth") <= 1280
+        assert not faults
+        assert [address for address in asked if not address.startswith(("file:", "data:"))] == []
+        browser.close()
+
+
+def test_the_command_goes_on_where_a_run_ended_and_prints_events_alone(solved, worker_here, capsys):
     study = solved.plan.study.folder / "balls.study.toml"
-    assert main(["study", str(study), "--out", str(solved.folder), "--json", "--no-report", "-q"]) == 1
+    options = ["--out", str(solved.folder), "--scheduler", worker_here, "--json", "--no-report", "-q"]
+    assert main(["study", str(study), *options]) == 1
     events = [json.loads(line) for line in capsys.readouterr().out.splitlines()]
     assert events[0]["event"] == "planned"
     assert events[0]["finished_before"] == 3
@@ -182,3 +259,24 @@ def test_the_regression_recovers_the_known_answer_of_the_demo_spines(tmp_path):
     np.testing.assert_allclose(fast["mean_time_s"].to_numpy() * 4.0, table["mean_time_s"].to_numpy(), rtol=1e-6)
     # The generator's neck is found in the shape alone.
     np.testing.assert_allclose(table["narrowest_neck_radius_um"] * 1e3, table["neck_radius_nm"], rtol=0.03)
+
+
+def test_one_solve_serves_every_diffusion_coefficient_and_gives_the_digits_of_a_solve_alone(
+    solved, worker_here, tmp_path
+):
+    """Times of absorbing windows are in proportion to 1/D; with a permeability they are not, and each D is solved."""
+    folder = solved.plan.study.folder
+    text = STUDY.replace('list = "balls.csv"', 'files = "ball_0.ply"')
+    swept = folder / "swept.study.toml"
+    swept.write_text(text + '[sweep]\ndiffusion = ["2 um^2/s", "6 um^2/s"]\n')
+    result = run_study(swept, tmp_path / "out", scheduler=worker_here, report=False)
+    assert len({case.solve_key for case in result.plan.cases}) == 1
+    two, six = result.table["mean_time_s"]
+    assert two / six == pytest.approx(3.0, rel=1e-12)
+    # Solved in another run and without a twin: the same to the last digit.
+    assert two == solved.table["mean_time_s"][0]
+    swept.write_text(text + '[sweep]\ndiffusion = ["2 um^2/s", "6 um^2/s"]\npermeability = ["5 um/s"]\n')
+    from bemescape.study.document import read_study
+    from bemescape.study.plan import plan_study
+
+    assert len({case.solve_key for case in plan_study(read_study(swept)).cases}) == 2
