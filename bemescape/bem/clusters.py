@@ -14,7 +14,7 @@ Ints = NDArray[np.int64]
 
 
 def wall_clusters(
-    centroids: Floats, neighbours: Ints, is_window: NDArray[np.bool_], start: Ints, *, wanted: int = 160
+    centroids: Floats, neighbours: Ints, is_window: NDArray[np.bool_], start: Ints, *, wanted: int = 64
 ) -> Ints:
     """Cluster number (m,) of each wall panel, −1 in none: slices of the wall between equal distances to `start`.
 

@@ -1,4 +1,4 @@
-"""Solving the integral equation: preconditioned GMRES with the slow modes projected out."""
+"""Solving the integral equation: GMRES with a two-level preconditioner for the slow modes."""
 
 from __future__ import annotations
 
@@ -130,10 +130,11 @@ class BoundarySolver:
     """The equation ½u + K u − V q = right of one operator, prepared for any number of right-hand sides.
 
     GMRES on the panels' equations, preconditioned from the right by q = −V_ww⁻¹ r per window, then
-    u = 2 (r + V q) on the wall. Slow modes (nearly constant u in compartments joined by necks) are taken out
-    beforehand: with Z the indicators of `cluster_of`, the residual is minimised over span(Z) + Krylov space
-    (de Sturler 1996, doi:10.1016/0377-0427(94)00123-5, with a fixed outer space). The dense blocks and the outer
-    space are made once.
+    u = 2 (r + V q) on the wall. Slow modes (nearly constant u in compartments joined by necks) are taken out of r
+    beforehand: with Z the indicators of `cluster_of` and C ≈ A Z their images, y = argmin |r − C y| adds Z y to u and
+    leaves r − C y to the rest (a two-level preconditioner, "deflation first": Tang, Nabben, Vuik & Erlangga 2009,
+    doi:10.1007/s10915-009-9272-6). Since it only preconditions, C may be rough, and is. The dense blocks and C are made
+    once.
 
     Parameters
     ----------
@@ -169,16 +170,17 @@ class BoundarySolver:
         operator, panels = self.operator, self.operator.panels
         self._blocks = _WindowBlocks(operator)
         self._pore_blocks = _PoreBlocks(operator)
-        # Outer space: C = A Z with orthonormal columns (area-weighted).
+        # The images C = Q R of the clusters, Q with orthonormal columns (area-weighted).
         if cluster_of is not None and cluster_of.max() >= 0:
             count = int(cluster_of.max()) + 1
             image = operator.half_plus_double_of_clusters(cluster_of, count)
             if operator.pores is not None:
                 image = np.concatenate([image, operator.pores.double_of_clusters(cluster_of, count)])
-            self._outer, self._triangle = _orthonormal(self._root[:, None] * image)
+            outer, self._triangle = _orthonormal(self._root[:, None] * image)
+            self._outer = outer.astype(np.float32)
             self._cluster_of = cluster_of
         else:
-            self._outer, self._triangle = np.zeros((len(self._root), 0)), np.zeros((0, 0))
+            self._outer, self._triangle = np.zeros((len(self._root), 0), np.float32), np.zeros((0, 0))
             self._cluster_of = np.full(len(panels), -1)
 
     def with_resistance(self, resistance: Floats) -> BoundarySolver:
@@ -225,8 +227,21 @@ class BoundarySolver:
             rest = self._solved(right - known, tell)
         return BoundarySolution(rest.u + given[:m], rest.q, rest.residuals, rest.outflow)
 
-    def _precondition(self, residual: Floats) -> tuple[Floats, Floats, Floats, Floats]:
-        """From a residual to (u, q on windows, outflow of pores), and what the flux does to the panels, V q − Σ Q G."""
+    def _precondition(self, weighted: Floats) -> tuple[Floats, Floats, Floats, Floats]:
+        """From a weighted residual to (u, q on windows, outflow of pores), and what flux does there, V q − Σ Q G."""
+        part = self._outer.T @ weighted.astype(np.float32)
+        u, q, outflow, of_flux = self._smooth((weighted - self._outer @ part) / self._root)
+        self._raise_levels(u, part)
+        return u, q, outflow, of_flux
+
+    def _raise_levels(self, u: Floats, part: Singles) -> None:
+        """Add Z y to u for the part QQᵀr of a residual r."""
+        if len(part):
+            in_cluster = self._cluster_of >= 0
+            level = solve_triangular(self._triangle, part.astype(np.float64))
+            u[in_cluster] += level[self._cluster_of[in_cluster]]
+
+    def _smooth(self, residual: Floats) -> tuple[Floats, Floats, Floats, Floats]:
         operator, m = self.operator, len(self.operator.panels)
         window, on_panels = operator.is_window, residual[:m]
         q = -self._blocks.solve(on_panels[window])
@@ -249,26 +264,20 @@ class BoundarySolver:
         return np.concatenate([on_panels, pores.double(u) - pores.single(q) + pores.between(outflow)])
 
     def _solved(self, right: Floats, tell: Callable[[int, float], None]) -> BoundarySolution:
-        operator, root, outer = self.operator, self._root, self._outer
-        window = operator.is_window
+        root, window = self._root, self.operator.is_window
         most_iterations = self.most_iterations
         scale = float(np.linalg.norm(root * right))
         if scale == 0.0:
             m, pores = len(window), len(right) - len(window)
             return BoundarySolution(np.zeros(m), np.zeros(m), (), np.zeros(pores))
-        start = outer.T @ (root * right)
-        residual = root * right - outer @ start
-        beta = float(np.linalg.norm(residual))
-
         # Rows are filled as they come; the system hands out memory only for those.
         basis = np.empty((most_iterations + 1, len(right)))
-        basis[0] = residual / beta
+        basis[0] = root * right / scale
         steps: list[tuple[Floats, Floats, Floats]] = []
-        outer_parts: list[Floats] = []
         hessenberg = np.zeros((most_iterations + 1, most_iterations))
         givens = np.zeros((most_iterations, 2))
         rotated = np.zeros(most_iterations + 1)
-        rotated[0] = beta
+        rotated[0] = beta = scale
         residuals: list[float] = []
         k = 0
         while beta / scale > self.tolerance:
@@ -278,12 +287,9 @@ class BoundarySolver:
                     f"(limit {self.tolerance:.0e}); the surface may have panels of very bad shape: try heal='rebuild'",
                     residuals=tuple(residuals),
                 )
-            u, q, outflow, of_flux = self._precondition(basis[k] / root)
+            u, q, outflow, of_flux = self._precondition(basis[k])
             steps.append((u, q, outflow))
             new = root * self._applied(u, q, outflow, of_flux)
-            part = outer.T @ new
-            outer_parts.append(part)
-            new -= outer @ part
             column = hessenberg[:, k]
             for _ in range(2):  # twice: single-precision products leave the first pass not quite orthogonal
                 overlaps = basis[: k + 1] @ new
@@ -304,20 +310,19 @@ class BoundarySolver:
             residuals.append(beta / scale)
             tell(k, beta / scale)
 
-        weights = solve_triangular(hessenberg[:k, :k], rotated[:k]) if k else np.zeros(0)
-        u = np.zeros(len(window))
-        q_window = np.zeros(int(window.sum()))
+        weights = solve_triangular(hessenberg[:k, :k], rotated[:k])
+        u, q_window = np.zeros(len(window)), np.zeros(int(window.sum()))
         outflow = np.zeros(len(right) - len(window))
-        outer_weights = start
-        for weight, (u_step, q_step, outflow_step), part in zip(weights, steps, outer_parts, strict=True):
+        for weight, (u_step, q_step, outflow_step) in zip(weights, steps, strict=True):
             u += weight * u_step
             q_window += weight * q_step
             outflow += weight * outflow_step
-            outer_weights = outer_weights - weight * part
-        if len(self._triangle):
-            in_cluster = self._cluster_of >= 0
-            level = solve_triangular(self._triangle, outer_weights)
-            u[in_cluster] += level[self._cluster_of[in_cluster]]
+        # What is left of the residual is small, but not what a slow mode makes of its part in it.
+        left = np.append(np.zeros(k), rotated[k])
+        for j in range(k - 1, -1, -1):
+            c, s = givens[j]
+            left[j], left[j + 1] = c * left[j] - s * left[j + 1], s * left[j] + c * left[j + 1]
+        self._raise_levels(u, self._outer.T @ (left @ basis[: k + 1]).astype(np.float32))
         q = np.zeros(len(window))
         q[window] = q_window
         return BoundarySolution(u, q, tuple(residuals), outflow)

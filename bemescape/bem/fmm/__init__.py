@@ -46,8 +46,9 @@ _FOUR_PI = 4.0 * math.pi
 
 #: Tolerance -> degree of the expansions, tolerance of a single translation, panels in a box at most. The first bounds
 #: the error of sums over dipoles, relative, root mean square, on the sets of the tests (measured: 9e-6 at most for
-#: 1e-5); sums over charges are about ten times better. At 1e-6 rounding adds up to 8e-6 for dipoles.
-_PRESETS = {1e-4: (9, 2e-5, 64), 1e-5: (11, 2e-6, 64), 1e-6: (13, 2e-7, 100)}
+#: 1e-5, 2e-3 for 1e-3, which is for preconditioners); sums over charges are about ten times better. At 1e-6 rounding
+#: adds up to 8e-6 for dipoles.
+_PRESETS = {1e-3: (5, 1e-3, 64), 1e-4: (9, 2e-5, 64), 1e-5: (11, 2e-6, 64), 1e-6: (13, 2e-7, 100)}
 #: Sources that are fewer than this part of all get a tree of their own; so many such trees are kept.
 _SUBSET, _SUBSETS_KEPT = 0.6, 4
 #: Panels with a radius above this part of their leaf's side are summed directly, as sources and as targets.
@@ -363,9 +364,9 @@ class FastSums(PointSums):
     panels : Panels
         All panels that may be sources; every panel is a target.
     tolerance : float, default 1e-5
-        Relative error of sums over dipoles, root mean square over the targets: 1e-6 to 1e-4. It is rounded down to
-        the next of 1e-4, 1e-5 and 1e-6; sums over charges are about ten times better. At 1e-6 the rounding of single
-        precision shows: up to 8e-6 for dipoles on graded sets.
+        Relative error of sums over dipoles, root mean square over the targets: 1e-6 to 1e-3. It is rounded down to
+        the next of 1e-3 (for preconditioners: up to 2e-3), 1e-4, 1e-5 and 1e-6; sums over charges are about ten times
+        better. At 1e-6 the rounding of single precision shows: up to 8e-6 for dipoles on graded sets.
 
     Raises
     ------
