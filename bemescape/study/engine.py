@@ -35,6 +35,10 @@ MOST_DEATHS = 3
 #: Without any worker for so long, the study stops instead of waiting for ever.
 PATIENCE_S = 60.0
 _TICK_S = 0.5
+#: An outcome whose worker dies on the way is waited for so long at a time.
+_TRAVEL_S = 20.0
+#: Local workers that have been missing for so long are replaced; most are started again at once by themselves.
+_MISSING_S = 30.0
 _ONE_THREAD = {"BEMESCAPE_THREADS": "1"} | {
     f"{library}_NUM_THREADS": "1" for library in ("NUMBA", "OMP", "OPENBLAS", "MKL")
 }
@@ -53,12 +57,15 @@ class Crew:
         What all cases that run side by side may take together.
     address : str
         Of the scheduler.
+    replace : callable
+        Starts so many workers more; does nothing for workers that others have started.
     """
 
     client: Client
     workers: int
     memory_mb: float
     address: str
+    replace: Callable[[int], object] = lambda _count: None
 
 
 def default_workers(cases: int) -> int:
@@ -114,7 +121,14 @@ def crew(
             client = distributed.Client(cluster, set_as_default=False)
             try:
                 budget = memory_mb if memory_mb is not None else MEMORY_PART * _free_mb()
-                yield Crew(client, workers, budget, cluster.scheduler_address)
+                yield Crew(
+                    client,
+                    workers,
+                    budget,
+                    cluster.scheduler_address,
+                    # The places of those that could not be started again stay taken: one more place for each.
+                    lambda count: cluster.scale(len(cluster.worker_spec) + count),
+                )
             finally:
                 # A busy machine may not end its workers in time; they end with this process, and all is stored.
                 with contextlib.suppress(TimeoutError, OSError, RuntimeError):
@@ -190,6 +204,7 @@ class Engine:
     _arrived: queue.SimpleQueue[tuple[str, Any]] = field(default_factory=queue.SimpleQueue)
     _running: dict[str, tuple[list[PlannedCase], Future]] = field(default_factory=dict)
     _begun: dict[str, str] = field(default_factory=dict)
+    _lost: set[str] = field(default_factory=set)
     _recent: deque[tuple[float, float]] = field(default_factory=lambda: deque(maxlen=16))
 
     def run(self, cases: Sequence[PlannedCase]) -> None:
@@ -208,6 +223,7 @@ class Engine:
         # The longest first: what is left to wait for at the end is then short.
         waiting = sorted(twins.values(), key=lambda group: -group[0].estimated_s)
         total, last_tick, last_seen = len(cases), 0.0, time.monotonic()
+        last_complete = last_seen
         client = self.crew.client
         client.subscribe_topic(STARTED, lambda event: self._arrived.put(("started", event[1])))
         try:
@@ -222,7 +238,14 @@ class Engine:
                 if now - last_tick >= _TICK_S:
                     last_tick = now
                     self._tell_progress(total, waiting)
-                    if self._workers() > 0:
+                    self._ask_again()
+                    there = self._workers()
+                    if there >= self.crew.workers:
+                        last_complete = now
+                    elif now - last_complete > _MISSING_S:
+                        self.crew.replace(self.crew.workers - there)
+                        last_complete = now
+                    if there > 0:
                         last_seen = now
                     elif now - last_seen > self.patience_s:
                         raise SettingsError(
@@ -270,19 +293,43 @@ class Engine:
         key, future = content
         if key not in self._running:
             return
-        group, _ = self._running.pop(key)
-        for case in group:
-            self._begun.pop(case.key, None)
+        group, _ = self._running[key]
         if future.status == "finished":
-            self._receive(group, future.result())
+            try:
+                outcomes = future.result(timeout=_TRAVEL_S)
+            except TimeoutError:
+                self._lost.add(key)
+                return
+            except Exception as error:  # noqa: BLE001 - solved again after its worker was lost, and now it fails
+                self._end(key)
+                self._fail(group, f"{group[0].shape.place}: {_why(error)}")
+                return
+            self._end(key)
+            self._receive(group, outcomes)
         elif future.status == "error":
+            self._end(key)
             self._fail(group, f"{group[0].shape.place}: {_why(future.exception())}")
+        elif future.status in ("lost", "pending"):
+            self._lost.add(key)
+            return
         else:
             raise SettingsError(
                 f"the scheduler {self.crew.address} is gone; finished cases are kept, so start it and run the same "
                 "command again"
             )
         future.release()
+
+    def _end(self, key: str) -> None:
+        group, _ = self._running.pop(key)
+        self._lost.discard(key)
+        for case in group:
+            self._begun.pop(case.key, None)
+
+    def _ask_again(self) -> None:
+        """Outcomes whose worker died before they had travelled are solved again by the scheduler; take those."""
+        for key in [key for key in self._lost if self._running[key][1].status not in ("lost", "pending")]:
+            self._lost.discard(key)
+            self._arrived.put(("done", (key, self._running[key][1])))
 
     def _take_start(self, key: str, worker: str) -> None:
         case = next((case for group, _ in self._running.values() for case in group if case.key == key), None)
