@@ -13,6 +13,7 @@ import threading
 import time
 from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import partial
 from typing import Any, Literal
 
 from bemescape.service import tasks
@@ -138,7 +139,8 @@ class Jobs:
             if kind == "solve":
                 table, files = case_of_run(self._store, run)
                 limit = self._settings.limits.run_s
-                arguments: tuple[Any, ...] = (tasks.solve_run, key, run.name, table, files, limit)
+                task = partial(tasks.solve_run, for_study=True) if run.study_id is not None else tasks.solve_run
+                arguments: tuple[Any, ...] = (task, key, run.name, table, files, limit)
             elif kind == "draw":
                 arguments = (tasks.draw_run, result_files(self._store, run.id))
             else:

@@ -27,7 +27,10 @@ if TYPE_CHECKING:
 __all__ = [
     "MOST_POINTS",
     "SECTION_PIXELS",
+    "STUDY_ROW",
     "StoppedByRequest",
+    "StudyMember",
+    "SurfaceFile",
     "check_run",
     "draw_run",
     "place_run_windows",
@@ -37,6 +40,7 @@ __all__ = [
     "section_of_run",
     "slow_regions_of_run",
     "solve_run",
+    "table_of_study",
     "times_of_run",
     "warm_up",
 ]
@@ -47,6 +51,8 @@ Answer = dict[str, Any]
 SECTION_PIXELS = (8, 160)
 #: Most places inside for which one request may ask the time.
 MOST_POINTS = 10_000
+#: File of a run that belongs to a study: its row of the study's table, as `bemescape.study.measures` measures it.
+STUDY_ROW = "study_row.json"
 #: Values of a label array that are listed; arrays with more are measurements, not labels.
 _MOST_LABELS = 64
 _PROGRESS_EVERY_S = 0.25
@@ -317,7 +323,14 @@ def _write_files(folder: Path, files: Mapping[str, bytes]) -> None:
 
 @_answers
 def solve_run(
-    folder: Path, key: str, name: str, table: Mapping[str, Any], files: Mapping[str, bytes], limit_s: float
+    folder: Path,
+    key: str,
+    name: str,
+    table: Mapping[str, Any],
+    files: Mapping[str, bytes],
+    limit_s: float,
+    *,
+    for_study: bool = False,
 ) -> Answer:
     """Solve a case whose files are given by name; the result as files, with buffers for the page."""
     from bemescape.case import parse_case
@@ -326,7 +339,12 @@ def solve_run(
     _write_files(folder, files)
     result = parse_case(table, folder=folder, name=name, source="the order").solve(tell)
     tell(ProgressEvent("saving"))
-    return _packed_result(result, folder / "out")
+    answer = _packed_result(result, folder / "out")
+    if for_study:
+        from bemescape.study.measures import measured
+
+        answer["files"][STUDY_ROW] = json.dumps(dict(measured(result))).encode()
+    return answer
 
 
 def _packed_result(result: EscapeResult, folder: Path) -> Answer:
@@ -451,3 +469,57 @@ def times_of_run(folder: Path, run: Mapping[str, Any], points_um: list[tuple[flo
 
     times = _loaded_result(folder, run).time_at(np.asarray(points_um, dtype=np.float64), outside="nan")
     return {"time_s": [float(value) if np.isfinite(value) else None for value in times]}
+
+
+# -- studies ---------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class StudyMember:
+    """One surface of a study and what became of its run: `values` measured, or `failure` in a sentence."""
+
+    run: str
+    shape: str
+    group: str
+    subject: str
+    mesh_sha256: str
+    values: Mapping[str, Any] | None
+    seconds: float
+    failure: str
+
+
+@_answers
+def table_of_study(
+    folder: Path, name: str, motion: Mapping[str, Any], subjects: str, members: list[StudyMember]
+) -> Answer:
+    """Table (CSV) and statistics (JSON) of a study, made by the code that makes them for a study file."""
+    from bemescape.service.spreadsheets import harmless
+    from bemescape.study.document import Study, StudyDocument
+    from bemescape.study.plan import PlannedCase, StudyPlan
+    from bemescape.study.shapes import StudyShape
+    from bemescape.study.statistics import study_statistics
+    from bemescape.study.store import StoredCase
+    from bemescape.study.table import make_table, table_as_csv
+
+    document = StudyDocument.model_validate(
+        {"shapes": [{"files": "*"}], "motion": motion, "statistics": {"subjects": subjects}}
+    )
+    shapes = [
+        StudyShape(member.shape, folder, member.shape, "um", "auto", group=member.group, subject=member.subject)
+        for member in members
+    ]
+    cases = [
+        PlannedCase(shape.name, shape, {}, {}, {}, member.run, member.mesh_sha256, 0, 0.0, 0.0)
+        for shape, member in zip(shapes, members, strict=True)
+    ]
+    plan = StudyPlan(Study(name, folder, document, {}), tuple(shapes), tuple(cases))
+    stored = {
+        member.run: StoredCase(member.run, folder, member.values, member.seconds, "")
+        for member in members
+        if member.values is not None
+    }
+    table = make_table(plan, stored, {member.run: member.failure for member in members})
+    statistics = study_statistics(plan, table)
+    for column in table.select_dtypes(exclude="number"):
+        table[column] = table[column].map(harmless)
+    return {"csv": table_as_csv(table).decode(), "statistics": statistics.model_dump_json()}

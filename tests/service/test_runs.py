@@ -154,23 +154,44 @@ def test_cancelling_waiting_and_running_runs(client, surface):
     assert client.post(f"/api/runs/{ids[-1]}/cancel").status_code == 409
 
 
-def test_a_study_has_a_row_for_each_surface(client, surface):
+def test_a_study_has_the_table_of_a_study_file(client, surface):
+    """The mean time scales with the square of the size, sphericity and share with no power of it."""
     vertices, faces, labels = ball()
-    double = upload(client, ply_bytes(2 * vertices, faces, labels), name="double.ply").json()
+    double = upload(client, ply_bytes(2 * vertices, faces, labels), name="=double.ply").json()
     rule = {key: value for key, value in order("x").items() if key != "surface"}
-    body = {"name": "sizes", "surfaces": [surface["id"], double["id"]], "rule": rule}
-    study = client.post("/api/studies", json=body).json()
+    members = [{"surface": surface["id"], "group": "small"}, {"surface": double["id"], "group": "large"}]
+    study = client.post("/api/studies", json={"name": "sizes", "surfaces": members, "rule": rule}).json()
+    assert "not solved yet" in client.get(f"/api/studies/{study['id']}/table.csv").text
     for row in study["rows"]:
         wait_until_over(client, row["run"])
     study = client.get(f"/api/studies/{study['id']}").json()
     assert [row["state"] for row in study["rows"]] == ["done", "done"]
-    small, large = (row["mean_time_s"] for row in study["rows"])
-    np.testing.assert_allclose(large / small, 4.0, rtol=1e-6)  # times scale with the square of the size
+    assert [row["group"] for row in study["rows"]] == ["small", "large"]
+    small, large = study["rows"]
+    for column, ratio in {"mean_time_s": 4, "volume_um3": 8, "area_um2": 4, "longest_geodesic_um": 2}.items():
+        np.testing.assert_allclose(large[column] / small[column], ratio, rtol=1e-6, err_msg=column)
+    # Wadell's sphericity of an icosphere of 320 faces: close to that of a ball, and below.
+    assert 0.98 < small["sphericity"] < 1.0
+    assert large["sphericity"] == pytest.approx(small["sphericity"], rel=1e-9)
+    assert small["shares"] == {"cap": pytest.approx(1.0)}
+    assert set(study["columns"]) <= set(small)
+
     rows = list(csv.DictReader(io.StringIO(client.get(f"/api/studies/{study['id']}/table.csv").text)))
-    assert float(rows[1]["mean_time_s"]) == large
+    assert [row["shape"] for row in rows] == ["ball", "'=double"]  # no spreadsheet runs it
+    assert float(rows[1]["mean_time_s"]) == large["mean_time_s"]
+    assert float(rows[1]["share_cap"]) == pytest.approx(1.0)
+    statistics = client.get(f"/api/studies/{study['id']}/statistics").json()
+    (setting,) = statistics["settings"]
+    assert {group["group"]: group["median_s"] for group in setting["groups"]} == {
+        "small": small["mean_time_s"],
+        "large": large["mean_time_s"],
+    }
+    assert "no test is meaningful" in setting["pairs"][0]["statement"]
+    (entry,) = [entry for entry in client.get("/api/studies").json() if entry["id"] == study["id"]]
+    assert entry["runs"] == {"done": 2}
 
     found = client.get("/api/comparison", params={"run": [row["run"] for row in study["rows"]]}).json()
-    assert found["rows"][1]["ratio"] == pytest.approx(large / small)
+    assert found["rows"][1]["ratio"] == pytest.approx(large["mean_time_s"] / small["mean_time_s"])
     assert found["rows"][1]["differs"] is True
     assert found["high_s"] == pytest.approx(max(row["slowest_time_s"] for row in study["rows"]))
     assert client.get("/api/comparison", params={"run": [study["rows"][0]["run"]]}).status_code == 422
@@ -188,6 +209,9 @@ def test_studies_with_wrong_bodies_queue_nothing(client, surface):
         {"surfaces": [surface["id"], "0" * 16], "rule": rule},
         {"surfaces": [surface["id"]], "rule": {}},
         {"surfaces": [surface["id"]], "rule": {**rule, "surface": "x"}},
+        {"surfaces": [{"surface": surface["id"], "group": "a\nb"}], "rule": rule},
+        {"surfaces": [{"surface": surface["id"], "colour": "red"}], "rule": rule},
+        {"surfaces": [surface["id"]], "rule": rule, "subjects": "means"},
     ):
         assert client.post("/api/studies", json=body).status_code in (404, 422), body
     assert len(client.get("/api/runs").json()) == before

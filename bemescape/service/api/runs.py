@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import csv
-import io
 import json
 import secrets
 from collections.abc import AsyncIterator
@@ -21,9 +19,10 @@ from bemescape.service.jobs import result_files
 from bemescape.service.orders import ORDER_EXAMPLE, checked_order
 from bemescape.service.problems import Refusal
 from bemescape.service.records import RunRecord, run_record
+from bemescape.service.spreadsheets import csv_text
 from bemescape.service.store import FINISHED
 
-__all__ = ["csv_text", "router"]
+__all__ = ["csv_answer", "router"]
 
 router = APIRouter(tags=["runs"], responses=REFUSALS)
 _KINDS = {
@@ -178,34 +177,13 @@ def run_tables(run_id: Id, parts: Parts, me: Me) -> Response:
         ["slow region", number, entry["area_um2"], None, entry["mean_time_s"], *entry["centre_um"]]
         for number, entry in enumerate(summary["slow_regions"], start=1)
     ]
-    return csv_answer(rows, "tables.csv")
+    return csv_answer(csv_text(rows), "tables.csv")
 
 
-def csv_answer(rows: list[list[Any]], filename: str) -> Response:
+def csv_answer(text: str, filename: str) -> Response:
     """A table as a download."""
-    return Response(
-        csv_text(rows),
-        media_type="text/csv; charset=utf-8",
-        headers={"Content-Disposition": f'attachment; filename="{filename}"'},
-    )
-
-
-def csv_text(rows: list[list[Any]]) -> str:
-    r"""Comma-separated rows; text that a spreadsheet would run as a formula gets a leading apostrophe.
-
-    >>> csv_text([["=1+1", -2.5]])
-    "'=1+1,-2.5\r\n"
-    """
-    stream = io.StringIO()
-    writer = csv.writer(stream)
-    for row in rows:
-        writer.writerow(
-            [
-                "'" + cell if isinstance(cell, str) and cell[:1] in ("=", "+", "-", "@", "\t", "\r") else cell
-                for cell in row
-            ]
-        )
-    return stream.getvalue()
+    headers = {"Content-Disposition": f'attachment; filename="{filename}"'}
+    return Response(text, media_type="text/csv; charset=utf-8", headers=headers)
 
 
 async def _asked(parts: Service, me: str, run_id: str, task: Any, *arguments: Any) -> dict[str, Any]:
