@@ -17,7 +17,7 @@ from functools import partial
 from typing import Any, Literal
 
 from bemescape.service import tasks
-from bemescape.service.crew import Crew, WorkerLost
+from bemescape.service.crew import Crew, NoWorkers, WorkerLost
 from bemescape.service.events import Hub
 from bemescape.service.models import Run
 from bemescape.service.orders import case_of_run
@@ -34,6 +34,12 @@ _LOOK_EVERY_S = 2.0
 _PATIENCE_S = 120.0
 _DRAW_S = 600.0
 _OUR_FAULT = "the service failed at this; its log says why"
+#: Where the store keeps the state of each kind of work.
+_COLUMN: Mapping[Kind, Literal["state", "pictures", "opinion"]] = {
+    "solve": "state",
+    "draw": "pictures",
+    "check": "opinion",
+}
 #: What a result is loaded from.
 _RESULT = ("summary.json", "result.npz")
 
@@ -58,6 +64,7 @@ class Jobs:
         self._active: dict[str, _Active] = {}
         self._thread = threading.Thread(target=self._work, name="jobs", daemon=True)
         self._swept_at = 0.0
+        self._lost_before: set[tuple[Kind, str]] = set()
 
     def start(self) -> None:
         """Begin; tasks wait until the crew is ready."""
@@ -148,6 +155,11 @@ class Jobs:
             with self._lock:
                 self._active[key] = _Active(kind, run.id, time.monotonic())
             future = self._crew.submit(*arguments, place="run", key=key, watched=kind != "draw")
+        except NoWorkers:
+            with self._lock:
+                self._active.pop(key, None)
+            self._store.put_back(run.id, _COLUMN[kind])
+            return
         except Exception:
             log.exception("%s of run %s could not be begun", kind, run.id)
             with self._lock:
@@ -213,8 +225,11 @@ class Jobs:
             self._stopped(job, job.stop_reason)
         elif job.kind == "solve":
             self._store.interrupted(job.run_id)
+        elif (job.kind, job.run_id) in self._lost_before:
+            self._give_up(job.kind, job.run_id, "its worker died twice")
         else:
-            self._give_up(job.kind, job.run_id, "its worker died")
+            self._lost_before.add((job.kind, job.run_id))
+            self._store.put_back(job.run_id, _COLUMN[job.kind])
 
     def _stopped(self, job: _Active, reason: str) -> None:
         if job.kind == "solve":

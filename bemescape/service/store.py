@@ -15,7 +15,7 @@ from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, TypeVar
+from typing import Any, Literal, TypeVar
 
 from sqlalchemy import create_engine, delete, event, func, select, text, union, update
 from sqlalchemy.orm import Session, sessionmaker
@@ -387,10 +387,12 @@ class Store:
 
     def study_states(self, owner: str) -> dict[str, dict[str, int]]:
         """Study id -> state -> number of its runs."""
-        query = select(Run.study_id, Run.state, func.count()).where(Run.owner == owner, Run.study_id.is_not(None))
+        query = select(Study.id, Run.state, func.count()).join(Run, Run.study_id == Study.id)
         found: dict[str, dict[str, int]] = {}
         with self._reading() as session:
-            for study_id, state, count in session.execute(query.group_by(Run.study_id, Run.state)):
+            for study_id, state, count in session.execute(
+                query.where(Study.owner == owner).group_by(Study.id, Run.state)
+            ):
                 found.setdefault(study_id, {})[state] = count
         return found
 
@@ -402,7 +404,7 @@ class Store:
             .where(Run.study_id == study_id, RunFile.name == STUDY_ROW)
         )
         with self._reading() as session:
-            return dict(session.execute(query).all())  # type: ignore[arg-type]
+            return dict(session.execute(query).all())
 
     def delete_study(self, owner: str, study_id: str) -> None:
         """Delete a study and its runs."""
@@ -505,6 +507,17 @@ class Store:
                 return None
             self._again_or_failed(run)
             return run.state
+
+    def put_back(self, run_id: str, column: Literal["state", "pictures", "opinion"]) -> None:
+        """What was claimed could not be begun, or is to be begun once more: it waits again, as if never claimed."""
+        with self._writing() as session:
+            run = session.get(Run, run_id)
+            if run is None or getattr(run, column) != "running":
+                return
+            if column == "state":
+                run.state, run.started, run.attempts = "queued", None, run.attempts - 1
+            else:
+                setattr(run, column, "waiting")
 
     def drawn(self, run_id: str, files: Mapping[str, bytes] | None) -> None:
         """Pictures are there, or could not be made (None)."""

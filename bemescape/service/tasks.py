@@ -23,6 +23,8 @@ from bemescape.progress import ProgressEvent
 if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
     from bemescape.surface.surface import Surface
+    from bemescape.windows.grade import GradedMesh
+    from bemescape.windows.placement import Placement
 
 __all__ = [
     "MOST_POINTS",
@@ -33,6 +35,7 @@ __all__ = [
     "SurfaceFile",
     "check_run",
     "draw_run",
+    "draw_surface",
     "place_run_windows",
     "read_position_file",
     "read_upload",
@@ -55,6 +58,8 @@ MOST_POINTS = 10_000
 STUDY_ROW = "study_row.json"
 #: Values of a label array that are listed; arrays with more are measurements, not labels.
 _MOST_LABELS = 64
+#: Colours of the page's 3D view, and the size of a picture drawn in its place.
+_WALL, _WINDOW, _PICTURE_PX = "#ccd4db", "#35d0ff", (1000, 720)
 _PROGRESS_EVERY_S = 0.25
 _KEPT_RESULTS, _KEPT_SURFACES = 3, 3
 
@@ -289,17 +294,11 @@ def place_run_windows(
     """The true part of the wall that each window takes, cut as the solve cuts it, for the page."""
     import numpy as np
 
-    from bemescape.case import parse_case
     from bemescape.service.buffers import windows_buffers
     from bemescape.surface.surface import triangle_areas_normals
-    from bemescape.windows.grade import Fineness, graded, place_windows
 
-    surface = _loaded_surface(folder, upload)
     _write_files(folder, files)
-    case = parse_case(table, folder=folder, name=upload.name, source="the openings")
-    placement = place_windows(surface, case.windows_for(surface))
-    # Rims as round as they look on a screen; nothing else is refined.
-    mesh = graded(placement, Fineness(rim_segments=40, layers=0, wall_panels=8), most_faces=most_panels)
+    mesh, placement = _placed(folder, upload, table, most_panels)
     areas, _ = triangle_areas_normals(mesh.vertices, mesh.faces)
     windows = [
         {
@@ -311,6 +310,59 @@ def place_run_windows(
         for number, (window, patch) in enumerate(zip(placement.windows, placement.patches, strict=True))
     ]
     return {"buffers": windows_buffers(mesh, windows, list(placement.notes))}
+
+
+def _placed(
+    folder: Path, upload: SurfaceFile, table: Mapping[str, Any], most_panels: int
+) -> tuple[GradedMesh, Placement]:
+    """The wall with its windows cut; the files of the case lie in the folder."""
+    from bemescape.case import parse_case
+    from bemescape.windows.grade import Fineness, graded, place_windows
+
+    surface = _loaded_surface(folder, upload)
+    case = parse_case(table, folder=folder, name=upload.name, source="the openings")
+    placement = place_windows(surface, case.windows_for(surface))
+    # Rims as round as they look on a screen; nothing else is refined.
+    return graded(placement, Fineness(rim_segments=40, layers=0, wall_panels=8), most_faces=most_panels), placement
+
+
+@_answers
+def draw_surface(
+    folder: Path,
+    upload: SurfaceFile,
+    table: Mapping[str, Any] | None,
+    files: Mapping[str, bytes],
+    most_panels: int,
+    towards: tuple[float, float, float],
+) -> Answer:
+    """A picture of a surface with its windows (none without a table), for a browser that cannot draw it."""
+    import numpy as np
+    import pyvista
+
+    from bemescape.surface.read import read_unhealed
+
+    _write_files(folder, files)
+    if table is None:
+        surface = read_unhealed(_written(folder, upload), unit=_unit(upload.unit))
+        parts = [(surface.vertices, surface.faces, _WALL)]
+    else:
+        mesh, _ = _placed(folder, upload, table, most_panels)
+        inside = mesh.window_of >= 0
+        parts = [(mesh.vertices, mesh.faces[~inside], _WALL), (mesh.vertices, mesh.faces[inside], _WINDOW)]
+    plotter = pyvista.Plotter(off_screen=True, window_size=list(_PICTURE_PX))
+    try:
+        plotter.set_background("white")
+        for vertices, faces, colour in parts:
+            if len(faces):
+                plotter.add_mesh(pyvista.PolyData.from_regular_faces(vertices, faces), color=colour)
+        low, high = np.min(parts[0][0], axis=0), np.max(parts[0][0], axis=0)
+        direction = np.asarray(towards) / np.linalg.norm(towards)
+        plotter.camera_position = [0.5 * (low + high) + direction, 0.5 * (low + high), (0.0, 0.0, 1.0)]
+        plotter.reset_camera()
+        plotter.screenshot(folder / "picture.png")
+    finally:
+        plotter.close()
+    return {"picture": (folder / "picture.png").read_bytes()}
 
 
 # -- runs ------------------------------------------------------------------------------------------

@@ -1,6 +1,5 @@
 """The service as its own process with dask workers: start, stop, kill -9, load."""
 
-import json
 import os
 import random
 import re
@@ -16,7 +15,7 @@ from pathlib import Path
 import httpx
 import pytest
 
-from service.helpers import ball, order, ply_bytes, upload, wait_until_over
+from service.helpers import ball, order, ply_bytes, tell, upload, wait_until_over
 
 pytestmark = pytest.mark.slow
 START_S = 300
@@ -85,11 +84,6 @@ def serve(tmp_path):
             process.stop()
 
 
-def _tell(figures):
-    """Figures for whoever runs this with -s."""
-    sys.stdout.write(json.dumps(figures) + "\n")
-
-
 def integrity(data):
     with sqlite3.connect(data / "service.sqlite") as connection:
         return connection.execute("PRAGMA integrity_check").fetchone()[0]
@@ -145,7 +139,7 @@ def test_random_kills_lose_and_double_nothing(serve):
     service.stop()
     assert integrity(service.data) == "ok"
     done = sum(record["state"] == "done" for record in records)
-    _tell({"kills": kills, "runs": count, "done": done})
+    tell({"kills": kills, "runs": count, "done": done})
 
 
 def test_half_an_upload_leaves_nothing(serve):
@@ -196,5 +190,66 @@ def test_status_calls_are_answered_while_everything_is_busy(serve):
     status = Path(f"/proc/{service.process.pid}/status").read_text()
     memory = int(re.search(r"VmRSS:\s+(\d+)", status).group(1)) // 1024
     middle, late = times[len(times) // 2], times[int(0.95 * len(times))]
-    _tell({"calls": len(times), "p50_s": middle, "p95_s": late, "service_MB": memory})
+    tell({"calls": len(times), "p50_s": middle, "p95_s": late, "service_MB": memory})
     assert memory < 400
+
+
+class Dask:
+    """A dask scheduler with one worker, as somebody else runs them."""
+
+    def __init__(self, folder):
+        self.folder = folder
+        with socket.socket() as free:
+            free.bind(("127.0.0.1", 0))
+            self.port = free.getsockname()[1]
+        self.processes = []
+
+    @property
+    def address(self):
+        return f"tcp://127.0.0.1:{self.port}"
+
+    def start(self):
+        here = ["--host", "127.0.0.1", "--no-dashboard"]
+        for command in (
+            ["scheduler", "--port", str(self.port), *here],
+            ["worker", self.address, "--nthreads", "2", "--no-nanny", *here],
+        ):
+            log = (self.folder / f"{command[0]}.log").open("a")
+            self.processes.append(
+                subprocess.Popen([sys.executable, "-m", "dask", *command], stdout=log, stderr=log, cwd=self.folder)
+            )
+
+    def kill(self):
+        for process in self.processes:
+            process.kill()
+            process.wait()
+        self.processes = []
+
+
+@pytest.fixture
+def dask(tmp_path):
+    dask = Dask(tmp_path)
+    dask.start()
+    yield dask
+    dask.kill()
+
+
+def test_runs_outlive_a_scheduler_that_dies_and_comes_back(dask, serve):
+    """Kill -9 of a foreign scheduler with its worker; status is answered meanwhile, and every run ends once."""
+    service = serve("--scheduler", dask.address)
+    with service.client() as client:
+        surface = upload(client).json()["id"]
+        ids = [client.post("/api/runs", json=order(surface, name=f"run {k}")).json()["id"] for k in range(4)]
+        while client.get(f"/api/runs/{ids[0]}").json()["state"] == "queued":
+            time.sleep(0.1)
+        dask.kill()
+        ends = time.monotonic() + 60
+        while client.get("/api/session").json()["ready"]:
+            assert time.monotonic() < ends, "the service has not noticed"
+            time.sleep(0.2)
+        assert len(client.get("/api/runs").json()) == 4
+        time.sleep(25)  # longer than the client of dask tries by itself
+        dask.start()
+        records = [wait_until_over(client, run_id, seconds=600) for run_id in ids]
+    assert [record["state"] for record in records] == ["done"] * 4, [record["reason"] for record in records]
+    assert max(record["attempts"] for record in records) <= 2

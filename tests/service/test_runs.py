@@ -8,8 +8,10 @@ import numpy as np
 import pytest
 
 import bemescape as be
-from service.helpers import CAP, ball, order, ply_bytes, upload, wait_until_over
+from service.helpers import CAP, PANELS, ball, order, ply_bytes, upload, wait_until_over
 from service.test_surfaces import raw_buffers
+
+COARSE = be.SolverSettings(max_panels=PANELS)
 
 
 @pytest.fixture(scope="session")
@@ -19,7 +21,9 @@ def local(tmp_path_factory):
     path.write_bytes(ply_bytes(*ball()))
     cell = be.read_surface(path, unit="um")
     window = be.Window.labels("cap", array="label", value=1)
-    return be.solve_escape(cell, [window], "1 um^2/s", target="30 %", start={"middle": (0.0, 0.0, 0.0)})
+    return be.solve_escape(
+        cell, [window], "1 um^2/s", target="30 %", start={"middle": (0.0, 0.0, 0.0)}, settings=COARSE
+    )
 
 
 def test_the_service_answers_as_the_library_does(client, solved, local):
@@ -173,13 +177,13 @@ def test_a_study_has_the_table_of_a_study_file(client, surface):
     # Wadell's sphericity of an icosphere of 320 faces: close to that of a ball, and below.
     assert 0.98 < small["sphericity"] < 1.0
     assert large["sphericity"] == pytest.approx(small["sphericity"], rel=1e-9)
-    assert small["shares"] == {"cap": pytest.approx(1.0)}
+    assert small["shares"] == {"cap": pytest.approx(1.0, abs=1e-3)}  # the balance of a coarse solve
     assert set(study["columns"]) <= set(small)
 
     rows = list(csv.DictReader(io.StringIO(client.get(f"/api/studies/{study['id']}/table.csv").text)))
     assert [row["shape"] for row in rows] == ["ball", "'=double"]  # no spreadsheet runs it
     assert float(rows[1]["mean_time_s"]) == large["mean_time_s"]
-    assert float(rows[1]["share_cap"]) == pytest.approx(1.0)
+    assert float(rows[1]["share_cap"]) == large["shares"]["cap"]
     statistics = client.get(f"/api/studies/{study['id']}/statistics").json()
     (setting,) = statistics["settings"]
     assert {group["group"]: group["median_s"] for group in setting["groups"]} == {
@@ -228,6 +232,7 @@ def test_the_client_has_the_calls_of_the_library(live, local, tmp_path):
             [be.Window.labels("cap", array="label", value=1)],
             "1 um^2/s",
             target="30 %",
+            settings=COARSE,
             start={"middle": (0.0, 0.0, 0.0)},
             progress=events.append,
         )
@@ -253,10 +258,11 @@ def test_solve_on_a_server_writes_the_same_folder(live, local, tmp_path, monkeyp
     case.write_text(
         '[surface]\nfile = "ball.ply"\nunit = "um"\n[motion]\ndiffusion = "1 um^2/s"\n[[window]]\nname = "cap"\n'
         'labels = { array = "label", value = 1 }\n[accuracy]\ntarget = "30 %"\n'
+        f"max_panels = {PANELS}\n"
     )
     out = tmp_path / "out"
     code = main(["solve", str(case), "--server", live.url, "--out", str(out), "--json", "--no-pictures", "--quiet"])
-    assert code in (0, 1)
+    assert code in (0, 1)  # 1: the coarse mesh misses the target
     summary = json.loads(capsys.readouterr().out)
     assert summary["mean_time_s"] == pytest.approx(local.mean_time_s, rel=1e-9)
     assert be.EscapeResult.load(out).mean_time_s == summary["mean_time_s"]

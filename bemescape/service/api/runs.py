@@ -13,7 +13,7 @@ from pydantic import BaseModel, ConfigDict, Field
 from starlette.responses import StreamingResponse
 
 from bemescape.service import tasks
-from bemescape.service.api.parts import REFUSALS, Id, Me, Parts, Service, buffers, json_body
+from bemescape.service.api.parts import REFUSALS, Id, Me, Parts, Service, Triple, buffers, json_body
 from bemescape.service.events import stream
 from bemescape.service.jobs import result_files
 from bemescape.service.orders import ORDER_EXAMPLE, checked_order
@@ -46,8 +46,6 @@ _ORDER_BODY = {
         },
     }
 }
-_Number = Annotated[float, Field(ge=-1e12, le=1e12, allow_inf_nan=False)]
-_Triple = tuple[_Number, _Number, _Number]
 
 
 @router.post("/runs", status_code=202, openapi_extra=_ORDER_BODY)
@@ -212,8 +210,8 @@ class Section(BaseModel):
     """A plane through the shape."""
 
     model_config = ConfigDict(extra="forbid")
-    point_um: _Triple = Field(examples=[[0.0, 0.0, 0.0]])
-    normal: _Triple = Field(examples=[[0.0, 1.0, 0.0]])
+    point_um: Triple = Field(examples=[[0.0, 0.0, 0.0]])
+    normal: Triple = Field(examples=[[0.0, 1.0, 0.0]])
     pixels: int = Field(default=96, ge=tasks.SECTION_PIXELS[0], le=tasks.SECTION_PIXELS[1])
 
 
@@ -228,7 +226,7 @@ class Places(BaseModel):
     """Places inside or on the wall."""
 
     model_config = ConfigDict(extra="forbid")
-    points_um: list[_Triple] = Field(min_length=1, max_length=tasks.MOST_POINTS, examples=[[[0.0, 0.0, 0.0]]])
+    points_um: list[Triple] = Field(min_length=1, max_length=tasks.MOST_POINTS, examples=[[[0.0, 0.0, 0.0]]])
 
 
 @router.post("/runs/{run_id}/times")

@@ -38,7 +38,7 @@ __all__ = ["router"]
 router = APIRouter(responses=REFUSALS)
 _MOST_SURFACES = 500
 _MOST_COMPARED = 8
-_EXAMPLE = {
+_EXAMPLE: dict[str, Any] = {
     "name": "two conditions",
     "surfaces": [
         {"surface": "0123456789abcdef", "group": "control", "subject": "animal 1"},
@@ -67,7 +67,7 @@ class StudySurface(BaseModel):
 class StudyOrder(BaseModel):
     """Several surfaces under one rule."""
 
-    model_config = ConfigDict(extra="forbid", json_schema_extra={"examples": [_EXAMPLE]})
+    model_config = ConfigDict(extra="forbid", json_schema_extra={"example": _EXAMPLE})
     name: str = Field(default="study", min_length=1, max_length=60)
     surfaces: list[StudySurface | str] = Field(min_length=1, max_length=_MOST_SURFACES, description="or ids alone")
     rule: dict[str, Any] = Field(description="motion, window, accuracy and start of a case file")

@@ -7,6 +7,8 @@ const MAPS = { time: bytes(cividis), exits: bytes(magma) };
 const AXIS = { x: new T.Vector3(1, 0, 0), y: new T.Vector3(0, 1, 0), z: new T.Vector3(0, 0, 1) };
 /** A pick is a press and release closer than this. */
 const PICK_PX = 4;
+/** Beside several panes, the colour bar has this width for itself. */
+const BAR_PX = 140;
 
 const VERTEX = `
 attribute float value; attribute float isWindow;
@@ -126,9 +128,14 @@ export class Stage {
     this.camera = new T.PerspectiveCamera(30, 1, 0.001, 1000);
     this.panes = [];
     this.drawn = 0;
+    /** Height of the controls that stand on the lower edge of the canvas. */
+    this.below = 56;
     this.controls = new T.OrbitControls(this.camera, canvas);
     this.controls.addEventListener("change", () => this.redraw());
-    this.controls.addEventListener("end", () => onTurn());
+    this.controls.addEventListener("end", () => {
+      if (this.cut) this.setClip(this.cut.axis, this.cut.at);
+      onTurn();
+    });
     new ResizeObserver(() => this.resized()).observe(canvas.parentElement);
     canvas.addEventListener("pointerdown", (event) => { this.pressed = [event.clientX, event.clientY]; });
     canvas.addEventListener("pointerup", (event) => this.released(event));
@@ -137,6 +144,9 @@ export class Stage {
     canvas.addEventListener("keydown", (event) => this.keyed(event));
     this.resized();
   }
+
+  /** The shapes themselves are shown; only pictures have to be asked for, see `FlatStage`. */
+  about() {}
 
   // -- what is shown ---------------------------------------------------------------------------------------------------
 
@@ -188,7 +198,9 @@ export class Stage {
   setLight(lit) { this.each((uniforms) => { uniforms.lit.value = lit; }); }
   setLevel(level) { this.each((uniforms) => { uniforms.level.value = level; }); }
 
+  /** Take away what lies on the camera's side of a plane across an axis; `at` from −1 to 1 over the shape. */
   setClip(axis, at) {
+    this.cut = axis === null ? null : { axis, at };
     for (const pane of this.panes) {
       const { uniforms } = pane.material;
       uniforms.clipped.value = axis !== null;
@@ -196,13 +208,16 @@ export class Stage {
       const box = pane.geometry.boundingBox;
       const middle = 0.5 * (box.max[axis] + box.min[axis]);
       const half = 0.5 * (box.max[axis] - box.min[axis]);
-      uniforms.clip.value.set(AXIS[axis].x, AXIS[axis].y, AXIS[axis].z, middle + at * half);
+      const place = middle + at * half;
+      const side = this.camera.position[axis] >= place ? 1 : -1;
+      uniforms.clip.value.set(side * AXIS[axis].x, side * AXIS[axis].y, side * AXIS[axis].z, side * place);
     }
     this.redraw();
   }
 
   clipPlane(pane, axis) {
-    const place = AXIS[axis].clone().multiplyScalar(pane.material.uniforms.clip.value.w);
+    const { value } = pane.material.uniforms.clip;
+    const place = AXIS[axis].clone().multiplyScalar(value.w * Math.sign(value[axis]));
     return { point: pane.toFrame(place), normal: AXIS[axis].toArray() };
   }
 
@@ -229,12 +244,16 @@ export class Stage {
 
   hideWindows(pane) { pane.clear("windows"); pane.windows = []; this.redraw(); }
 
-  /** Balls at places in µm: damage, starts. */
+  /** Balls at places in µm: damage, starts. What lies behind the wall shines through it faintly. */
   mark(pane, places, colour, radius) {
     for (const place of places) {
-      const ball = new T.Mesh(new T.SphereGeometry(radius, 16, 12), new T.MeshBasicMaterial({ color: colour, depthTest: false, transparent: true }));
-      ball.position.copy(pane.toScene(place));
-      pane.groups.marks.add(ball);
+      for (const behind of [true, false]) {
+        const ball = new T.Mesh(new T.SphereGeometry(radius, 16, 12),
+          new T.MeshBasicMaterial({ color: colour, depthTest: !behind, transparent: true, opacity: behind ? 0.3 : 1 }));
+        ball.position.copy(pane.toScene(place));
+        ball.renderOrder = behind ? 1 : 2;
+        pane.groups.marks.add(ball);
+      }
     }
     this.redraw();
   }
@@ -278,6 +297,8 @@ export class Stage {
 
   fit() {
     const reach = this.reach;
+    const [, , w, hh] = this.areas[0];
+    this.camera.aspect = w / hh;
     this.controls.target.set(0, 0, 0);
     this.camera.position.copy(new T.Vector3(0.55, -0.75, 0.45).normalize().multiplyScalar(reach * this.distance));
     this.camera.up.set(0, 0, 1);
@@ -288,6 +309,7 @@ export class Stage {
   get distance() { return 1.08 / Math.sin(Math.atan(Math.tan((15 * Math.PI) / 180) * Math.min(1, this.camera.aspect))); }
 
   bound() {
+    if (this.cut) this.setClip(this.cut.axis, this.cut.at);
     this.controls.minDistance = 0.02 * this.reach;
     this.controls.maxDistance = 30 * this.reach;
     this.controls.update();
@@ -339,9 +361,10 @@ export class Stage {
   get areas() {
     const { clientWidth: w, clientHeight: h } = this.canvas;
     const count = Math.max(this.panes.length, this.count ?? 1);
-    if (count <= 1) return [[0, 0, w, h - 56]];
-    const rows = count > 2 ? 2 : 1;
-    return Array.from({ length: count }, (_, k) => [(k % 2) * (w / 2), Math.floor(k / 2) * ((h - 56) / rows), w / 2, (h - 56) / rows]);
+    const free = h - this.below;
+    if (count <= 1) return [[0, 0, w, free]];
+    const [rows, wide] = [count > 2 ? 2 : 1, w - BAR_PX];
+    return Array.from({ length: count }, (_, k) => [(k % 2) * (wide / 2), Math.floor(k / 2) * (free / rows), wide / 2, free / rows]);
   }
 
   hit(clientX, clientY) {
@@ -432,6 +455,8 @@ export class Stage {
       this.renderer.render(pane.scene, this.camera);
     });
     this.drawn += 1;
+    // When the first shape was on the screen, in ms since the page was asked for.
+    if (this.panes.length) this.firstPicture ??= performance.now();
     this.onDraw?.();
   }
 
