@@ -127,12 +127,14 @@ class Jobs:
     def _hand_out(self) -> None:
         while self._free_slots() > 0:
             if (run := self._store.next_to_draw()) is not None:
-                self._begin("draw", run)
+                kind: Kind = "draw"
             elif (run := self._store.next_to_solve()) is not None:
-                self._begin("solve", run)
+                kind = "solve"
             elif self._settings.second_opinion and (run := self._store.next_to_check()) is not None:
-                self._begin("check", run)
+                kind = "check"
             else:
+                return
+            if not self._begin(kind, run):
                 return
         # Runs go before second opinions, also before those that were begun.
         with self._lock:
@@ -140,7 +142,8 @@ class Jobs:
         if checks and self._store.any_queued():
             self._stop("check", checks[0], "waiting", "a run came in between")
 
-    def _begin(self, kind: Kind, run: Run) -> None:
+    def _begin(self, kind: Kind, run: Run) -> bool:
+        """Hand out what was claimed; False, and it waits again, if there is nobody to hand it to."""
         key = f"{kind}-{run.id}-{time.time_ns():x}"
         try:
             if kind == "solve":
@@ -159,16 +162,17 @@ class Jobs:
             with self._lock:
                 self._active.pop(key, None)
             self._store.put_back(run.id, _COLUMN[kind])
-            return
+            return False
         except Exception:
             log.exception("%s of run %s could not be begun", kind, run.id)
             with self._lock:
                 self._active.pop(key, None)
             self._give_up(kind, run.id, _OUR_FAULT)
-            return
+            return True
         if kind == "solve":
             self._changed(run.id)
         future.add_done_callback(lambda done: self._over(key, done))
+        return True
 
     def _give_up(self, kind: Kind, run_id: str, reason: str, fault: str = "service") -> None:
         if kind == "solve":

@@ -1,5 +1,6 @@
 """A browser for the tests: pages that may not complain, waiting on the page's state, screenshots, what it shows."""
 
+import gzip
 import os
 import re
 import time
@@ -76,7 +77,7 @@ def placing(page):
     answers = []
     page.on("response", lambda answer: answers.append(answer) if answer.url.endswith("/windows") else None)
     yield found
-    found += [unpacked(answer.body()) for answer in answers if answer.ok]
+    found += [unpacked(gzip.compress(answer.body())) for answer in answers if answer.ok]
 
 
 def click_wall(page, place):

@@ -55,8 +55,8 @@ class ThreadCrew(Crew):
 class Live:
     """The app behind a real socket, in a thread."""
 
-    def __init__(self, settings, *, draws=True):
-        self.app = create_app(settings, ThreadCrew(settings, draws=draws))
+    def __init__(self, settings, *, draws=True, crew=None):
+        self.app = create_app(settings, crew or ThreadCrew(settings, draws=draws))
         config = uvicorn.Config(self.app, host="127.0.0.1", port=0, log_level="warning", timeout_graceful_shutdown=1)
         self.server = uvicorn.Server(config)
         self.thread = threading.Thread(target=lambda: asyncio.run(self.server.serve()), daemon=True)

@@ -16,6 +16,7 @@ import httpx
 import pytest
 
 from service.helpers import ball, order, ply_bytes, tell, upload, wait_until_over
+from service.test_uploads_refused import CASES
 
 pytestmark = pytest.mark.slow
 START_S = 300
@@ -24,8 +25,8 @@ START_S = 300
 class Process:
     """`bemescape serve` on a free port."""
 
-    def __init__(self, data, *options):
-        self.data, self.options = data, options
+    def __init__(self, data, *options, ready=True):
+        self.data, self.options, self.needed = data, options, {"ready": True} if ready else {}
         with socket.socket() as free:
             free.bind(("127.0.0.1", 0))
             self.port = free.getsockname()[1]
@@ -43,7 +44,7 @@ class Process:
             while time.monotonic() < ends:
                 assert self.process.poll() is None, "the service ended at its start"
                 try:
-                    if client.get("/api/session").json()["ready"]:
+                    if self.needed.items() <= client.get("/api/session").json().items():
                         return
                 except httpx.HTTPError:
                     pass
@@ -161,6 +162,50 @@ def test_half_an_upload_leaves_nothing(serve):
     assert list((service.data / "unfinished").iterdir()) == []
 
 
+def memory_mb(pid, kind="VmRSS"):
+    """Resident memory of a process now, or at its most ("VmHWM")."""
+    status = Path(f"/proc/{pid}/status").read_text()
+    return int(re.search(rf"{kind}:\s+(\d+)", status).group(1)) // 1024
+
+
+def test_the_service_alone_is_small_and_loads_nothing_heavy(tmp_path):
+    """Without workers: no pyvista, numba or pandas in the process, and less than 150 MB."""
+    with socket.socket() as closed:
+        closed.bind(("127.0.0.1", 0))
+        began = time.perf_counter()
+        service = Process(tmp_path / "data", "--scheduler", f"tcp://127.0.0.1:{closed.getsockname()[1]}", ready=False)
+        started = time.perf_counter() - began
+        try:
+            with service.client() as client:
+                assert client.get("/").status_code == 200
+                assert client.get("/api/demos").status_code == 200
+            time.sleep(2)
+            libraries = Path(f"/proc/{service.process.pid}/maps").read_text()
+            memory = memory_mb(service.process.pid)
+            tell({"start_s": started, "service_MB": memory})
+            assert not [name for name in ("vtk", "numba", "pandas", "llvmlite") if f"/{name}" in libraries]
+            assert memory < 150
+        finally:
+            service.stop()
+
+
+def test_hostile_uploads_take_little_memory(serve):
+    """Each is refused, and neither the service nor a worker ever takes 300 MB for it; times are printed."""
+    service = serve()
+    times = {}
+    with service.client() as client:
+        upload(client)  # what a first upload loads stays loaded
+        processes = [service.process.pid, *service.children()]
+        before = {pid: memory_mb(pid, "VmHWM") for pid in processes}
+        for case, (name, data, status) in CASES.items():
+            began = time.perf_counter()
+            assert upload(client, data, name=name).status_code == status, case
+            times[case] = time.perf_counter() - began
+        growth = [memory_mb(pid, "VmHWM") - before[pid] for pid in processes]
+    tell({"slowest_s": max(times.values()), "which": max(times, key=times.get), "growth_MB": growth})
+    assert max(growth) < 300
+
+
 def test_status_calls_are_answered_while_everything_is_busy(serve):
     """50 clients poll and 5 upload while runs compute; times are printed, only failures are claimed."""
     service = serve()
@@ -187,8 +232,7 @@ def test_status_calls_are_answered_while_everything_is_busy(serve):
         for job in work:
             job.result()
     times.sort()
-    status = Path(f"/proc/{service.process.pid}/status").read_text()
-    memory = int(re.search(r"VmRSS:\s+(\d+)", status).group(1)) // 1024
+    memory = memory_mb(service.process.pid)
     middle, late = times[len(times) // 2], times[int(0.95 * len(times))]
     tell({"calls": len(times), "p50_s": middle, "p95_s": late, "service_MB": memory})
     assert memory < 400

@@ -57,7 +57,7 @@ export class AnswerStep {
       starts.length ? this.starts(summary, starts) : null,
       h("h3", {}, "Slow regions"), this.regions,
       h("h3", {}, "Checks"),
-      h("p", { class: "small" }, `Outflow through all windows against volume/D: ${percentText(summary.checks.balance)} off. Rule of thumb: ${timeText(summary.rule_of_thumb.mean_time_s)}.`),
+      h("p", { class: "small" }, `Outflow through all windows against volume/D: ${percentText(summary.checks.balance)} off. Rule of thumb, which knows no necks: ${timeText(summary.rule_of_thumb.mean_time_s)}.`),
       this.opinion,
       summary.notes.length ? h("details", {}, h("summary", {}, `Notes (${summary.notes.length})`), h("ul", { class: "small" }, summary.notes.map((note) => h("li", {}, note)))) : null,
       h("h3", {}, "Downloads"), this.files,

@@ -119,6 +119,7 @@ class App {
     const [surface, mesh] = await Promise.all([api.surface(id), api.surfaceMesh(id)]);
     this.view = { ...START, ...(view ?? {}), surface: id, run: null, compare: [] };
     byId("welcome").hidden = true;
+    say("");
     this.surface = surface;
     this.stage.showSurface(mesh);
     this.stage.about({ surface: id, windows: [] });
@@ -154,6 +155,7 @@ class App {
     else {
       this.openings.step.open(false);
       this.answer.progress(run);
+      byId("steps").scrollTop = 0;
     }
     if (["failed", "cancelled"].includes(run.state)) { drawTools(this); return; }
     if (run.state === "done" && !["waiting", "running"].includes(run.pictures)) return;
@@ -184,6 +186,7 @@ class App {
     this.openings.step.open(false);
     this.shape.step.open(false);
     this.answer.show(run, summary);
+    byId("steps").scrollTop = 0;
     this.recolour();
     this.clip();
     drawTools(this);

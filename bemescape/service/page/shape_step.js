@@ -93,14 +93,16 @@ export class ShapeStep {
 
   show(surface) {
     const size = surface.bounds_um[1].map((high, k) => lengthText(high - surface.bounds_um[0][k])).join(" × ");
-    this.step.state(surface.name, { done: surface.solvable });
-    this.step.open(!surface.solvable);
     const findings = surface.health?.findings ?? [];
+    const warned = findings.some(({ severity }) => severity === "warning");
+    this.step.state(surface.name + (!surface.solvable ? "" : warned ? ": see the warning" : surface.healing_lines.length ? ", mended" : ""), { done: surface.solvable });
+    this.step.open(!surface.solvable || warned);
     this.step.show(
       h("p", {}, h("strong", {}, surface.name), ` · ${surface.faces} faces · ${size}`),
       surface.volume_um3 === null ? null : h("p", { class: "soft small" }, `volume ${Number(surface.volume_um3.toPrecision(4))} µm³, area ${Number(surface.area_um2.toPrecision(4))} µm²`),
       h("p", { class: surface.solvable ? "good" : "bad", id: "verdict" }, surface.solvable ? (surface.healing_lines.length ? "Can be solved after mending." : "Sound: can be solved as it is.") : `Cannot be solved: ${surface.reason.replace("heal='rebuild'", "\u201crebuild from voxels\u201d")}`),
       this.again(surface),
+      findings.length ? h("h3", {}, "As the file came") : null,
       findings.map((finding) => h("div", { class: `finding ${finding.severity}` }, finding.message, " ",
         finding.places_um?.length ? h("button", { type: "button", class: "plain", onclick: () => this.app.stage.fly(this.app.pane, finding.places_um[0]) }, "show where") : null)),
       surface.healing_lines.length ? [h("h3", {}, "What mending changed"), h("ul", { class: "small" }, surface.healing_lines.map((line) => h("li", {}, line)))] : null,

@@ -55,10 +55,23 @@ function mapTexture(table) {
 }
 const TEXTURES = { time: mapTexture(MAPS.time), exits: mapTexture(MAPS.exits) };
 
-function lines(places, colour) {
+const PLAIN_VERTEX = `varying vec3 vPlace; void main() { vPlace = position; gl_Position = projectionMatrix * modelViewMatrix * vec4(position, 1.0); }`;
+const PLAIN_FRAGMENT = `
+uniform vec3 colour; uniform vec4 clip; uniform bool clipped; varying vec3 vPlace;
+void main() { if (clipped && dot(clip.xyz, vPlace) > clip.w) discard; gl_FragColor = vec4(colour, 1.0); }`;
+const INK = new T.Vector3(0.063, 0.078, 0.094);
+const WINDOW = new T.Vector3(0.208, 0.816, 1.0);
+
+/** One colour without shading, cut where the wall of the pane is cut. */
+function plain(pane, colour) {
+  const { clip, clipped } = pane.material.uniforms;
+  return new T.ShaderMaterial({ vertexShader: PLAIN_VERTEX, fragmentShader: PLAIN_FRAGMENT, side: T.DoubleSide, uniforms: { colour: { value: colour }, clip, clipped } });
+}
+
+function lines(places, pane) {
   const geometry = new T.BufferGeometry();
   geometry.setAttribute("position", new T.BufferAttribute(places, 3));
-  return new T.LineSegments(geometry, new T.LineBasicMaterial({ color: colour }));
+  return new T.LineSegments(geometry, plain(pane, INK));
 }
 
 /** One shape: wall, windows, marks, and the search tree for picks. Places are µm from `offset`. */
@@ -174,7 +187,7 @@ export class Stage {
     pane.setWall(loose(arrays.vertices, arrays.faces), perCorner(arrays.time_s), perCorner(pane.isWindow));
     const rim = new Float32Array(arrays.rim.length * 3);
     arrays.rim.forEach((vertex, k) => rim.set(arrays.vertices.subarray(3 * vertex, 3 * vertex + 3), 3 * k));
-    pane.groups.windows.add(lines(rim, 0x101418));
+    pane.groups.windows.add(lines(rim, pane));
     this.panes.push(pane);
     this.redraw();
     return pane;
@@ -237,8 +250,8 @@ export class Stage {
     const corners = arrays.corners.map((value, k) => value + shift[k % 3]);
     const geometry = new T.BufferGeometry();
     geometry.setAttribute("position", new T.BufferAttribute(corners, 3));
-    pane.groups.windows.add(new T.Mesh(geometry, new T.MeshBasicMaterial({ color: 0x35d0ff, side: T.DoubleSide })));
-    pane.groups.windows.add(lines(borders(corners), 0x101418));
+    pane.groups.windows.add(new T.Mesh(geometry, plain(pane, WINDOW)));
+    pane.groups.windows.add(lines(borders(corners), pane));
     this.redraw();
   }
 
@@ -331,7 +344,7 @@ export class Stage {
     if (outwards.lengthSq() < 0.5) outwards.set(0.5, -0.8, 0.4).normalize();
     if (Math.abs(outwards.z) > 0.95) outwards.add(new T.Vector3(0.25, -0.25, 0)).normalize();
     this.controls.target.copy(target);
-    this.camera.position.copy(target).addScaledVector(outwards, 2.2 * this.reach);
+    this.camera.position.copy(target).addScaledVector(outwards, 3 * this.reach);
     this.bound();
     this.onTurn();
   }

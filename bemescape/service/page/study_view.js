@@ -14,7 +14,7 @@ const COLUMNS = [
   ["area (µm²)", (row) => digits(row.area_um2), "area_um2"],
   ["sphericity", (row) => digits(row.sphericity), "sphericity"],
   ["longest path (µm)", (row) => digits(row.longest_geodesic_um), "longest_geodesic_um"],
-  ["narrowest neck, radius (µm)", (row) => digits(row.narrowest_neck_radius_um), "narrowest_neck_radius_um"],
+  ["neck radius (µm)", (row) => digits(row.narrowest_neck_radius_um), "narrowest_neck_radius_um"],
   ["windows (µm²)", (row) => digits(row.window_area_um2), "window_area_um2"],
 ];
 
@@ -120,17 +120,17 @@ export class StudyView {
     const shares = [...new Set(rows.flatMap((row) => Object.keys(row.shares ?? {})))].slice(0, 8);
     const head = (text, title) => h("th", { scope: "col", title }, text);
     this.place.replaceChildren(h("h2", { id: "study-title" }, `Study: ${name}`),
-      h("p", { class: "soft", role: "status", id: "study-state" }, over < rows.length ? `${over} of ${rows.length} shapes are over; the table fills as they come.` : `${rows.length} shapes, one rule.`),
+      h("p", { class: "soft", role: "status", id: "study-state" }, over < rows.length ? `${over} of ${rows.length} shapes are through; the table fills as they come.` : `${rows.length} shapes, one rule.`),
       over < rows.length ? h("progress", { max: rows.length, value: over, "aria-label": "shapes that are over" }) : "",
       this.plot(rows.filter((row) => row.mean_time_s !== null)),
       h("div", { class: "wide" }, h("table", { id: "study-table" },
-        h("thead", {}, h("tr", {}, head("shape"), groups ? head("group") : null, subjects ? head("subject") : null,
-          COLUMNS.map(([title, , key]) => head(title, this.record.columns[key])), shares.map((share) => head(`share of ${share}`)), head("state"))),
+        h("thead", {}, h("tr", {}, head("shape"), head("state"), groups ? head("group") : null, subjects ? head("subject") : null,
+          COLUMNS.map(([title, , key]) => head(title, this.record.columns[key])), shares.map((share) => head(`share of ${share}`)))),
         h("tbody", {}, rows.map((row) => h("tr", { "data-run": row.run },
           h("td", {}, row.state === "done" ? h("button", { type: "button", class: "plain", onclick: () => this.app.openRun(row.run).catch((error) => say(error.message, { bad: true })) }, row.name) : row.name),
+          h("td", { class: row.state === "failed" ? "bad" : "soft", title: row.reason ?? "" }, this.app.answer.state(row)),
           groups ? h("td", {}, row.group) : null, subjects ? h("td", {}, row.subject) : null,
-          COLUMNS.map(([, text]) => h("td", {}, text(row))), shares.map((share) => h("td", {}, row.shares?.[share] === undefined ? "" : percentText(row.shares[share], 3))),
-          h("td", { class: row.state === "failed" ? "bad" : "soft", title: row.reason ?? "" }, this.app.answer.state(row))))))),
+          COLUMNS.map(([, text]) => h("td", {}, text(row))), shares.map((share) => h("td", {}, row.shares?.[share] === undefined ? "" : percentText(row.shares[share], 3)))))))),
       this.failures(rows), statistics ? this.statements(statistics) : "",
       h("div", { class: "buttons downloads" }, h("a", { href: `api/studies/${id}/table.csv`, download: "table.csv" }, "whole table (CSV)"),
         h("a", { href: `api/studies/${id}/statistics`, download: "statistics.json" }, "statistics (JSON)"),
