@@ -7,8 +7,6 @@ import time
 from contextlib import contextmanager
 from pathlib import Path
 
-from playwright.sync_api import sync_playwright
-
 CHROMIUM = Path("/usr/bin/chromium")
 SIZES = [(1280, 720), (1920, 1080)]
 #: Where screenshots are kept, if someone wants to look at them.
@@ -18,13 +16,12 @@ SOFTWARE_3D = ("--use-gl=angle", "--use-angle=swiftshader")
 
 
 @contextmanager
-def launched(*options):
+def launched(playwright, *options):
     """Debian's browser; `.ci/run` installs it, and without it these tests fail rather than pass unseen."""
     assert CHROMIUM.exists(), f"{CHROMIUM} is not there; install chromium"
-    with sync_playwright() as started:
-        browser = started.chromium.launch(executable_path=str(CHROMIUM), args=["--no-sandbox", *options])
-        yield browser
-        browser.close()
+    browser = playwright.chromium.launch(executable_path=str(CHROMIUM), args=["--no-sandbox", *options])
+    yield browser
+    browser.close()
 
 
 @contextmanager

@@ -61,10 +61,18 @@ def own(tmp_path_factory):
 
 
 @pytest.fixture(scope="session")
-def browser():
+def playwright():
+    from playwright.sync_api import sync_playwright
+
+    with sync_playwright() as started:
+        yield started
+
+
+@pytest.fixture(scope="session")
+def browser(playwright):
     from service.browser import SOFTWARE_3D, launched
 
-    with launched(*SOFTWARE_3D) as browser:
+    with launched(playwright, *SOFTWARE_3D) as browser:
         yield browser
 
 

@@ -293,9 +293,9 @@ def test_all_text_has_the_contrast_of_wcag_and_every_control_a_name(page, own, b
         assert nameless == []
 
 
-def test_without_webgl_the_service_draws_the_pictures(own, balls):
+def test_without_webgl_the_service_draws_the_pictures(playwright, own, balls):
     _, runs = balls
-    with launched("--disable-3d-apis") as browser, watched_page(browser, own) as page:
+    with launched(playwright, "--disable-3d-apis") as browser, watched_page(browser, own) as page:
         page.goto(own.url)
         page.click("[data-demo=bouton]")
         wait_for(page, "window.bemescape.drawn >= 2 && window.bemescape.windows.length === 2")

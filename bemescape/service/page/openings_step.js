@@ -19,6 +19,7 @@ export class OpeningsStep {
     this.step = new Step("openings", 2, "Openings");
     this.windows = [];
     this.starts = [];
+    this.given = { accuracy: {}, start: {} };
     this.placing = null;
     this.preview = later(() => this.ask(), 250);
   }
@@ -33,6 +34,8 @@ export class OpeningsStep {
   show(surface, given = null) {
     this.surface = surface;
     this.unit = surface.unit_um;
+    // What the page has no fields for, like a panel budget or regions to start from, stays as it was given.
+    this.given = { accuracy: given?.accuracy ?? {}, start: given?.start ?? {} };
     this.windows = (given?.window ?? []).map((window) => this.fromCase(window));
     this.name = given?.name ?? surface.name;
     this.starts = Object.entries(given?.start?.points ?? {}).map(([name, place]) => ({ name, place: this.toUm(place) }));
@@ -86,7 +89,7 @@ export class OpeningsStep {
   order() {
     const points = Object.fromEntries(this.starts.map(({ name, place }) => [name, this.toFile(place.map((v) => number(v, "a start")))]));
     return { surface: this.surface.id, name: String(this.name).trim() || this.surface.name, motion: { diffusion: withUnit(this.diffusion, "um^2/s") }, window: this.windows.map((w) => this.toCase(w)),
-      accuracy: { target: this.target }, ...(this.starts.length ? { start: { points } } : {}) };
+      accuracy: { ...this.given.accuracy, target: this.target }, start: { ...this.given.start, points } };
   }
 
   // -- placing ---------------------------------------------------------------------------------------------------------

@@ -46,8 +46,8 @@ export function drawTools(app) {
   const place = byId("tools");
   place.hidden = !stage.panes.length || stage.flat;
   if (place.hidden) { drawLengthBar(stage); return; }
-  const result = Boolean(view.run) || view.compare.length > 1;
-  const single = Boolean(view.run) && view.compare.length < 2;
+  const result = Boolean(stage.panes[0]?.arrays);
+  const single = result && view.compare.length < 2;
   const tool = (text, control) => h("label", {}, text, control);
   const part = h("output", {}, `${view.slow} %`);
   const slow = h("input", { type: "range", id: "slow", min: "1", max: "50", value: String(view.slow), oninput: () => { view.slow = Number(slow.value); part.textContent = `${view.slow} %`; app.recolour(); app.askRegions(); app.link(); } });
