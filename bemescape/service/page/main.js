@@ -327,12 +327,12 @@ class App {
   // -- pointer ---------------------------------------------------------------------------------------------------------
 
   picked(place, triangle, pane) {
-    if (this.view.run || this.view.compare.length) { this.tell(place, triangle, pane); return; }
-    this.openings.pick(place);
+    // Also on an answer: its openings can be changed and computed again.
+    if (!this.openings.pick(place)) this.tell(place, triangle, pane);
   }
 
   hovered(place, triangle, pane) {
-    if (!this.view.run && !this.view.compare.length) { this.openings.hover(place); }
+    this.openings.hover(place);
     this.tell(place, triangle, pane);
   }
 

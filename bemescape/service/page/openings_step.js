@@ -136,10 +136,11 @@ export class OpeningsStep {
     if (!ready) { stage.hideWindows(pane); this.say(this.windows.length ? "" : "No window yet: nothing can leave."); this.ok(false); return; }
     try {
       const found = await api.placeWindows(this.surface.id, this.windows.map((w) => this.toCase(w)));
-      if (turn !== this.turn || pane !== this.app.pane) return;
-      stage.showWindows(pane, found);
+      if (turn !== this.turn) return;
+      // The answer may have come in between; then its own windows are shown.
+      if (pane === this.app.pane) stage.showWindows(pane, found);
       this.places = found.header.windows;
-      stage.about({ surface: this.surface.id, windows: this.windows.map((w) => this.toCase(w)) });
+      if (pane === this.app.pane) stage.about({ surface: this.surface.id, windows: this.windows.map((w) => this.toCase(w)) });
       const { windows, notes } = found.header;
       const area = windows.reduce((sum, w) => sum + w.area_um2, 0);
       this.say([`${windows.length} window${windows.length > 1 ? "s" : ""}, ${Number(area.toPrecision(4))} µm² in all.`, ...notes].join(" "));
