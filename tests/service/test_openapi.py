@@ -28,6 +28,26 @@ def generated(tmp_path_factory):
     server.close()
 
 
+def answers(url, operation, number):
+    """Statuses of the answers to generated requests, others for each number."""
+    found = []
+
+    @seed(number)
+    @settings(
+        max_examples=EXAMPLES,
+        deadline=None,
+        phases=[Phase.explicit, Phase.generate],
+        suppress_health_check=list(HealthCheck),
+        database=None,
+    )
+    @given(case=operation.as_strategy())
+    def run(case):
+        found.append(case.call_and_validate(base_url=url, checks=[not_a_server_error], timeout=60).status_code)
+
+    run()
+    return found
+
+
 def test_no_generated_request_ends_in_a_fault_of_ours(generated):
     """Rounds over every operation, each round with other requests, until the time is over; one round at least."""
     schema = schemathesis.openapi.from_url(f"{generated.url}/api/openapi.json")
@@ -40,22 +60,9 @@ def test_no_generated_request_ends_in_a_fault_of_ours(generated):
     rounds = 0
     while rounds == 0 or time.monotonic() < ends:
         for operation in operations:
-
-            @seed(rounds)
-            @settings(
-                max_examples=EXAMPLES,
-                deadline=None,
-                phases=[Phase.explicit, Phase.generate],
-                suppress_health_check=list(HealthCheck),
-                database=None,
-            )
-            @given(case=operation.as_strategy())
-            def run(case, operation=operation):
+            for status in answers(generated.url, operation, rounds):
                 tried[operation.label] += 1
-                answer = case.call_and_validate(base_url=generated.url, checks=[not_a_server_error], timeout=60)
-                statuses[answer.status_code] += 1
-
-            run()
+                statuses[status] += 1
         rounds += 1
     tell({"rounds": rounds, "requests": sum(tried.values()), "statuses": dict(sorted(statuses.items()))})
     assert set(tried) == {operation.label for operation in operations}
