@@ -209,6 +209,7 @@ def test_studies_with_wrong_bodies_queue_nothing(client, surface):
         [],
         {},
         {"surfaces": [], "rule": rule},
+        {"surfaces": [""], "rule": rule},
         {"surfaces": [surface["id"], surface["id"]], "rule": rule},
         {"surfaces": [surface["id"], "0" * 16], "rule": rule},
         {"surfaces": [surface["id"]], "rule": {}},

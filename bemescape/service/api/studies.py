@@ -48,11 +48,14 @@ _EXAMPLE: dict[str, Any] = {
 }
 
 
+_SurfaceId = Annotated[str, Field(pattern="^[0-9a-f]{16}$", examples=["0123456789abcdef"])]
+
+
 class StudySurface(BaseModel):
     """A surface of a study; `group` and `subject` as in a study file."""
 
     model_config = ConfigDict(extra="forbid")
-    surface: str = Field(pattern="^[0-9a-f]{16}$", examples=["0123456789abcdef"])
+    surface: _SurfaceId
     group: str = Field(default="", max_length=60)
     subject: str = Field(default="", max_length=60, description="animal, cell or donor")
 
@@ -69,7 +72,9 @@ class StudyOrder(BaseModel):
 
     model_config = ConfigDict(extra="forbid", json_schema_extra={"example": _EXAMPLE})
     name: str = Field(default="study", min_length=1, max_length=60)
-    surfaces: list[StudySurface | str] = Field(min_length=1, max_length=_MOST_SURFACES, description="or ids alone")
+    surfaces: list[StudySurface | _SurfaceId] = Field(
+        min_length=1, max_length=_MOST_SURFACES, description="or ids alone"
+    )
     rule: dict[str, Any] = Field(description="motion, window, accuracy and start of a case file")
     subjects: Literal["medians", "mixed model"] = Field(
         default="medians", description="with subjects: compare their medians, or fit a mixed model"
