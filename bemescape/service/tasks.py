@@ -561,7 +561,19 @@ def table_of_study(
         for member in members
     ]
     cases = [
-        PlannedCase(shape.name, shape, {}, {}, {}, member.run, member.mesh_sha256, 0, 0.0, 0.0)
+        PlannedCase(
+            name=shape.name,
+            shape=shape,
+            swept={},
+            table={},
+            files={},
+            key=member.run,
+            solve_key=member.run,
+            mesh_sha256=member.mesh_sha256,
+            faces=0,
+            estimated_s=0.0,
+            estimated_mb=0.0,
+        )
         for shape, member in zip(shapes, members, strict=True)
     ]
     plan = StudyPlan(Study(name, folder, document, {}), tuple(shapes), tuple(cases))
