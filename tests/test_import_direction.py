@@ -32,7 +32,7 @@ MAY_IMPORT = {
     | {"surface", "windows", "results", "escape", "case", "warm", "arrangements", "study", "remote", "service", "viz"},
     "viz": BASE | {"results", "arrangements", "study"},
     "remote": BASE | {"surface", "windows", "results", "escape", "case"},
-    "service": BASE | {"surface", "windows", "results", "escape", "case"},
+    "service": BASE | {"surface", "windows", "results", "escape", "case", "study"},
 }
 #: Imports against the direction, each with its reason. They are made inside functions.
 EXCEPTIONS = {

@@ -12,6 +12,7 @@ import concurrent.futures
 import logging
 import os
 import threading
+import time
 from collections.abc import Callable
 from typing import Any, Literal
 
@@ -19,7 +20,7 @@ from bemescape.service.problems import Refusal
 from bemescape.service.settings import Settings
 from bemescape.service.tasks import request_stop, warm_up
 
-__all__ = ["Crew", "WorkerLost"]
+__all__ = ["Crew", "NoWorkers", "WorkerLost"]
 
 log = logging.getLogger("bemescape.service")
 
@@ -27,6 +28,7 @@ Place = Literal["run", "desk"]
 #: What one worker of this machine may use before it is restarted.
 _DESK_MEMORY, _RUN_MEMORY = "3 GB", "auto"
 _START_S = 120.0
+_AGAIN_S = 3.0
 #: Set by whoever starts the service, and meant for the workers.
 _PASSED = ("BEMESCAPE_THREADS", "NUMBA_CACHE_DIR", "NUMBA_NUM_THREADS")
 #: Tasks of the desk go first where both share workers.
@@ -35,6 +37,13 @@ _PRIORITY: dict[Place, int] = {"run": 0, "desk": 100}
 
 class WorkerLost(Exception):
     """The worker, or the scheduler, of a task is gone; the task may be done again."""
+
+
+class NoWorkers(Refusal):
+    """Nobody can be given a task now; later somebody may."""
+
+    def __init__(self) -> None:
+        super().__init__(503, "the workers are not there yet, or not there any more; ask again in a few seconds")
 
 
 class Crew:
@@ -46,7 +55,7 @@ class Crew:
         self._client: Any = None
         self._cluster: Any = None
         self._on_progress: Callable[[str, dict[str, Any]], None] = lambda _key, _event: None
-        self._starter = threading.Thread(target=self._start, name="crew-start", daemon=True)
+        self._starter = threading.Thread(target=self._keep_connected, name="crew", daemon=True)
 
     def start(self, on_progress: Callable[[str, dict[str, Any]], None]) -> None:
         """Begin to start the workers; returns at once. `on_progress` gets the key of a task and its event."""
@@ -55,12 +64,15 @@ class Crew:
 
     @property
     def ready(self) -> bool:
-        """Whether tasks can be handed out now."""
-        return self._ready.is_set()
+        """Whether tasks can be handed out now: not while a scheduler elsewhere is gone."""
+        return self._ready.is_set() and (self._client is None or self._client.status == "running")
 
     def wait(self, timeout: float) -> bool:
-        """Wait until the crew is ready."""
-        return self._ready.wait(timeout)
+        """Wait until the crew is ready; whether it is."""
+        ends = time.monotonic() + timeout
+        while not self.ready and time.monotonic() < ends and not self._closing.is_set():
+            self._closing.wait(0.1)
+        return self.ready
 
     def close(self) -> None:
         """Stop the workers that were started here."""
@@ -74,14 +86,19 @@ class Crew:
                 except Exception as error:  # noqa: BLE001 (nothing must keep the service from stopping)
                     log.warning("the workers did not stop in order: %s", error)
 
-    def _start(self) -> None:
+    def _keep_connected(self) -> None:
+        """Connect, and again when a scheduler elsewhere was gone for longer than the client waits for it."""
         while not self._closing.is_set():
             try:
                 self._connect()
-                return
+                while self._client.status != "closed" and not self._closing.is_set():
+                    self._closing.wait(1.0)
+                if not self._closing.is_set():
+                    log.error("the scheduler is gone; looking for it again")
+                    self._ready.clear()
             except Exception as error:  # noqa: BLE001 (a scheduler that is down now may be up later)
                 log.error("no workers yet: %s", error)
-                self._closing.wait(5.0)
+                self._closing.wait(_AGAIN_S)
 
     def _connect(self) -> None:
         import dask
@@ -122,8 +139,8 @@ class Crew:
 
         With `watched`, progress events of `key` are passed on until the task is over.
         """
-        if not self._ready.is_set():
-            raise Refusal(503, "the workers are still starting; ask again in a few seconds")
+        if not self.ready:
+            raise NoWorkers
         answer: concurrent.futures.Future[Any] = concurrent.futures.Future()
         if watched:
             self._client.subscribe_topic(key, lambda event: self._on_progress(key, event[1]))
@@ -147,7 +164,7 @@ class Crew:
                 answer.set_exception(error)
         finally:
             future.release()
-            if topic is not None and not self._closing.is_set():
+            if topic is not None and self.ready:
                 self._client.unsubscribe_topic(topic)
 
     def _resources(self, place: Place) -> dict[str, int] | None:
@@ -164,8 +181,8 @@ class Crew:
         Refusal
             The input is at fault, the workers are not there, or the time ran out.
         """
-        if not self._ready.is_set():
-            await asyncio.to_thread(self._ready.wait, _START_S)
+        if not self.ready:
+            await asyncio.to_thread(self.wait, _START_S)
         try:
             future = self.submit(task, *args, place="desk", key=key)
             answer = await asyncio.wait_for(asyncio.wrap_future(future), timeout)
@@ -184,7 +201,7 @@ class Crew:
 
     def stop(self, key: str, reason: str) -> None:
         """Ask the task of this key to end at its next step."""
-        if self._ready.is_set():
+        if self.ready:
             self._client.run(request_stop, key, reason, wait=False, on_error="ignore")
 
     def restart_desk(self) -> None:

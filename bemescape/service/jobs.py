@@ -13,10 +13,11 @@ import threading
 import time
 from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import partial
 from typing import Any, Literal
 
 from bemescape.service import tasks
-from bemescape.service.crew import Crew, WorkerLost
+from bemescape.service.crew import Crew, NoWorkers, WorkerLost
 from bemescape.service.events import Hub
 from bemescape.service.models import Run
 from bemescape.service.orders import case_of_run
@@ -33,6 +34,12 @@ _LOOK_EVERY_S = 2.0
 _PATIENCE_S = 120.0
 _DRAW_S = 600.0
 _OUR_FAULT = "the service failed at this; its log says why"
+#: Where the store keeps the state of each kind of work.
+_COLUMN: Mapping[Kind, Literal["state", "pictures", "opinion"]] = {
+    "solve": "state",
+    "draw": "pictures",
+    "check": "opinion",
+}
 #: What a result is loaded from.
 _RESULT = ("summary.json", "result.npz")
 
@@ -57,6 +64,7 @@ class Jobs:
         self._active: dict[str, _Active] = {}
         self._thread = threading.Thread(target=self._work, name="jobs", daemon=True)
         self._swept_at = 0.0
+        self._lost_before: set[tuple[Kind, str]] = set()
 
     def start(self) -> None:
         """Begin; tasks wait until the crew is ready."""
@@ -119,12 +127,14 @@ class Jobs:
     def _hand_out(self) -> None:
         while self._free_slots() > 0:
             if (run := self._store.next_to_draw()) is not None:
-                self._begin("draw", run)
+                kind: Kind = "draw"
             elif (run := self._store.next_to_solve()) is not None:
-                self._begin("solve", run)
+                kind = "solve"
             elif self._settings.second_opinion and (run := self._store.next_to_check()) is not None:
-                self._begin("check", run)
+                kind = "check"
             else:
+                return
+            if not self._begin(kind, run):
                 return
         # Runs go before second opinions, also before those that were begun.
         with self._lock:
@@ -132,13 +142,15 @@ class Jobs:
         if checks and self._store.any_queued():
             self._stop("check", checks[0], "waiting", "a run came in between")
 
-    def _begin(self, kind: Kind, run: Run) -> None:
+    def _begin(self, kind: Kind, run: Run) -> bool:
+        """Hand out what was claimed; False, and it waits again, if there is nobody to hand it to."""
         key = f"{kind}-{run.id}-{time.time_ns():x}"
         try:
             if kind == "solve":
                 table, files = case_of_run(self._store, run)
                 limit = self._settings.limits.run_s
-                arguments: tuple[Any, ...] = (tasks.solve_run, key, run.name, table, files, limit)
+                task = partial(tasks.solve_run, for_study=True) if run.study_id is not None else tasks.solve_run
+                arguments: tuple[Any, ...] = (task, key, run.name, table, files, limit)
             elif kind == "draw":
                 arguments = (tasks.draw_run, result_files(self._store, run.id))
             else:
@@ -146,15 +158,21 @@ class Jobs:
             with self._lock:
                 self._active[key] = _Active(kind, run.id, time.monotonic())
             future = self._crew.submit(*arguments, place="run", key=key, watched=kind != "draw")
+        except NoWorkers:
+            with self._lock:
+                self._active.pop(key, None)
+            self._store.put_back(run.id, _COLUMN[kind])
+            return False
         except Exception:
             log.exception("%s of run %s could not be begun", kind, run.id)
             with self._lock:
                 self._active.pop(key, None)
             self._give_up(kind, run.id, _OUR_FAULT)
-            return
+            return True
         if kind == "solve":
             self._changed(run.id)
         future.add_done_callback(lambda done: self._over(key, done))
+        return True
 
     def _give_up(self, kind: Kind, run_id: str, reason: str, fault: str = "service") -> None:
         if kind == "solve":
@@ -211,8 +229,11 @@ class Jobs:
             self._stopped(job, job.stop_reason)
         elif job.kind == "solve":
             self._store.interrupted(job.run_id)
+        elif (job.kind, job.run_id) in self._lost_before:
+            self._give_up(job.kind, job.run_id, "its worker died twice")
         else:
-            self._give_up(job.kind, job.run_id, "its worker died")
+            self._lost_before.add((job.kind, job.run_id))
+            self._store.put_back(job.run_id, _COLUMN[job.kind])
 
     def _stopped(self, job: _Active, reason: str) -> None:
         if job.kind == "solve":

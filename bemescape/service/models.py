@@ -8,7 +8,7 @@ from sqlalchemy.orm import DeclarativeBase, Mapped, mapped_column
 __all__ = ["SCHEMA", "Base", "Blob", "PositionList", "Run", "RunFile", "Study", "Surface"]
 
 #: Raised when the tables change; a database of another number is refused rather than guessed at.
-SCHEMA = 1
+SCHEMA = 2
 
 
 class Base(DeclarativeBase):
@@ -61,7 +61,9 @@ class Study(Base):
     owner: Mapped[str] = mapped_column(index=True)
     name: Mapped[str]
     created: Mapped[float]
-    rule: Mapped[str]  # JSON
+    rule: Mapped[str]  # JSON: motion, window, accuracy and start of a case file
+    labels: Mapped[str]  # JSON: surface id -> group and subject
+    subjects: Mapped[str]  # how subjects are compared, as in a study file
 
 
 class Run(Base):

@@ -162,12 +162,20 @@ def _window_with_file(store: Store, owner: str, window: Any, named: dict[str, st
             continue
         if kind == "points":
             positions = store.positions(owner, section["file"])
-            name = f"positions-{positions.id}.csv"
-            named[name] = positions.file_sha256
+            name = _file_name(positions.name.rsplit(".", 1)[0], positions.id, ".csv", positions.file_sha256, named)
             changed[kind] = {**section, "file": name}
         else:
             other = store.surface(owner, section["file"])
-            name = f"near-{other.id}{other.suffix}"
-            named[name] = other.file_sha256
+            name = _file_name(other.name, other.id, other.suffix, other.file_sha256, named)
             changed[kind] = {"unit": json.loads(other.unit), **section, "file": name}
     return changed
+
+
+def _file_name(name: str, entry_id: str, suffix: str, sha256: str, named: dict[str, str]) -> str:
+    """A name of ours for a file in the worker's folder, under which messages may speak of it; it joins `named`."""
+    readable = "".join(letter if letter.isalnum() or letter in "-_" else "_" for letter in name)[:60]
+    chosen = f"{readable}{suffix}"
+    if not readable.strip("_") or named.get(chosen, sha256) != sha256:
+        chosen = f"{readable}-{entry_id}{suffix}"
+    named[chosen] = sha256
+    return chosen

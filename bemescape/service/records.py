@@ -8,6 +8,7 @@ from typing import Any, Literal
 from pydantic import BaseModel, ConfigDict, Field
 
 from bemescape.service.models import Run, Study, Surface
+from bemescape.study.table import MEASURES
 
 __all__ = [
     "ComparisonRecord",
@@ -16,13 +17,14 @@ __all__ = [
     "Problem",
     "RunRecord",
     "SessionRecord",
+    "StudyEntry",
     "StudyRecord",
     "SurfaceRecord",
     "finite",
     "run_record",
     "short_answer",
+    "study_entry",
     "study_record",
-    "study_row",
     "surface_record",
 ]
 
@@ -107,13 +109,21 @@ class RunRecord(_Record):
     files: list[str] = Field(default_factory=list)
 
 
-class StudyRecord(_Record):
-    """One rule for several surfaces."""
+class StudyEntry(_Record):
+    """A study in a list."""
 
     id: str
     name: str
     created: float
+    runs: dict[str, int] = Field(description="state -> number of runs", examples=[{"done": 11, "running": 1}])
+
+
+class StudyRecord(StudyEntry):
+    """One rule for several surfaces, with a row for each."""
+
     rule: dict[str, Any]
+    subjects: Literal["medians", "mixed model"]
+    columns: dict[str, str] = Field(description="measured columns of the rows -> what they say")
     rows: list[dict[str, Any]]
 
 
@@ -204,17 +214,20 @@ def short_answer(summary: dict[str, Any]) -> dict[str, Any]:
     }
 
 
-def study_row(run: Run, surface: Surface) -> dict[str, Any]:
-    """One surface of a study."""
-    answer = None if run.summary is None else short_answer(json.loads(run.summary))
-    row: dict[str, Any] = {"run": run.id, "surface": surface.id, "name": surface.name, "state": run.state}
-    row["reason"] = run.reason
-    for key in ("mean_time_s", "relative_error", "escape_time_sd_s", "slowest_time_s", "volume_um3", "area_um2"):
-        row[key] = None if answer is None else answer[key]
-    row["shares"] = None if answer is None else answer["shares"]
-    return row
+def study_entry(study: Study, states: dict[str, int]) -> StudyEntry:
+    """Of a row and the states of its runs."""
+    return StudyEntry(id=study.id, name=study.name, created=study.created, runs=states)
 
 
-def study_record(study: Study, rows: list[dict[str, Any]]) -> StudyRecord:
+def study_record(study: Study, states: dict[str, int], rows: list[dict[str, Any]]) -> StudyRecord:
     """Of a row and its runs."""
-    return StudyRecord(id=study.id, name=study.name, created=study.created, rule=json.loads(study.rule), rows=rows)
+    return StudyRecord(
+        id=study.id,
+        name=study.name,
+        created=study.created,
+        runs=states,
+        rule=json.loads(study.rule),
+        subjects=study.subjects,  # type: ignore[arg-type]
+        columns=dict(MEASURES),
+        rows=finite(rows),
+    )

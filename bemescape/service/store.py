@@ -13,8 +13,9 @@ import threading
 import time
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
+from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, TypeVar
+from typing import Any, Literal, TypeVar
 
 from sqlalchemy import create_engine, delete, event, func, select, text, union, update
 from sqlalchemy.orm import Session, sessionmaker
@@ -24,8 +25,9 @@ from bemescape.service.files import Files
 from bemescape.service.models import SCHEMA, Base, Blob, PositionList, Run, RunFile, Study, Surface
 from bemescape.service.problems import Refusal
 from bemescape.service.settings import Limits
+from bemescape.service.tasks import STUDY_ROW
 
-__all__ = ["ATTEMPTS", "FINISHED", "Store"]
+__all__ = ["ATTEMPTS", "FINISHED", "NewStudy", "Store"]
 
 _Entry = TypeVar("_Entry", Surface, Run, Study, PositionList)
 
@@ -33,6 +35,16 @@ _Entry = TypeVar("_Entry", Surface, Run, Study, PositionList)
 ATTEMPTS = 2
 FINISHED = ("done", "failed", "cancelled")
 INTERRUPTED = "it was computing when the service or its worker stopped, {count} times; start it again, or ask for less"
+
+
+@dataclass(frozen=True)
+class NewStudy:
+    """What is asked of a study: its rule, and the group and subject of each surface by id."""
+
+    name: str
+    rule: Mapping[str, Any]
+    labels: Mapping[str, Mapping[str, str]]
+    subjects: str
 
 
 class Store:
@@ -247,9 +259,9 @@ class Store:
     # -- runs --------------------------------------------------------------------------------------
 
     def add_runs(
-        self, owner: str, orders: Sequence[tuple[str, str, Mapping[str, Any]]], study: tuple[str, Any] | None = None
+        self, owner: str, orders: Sequence[tuple[str, str, Mapping[str, Any]]], study: NewStudy | None = None
     ) -> tuple[list[Run], Study | None]:
-        """Queue runs, given as surface, name and order; of one study, given as name and rule, or of none."""
+        """Queue runs, given as surface, name and order; of one study or of none."""
         with self._writing() as session:
             waiting = session.scalar(
                 select(func.count()).select_from(Run).where(Run.owner == owner, Run.state == "queued")
@@ -263,7 +275,10 @@ class Store:
             now = time.time()
             record = None
             if study is not None:
-                record = Study(id=_new_id(), owner=owner, name=study[0], created=now, rule=json.dumps(study[1]))
+                record = Study(
+                    id=_new_id(), owner=owner, name=study.name, created=now, rule=json.dumps(study.rule),
+                    labels=json.dumps(study.labels), subjects=study.subjects,
+                )  # fmt: skip
                 session.add(record)
                 session.flush()
             runs = [
@@ -370,6 +385,27 @@ class Store:
         with self._reading() as session:
             return _owned(session.get(Study, study_id), owner, "study", study_id)
 
+    def study_states(self, owner: str) -> dict[str, dict[str, int]]:
+        """Study id -> state -> number of its runs."""
+        query = select(Study.id, Run.state, func.count()).join(Run, Run.study_id == Study.id)
+        found: dict[str, dict[str, int]] = {}
+        with self._reading() as session:
+            for study_id, state, count in session.execute(
+                query.where(Study.owner == owner).group_by(Study.id, Run.state)
+            ):
+                found.setdefault(study_id, {})[state] = count
+        return found
+
+    def study_rows(self, study_id: str) -> dict[str, str]:
+        """Run id -> checksum of what was measured of it for the study's table."""
+        query = (
+            select(RunFile.run_id, RunFile.sha256)
+            .join(Run, Run.id == RunFile.run_id)
+            .where(Run.study_id == study_id, RunFile.name == STUDY_ROW)
+        )
+        with self._reading() as session:
+            return dict(session.execute(query).all())
+
     def delete_study(self, owner: str, study_id: str) -> None:
         """Delete a study and its runs."""
         with self._lock:
@@ -471,6 +507,17 @@ class Store:
                 return None
             self._again_or_failed(run)
             return run.state
+
+    def put_back(self, run_id: str, column: Literal["state", "pictures", "opinion"]) -> None:
+        """What was claimed could not be begun, or is to be begun once more: it waits again, as if never claimed."""
+        with self._writing() as session:
+            run = session.get(Run, run_id)
+            if run is None or getattr(run, column) != "running":
+                return
+            if column == "state":
+                run.state, run.started, run.attempts = "queued", None, run.attempts - 1
+            else:
+                setattr(run, column, "waiting")
 
     def drawn(self, run_id: str, files: Mapping[str, bytes] | None) -> None:
         """Pictures are there, or could not be made (None)."""

@@ -23,13 +23,19 @@ from bemescape.progress import ProgressEvent
 if TYPE_CHECKING:
     from bemescape.results.result import EscapeResult
     from bemescape.surface.surface import Surface
+    from bemescape.windows.grade import GradedMesh
+    from bemescape.windows.placement import Placement
 
 __all__ = [
     "MOST_POINTS",
     "SECTION_PIXELS",
+    "STUDY_ROW",
     "StoppedByRequest",
+    "StudyMember",
+    "SurfaceFile",
     "check_run",
     "draw_run",
+    "draw_surface",
     "place_run_windows",
     "read_position_file",
     "read_upload",
@@ -37,6 +43,7 @@ __all__ = [
     "section_of_run",
     "slow_regions_of_run",
     "solve_run",
+    "table_of_study",
     "times_of_run",
     "warm_up",
 ]
@@ -47,8 +54,12 @@ Answer = dict[str, Any]
 SECTION_PIXELS = (8, 160)
 #: Most places inside for which one request may ask the time.
 MOST_POINTS = 10_000
+#: File of a run that belongs to a study: its row of the study's table, as `bemescape.study.measures` measures it.
+STUDY_ROW = "study_row.json"
 #: Values of a label array that are listed; arrays with more are measurements, not labels.
 _MOST_LABELS = 64
+#: Colours of the page's 3D view, and the size of a picture drawn in its place.
+_WALL, _WINDOW, _PICTURE_PX = "#ccd4db", "#35d0ff", (1000, 720)
 _PROGRESS_EVERY_S = 0.25
 _KEPT_RESULTS, _KEPT_SURFACES = 3, 3
 
@@ -283,17 +294,11 @@ def place_run_windows(
     """The true part of the wall that each window takes, cut as the solve cuts it, for the page."""
     import numpy as np
 
-    from bemescape.case import parse_case
     from bemescape.service.buffers import windows_buffers
     from bemescape.surface.surface import triangle_areas_normals
-    from bemescape.windows.grade import Fineness, graded, place_windows
 
-    surface = _loaded_surface(folder, upload)
     _write_files(folder, files)
-    case = parse_case(table, folder=folder, name=upload.name, source="the openings")
-    placement = place_windows(surface, case.windows_for(surface))
-    # Rims as round as they look on a screen; nothing else is refined.
-    mesh = graded(placement, Fineness(rim_segments=40, layers=0, wall_panels=8), most_faces=most_panels)
+    mesh, placement = _placed(folder, upload, table, most_panels)
     areas, _ = triangle_areas_normals(mesh.vertices, mesh.faces)
     windows = [
         {
@@ -307,6 +312,59 @@ def place_run_windows(
     return {"buffers": windows_buffers(mesh, windows, list(placement.notes))}
 
 
+def _placed(
+    folder: Path, upload: SurfaceFile, table: Mapping[str, Any], most_panels: int
+) -> tuple[GradedMesh, Placement]:
+    """The wall with its windows cut; the files of the case lie in the folder."""
+    from bemescape.case import parse_case
+    from bemescape.windows.grade import Fineness, graded, place_windows
+
+    surface = _loaded_surface(folder, upload)
+    case = parse_case(table, folder=folder, name=upload.name, source="the openings")
+    placement = place_windows(surface, case.windows_for(surface))
+    # Rims as round as they look on a screen; nothing else is refined.
+    return graded(placement, Fineness(rim_segments=40, layers=0, wall_panels=8), most_faces=most_panels), placement
+
+
+@_answers
+def draw_surface(
+    folder: Path,
+    upload: SurfaceFile,
+    table: Mapping[str, Any] | None,
+    files: Mapping[str, bytes],
+    most_panels: int,
+    towards: tuple[float, float, float],
+) -> Answer:
+    """A picture of a surface with its windows (none without a table), for a browser that cannot draw it."""
+    import numpy as np
+    import pyvista
+
+    from bemescape.surface.read import read_unhealed
+
+    _write_files(folder, files)
+    if table is None:
+        surface = read_unhealed(_written(folder, upload), unit=_unit(upload.unit))
+        parts = [(surface.vertices, surface.faces, _WALL)]
+    else:
+        mesh, _ = _placed(folder, upload, table, most_panels)
+        inside = mesh.window_of >= 0
+        parts = [(mesh.vertices, mesh.faces[~inside], _WALL), (mesh.vertices, mesh.faces[inside], _WINDOW)]
+    plotter = pyvista.Plotter(off_screen=True, window_size=list(_PICTURE_PX))
+    try:
+        plotter.set_background("white")
+        for vertices, faces, colour in parts:
+            if len(faces):
+                plotter.add_mesh(pyvista.PolyData.from_regular_faces(vertices, faces), color=colour)
+        low, high = np.min(parts[0][0], axis=0), np.max(parts[0][0], axis=0)
+        direction = np.asarray(towards) / np.linalg.norm(towards)
+        plotter.camera_position = [0.5 * (low + high) + direction, 0.5 * (low + high), (0.0, 0.0, 1.0)]
+        plotter.reset_camera()
+        plotter.screenshot(folder / "picture.png")
+    finally:
+        plotter.close()
+    return {"picture": (folder / "picture.png").read_bytes()}
+
+
 # -- runs ------------------------------------------------------------------------------------------
 
 
@@ -317,7 +375,14 @@ def _write_files(folder: Path, files: Mapping[str, bytes]) -> None:
 
 @_answers
 def solve_run(
-    folder: Path, key: str, name: str, table: Mapping[str, Any], files: Mapping[str, bytes], limit_s: float
+    folder: Path,
+    key: str,
+    name: str,
+    table: Mapping[str, Any],
+    files: Mapping[str, bytes],
+    limit_s: float,
+    *,
+    for_study: bool = False,
 ) -> Answer:
     """Solve a case whose files are given by name; the result as files, with buffers for the page."""
     from bemescape.case import parse_case
@@ -326,7 +391,12 @@ def solve_run(
     _write_files(folder, files)
     result = parse_case(table, folder=folder, name=name, source="the order").solve(tell)
     tell(ProgressEvent("saving"))
-    return _packed_result(result, folder / "out")
+    answer = _packed_result(result, folder / "out")
+    if for_study:
+        from bemescape.study.measures import measured
+
+        answer["files"][STUDY_ROW] = json.dumps(dict(measured(result))).encode()
+    return answer
 
 
 def _packed_result(result: EscapeResult, folder: Path) -> Answer:
@@ -451,3 +521,69 @@ def times_of_run(folder: Path, run: Mapping[str, Any], points_um: list[tuple[flo
 
     times = _loaded_result(folder, run).time_at(np.asarray(points_um, dtype=np.float64), outside="nan")
     return {"time_s": [float(value) if np.isfinite(value) else None for value in times]}
+
+
+# -- studies ---------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class StudyMember:
+    """One surface of a study and what became of its run: `values` measured, or `failure` in a sentence."""
+
+    run: str
+    shape: str
+    group: str
+    subject: str
+    mesh_sha256: str
+    values: Mapping[str, Any] | None
+    seconds: float
+    failure: str
+
+
+@_answers
+def table_of_study(
+    folder: Path, name: str, motion: Mapping[str, Any], subjects: str, members: list[StudyMember]
+) -> Answer:
+    """Table (CSV) and statistics (JSON) of a study, made by the code that makes them for a study file."""
+    from bemescape.service.spreadsheets import harmless
+    from bemescape.study.document import Study, StudyDocument
+    from bemescape.study.plan import PlannedCase, StudyPlan
+    from bemescape.study.shapes import StudyShape
+    from bemescape.study.statistics import study_statistics
+    from bemescape.study.store import StoredCase
+    from bemescape.study.table import make_table, table_as_csv
+
+    document = StudyDocument.model_validate(
+        {"shapes": [{"files": "*"}], "motion": motion, "statistics": {"subjects": subjects}}
+    )
+    shapes = [
+        StudyShape(member.shape, folder, member.shape, "um", "auto", group=member.group, subject=member.subject)
+        for member in members
+    ]
+    cases = [
+        PlannedCase(
+            name=shape.name,
+            shape=shape,
+            swept={},
+            table={},
+            files={},
+            key=member.run,
+            solve_key=member.run,
+            mesh_sha256=member.mesh_sha256,
+            faces=0,
+            estimated_s=0.0,
+            estimated_mb=0.0,
+        )
+        for shape, member in zip(shapes, members, strict=True)
+    ]
+    plan = StudyPlan(Study(name, folder, document, {}), tuple(shapes), tuple(cases))
+    stored = {
+        member.run: StoredCase(member.run, folder, member.values, member.seconds, "")
+        for member in members
+        if member.values is not None
+    }
+    table = make_table(plan, stored, {member.run: member.failure for member in members})
+    statistics = study_statistics(plan, table)
+    for column in table.select_dtypes(exclude="number"):
+        table[column] = table[column].map(harmless)
+    return {"csv": table_as_csv(table).decode(), "statistics": statistics.model_dump_json()}

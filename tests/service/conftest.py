@@ -50,3 +50,35 @@ def guarded(tmp_path_factory):
     )
     yield server
     server.close()
+
+
+@pytest.fixture(scope="session")
+def own(tmp_path_factory):
+    """A service for the browser: what other tests leave behind would be on its shelf."""
+    server = Live(Settings(data=tmp_path_factory.mktemp("browser"), second_opinion=False, slots=1))
+    yield server
+    server.close()
+
+
+@pytest.fixture(scope="session")
+def playwright():
+    from playwright.sync_api import sync_playwright
+
+    with sync_playwright() as started:
+        yield started
+
+
+@pytest.fixture(scope="session")
+def browser(playwright):
+    from service.browser import SOFTWARE_3D, launched
+
+    with launched(playwright, *SOFTWARE_3D) as browser:
+        yield browser
+
+
+@pytest.fixture
+def page(browser, own):
+    from service.browser import watched_page
+
+    with watched_page(browser, own) as page:
+        yield page

@@ -22,6 +22,7 @@ class ThreadCrew(Crew):
     def __init__(self, settings, *, draws=True):
         super().__init__(settings)
         self._draws = draws
+        self._keys = set()
         self._pool = concurrent.futures.ThreadPoolExecutor(max_workers=settings.slots + 2)
 
     def start(self, on_progress):
@@ -30,13 +31,19 @@ class ThreadCrew(Crew):
         self._ready.set()
 
     def close(self):
+        # A thread cannot be killed: what still computes ends at its next step.
+        for key in list(self._keys):
+            self.stop(key, "the service stops")
         self._pool.shutdown(wait=False, cancel_futures=True)
 
     def submit(self, task, *args, place, key, watched=False):
         if task is tasks.draw_run and not self._draws:
             # Pictures take seconds each and have tests of their own.
             return self._pool.submit(dict, files={})
-        return self._pool.submit(task, *args)
+        future = self._pool.submit(task, *args)
+        self._keys.add(key)
+        future.add_done_callback(lambda _: self._keys.discard(key))
+        return future
 
     def stop(self, key, reason):
         tasks.request_stop(key, reason)
@@ -48,8 +55,8 @@ class ThreadCrew(Crew):
 class Live:
     """The app behind a real socket, in a thread."""
 
-    def __init__(self, settings, *, draws=True):
-        self.app = create_app(settings, ThreadCrew(settings, draws=draws))
+    def __init__(self, settings, *, draws=True, crew=None):
+        self.app = create_app(settings, crew or ThreadCrew(settings, draws=draws))
         config = uvicorn.Config(self.app, host="127.0.0.1", port=0, log_level="warning", timeout_graceful_shutdown=1)
         self.server = uvicorn.Server(config)
         self.thread = threading.Thread(target=lambda: asyncio.run(self.server.serve()), daemon=True)

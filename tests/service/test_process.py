@@ -1,6 +1,5 @@
 """The service as its own process with dask workers: start, stop, kill -9, load."""
 
-import json
 import os
 import random
 import re
@@ -16,7 +15,8 @@ from pathlib import Path
 import httpx
 import pytest
 
-from service.helpers import ball, order, ply_bytes, upload, wait_until_over
+from service.helpers import ball, order, ply_bytes, tell, upload, wait_until_over
+from service.test_uploads_refused import CASES
 
 pytestmark = pytest.mark.slow
 START_S = 300
@@ -25,8 +25,8 @@ START_S = 300
 class Process:
     """`bemescape serve` on a free port."""
 
-    def __init__(self, data, *options):
-        self.data, self.options = data, options
+    def __init__(self, data, *options, ready=True):
+        self.data, self.options, self.needed = data, options, {"ready": True} if ready else {}
         with socket.socket() as free:
             free.bind(("127.0.0.1", 0))
             self.port = free.getsockname()[1]
@@ -44,7 +44,7 @@ class Process:
             while time.monotonic() < ends:
                 assert self.process.poll() is None, "the service ended at its start"
                 try:
-                    if client.get("/api/session").json()["ready"]:
+                    if self.needed.items() <= client.get("/api/session").json().items():
                         return
                 except httpx.HTTPError:
                     pass
@@ -83,11 +83,6 @@ def serve(tmp_path):
     for process in started:
         if process.process.poll() is None:
             process.stop()
-
-
-def _tell(figures):
-    """Figures for whoever runs this with -s."""
-    sys.stdout.write(json.dumps(figures) + "\n")
 
 
 def integrity(data):
@@ -145,7 +140,7 @@ def test_random_kills_lose_and_double_nothing(serve):
     service.stop()
     assert integrity(service.data) == "ok"
     done = sum(record["state"] == "done" for record in records)
-    _tell({"kills": kills, "runs": count, "done": done})
+    tell({"kills": kills, "runs": count, "done": done})
 
 
 def test_half_an_upload_leaves_nothing(serve):
@@ -165,6 +160,50 @@ def test_half_an_upload_leaves_nothing(serve):
         assert client.get("/api/surfaces").json() == []
     assert [path for path in (service.data / "files").rglob("*") if path.is_file()] == []
     assert list((service.data / "unfinished").iterdir()) == []
+
+
+def memory_mb(pid, kind="VmRSS"):
+    """Resident memory of a process now, or at its most ("VmHWM")."""
+    status = Path(f"/proc/{pid}/status").read_text()
+    return int(re.search(rf"{kind}:\s+(\d+)", status).group(1)) // 1024
+
+
+def test_the_service_alone_is_small_and_loads_nothing_heavy(tmp_path):
+    """Without workers: no pyvista, numba or pandas in the process, and less than 150 MB."""
+    with socket.socket() as closed:
+        closed.bind(("127.0.0.1", 0))
+        began = time.perf_counter()
+        service = Process(tmp_path / "data", "--scheduler", f"tcp://127.0.0.1:{closed.getsockname()[1]}", ready=False)
+        started = time.perf_counter() - began
+        try:
+            with service.client() as client:
+                assert client.get("/").status_code == 200
+                assert client.get("/api/demos").status_code == 200
+            time.sleep(2)
+            libraries = Path(f"/proc/{service.process.pid}/maps").read_text()
+            memory = memory_mb(service.process.pid)
+            tell({"start_s": started, "service_MB": memory})
+            assert not [name for name in ("vtk", "numba", "pandas", "llvmlite") if f"/{name}" in libraries]
+            assert memory < 150
+        finally:
+            service.stop()
+
+
+def test_hostile_uploads_take_little_memory(serve):
+    """Each is refused, and neither the service nor a worker ever takes 300 MB for it; times are printed."""
+    service = serve()
+    times = {}
+    with service.client() as client:
+        upload(client)  # what a first upload loads stays loaded
+        processes = [service.process.pid, *service.children()]
+        before = {pid: memory_mb(pid, "VmHWM") for pid in processes}
+        for case, (name, data, status) in CASES.items():
+            began = time.perf_counter()
+            assert upload(client, data, name=name).status_code == status, case
+            times[case] = time.perf_counter() - began
+        growth = [memory_mb(pid, "VmHWM") - before[pid] for pid in processes]
+    tell({"slowest_s": max(times.values()), "which": max(times, key=times.get), "growth_MB": growth})
+    assert max(growth) < 300
 
 
 def test_status_calls_are_answered_while_everything_is_busy(serve):
@@ -193,8 +232,68 @@ def test_status_calls_are_answered_while_everything_is_busy(serve):
         for job in work:
             job.result()
     times.sort()
-    status = Path(f"/proc/{service.process.pid}/status").read_text()
-    memory = int(re.search(r"VmRSS:\s+(\d+)", status).group(1)) // 1024
+    memory = memory_mb(service.process.pid)
     middle, late = times[len(times) // 2], times[int(0.95 * len(times))]
-    _tell({"calls": len(times), "p50_s": middle, "p95_s": late, "service_MB": memory})
+    tell({"calls": len(times), "p50_s": middle, "p95_s": late, "service_MB": memory})
     assert memory < 400
+
+
+class Dask:
+    """A dask scheduler with one worker, as somebody else runs them."""
+
+    def __init__(self, folder):
+        self.folder = folder
+        with socket.socket() as free:
+            free.bind(("127.0.0.1", 0))
+            self.port = free.getsockname()[1]
+        self.processes = []
+
+    @property
+    def address(self):
+        return f"tcp://127.0.0.1:{self.port}"
+
+    def start(self):
+        here = ["--host", "127.0.0.1", "--no-dashboard"]
+        for command in (
+            ["scheduler", "--port", str(self.port), *here],
+            ["worker", self.address, "--nthreads", "2", "--no-nanny", *here],
+        ):
+            log = (self.folder / f"{command[0]}.log").open("a")
+            self.processes.append(
+                subprocess.Popen([sys.executable, "-m", "dask", *command], stdout=log, stderr=log, cwd=self.folder)
+            )
+
+    def kill(self):
+        for process in self.processes:
+            process.kill()
+            process.wait()
+        self.processes = []
+
+
+@pytest.fixture
+def dask(tmp_path):
+    dask = Dask(tmp_path)
+    dask.start()
+    yield dask
+    dask.kill()
+
+
+def test_runs_outlive_a_scheduler_that_dies_and_comes_back(dask, serve):
+    """Kill -9 of a foreign scheduler with its worker; status is answered meanwhile, and every run ends once."""
+    service = serve("--scheduler", dask.address)
+    with service.client() as client:
+        surface = upload(client).json()["id"]
+        ids = [client.post("/api/runs", json=order(surface, name=f"run {k}")).json()["id"] for k in range(4)]
+        while client.get(f"/api/runs/{ids[0]}").json()["state"] == "queued":
+            time.sleep(0.1)
+        dask.kill()
+        ends = time.monotonic() + 60
+        while client.get("/api/session").json()["ready"]:
+            assert time.monotonic() < ends, "the service has not noticed"
+            time.sleep(0.2)
+        assert len(client.get("/api/runs").json()) == 4
+        time.sleep(25)  # longer than the client of dask tries by itself
+        dask.start()
+        records = [wait_until_over(client, run_id, seconds=600) for run_id in ids]
+    assert [record["state"] for record in records] == ["done"] * 4, [record["reason"] for record in records]
+    assert max(record["attempts"] for record in records) <= 2

@@ -69,6 +69,21 @@ def test_what_a_run_answers_after_it_is_over_counts_for_nothing(store):
     assert store.run_files(run_id) == {}
 
 
+def test_what_could_not_be_begun_waits_as_if_it_had_never_been_claimed(store):
+    (run_id,) = queue(store, "anna")
+    for _ in range(5):
+        store.next_to_solve()
+        store.put_back(run_id, "state")
+        assert (store.run("anna", run_id).state, store.run("anna", run_id).attempts) == ("queued", 0)
+    store.next_to_solve()
+    store.solved(run_id, {"f": b"x"}, "{}", second_opinion=True)
+    store.put_back(run_id, "state")  # done is done
+    assert store.run("anna", run_id).state == "done"
+    assert store.next_to_draw().id == run_id
+    store.put_back(run_id, "pictures")
+    assert store.next_to_draw().id == run_id
+
+
 def test_files_of_runs_go_with_them_and_shared_ones_stay(store, tmp_path):
     first, second = queue(store, "anna", 2)
     for run_id in (first, second):

@@ -62,6 +62,18 @@ def test_the_mask_of_a_window_is_the_one_of_the_library(client, surface, tmp_pat
     np.testing.assert_allclose(header["windows"][1]["area_um2"], cell.areas[patch.faces].sum(), rtol=1e-9)
 
 
+def test_a_window_near_another_surface_names_that_surface(client, surface):
+    """Two unit balls a gap g apart: what lies within d of the other is a cap, of the area 2 π (1 − z) on the sphere."""
+    vertices, faces, _ = ball()
+    other = upload(client, ply_bytes(vertices + np.array([0.0, 0.0, 2.02]), faces), name="next cell.ply").json()
+    near = {"name": "contact", "near": {"file": other["id"], "distance": "150 nm"}}
+    header, _ = raw_buffers(client, f"/api/surfaces/{surface['id']}/windows", method="POST", json={"window": [near]})
+    # On the unit sphere, at the distance 1 + d from the other centre, which lies at c = 2.02.
+    z = (1.0 + 2.02**2 - 1.15**2) / (2.0 * 2.02)
+    np.testing.assert_allclose(header["windows"][0]["area_um2"], 2.0 * np.pi * (1.0 - z), rtol=0.25)  # 320 flat faces
+    assert "'next_cell'" in " ".join(header["notes"])
+
+
 def test_a_window_off_the_wall_is_refused_with_its_distance(client, surface):
     disc = {"name": "pore", "disc": {"centre": [0.0, 0.0, 3.0], "radius": "100 nm"}}
     answer = client.post(f"/api/surfaces/{surface['id']}/windows", json={"window": [disc]})

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from typing import Annotated, Any
 
 from fastapi import Depends, Path, Request
+from pydantic import Field
 from starlette.datastructures import UploadFile
 from starlette.responses import Response
 
@@ -19,7 +20,7 @@ from bemescape.service.security import Keys
 from bemescape.service.settings import Settings
 from bemescape.service.store import Store
 
-__all__ = ["REFUSALS", "Id", "Me", "Parts", "Service", "buffers", "form_file", "json_body"]
+__all__ = ["REFUSALS", "Id", "Me", "Parts", "Service", "Triple", "buffers", "form_file", "json_body"]
 
 #: Answers that any route may give, for the description of the API.
 REFUSALS: dict[int | str, dict[str, Any]] = {
@@ -51,6 +52,8 @@ def _me(request: Request) -> str:
     return owner
 
 
+_Number = Annotated[float, Field(ge=-1e12, le=1e12, allow_inf_nan=False)]
+Triple = tuple[_Number, _Number, _Number]
 Parts = Annotated[Service, Depends(_service)]
 Me = Annotated[str, Depends(_me)]
 Id = Annotated[str, Path(pattern="^[0-9a-f]{16}$", examples=["0123456789abcdef"])]

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import csv
-import io
 import json
 import secrets
 from collections.abc import AsyncIterator
@@ -15,15 +13,16 @@ from pydantic import BaseModel, ConfigDict, Field
 from starlette.responses import StreamingResponse
 
 from bemescape.service import tasks
-from bemescape.service.api.parts import REFUSALS, Id, Me, Parts, Service, buffers, json_body
+from bemescape.service.api.parts import REFUSALS, Id, Me, Parts, Service, Triple, buffers, json_body
 from bemescape.service.events import stream
 from bemescape.service.jobs import result_files
 from bemescape.service.orders import ORDER_EXAMPLE, checked_order
 from bemescape.service.problems import Refusal
 from bemescape.service.records import RunRecord, run_record
+from bemescape.service.spreadsheets import csv_text
 from bemescape.service.store import FINISHED
 
-__all__ = ["csv_text", "router"]
+__all__ = ["csv_answer", "router"]
 
 router = APIRouter(tags=["runs"], responses=REFUSALS)
 _KINDS = {
@@ -47,8 +46,6 @@ _ORDER_BODY = {
         },
     }
 }
-_Number = Annotated[float, Field(ge=-1e12, le=1e12, allow_inf_nan=False)]
-_Triple = tuple[_Number, _Number, _Number]
 
 
 @router.post("/runs", status_code=202, openapi_extra=_ORDER_BODY)
@@ -178,34 +175,13 @@ def run_tables(run_id: Id, parts: Parts, me: Me) -> Response:
         ["slow region", number, entry["area_um2"], None, entry["mean_time_s"], *entry["centre_um"]]
         for number, entry in enumerate(summary["slow_regions"], start=1)
     ]
-    return csv_answer(rows, "tables.csv")
+    return csv_answer(csv_text(rows), "tables.csv")
 
 
-def csv_answer(rows: list[list[Any]], filename: str) -> Response:
+def csv_answer(text: str, filename: str) -> Response:
     """A table as a download."""
-    return Response(
-        csv_text(rows),
-        media_type="text/csv; charset=utf-8",
-        headers={"Content-Disposition": f'attachment; filename="{filename}"'},
-    )
-
-
-def csv_text(rows: list[list[Any]]) -> str:
-    r"""Comma-separated rows; text that a spreadsheet would run as a formula gets a leading apostrophe.
-
-    >>> csv_text([["=1+1", -2.5]])
-    "'=1+1,-2.5\r\n"
-    """
-    stream = io.StringIO()
-    writer = csv.writer(stream)
-    for row in rows:
-        writer.writerow(
-            [
-                "'" + cell if isinstance(cell, str) and cell[:1] in ("=", "+", "-", "@", "\t", "\r") else cell
-                for cell in row
-            ]
-        )
-    return stream.getvalue()
+    headers = {"Content-Disposition": f'attachment; filename="{filename}"'}
+    return Response(text, media_type="text/csv; charset=utf-8", headers=headers)
 
 
 async def _asked(parts: Service, me: str, run_id: str, task: Any, *arguments: Any) -> dict[str, Any]:
@@ -234,8 +210,8 @@ class Section(BaseModel):
     """A plane through the shape."""
 
     model_config = ConfigDict(extra="forbid")
-    point_um: _Triple = Field(examples=[[0.0, 0.0, 0.0]])
-    normal: _Triple = Field(examples=[[0.0, 1.0, 0.0]])
+    point_um: Triple = Field(examples=[[0.0, 0.0, 0.0]])
+    normal: Triple = Field(examples=[[0.0, 1.0, 0.0]])
     pixels: int = Field(default=96, ge=tasks.SECTION_PIXELS[0], le=tasks.SECTION_PIXELS[1])
 
 
@@ -250,7 +226,7 @@ class Places(BaseModel):
     """Places inside or on the wall."""
 
     model_config = ConfigDict(extra="forbid")
-    points_um: list[_Triple] = Field(min_length=1, max_length=tasks.MOST_POINTS, examples=[[[0.0, 0.0, 0.0]]])
+    points_um: list[Triple] = Field(min_length=1, max_length=tasks.MOST_POINTS, examples=[[[0.0, 0.0, 0.0]]])
 
 
 @router.post("/runs/{run_id}/times")

@@ -9,11 +9,13 @@ from typing import Any
 
 from fastapi import APIRouter, Request, Response
 from fastapi.concurrency import run_in_threadpool
+from pydantic import BaseModel, ConfigDict, Field, field_validator
 
 from bemescape.errors import SettingsError
 from bemescape.service import tasks
-from bemescape.service.api.parts import REFUSALS, Id, Me, Parts, Service, buffers, form_file, json_body
+from bemescape.service.api.parts import REFUSALS, Id, Me, Parts, Service, Triple, buffers, form_file, json_body
 from bemescape.service.demos import demo, demos
+from bemescape.service.models import Surface
 from bemescape.service.orders import case_of_windows, surface_file
 from bemescape.service.problems import Refusal
 from bemescape.service.records import DemoRecord, PositionsRecord, SurfaceRecord, surface_record
@@ -185,9 +187,7 @@ async def place_windows(surface_id: Id, request: Request, parts: Parts, me: Me) 
 
     def gathered() -> tuple[Any, ...]:
         surface = parts.store.surface(me, surface_id)
-        report = json.loads(surface.report)
-        if not report["solvable"]:
-            raise Refusal(422, f"surface {surface.name!r} cannot be solved: {report['reason']}")
+        _refuse_unsolvable(surface)
         return (surface_file(parts.store, surface), *case_of_windows(parts.store, me, surface, body["window"]))
 
     limits = parts.settings.limits
@@ -199,6 +199,55 @@ async def place_windows(surface_id: Id, request: Request, parts: Parts, me: Me) 
         timeout=limits.read_s,
     )
     return buffers(answer["buffers"], request)
+
+
+class PictureOrder(BaseModel):
+    """What to draw: openings as in a case file, and from where to look."""
+
+    model_config = ConfigDict(extra="forbid")
+    window: list[dict[str, Any]] = Field(default=[], max_length=200)
+    towards: Triple = Field(default=(0.0, -1.0, 0.25), description="from the middle of the shape to the eye")
+
+    @field_validator("towards")
+    @classmethod
+    def _has_a_direction(cls, value: Triple) -> Triple:
+        if not any(abs(part) > 1e-9 for part in value):
+            raise ValueError("has no direction; give one that is not (0, 0, 0)")
+        return value
+
+
+@router.post(
+    "/surfaces/{surface_id}/picture",
+    tags=["surfaces"],
+    responses={200: {"content": {"image/png": {"schema": {"type": "string", "format": "binary"}}}}},
+    response_class=Response,
+)
+async def surface_picture(surface_id: Id, order: PictureOrder, parts: Parts, me: Me) -> Response:
+    """A picture of the surface with its openings, for a browser that cannot draw it itself."""
+
+    def gathered() -> tuple[Any, ...]:
+        surface = parts.store.surface(me, surface_id)
+        if not order.window:
+            return surface_file(parts.store, surface), None, {}
+        _refuse_unsolvable(surface)
+        return (surface_file(parts.store, surface), *case_of_windows(parts.store, me, surface, order.window))
+
+    limits = parts.settings.limits
+    answer = await parts.crew.ask(
+        tasks.draw_surface,
+        *await run_in_threadpool(gathered),
+        limits.panels,
+        order.towards,
+        key=f"picture-{secrets.token_hex(8)}",
+        timeout=limits.read_s,
+    )
+    return Response(answer["picture"], media_type="image/png")
+
+
+def _refuse_unsolvable(surface: Surface) -> None:
+    report = json.loads(surface.report)
+    if not report["solvable"]:
+        raise Refusal(422, f"surface {surface.name!r} cannot be solved: {report['reason']}")
 
 
 @router.post("/positions", status_code=201, tags=["positions"], openapi_extra=_form())

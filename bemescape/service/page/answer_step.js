@@ -5,7 +5,7 @@ import { lengthText, percentText, timeText } from "./scales.js";
 import { Step } from "./step.js";
 
 const PICTURES = { "report.html": "report", "summary.json": "summary (JSON)", "surface.vtp": "surface with values (VTP)", "result.npz": "everything (NPZ)" };
-const STATES = { queued: "waits", running: "is computed", done: "done", failed: "failed", cancelled: "cancelled", deleted: "deleted" };
+const STATES = { queued: "waiting", running: "computing", done: "done", failed: "failed", cancelled: "cancelled", deleted: "deleted" };
 
 export class AnswerStep {
   constructor(app) {
@@ -29,7 +29,7 @@ export class AnswerStep {
       : run.state === "running" ? [event?.stage ?? "starting", event?.detail].filter(Boolean).join(": ") : run.reason ?? "";
     const bar = h("progress", { "aria-label": "progress of this stage", max: 1 });
     if (event?.done !== null && event?.done !== undefined) bar.value = event.done;
-    this.step.show(h("p", {}, h("strong", {}, run.name), ` ${this.state(run)}.`), over ? null : bar,
+    this.step.show(h("p", {}, h("strong", {}, run.name), `: ${this.state(run)}`), over ? null : bar,
       h("p", { class: run.state === "failed" ? "bad" : "soft", id: "progress-text", role: "status" }, text),
       over ? null : h("button", { type: "button", id: "cancel", onclick: async (e) => {
         e.target.disabled = true;
@@ -57,7 +57,7 @@ export class AnswerStep {
       starts.length ? this.starts(summary, starts) : null,
       h("h3", {}, "Slow regions"), this.regions,
       h("h3", {}, "Checks"),
-      h("p", { class: "small" }, `Outflow through all windows against volume/D: ${percentText(summary.checks.balance)} off. Rule of thumb: ${timeText(summary.rule_of_thumb.mean_time_s)}.`),
+      h("p", { class: "small" }, `Outflow through all windows against volume/D: ${percentText(summary.checks.balance)} off. Rule of thumb, which knows no necks: ${timeText(summary.rule_of_thumb.mean_time_s)}.`),
       this.opinion,
       summary.notes.length ? h("details", {}, h("summary", {}, `Notes (${summary.notes.length})`), h("ul", { class: "small" }, summary.notes.map((note) => h("li", {}, note)))) : null,
       h("h3", {}, "Downloads"), this.files,
@@ -79,7 +79,8 @@ export class AnswerStep {
       ...Object.entries(PICTURES).filter(([name]) => run.files.includes(name)).map(([name, text]) => link(name, text)),
       h("a", { href: `api/runs/${run.id}/tables.csv`, download: "tables.csv" }, "tables (CSV)"),
       h("button", { type: "button", class: "plain", id: "picture", onclick: () => this.picture(run) }, "this view (PNG)"),
-      ...run.files.filter((name) => name.endsWith(".png")).map((name) => link(name, name.replace(".png", "").replace("_", " "))),
+      ...(run.files.some((name) => name.endsWith(".png")) ? [h("span", { class: "soft" }, "pictures:"),
+        ...run.files.filter((name) => name.endsWith(".png")).map((name) => link(name, name.replace(".png", "").replace("_", " ")))] : []),
       ...(["waiting", "running"].includes(run.pictures) ? [h("span", { class: "soft busy" }, "report and pictures are being drawn")] : []),
       ...(run.pictures === "failed" ? [h("span", { class: "bad" }, "the pictures could not be drawn; the numbers are complete")] : []));
     const agrees = run.answer?.agrees;

@@ -60,8 +60,14 @@ export const summary = (id) => json(ask("GET", `runs/${id}/summary`));
 export const runMesh = (id) => binary(ask("GET", `runs/${id}/mesh`));
 export const slowRegions = (id, part) => json(ask("GET", `runs/${id}/slow_regions?wall_fraction=${part}`));
 export const section = (id, point, normal) =>
-  binary(ask("POST", `runs/${id}/section`, { json: { point_um: point, normal, pixels: 96 } }));
+  binary(ask("POST", `runs/${id}/section`, { json: { point_um: point, normal, pixels: 128 } }));
 export const comparison = (ids) => json(ask("GET", `comparison?${ids.map((id) => `run=${id}`).join("&")}`));
+export const studies = () => json(ask("GET", "studies"));
+export const study = (id) => json(ask("GET", `studies/${id}`));
+export const startStudy = (order) => json(ask("POST", "studies", { json: order }));
+export const deleteStudy = (id) => ask("DELETE", `studies/${id}`);
+export const studyStatistics = (id) => json(ask("GET", `studies/${id}/statistics`));
+export const surfacePicture = async (id, body) => (await ask("POST", `surfaces/${id}/picture`, { json: body })).blob();
 export const fileUrl = (id, name) => `api/runs/${id}/files/${name}`;
 
 /** Progress of a run; answers with what ends the listening. */

@@ -14,6 +14,14 @@ export function h(tag, attributes = {}, ...children) {
   return element;
 }
 
+/** The same for a drawing; attributes are text. */
+export function svg(tag, attributes = {}, ...children) {
+  const element = document.createElementNS("http://www.w3.org/2000/svg", tag);
+  for (const [key, value] of Object.entries(attributes)) element.setAttribute(key, String(value));
+  element.append(...children.flat());
+  return element;
+}
+
 export const byId = (id) => document.getElementById(id);
 
 let hiding = 0;

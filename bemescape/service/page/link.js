@@ -3,13 +3,14 @@
 const ID = /^[0-9a-f]{16}$/;
 const AXES = ["x", "y", "z"];
 
-export const START = { surface: null, run: null, compare: [], colour: "time", log: false, slow: 10, showSlow: true,
+export const START = { surface: null, run: null, compare: [], study: null, colour: "time", log: false, slow: 10, showSlow: true,
   clip: null, at: 0, inside: false, lit: true, camera: null };
 
 export function linkOf(view) {
   const parts = new URLSearchParams();
   if (view.surface) parts.set("surface", view.surface);
   if (view.run) parts.set("run", view.run);
+  if (view.study) parts.set("study", view.study);
   if (view.compare.length) parts.set("compare", view.compare.join("."));
   if (view.colour !== START.colour) parts.set("colour", view.colour);
   if (view.log) parts.set("scale", "log");
@@ -29,6 +30,7 @@ export function viewOf(link) {
   const id = (text) => (ID.test(text ?? "") ? text : null);
   view.surface = id(parts.get("surface"));
   view.run = id(parts.get("run"));
+  view.study = id(parts.get("study"));
   view.compare = (parts.get("compare") ?? "").split(".").filter((text) => ID.test(text)).slice(0, 4);
   if (parts.get("colour") === "exits") view.colour = "exits";
   view.log = parts.get("scale") === "log";

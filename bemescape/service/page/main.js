@@ -2,30 +2,38 @@
 import * as api from "./api.js";
 import { AnswerStep } from "./answer_step.js";
 import { byId, h, later, say } from "./dom.js";
+import { FlatStage, hasWebGL2 } from "./flat_stage.js";
 import { linkOf, START, viewOf } from "./link.js";
 import { OpeningsStep } from "./openings_step.js";
 import { densityScale, position, slowLevel, timeScale, timeText, percentText } from "./scales.js";
 import { ShapeStep } from "./shape_step.js";
 import { Stage } from "./stage.js";
-import { drawBar, drawLengthBar, drawTools } from "./tools.js";
+import { StudyView } from "./study_view.js";
+import { drawBar, drawLengthBar, drawTools, measureTools } from "./tools.js";
 
 class App {
   constructor() {
     this.view = viewOf(location.hash);
     this.surfaces = [];
     this.runs = [];
+    this.studies = [];
     this.chosen = new Set();
     this.busy = 0;
-    this.stage = new Stage(byId("view"), {
+    this.stage = hasWebGL2() ? new Stage(byId("view"), {
       onPick: (place, triangle, pane) => this.picked(place, triangle, pane),
       onHover: (place, triangle, pane) => this.hovered(place, triangle, pane),
       onTurn: () => this.turned(),
       onDraw: () => drawLengthBar(this.stage),
-    });
+    }) : new FlatStage(byId("view"));
+    this.study = new StudyView(this);
     this.shape = new ShapeStep(this);
     this.openings = new OpeningsStep(this);
     this.answer = new AnswerStep(this);
     this.askRegions = later(() => this.regions(), 300);
+    new ResizeObserver(() => requestAnimationFrame(() => {
+      measureTools(this.stage);
+      if (this.view.compare.length > 1) this.rename?.();
+    })).observe(byId("stage"));
     window.addEventListener("signed-out", () => this.signIn());
     window.addEventListener("hashchange", () => { if (location.hash !== this.linked) this.open(viewOf(location.hash)); });
   }
@@ -56,7 +64,7 @@ class App {
   }
 
   async refresh() {
-    [this.surfaces, this.runs] = await Promise.all([api.surfaces(), api.runs()]);
+    [this.surfaces, this.runs, this.studies] = await Promise.all([api.surfaces(), api.runs(), api.studies()]);
     this.shelf();
   }
 
@@ -69,7 +77,8 @@ class App {
   async open(view) {
     this.view = view;
     try {
-      if (view.compare.length > 1) await this.compare(view.compare, view);
+      if (view.study) await this.openStudy(view.study);
+      else if (view.compare.length > 1) await this.compare(view.compare, view);
       else if (view.run) await this.openRun(view.run, view);
       else if (view.surface) await this.openSurface(view.surface, null, view);
       else await this.close();
@@ -94,6 +103,7 @@ class App {
   }
 
   leave() {
+    this.study.hide();
     this.shown = null;
     this.stopWatching?.();
     this.stopWatching = null;
@@ -109,12 +119,15 @@ class App {
     const [surface, mesh] = await Promise.all([api.surface(id), api.surfaceMesh(id)]);
     this.view = { ...START, ...(view ?? {}), surface: id, run: null, compare: [] };
     byId("welcome").hidden = true;
+    say("");
     this.surface = surface;
     this.stage.showSurface(mesh);
+    this.stage.about({ surface: id, windows: [] });
     this.look();
     drawBar(null);
     const bad = (surface.health?.findings ?? []).filter((finding) => finding.severity !== "note").flatMap((finding) => finding.places_um ?? []);
-    this.stage.mark(this.pane, bad, 0xb3001b, 0.012 * this.stage.reach);
+    this.stage.mark(this.pane, bad, 0xb3001b, 0.014 * this.stage.reach);
+    if (!surface.solvable && bad.length && !this.view.camera) this.stage.fly(this.pane, bad[0]);
     this.shape.show(surface);
     this.openings.show(surface, given);
     this.answer.lock();
@@ -139,14 +152,18 @@ class App {
     this.link();
     this.shelf();
     if (run.state === "done") await this.showResult(run);
-    else this.answer.progress(run);
+    else {
+      this.openings.step.open(false);
+      this.answer.progress(run);
+      byId("steps").scrollTop = 0;
+    }
     if (["failed", "cancelled"].includes(run.state)) { drawTools(this); return; }
     if (run.state === "done" && !["waiting", "running"].includes(run.pictures)) return;
     this.stopWatching?.();
     this.stopWatching = api.watch(id, {
       onRun: async (record) => {
         if (this.view.run !== id) return;
-        if (record.state === "done") { if (this.shown === id) this.answer.update(record); else await this.showResult(record); } else this.answer.progress(record);
+        if (record.state === "done") { if (this.shown === id) { this.answer.update(record); if (this.stage.flat) this.stage.about({ runs: [record] }); } else await this.showResult(record); } else this.answer.progress(record);
         await this.refresh();
       },
       onProgress: (event) => { if (this.view.run === id && this.shown !== id) this.answer.progress({ ...run, state: "running" }, event); },
@@ -161,6 +178,7 @@ class App {
     const camera = this.view.camera ?? (this.pane ? this.stage.view : null);
     this.stage.reset();
     const pane = this.stage.addResult(mesh);
+    this.stage.about({ runs: [run] });
     this.view.camera = camera;
     this.look();
     const starts = Object.values(run.order.start?.points ?? {}).map((place) => place.map((v, k) => v * this.surface.unit_um[k]));
@@ -168,6 +186,7 @@ class App {
     this.openings.step.open(false);
     this.shape.step.open(false);
     this.answer.show(run, summary);
+    byId("steps").scrollTop = 0;
     this.recolour();
     this.clip();
     drawTools(this);
@@ -221,6 +240,26 @@ class App {
     } catch (error) { say(error.message, { bad: true }); }
   }
 
+  // -- a study ---------------------------------------------------------------------------------------------------------
+
+  async openStudy(id) {
+    const record = await api.study(id);
+    this.leave();
+    this.view = { ...START, study: id };
+    this.stage.reset();
+    byId("welcome").hidden = true;
+    drawBar(null);
+    drawTools(this);
+    this.shape.step.state(`${record.rows.length} shapes`, { done: true });
+    this.shape.step.show(h("button", { type: "button", onclick: () => this.close() }, "Take another shape"));
+    this.shape.step.open(false);
+    this.openings.step.state("one rule for all", { locked: true });
+    this.answer.lock();
+    this.link();
+    this.shelf();
+    await this.study.show(record);
+  }
+
   // -- comparison ------------------------------------------------------------------------------------------------------
 
   async compare(ids, view = null) {
@@ -232,6 +271,7 @@ class App {
     byId("welcome").hidden = true;
     this.stage.reset(wanted.length);
     for (const mesh of meshes) this.stage.addResult(mesh);
+    if (this.stage.flat) this.stage.about({ runs: await Promise.all(wanted.map(api.run)) });
     this.look();
     this.recolour();
     this.shape.step.state(`${wanted.length} runs`, { done: true });
@@ -253,7 +293,7 @@ class App {
       Object.assign(box.style, { left: `${l}px`, top: `${t}px`, width: `${w}px`, height: `${hh}px` });
       return box;
     }));
-    window.onresize = () => { if (this.view.compare.length > 1) requestAnimationFrame(() => this.namePanes(rows)); };
+    this.rename = () => this.namePanes(rows);
   }
 
   // -- the shelf of results ----------------------------------------------------------------------------------------------
@@ -265,7 +305,8 @@ class App {
     place.replaceChildren(h("h2", { id: "shelf-title" }, "Results"), h("div", { class: "body" },
       this.runs.length ? h("ul", { class: "plain", id: "runs" }, this.runs.slice(0, 100).map((run) => this.shelfRow(run))) : h("p", { class: "soft small" }, "None yet. They stay here, also after a restart."),
       chosen.length ? h("button", { type: "button", id: "compare", disabled: chosen.length < 2 || chosen.length > 4, onclick: () => this.compare(chosen).catch((error) => say(error.message, { bad: true })) },
-        chosen.length < 2 ? "Choose a second run to compare" : chosen.length > 4 ? "At most four side by side" : `Compare ${chosen.length} side by side`) : null));
+        chosen.length < 2 ? "Choose a second run to compare" : chosen.length > 4 ? "At most four side by side" : `Compare ${chosen.length} side by side`) : null,
+      this.studies.length ? [h("h3", {}, "Studies"), h("ul", { class: "plain", id: "studies" }, this.studies.slice(0, 50).map((entry) => this.study.shelfRow(entry)))] : null));
   }
 
   shelfRow(run) {
@@ -286,12 +327,12 @@ class App {
   // -- pointer ---------------------------------------------------------------------------------------------------------
 
   picked(place, triangle, pane) {
-    if (this.view.run || this.view.compare.length) { this.tell(place, triangle, pane); return; }
-    this.openings.pick(place);
+    // Also on an answer: its openings can be changed and computed again.
+    if (!this.openings.pick(place)) this.tell(place, triangle, pane);
   }
 
   hovered(place, triangle, pane) {
-    if (!this.view.run && !this.view.compare.length) { this.openings.hover(place); }
+    this.openings.hover(place);
     this.tell(place, triangle, pane);
   }
 
@@ -315,13 +356,20 @@ const app = new App();
 // For tests: what is shown, to be read and not to be changed.
 window.bemescape = {
   get view() { return structuredClone(app.view); },
-  get surface() { return app.pane ? app.pane.geometry.getAttribute("position").count / 3 : 0; },
+  get surface() { return app.pane?.geometry ? app.pane.geometry.getAttribute("position").count / 3 : 0; },
   get windows() { return structuredClone(app.pane?.windows ?? []); },
   get shown() { return app.shown ?? null; },
   get section() { return app.sectionShown ?? null; },
   get panes() { return app.stage.panes.length; },
+  get study() { return structuredClone(app.study.record ?? null); },
   get scale() { return app.scale ? structuredClone(app.scale) : null; },
   get drawn() { return app.stage.drawn; },
+  get firstPicture() { return app.stage.firstPicture ?? null; },
+  /** The place of the wall that a click on the way to `place` would meet. */
+  under: (place) => {
+    const found = app.stage.hit(...app.stage.onScreen(place));
+    return found ? found.pane.toFrame(found.place) : null;
+  },
   onScreen: (place) => app.stage.onScreen(place),
 };
 app.begin().catch((error) => say(error.message, { bad: true }));

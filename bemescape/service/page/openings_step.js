@@ -4,7 +4,7 @@ import { choice, h, labelled, later, say } from "./dom.js";
 import { lengthText } from "./scales.js";
 import { Step } from "./step.js";
 
-const KINDS = [["disc", "round"], ["labels", "by label"], ["points", "pores (CSV)"], ["scatter", "pores, random"], ["lid", "flat lid"]];
+const KINDS = [["disc", "round"], ["labels", "by label"], ["points", "pores (CSV)"], ["scatter", "pores, random"], ["lid", "flat lid"], ["near", "near another surface"]];
 const ACCURACY = [["5 %", "quick look (5 %)"], ["1 %", "good (1 %)"], ["0.5 %", "fine (0.5 %)"], ["other", "another error"]];
 
 const number = (value, name) => {
@@ -19,6 +19,7 @@ export class OpeningsStep {
     this.step = new Step("openings", 2, "Openings");
     this.windows = [];
     this.starts = [];
+    this.given = { accuracy: {}, start: {} };
     this.placing = null;
     this.preview = later(() => this.ask(), 250);
   }
@@ -33,13 +34,16 @@ export class OpeningsStep {
   show(surface, given = null) {
     this.surface = surface;
     this.unit = surface.unit_um;
+    // What the page has no fields for, like a panel budget or regions to start from, stays as it was given.
+    this.given = { accuracy: given?.accuracy ?? {}, start: given?.start ?? {} };
     this.windows = (given?.window ?? []).map((window) => this.fromCase(window));
+    this.name = given?.name ?? surface.name;
     this.starts = Object.entries(given?.start?.points ?? {}).map(([name, place]) => ({ name, place: this.toUm(place) }));
     this.diffusion = given ? String(given.motion.diffusion).replace(/\s*(um|µm)\^2\/s/, "") : "20";
     this.target = given?.accuracy?.target ?? "0.5 %";
     this.placing = null;
     if (!surface.solvable) { this.lock(); return; }
-    this.step.state(given ? `${this.windows.length} given` : "place the windows", { done: Boolean(given) });
+    this.step.state(given ? counted(this.windows.length) : "place the windows", { done: Boolean(given) });
     this.step.open();
     this.draw();
     this.ask();
@@ -49,7 +53,7 @@ export class OpeningsStep {
   toFile(place) { return place.map((value, k) => Number((value / this.unit[k]).toPrecision(9))); }
 
   fromCase(window) {
-    const kind = KINDS.map(([key]) => key).find((key) => window[key]) ?? "near";
+    const kind = KINDS.map(([key]) => key).find((key) => window[key]);
     const part = window[kind];
     const fields = { name: window.name, kind, permeability: window.permeability ?? "" };
     if (kind === "disc") Object.assign(fields, { centre: this.toUm(part.centre), radius: part.radius });
@@ -57,7 +61,7 @@ export class OpeningsStep {
     if (kind === "points") Object.assign(fields, { file: part.file, fileName: "uploaded list", radius: part.radius });
     if (kind === "scatter") Object.assign(fields, { count: part.count, radius: part.radius, gap: part.gap ?? "", seed: part.seed ?? 0 });
     if (kind === "lid") Object.assign(fields, { centre: this.toUm(part.point), normal: part.normal });
-    if (kind === "near") fields.given = window;
+    if (kind === "near") Object.assign(fields, { other: part.file, distance: part.distance });
     return fields;
   }
 
@@ -75,14 +79,17 @@ export class OpeningsStep {
       if (String(w.gap).trim()) base.scatter.gap = withUnit(w.gap, "nm");
     }
     if (w.kind === "lid") base.lid = { point: this.toFile(w.centre.map((v) => number(v, "a coordinate"))), normal: w.normal.map((v) => number(v, "the direction")) };
-    if (w.kind === "near") return w.given;
+    if (w.kind === "near") {
+      if (!w.other) throw new Error(`${w.name}: choose the other surface`);
+      base.near = { file: w.other, distance: withUnit(w.distance, "nm") };
+    }
     return base;
   }
 
   order() {
     const points = Object.fromEntries(this.starts.map(({ name, place }) => [name, this.toFile(place.map((v) => number(v, "a start")))]));
-    return { surface: this.surface.id, motion: { diffusion: withUnit(this.diffusion, "um^2/s") }, window: this.windows.map((w) => this.toCase(w)),
-      accuracy: { target: this.target }, ...(this.starts.length ? { start: { points } } : {}) };
+    return { surface: this.surface.id, name: String(this.name).trim() || this.surface.name, motion: { diffusion: withUnit(this.diffusion, "um^2/s") }, window: this.windows.map((w) => this.toCase(w)),
+      accuracy: { ...this.given.accuracy, target: this.target }, start: { ...this.given.start, points } };
   }
 
   // -- placing ---------------------------------------------------------------------------------------------------------
@@ -97,7 +104,7 @@ export class OpeningsStep {
     const middle = box[0].map((low, axis) => Number((0.5 * (low + box[1][axis])).toPrecision(6)));
     const value = labels?.values.find((entry) => entry.value !== 0)?.value ?? labels?.values[0].value;
     this.windows.push({ name: `window ${k}`, kind: "disc", centre: middle, radius: lengthText(0.06 * size, 2).replace("µm", "um"), permeability: "",
-      array: labels?.name, value, normal: [0, 0, -1], count: 10, gap: "", seed: 1, placed: false });
+      array: labels?.name, value, normal: [0, 0, -1], count: 10, gap: "", seed: 1, distance: "20 nm", placed: false });
     this.placing = this.windows.length - 1;
     this.draw();
     say("Click on the wall where the window should be, or type its centre.");
@@ -129,8 +136,11 @@ export class OpeningsStep {
     if (!ready) { stage.hideWindows(pane); this.say(this.windows.length ? "" : "No window yet: nothing can leave."); this.ok(false); return; }
     try {
       const found = await api.placeWindows(this.surface.id, this.windows.map((w) => this.toCase(w)));
-      if (turn !== this.turn || pane !== this.app.pane) return;
-      stage.showWindows(pane, found);
+      if (turn !== this.turn) return;
+      // The answer may have come in between; then its own windows are shown.
+      if (pane === this.app.pane) stage.showWindows(pane, found);
+      this.places = found.header.windows;
+      if (pane === this.app.pane) stage.about({ surface: this.surface.id, windows: this.windows.map((w) => this.toCase(w)) });
       const { windows, notes } = found.header;
       const area = windows.reduce((sum, w) => sum + w.area_um2, 0);
       this.say([`${windows.length} window${windows.length > 1 ? "s" : ""}, ${Number(area.toPrecision(4))} µm² in all.`, ...notes].join(" "));
@@ -152,12 +162,13 @@ export class OpeningsStep {
   ok(fine) {
     this.fine = fine;
     if (this.start) this.start.disabled = !fine;
-    this.step.state(fine ? `${this.windows.length} given` : "place the windows", { done: fine });
+    this.step.state(fine ? counted(this.windows.length) : "place the windows", { done: fine });
   }
 
   // -- fields ----------------------------------------------------------------------------------------------------------
 
   draw() {
+    if (this.starts.length) this.markStarts();
     this.saying = h("p", { class: "say", role: "status", id: "windows-say" });
     this.start = h("button", { class: "main", id: "run", disabled: !this.fine, onclick: () => this.run() }, "Compute the escape time");
     this.step.show(
@@ -165,10 +176,12 @@ export class OpeningsStep {
       h("button", { type: "button", id: "add-window", onclick: () => this.add() }, this.windows.length ? "Add another window" : "Add a window"),
       this.saying, h("h3", {}, "Molecule and accuracy"),
       h("div", { class: "row" },
-        labelled("Diffusion coefficient (µm²/s)", this.input(this, "diffusion", { id: "diffusion", inputmode: "decimal" })),
+        labelled("Diffusion D (µm²/s)", this.input(this, "diffusion", { id: "diffusion", inputmode: "decimal" })),
         labelled("Error allowed", this.accuracy())),
       h("details", { open: this.starts.length > 0 }, h("summary", {}, `Named starts (${this.starts.length})`), this.startRows()),
-      h("p", {}, this.start));
+      labelled("Name of this run", this.input(this, "name", { id: "run-name", maxlength: "60" })),
+      h("p", {}, this.start),
+      this.app.study.form(this.surface, () => this.order()));
   }
 
   accuracy() {
@@ -193,9 +206,9 @@ export class OpeningsStep {
 
   startRows() {
     const box = this.surface.bounds_um;
-    return [this.starts.map((start, k) => h("div", { class: "row" }, labelled("name", this.input(start, "name")),
-      ["x", "y", "z"].map((axis, a) => labelled(`${axis} (µm)`, this.input(start.place, a, { inputmode: "decimal" }))),
-      h("button", { type: "button", class: "plain", "aria-label": `remove start ${start.name}`, onclick: () => { this.starts.splice(k, 1); this.draw(); this.ask(); } }, "remove"))),
+    return [this.starts.map((start, k) => h("div", { class: "start" }, h("div", { class: "row" }, labelled("name", this.input(start, "name")),
+      h("button", { type: "button", class: "plain", "aria-label": `remove start ${start.name}`, onclick: () => { this.starts.splice(k, 1); this.draw(); this.ask(); } }, "remove")),
+      this.triple(start.place, ["x (µm)", "y (µm)", "z (µm)"], () => this.markStarts()))),
     h("button", { type: "button", class: "plain", onclick: () => {
       this.starts.push({ name: `start ${this.starts.length + 1}`, place: box[0].map((low, axis) => Number((0.5 * (low + box[1][axis])).toPrecision(4))) });
       this.draw();
@@ -231,19 +244,54 @@ export class OpeningsStep {
         labelled("gap", this.input(w, "gap", { placeholder: "one radius" }, changed)), labelled("seed", this.input(w, "seed", {}, changed))));
     } else if (w.kind === "lid") {
       content.push(this.triple(w.centre, ["point x (µm)", "y (µm)", "z (µm)"], changed), this.triple(w.normal, ["direction cut off: x", "y", "z"], changed), this.clicker(k));
-    } else content.push(h("p", { class: "small" }, "the wall close to another surface, as in the earlier order"));
+    } else content.push(...this.near(w, changed));
     return h("div", { class: "window", "data-window": String(k) },
       h("div", { class: "row" }, labelled("name", this.input(w, "name", { "data-field": "name" }, changed)),
-        labelled("kind", choice(w.kind === "near" ? [["near", "contact patch"]] : kinds, w.kind, (event) => {
+        labelled("kind", choice(kinds, w.kind, (event) => {
           w.kind = event.target.value;
           w.placed = !["disc", "lid"].includes(w.kind) || w.placed !== false;
-          if (w.kind === "points" && !w.file) w.placed = false;
+          if ((w.kind === "points" && !w.file) || (w.kind === "near" && !w.other)) w.placed = false;
           this.draw();
           this.ask();
-        })),
-        h("button", { type: "button", class: "plain", "aria-label": `remove ${w.name}`, onclick: () => { this.windows.splice(k, 1); this.placing = null; this.draw(); this.ask(); } }, "remove")),
+        }))),
       content,
-      labelled("permeability κ (µm/s); empty: absorbs all", this.input(w, "permeability", { inputmode: "decimal" }, changed)));
+      h("div", { class: "row" },
+        labelled("permeability κ (µm/s)", this.input(w, "permeability", { inputmode: "decimal", placeholder: "absorbs all" }, changed)),
+        h("button", { type: "button", class: "plain", "aria-label": `show ${w.name}`, onclick: () => this.fly(w) }, "show"),
+        h("button", { type: "button", class: "plain", "aria-label": `remove ${w.name}`, onclick: () => { this.windows.splice(k, 1); this.placing = null; this.draw(); this.ask(); } }, "remove")));
+  }
+
+  /** The part of the wall within a distance of another surface, such as a neighbouring cell's membrane. */
+  near(w, changed) {
+    const others = this.app.surfaces.filter((surface) => surface.id !== this.surface.id);
+    const known = others.some((surface) => surface.id === w.other);
+    return [h("div", { class: "row" },
+      labelled("other surface", choice([...(known ? [] : [["", others.length ? "choose…" : "none yet"]]), ...others.map((s) => [s.id, s.name])], w.other ?? "", (event) => { w.other = event.target.value; this.draw(); changed(); })),
+      labelled("within", this.input(w, "distance", { "data-field": "distance" }, changed))),
+    labelled("or bring its mesh, in the unit of this file", h("input", { type: "file", accept: ".ply,.stl,.obj,.off,.glb,.vtp,.vtk", "data-field": "near", onchange: async (event) => {
+      try {
+        const unit = Array.isArray(this.surface.unit) ? this.surface.unit.join(", ") : this.surface.unit;
+        const other = await api.upload(event.target.files[0], unit, "none");
+        await this.app.refresh();
+        w.other = other.id;
+        this.draw();
+        changed();
+      } catch (error) { say(error.message, { bad: true }); }
+    } }))];
+  }
+
+  /** Turn the view to a window; several pores of one name share its card. */
+  fly(w) {
+    const found = (this.places ?? []).find(({ name }) => name === w.name || name.startsWith(`${w.name}[`));
+    if (found) this.app.stage.fly(this.app.pane, found.place_um);
+    else say("It is not on the wall yet.");
+  }
+
+  markStarts() {
+    const { stage, pane } = this.app;
+    stage.clearMarks(pane);
+    const places = this.starts.map(({ place }) => place.map((v) => Number(String(v).replace(",", ".")))).filter((place) => place.every(Number.isFinite));
+    stage.mark(pane, places, 0x101418, 0.012 * stage.reach);
   }
 
   clicker(k) {
@@ -268,6 +316,8 @@ export class OpeningsStep {
     }
   }
 }
+
+const counted = (count) => `${count} window${count === 1 ? "" : "s"}`;
 
 /** What was typed, with the unit that stands beside the field unless another was typed. */
 function withUnit(text, unit) {

@@ -59,13 +59,18 @@ export class ShapeStep {
         if (!chosen) throw new Error("choose a mesh file first");
         const limit = this.app.session.limits.upload_bytes;
         if (chosen.size > limit) throw new Error(`the file has ${(chosen.size / 1e6).toFixed(0)} MB (limit ${limit / 1e6} MB)`);
-        const surface = await api.upload(chosen, unit.value === "other" ? other.value : unit.value, heal.value);
-        await this.app.refresh();
-        await this.app.openSurface(surface.id);
+        await this.read({ file: chosen, unit: unit.value === "other" ? other.value : unit.value }, heal.value);
       });
     } },
     labelled("Mesh file (PLY, STL, OBJ, OFF, GLB, VTP, VTK)", file),
     h("div", { class: "row" }, labelled("One unit of the file is", unit), labelled("Damage", heal)), otherPlace, send);
+  }
+
+  async read(sent, heal) {
+    const surface = await api.upload(sent.file, sent.unit, heal);
+    this.sent = { ...sent, id: surface.id };
+    await this.app.refresh();
+    await this.app.openSurface(surface.id);
   }
 
   async busy(button, action) {
@@ -80,15 +85,24 @@ export class ShapeStep {
     await this.app.openSurface(surface.id, demo.case);
   }
 
+  /** What may still help a surface that mending did not close; the file is at hand if it was sent just now. */
+  again(surface) {
+    if (surface.solvable || surface.heal === "rebuild" || this.sent?.id !== surface.id) return null;
+    return h("p", {}, h("button", { type: "button", id: "rebuild", onclick: (event) => this.busy(event.target, () => this.read(this.sent, "rebuild")) }, "Rebuild it from voxels"));
+  }
+
   show(surface) {
     const size = surface.bounds_um[1].map((high, k) => lengthText(high - surface.bounds_um[0][k])).join(" × ");
-    this.step.state(surface.name, { done: surface.solvable });
-    this.step.open(!surface.solvable);
     const findings = surface.health?.findings ?? [];
+    const warned = findings.some(({ severity }) => severity === "warning");
+    this.step.state(surface.name + (!surface.solvable ? "" : warned ? ": see the warning" : surface.healing_lines.length ? ", mended" : ""), { done: surface.solvable });
+    this.step.open(!surface.solvable || warned);
     this.step.show(
       h("p", {}, h("strong", {}, surface.name), ` · ${surface.faces} faces · ${size}`),
       surface.volume_um3 === null ? null : h("p", { class: "soft small" }, `volume ${Number(surface.volume_um3.toPrecision(4))} µm³, area ${Number(surface.area_um2.toPrecision(4))} µm²`),
-      h("p", { class: surface.solvable ? "good" : "bad", id: "verdict" }, surface.solvable ? (surface.healing_lines.length ? "Can be solved after mending." : "Sound: can be solved as it is.") : `Cannot be solved: ${surface.reason}`),
+      h("p", { class: surface.solvable ? "good" : "bad", id: "verdict" }, surface.solvable ? (surface.healing_lines.length ? "Can be solved after mending." : "Sound: can be solved as it is.") : `Cannot be solved: ${surface.reason.replace("heal='rebuild'", "\u201crebuild from voxels\u201d")}`),
+      this.again(surface),
+      findings.length ? h("h3", {}, "As the file came") : null,
       findings.map((finding) => h("div", { class: `finding ${finding.severity}` }, finding.message, " ",
         finding.places_um?.length ? h("button", { type: "button", class: "plain", onclick: () => this.app.stage.fly(this.app.pane, finding.places_um[0]) }, "show where") : null)),
       surface.healing_lines.length ? [h("h3", {}, "What mending changed"), h("ul", { class: "small" }, surface.healing_lines.map((line) => h("li", {}, line)))] : null,

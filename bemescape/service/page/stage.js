@@ -7,6 +7,8 @@ const MAPS = { time: bytes(cividis), exits: bytes(magma) };
 const AXIS = { x: new T.Vector3(1, 0, 0), y: new T.Vector3(0, 1, 0), z: new T.Vector3(0, 0, 1) };
 /** A pick is a press and release closer than this. */
 const PICK_PX = 4;
+/** Beside several panes, the colour bar has this width for itself. */
+const BAR_PX = 140;
 
 const VERTEX = `
 attribute float value; attribute float isWindow;
@@ -53,10 +55,23 @@ function mapTexture(table) {
 }
 const TEXTURES = { time: mapTexture(MAPS.time), exits: mapTexture(MAPS.exits) };
 
-function lines(places, colour) {
+const PLAIN_VERTEX = `varying vec3 vPlace; void main() { vPlace = position; gl_Position = projectionMatrix * modelViewMatrix * vec4(position, 1.0); }`;
+const PLAIN_FRAGMENT = `
+uniform vec3 colour; uniform vec4 clip; uniform bool clipped; varying vec3 vPlace;
+void main() { if (clipped && dot(clip.xyz, vPlace) > clip.w) discard; gl_FragColor = vec4(colour, 1.0); }`;
+const INK = new T.Vector3(0.063, 0.078, 0.094);
+const WINDOW = new T.Vector3(0.208, 0.816, 1.0);
+
+/** One colour without shading, cut where the wall of the pane is cut. */
+function plain(pane, colour) {
+  const { clip, clipped } = pane.material.uniforms;
+  return new T.ShaderMaterial({ vertexShader: PLAIN_VERTEX, fragmentShader: PLAIN_FRAGMENT, side: T.DoubleSide, uniforms: { colour: { value: colour }, clip, clipped } });
+}
+
+function lines(places, pane) {
   const geometry = new T.BufferGeometry();
   geometry.setAttribute("position", new T.BufferAttribute(places, 3));
-  return new T.LineSegments(geometry, new T.LineBasicMaterial({ color: colour }));
+  return new T.LineSegments(geometry, plain(pane, INK));
 }
 
 /** One shape: wall, windows, marks, and the search tree for picks. Places are µm from `offset`. */
@@ -126,9 +141,14 @@ export class Stage {
     this.camera = new T.PerspectiveCamera(30, 1, 0.001, 1000);
     this.panes = [];
     this.drawn = 0;
+    /** Height of the controls that stand on the lower edge of the canvas. */
+    this.below = 56;
     this.controls = new T.OrbitControls(this.camera, canvas);
     this.controls.addEventListener("change", () => this.redraw());
-    this.controls.addEventListener("end", () => onTurn());
+    this.controls.addEventListener("end", () => {
+      if (this.cut) this.setClip(this.cut.axis, this.cut.at);
+      onTurn();
+    });
     new ResizeObserver(() => this.resized()).observe(canvas.parentElement);
     canvas.addEventListener("pointerdown", (event) => { this.pressed = [event.clientX, event.clientY]; });
     canvas.addEventListener("pointerup", (event) => this.released(event));
@@ -137,6 +157,9 @@ export class Stage {
     canvas.addEventListener("keydown", (event) => this.keyed(event));
     this.resized();
   }
+
+  /** The shapes themselves are shown; only pictures have to be asked for, see `FlatStage`. */
+  about() {}
 
   // -- what is shown ---------------------------------------------------------------------------------------------------
 
@@ -164,7 +187,7 @@ export class Stage {
     pane.setWall(loose(arrays.vertices, arrays.faces), perCorner(arrays.time_s), perCorner(pane.isWindow));
     const rim = new Float32Array(arrays.rim.length * 3);
     arrays.rim.forEach((vertex, k) => rim.set(arrays.vertices.subarray(3 * vertex, 3 * vertex + 3), 3 * k));
-    pane.groups.windows.add(lines(rim, 0x101418));
+    pane.groups.windows.add(lines(rim, pane));
     this.panes.push(pane);
     this.redraw();
     return pane;
@@ -188,7 +211,9 @@ export class Stage {
   setLight(lit) { this.each((uniforms) => { uniforms.lit.value = lit; }); }
   setLevel(level) { this.each((uniforms) => { uniforms.level.value = level; }); }
 
+  /** Take away what lies on the camera's side of a plane across an axis; `at` from −1 to 1 over the shape. */
   setClip(axis, at) {
+    this.cut = axis === null ? null : { axis, at };
     for (const pane of this.panes) {
       const { uniforms } = pane.material;
       uniforms.clipped.value = axis !== null;
@@ -196,13 +221,16 @@ export class Stage {
       const box = pane.geometry.boundingBox;
       const middle = 0.5 * (box.max[axis] + box.min[axis]);
       const half = 0.5 * (box.max[axis] - box.min[axis]);
-      uniforms.clip.value.set(AXIS[axis].x, AXIS[axis].y, AXIS[axis].z, middle + at * half);
+      const place = middle + at * half;
+      const side = this.camera.position[axis] >= place ? 1 : -1;
+      uniforms.clip.value.set(side * AXIS[axis].x, side * AXIS[axis].y, side * AXIS[axis].z, side * place);
     }
     this.redraw();
   }
 
   clipPlane(pane, axis) {
-    const place = AXIS[axis].clone().multiplyScalar(pane.material.uniforms.clip.value.w);
+    const { value } = pane.material.uniforms.clip;
+    const place = AXIS[axis].clone().multiplyScalar(value.w * Math.sign(value[axis]));
     return { point: pane.toFrame(place), normal: AXIS[axis].toArray() };
   }
 
@@ -222,19 +250,23 @@ export class Stage {
     const corners = arrays.corners.map((value, k) => value + shift[k % 3]);
     const geometry = new T.BufferGeometry();
     geometry.setAttribute("position", new T.BufferAttribute(corners, 3));
-    pane.groups.windows.add(new T.Mesh(geometry, new T.MeshBasicMaterial({ color: 0x35d0ff, side: T.DoubleSide })));
-    pane.groups.windows.add(lines(borders(corners), 0x101418));
+    pane.groups.windows.add(new T.Mesh(geometry, plain(pane, WINDOW)));
+    pane.groups.windows.add(lines(borders(corners), pane));
     this.redraw();
   }
 
   hideWindows(pane) { pane.clear("windows"); pane.windows = []; this.redraw(); }
 
-  /** Balls at places in µm: damage, starts. */
+  /** Balls at places in µm: damage, starts. What lies behind the wall shines through it faintly. */
   mark(pane, places, colour, radius) {
     for (const place of places) {
-      const ball = new T.Mesh(new T.SphereGeometry(radius, 16, 12), new T.MeshBasicMaterial({ color: colour, depthTest: false, transparent: true }));
-      ball.position.copy(pane.toScene(place));
-      pane.groups.marks.add(ball);
+      for (const behind of [true, false]) {
+        const ball = new T.Mesh(new T.SphereGeometry(radius, 16, 12),
+          new T.MeshBasicMaterial({ color: colour, depthTest: !behind, transparent: true, opacity: behind ? 0.3 : 1 }));
+        ball.position.copy(pane.toScene(place));
+        ball.renderOrder = behind ? 1 : 2;
+        pane.groups.marks.add(ball);
+      }
     }
     this.redraw();
   }
@@ -278,6 +310,8 @@ export class Stage {
 
   fit() {
     const reach = this.reach;
+    const [, , w, hh] = this.areas[0];
+    this.camera.aspect = w / hh;
     this.controls.target.set(0, 0, 0);
     this.camera.position.copy(new T.Vector3(0.55, -0.75, 0.45).normalize().multiplyScalar(reach * this.distance));
     this.camera.up.set(0, 0, 1);
@@ -288,6 +322,7 @@ export class Stage {
   get distance() { return 1.08 / Math.sin(Math.atan(Math.tan((15 * Math.PI) / 180) * Math.min(1, this.camera.aspect))); }
 
   bound() {
+    if (this.cut) this.setClip(this.cut.axis, this.cut.at);
     this.controls.minDistance = 0.02 * this.reach;
     this.controls.maxDistance = 30 * this.reach;
     this.controls.update();
@@ -309,7 +344,7 @@ export class Stage {
     if (outwards.lengthSq() < 0.5) outwards.set(0.5, -0.8, 0.4).normalize();
     if (Math.abs(outwards.z) > 0.95) outwards.add(new T.Vector3(0.25, -0.25, 0)).normalize();
     this.controls.target.copy(target);
-    this.camera.position.copy(target).addScaledVector(outwards, 2.2 * this.reach);
+    this.camera.position.copy(target).addScaledVector(outwards, 3 * this.reach);
     this.bound();
     this.onTurn();
   }
@@ -339,9 +374,10 @@ export class Stage {
   get areas() {
     const { clientWidth: w, clientHeight: h } = this.canvas;
     const count = Math.max(this.panes.length, this.count ?? 1);
-    if (count <= 1) return [[0, 0, w, h - 56]];
-    const rows = count > 2 ? 2 : 1;
-    return Array.from({ length: count }, (_, k) => [(k % 2) * (w / 2), Math.floor(k / 2) * ((h - 56) / rows), w / 2, (h - 56) / rows]);
+    const free = h - this.below;
+    if (count <= 1) return [[0, 0, w, free]];
+    const [rows, wide] = [count > 2 ? 2 : 1, w - BAR_PX];
+    return Array.from({ length: count }, (_, k) => [(k % 2) * (wide / 2), Math.floor(k / 2) * (free / rows), wide / 2, free / rows]);
   }
 
   hit(clientX, clientY) {
@@ -432,6 +468,8 @@ export class Stage {
       this.renderer.render(pane.scene, this.camera);
     });
     this.drawn += 1;
+    // When the first shape was on the screen, in ms since the page was asked for.
+    if (this.panes.length) this.firstPicture ??= performance.now();
     this.onDraw?.();
   }
 
