@@ -19,7 +19,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -30,6 +30,7 @@ from bemescape.bem.far import Targets, panel_targets, point_targets
 from bemescape.bem.fmm import near, passes
 from bemescape.bem.fmm.balance import even_chunks
 from bemescape.bem.fmm.harmonics import coefficient_count, steps
+from bemescape.bem.fmm.kept import KeptHarmonics, Visits, visits
 from bemescape.bem.fmm.operators import Operators, load_operators
 from bemescape.bem.fmm.tree import Lists, Octree, RootCube, build_lists, build_octree, root_cube
 from bemescape.bem.panels import Panels
@@ -46,7 +47,7 @@ _FOUR_PI = 4.0 * math.pi
 
 #: Tolerance -> degree of the expansions, tolerance of a single translation, panels in a box at most. The first bounds
 #: the error of sums over dipoles, relative, root mean square, on the sets of the tests (measured: 9e-6 at most for
-#: 1e-5, 2e-3 for 1e-3, which is for preconditioners); sums over charges are about ten times better. At 1e-6 rounding
+#: 1e-5, 3.4e-3 for 1e-3, which is for preconditioners); sums over charges are about ten times better. At 1e-6 rounding
 #: adds up to 8e-6 for dipoles.
 _PRESETS = {1e-3: (5, 1e-3, 64), 1e-4: (9, 2e-5, 64), 1e-5: (11, 2e-6, 64), 1e-6: (13, 2e-7, 100)}
 #: Sources that are fewer than this part of all get a tree of their own; so many such trees are kept.
@@ -56,6 +57,14 @@ _OUTSIZE = 0.75
 #: Most memory for either set of expansions with several densities at once, in bytes, and most densities at once.
 _MOST_BYTES, _MOST_COLUMNS = 2.0e8, 32
 _CHUNKS = 16
+#: Sorts of visits, and of sources.
+_CHARGES, _DIPOLES, _INTO_LARGER, _AT_TARGETS, _FROM_SMALLER = (
+    "charges",
+    "dipoles",
+    " into larger",
+    "at",
+    "from smaller",
+)
 
 
 @dataclass(frozen=True)
@@ -107,6 +116,7 @@ class _Sources:
     used: Ints
     side: _Side
     lists: Lists
+    kept: dict[str, KeptHarmonics] = field(default_factory=dict)
 
 
 class PointSums:
@@ -119,6 +129,7 @@ class PointSums:
         self._factors = steps(operators.degree).astype(np.float32)
         self._targets = _side(cube, at, radii, cap)
         self._sources: dict[bytes, _Sources] = {}
+        self._kept: dict[str, KeptHarmonics] = {}
 
     def single(self, used: Ints, density: Floats) -> Floats:
         """Σ density_j ∫_j G over the panels `used` (k,), density (k,), as `far.single_layer`."""
@@ -207,15 +218,15 @@ class PointSums:
     def _single(self, sources: _Sources, strength: Floats) -> Floats:
         unit, scale = _scaled(strength)
         out = self._near(near.near_single, sources, unit)
-        multipole, local = self._expand(sources, [(passes.charges_up, passes.charges_across, unit[None])])
-        out += self._values(sources, multipole, local)[0]
+        multipole, local = self._expand(sources, [(_CHARGES, unit[:, None])])
+        out += self._values(sources, multipole, local)[:, 0]
         return self._restored(out, scale / self._cube.side)
 
     def _double(self, sources: _Sources, strength: Floats) -> Floats:
         unit, scale = _scaled(strength)
         out = self._near(near.near_double, sources, unit)
-        multipole, local = self._expand(sources, [(passes.dipoles_up, passes.dipoles_across, unit[None])])
-        out += self._values(sources, multipole, local)[0]
+        multipole, local = self._expand(sources, [(_DIPOLES, unit[:, None])])
+        out += self._values(sources, multipole, local)[:, 0]
         return self._restored(out, scale / self._cube.side**2)
 
     def _lifted(self, sources: _Sources, strength: Floats) -> Floats:
@@ -229,16 +240,10 @@ class PointSums:
         normals = side.shape[:, :3].astype(np.float64)
         middle = 0.5 * (side.points.min(axis=0) + side.points.max(axis=0))
         heights = (normals * (side.points - middle)).sum(axis=1)
-        charges = np.ascontiguousarray(np.vstack([heights, normals.T]) * unit, np.float32)
+        charges = np.ascontiguousarray(np.column_stack([heights, normals]) * unit[:, None], np.float32)
         out = self._near(near.near_lifted, sources, unit)
-        multipole, local = self._expand(
-            sources,
-            [
-                (passes.charges_up, passes.charges_across, charges),
-                (passes.dipoles_up, passes.dipoles_across, unit[None]),
-            ],
-        )
-        value = self._values(sources, multipole, local, slopes=True)
+        multipole, local = self._expand(sources, [(_CHARGES, charges), (_DIPOLES, unit[:, None])])
+        value = self._slopes(sources, multipole, local)
         t = self._targets
         out += value[0] - ((t.points - middle).T * value[1:4]).sum(axis=0)
         out += t.shape[:, 3] * ((t.shape[:, :3].T * value[4:7]).sum(axis=0) + value[7])
@@ -255,10 +260,8 @@ class PointSums:
                 t.centres[t.tree.leaves], t.scales[t.tree.leaves], t.points, t.shape, s.points, s.shape,
                 unit.any(axis=1), unit, out,
             )  # fmt: skip
-        multipole, local = self._expand(
-            sources, [(passes.dipoles_up, passes.dipoles_across, np.ascontiguousarray(unit.T))]
-        )
-        out += self._values(sources, multipole, local).T
+        multipole, local = self._expand(sources, [(_DIPOLES, unit)])
+        out += self._values(sources, multipole, local)
         return self._restored(out, scale / self._cube.side**2)
 
     # -- the passes -------------------------------------------------------------------------------------------------
@@ -273,73 +276,85 @@ class PointSums:
         )  # fmt: skip
         return out
 
-    def _expand(
-        self, sources: _Sources, kinds: list[tuple[Callable[..., None], Callable[..., None], Singles]]
-    ) -> tuple[Singles, Singles]:
+    def _expand(self, sources: _Sources, kinds: list[tuple[str, Singles]]) -> tuple[Singles, Singles]:
         """Multipoles of the source boxes and locals of the target boxes, (boxes, columns, count).
 
-        Each of `kinds` is a pass into leaves, one into far boxes, and the strengths (columns, k) for both.
+        Each of `kinds` is _CHARGES or _DIPOLES and their strengths (k, columns).
         """
         o, t, s, lists = self._operators, self._targets, sources.side, sources.lists
-        count, columns = coefficient_count(o.degree), sum(len(kind[2]) for kind in kinds)
-        multipole = np.zeros((len(s.tree), columns, count), np.float32)
-        local = np.zeros((len(t.tree), columns, count), np.float32)
-        leaves = s.tree.leaves
-        entered = np.flatnonzero(np.diff(lists.up_first))
-        entered_first = np.append(lists.up_first[entered], len(lists.up))
-        live = np.zeros((len(s.tree), columns), bool)
-        begin = 0
+        multipoles, locals_, live = [], [], []
         with one_blas_thread():
-            for into_leaves, into_far, strength in kinds:
-                end = begin + len(strength)
-                part = np.zeros((len(s.tree), end - begin, count), np.float32)
-                over_rows(
-                    into_leaves, _CHUNKS, 1,
-                    o.degree, self._factors, even_chunks(s.leaf_last - s.leaf_first, _CHUNKS), leaves,
-                    s.tree.first, s.tree.last, s.centres, s.scales, s.points, s.shape, strength, part,
-                )  # fmt: skip
-                multipole[:, begin:end] = part
-                if len(entered):
-                    part = np.zeros((len(t.tree), end - begin, count), np.float32)
-                    over_rows(
-                        into_far, _CHUNKS, 1,
-                        o.degree, self._factors, even_chunks(np.diff(entered_first), _CHUNKS), entered, entered_first,
-                        lists.up, s.tree.first, s.tree.last, t.centres, t.scales, s.points, s.shape, strength, part,
-                    )  # fmt: skip
-                    local[:, begin:end] = part
-                live[leaves, begin:end] = np.logical_or.reduceat(strength != 0.0, s.leaf_first, axis=1).T
-                begin = end
-            passes.move_up(s.tree, o.to_parent, live, multipole)
+            for kind, strength in kinds:
+                shape = strength.shape[1], coefficient_count(o.degree)
+                multipoles.append(np.zeros((len(s.tree), *shape), np.float32))
+                self._harmonics(sources, kind).add_moments(strength, multipoles[-1])
+                locals_.append(np.zeros((len(t.tree), *shape), np.float32))
+                if len(lists.up):
+                    self._harmonics(sources, kind + _INTO_LARGER).add_moments(strength, locals_[-1])
+                live.append(np.zeros((len(s.tree), shape[0]), bool))
+                live[-1][s.tree.leaves] = np.logical_or.reduceat(strength != 0.0, s.leaf_first, axis=0)
+            multipole, local = (
+                (multipoles[0], locals_[0])
+                if len(kinds) == 1
+                else (np.concatenate(multipoles, axis=1), np.concatenate(locals_, axis=1))
+            )
+            alive = np.concatenate(live, axis=1)
+            passes.move_up(s.tree, o.to_parent, alive, multipole)
             over_rows(
                 passes.move_across, len(lists.far_first), 1,
-                lists.far_first, lists.far_target, lists.far_source, o.far_degree, o.far_first, o.far, live,
+                lists.far_first, lists.far_target, lists.far_source, o.far_degree, o.far_first, o.far, alive,
                 multipole, local,
             )  # fmt: skip
             passes.move_down(t.tree, o.to_child, local)
         return multipole, local
 
-    def _values(self, sources: _Sources, multipole: Singles, local: Singles, *, slopes: bool = False) -> Singles:
-        """Potentials (columns, t) at the targets in the order of their tree; with `slopes` the eight of `_lifted`."""
+    def _values(self, sources: _Sources, multipole: Singles, local: Singles) -> Singles:
+        """Potentials (t, columns) at the targets in the order of their tree."""
+        out = np.zeros((len(self._targets.points), local.shape[1]), np.float32)
+        with one_blas_thread():
+            self._harmonics(sources, _AT_TARGETS).add_values(local, out)
+            if len(sources.lists.down):
+                self._harmonics(sources, _FROM_SMALLER).add_values(multipole, out)
+        return out
+
+    def _slopes(self, sources: _Sources, multipole: Singles, local: Singles) -> Singles:
+        """The eight potentials and slopes (8, t) of `_lifted` at the targets in the order of their tree."""
         t, s, lists = self._targets, sources.side, sources.lists
-        out = np.zeros((8 if slopes else local.shape[1], len(t.points)), np.float32)
+        out = np.zeros((8, len(t.points)), np.float32)
         looking = np.flatnonzero(np.diff(lists.down_first))
         looking_first = np.append(lists.down_first[looking], len(lists.down))
-        at_leaves = passes.slopes_at_leaves if slopes else passes.values_at_leaves
-        from_smaller = passes.slopes_from_smaller if slopes else passes.values_from_smaller
         with one_blas_thread():
             over_rows(
-                at_leaves, _CHUNKS, 1,
+                passes.slopes_at_leaves, _CHUNKS, 1,
                 self._operators.degree, self._factors, even_chunks(t.leaf_last - t.leaf_first, _CHUNKS), t.tree.leaves,
                 t.tree.first, t.tree.last, t.centres, t.scales, t.points, t.shape, local, out,
             )  # fmt: skip
             if len(looking):
                 over_rows(
-                    from_smaller, _CHUNKS, 1,
+                    passes.slopes_from_smaller, _CHUNKS, 1,
                     self._operators.degree, self._factors, even_chunks(np.diff(looking_first), _CHUNKS),
                     t.tree.leaves[looking], looking_first, lists.down, t.tree.first, t.tree.last, t.points, t.shape,
                     s.centres, s.scales, multipole, out,
                 )  # fmt: skip
         return out
+
+    def _harmonics(self, sources: _Sources, name: str) -> KeptHarmonics:
+        """Of all visits of one sort, made when they are first needed; those at the targets serve all sources."""
+        known = self._kept if name == _AT_TARGETS else sources.kept
+        if name not in known:
+            t, s, lists = self._targets, sources.side, sources.lists
+            if name in (_AT_TARGETS, _FROM_SMALLER):
+                panels, seen = t, _own_leaf(t) if name == _AT_TARGETS else _looking(lists.down_first, lists.down, t)
+                boxes = t if name == _AT_TARGETS else s
+            else:
+                panels, larger = s, name.endswith(_INTO_LARGER)
+                seen, boxes = (_entering(lists, s), t) if larger else (_own_leaf(s), s)
+            known[name] = KeptHarmonics(
+                seen, self._operators.degree, self._factors,
+                dipole=name.startswith(_DIPOLES), far=name not in (_AT_TARGETS, _CHARGES, _DIPOLES),
+                centres=boxes.centres, scales=boxes.scales, points=panels.points, shape=panels.shape,
+            )  # fmt: skip
+        return known[name]
 
     def _restored(self, sorted_values: Floats | Singles, factor: float) -> Floats:
         """Values (t, …) in the order of the caller, times `factor`."""
@@ -347,6 +362,24 @@ class PointSums:
         out[self._targets.tree.order] = sorted_values
         out *= factor
         return out
+
+
+def _own_leaf(side: _Side) -> Visits:
+    """The panels of every leaf from the leaf."""
+    leaves = side.tree.leaves
+    return visits(leaves, side.leaf_first, side.leaf_last, leaves)
+
+
+def _entering(lists: Lists, sources: _Side) -> Visits:
+    """The panels of source boxes from the larger target boxes that they enter."""
+    into = np.repeat(np.arange(len(lists.up_first) - 1), np.diff(lists.up_first))
+    return visits(into, sources.tree.first[lists.up], sources.tree.last[lists.up], into)
+
+
+def _looking(down_first: Ints, down: Ints, targets: _Side) -> Visits:
+    """The panels of target leaves from the smaller source boxes that they see."""
+    leaf = np.repeat(np.arange(len(down_first) - 1), np.diff(down_first))
+    return visits(down, targets.leaf_first[leaf], targets.leaf_last[leaf], leaf)
 
 
 def _scaled(strength: Floats) -> tuple[Singles, float]:
@@ -365,7 +398,7 @@ class FastSums(PointSums):
         All panels that may be sources; every panel is a target.
     tolerance : float, default 1e-5
         Relative error of sums over dipoles, root mean square over the targets: 1e-6 to 1e-3. It is rounded down to
-        the next of 1e-3 (for preconditioners: up to 2e-3), 1e-4, 1e-5 and 1e-6; sums over charges are about ten times
+        the next of 1e-3 (for preconditioners: up to 4e-3), 1e-4, 1e-5 and 1e-6; sums over charges are about ten times
         better. At 1e-6 the rounding of single precision shows: up to 8e-6 for dipoles on graded sets.
 
     Raises

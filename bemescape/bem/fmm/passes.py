@@ -1,4 +1,6 @@
-"""Expansions: from panels up the tree, across it, and down to the targets.
+"""Expansions: up the tree, across it, and down again.
+
+Panels enter expansions, and values are taken from them, in `kept`; here only with slopes.
 
 Every row of an expansion belongs to one box and one column (one density, or one part of a kernel); rows of columns in
 which a box has no source are not `live` and cost nothing on the way up and across. Translations are batched: many rows
@@ -13,30 +15,17 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from bemescape.bem.fmm.harmonics import (
-    BLOCK,
-    SERIES,
-    charge_irregular,
-    charge_regular,
-    dipole_irregular,
-    dipole_regular,
-    slopes_irregular,
-    slopes_regular,
-)
+from bemescape.bem.fmm.harmonics import BLOCK, SERIES, slopes_irregular, slopes_regular
 from bemescape.threads import over_rows
 
 __all__ = [
-    "charges_across",
-    "charges_up",
-    "dipoles_across",
-    "dipoles_up",
+    "load_point",
     "move_across",
     "move_down",
     "move_up",
     "slopes_at_leaves",
     "slopes_from_smaller",
-    "values_at_leaves",
-    "values_from_smaller",
+    "work_arrays",
 ]
 
 #: Rows multiplied at a time.
@@ -48,7 +37,7 @@ _UPWARDS, _DOWNWARDS = True, False
 
 
 @njit(cache=True, fastmath=True, error_model="numpy")
-def _load_point(block, k, j, centre, scale, points, shape):
+def load_point(block, k, j, centre, scale, points, shape):
     """Panel j as point k of a block, in units of a box."""
     block[0, k] = np.float32((points[j, 0] - centre[0]) * scale)
     block[1, k] = np.float32((points[j, 1] - centre[1]) * scale)
@@ -61,7 +50,7 @@ def _load_point(block, k, j, centre, scale, points, shape):
 def _load_box(block, first, size, centre, scale, points, shape):
     """A block of panels seen from one box; the last is repeated to fill it."""
     for k in range(BLOCK):
-        _load_point(block, k, first + min(k, size - 1), centre, scale, points, shape)
+        load_point(block, k, first + min(k, size - 1), centre, scale, points, shape)
 
 
 @njit(cache=True)
@@ -72,101 +61,17 @@ def _load_leaves(block, start, size, leaf, number, leaves, last, centres, scales
         while j >= last[leaves[number]]:
             number += 1
         leaf[k] = number
-        _load_point(block, k, j, centres[leaves[number]], scales[leaves[number]], points, shape)
+        load_point(block, k, j, centres[leaves[number]], scales[leaves[number]], points, shape)
 
 
 @njit(cache=True)
-def _work(degree, layers):
+def work_arrays(degree, layers):
     """Arrays for a block: points, power series, one m of the harmonics, all of them."""
     count = (degree + 1) * (degree + 1)
     return (
         np.zeros((7, BLOCK), np.float32), np.zeros((SERIES, 4, BLOCK), np.float32),
         np.zeros((2 * degree + 3, 4, BLOCK), np.float32), np.zeros((layers, count, BLOCK), np.float32),
     )  # fmt: skip
-
-
-@njit(cache=True, fastmath=True, error_model="numpy")
-def _add_moments(weight, strengths, unit, start, begin, end, charge, rows):
-    """Add to rows (columns, count) the panels begin … end of a block that starts with panel `start`."""
-    for c in range(len(strengths)):
-        for k in range(BLOCK):
-            charge[c, k] = 0.0
-        for k in range(begin, end):
-            charge[c, k] = unit * strengths[c, start + k]
-    if len(strengths) == 1:
-        for i in range(weight.shape[1]):
-            total = np.float32(0.0)
-            for k in range(weight.shape[2]):
-                total += charge[0, k] * weight[0, i, k]
-            rows[0, i] += total
-    else:
-        sums = np.dot(charge, weight[0].T)
-        for c in range(len(strengths)):
-            for i in range(rows.shape[1]):
-                rows[c, i] += sums[c, i]
-
-
-def _from_panels(dipole):
-    """Two compiled passes from panels to expansions: of their own leaf, and of smaller target boxes that they enter.
-
-    Kernels are in units of the box: 1/side for charges, another for the slope of dipoles.
-    """
-
-    @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-    def up(
-        degree, factors, chunks, leaves, first, last, centres, scales, points, shape, strengths, out,
-        first_chunk, last_chunk,
-    ):  # fmt: skip
-        for chunk in range(first_chunk, last_chunk):
-            block, series, column, weight = _work(degree, 1)
-            charge, leaf = np.empty((len(strengths), BLOCK), np.float32), np.empty(BLOCK, np.int64)
-            number = chunks[chunk]
-            start, stop = first[leaves[number]], last[leaves[chunks[chunk + 1] - 1]]
-            while start < stop and number < chunks[chunk + 1]:
-                size = min(BLOCK, stop - start)
-                _load_leaves(block, start, size, leaf, number, leaves, last, centres, scales, points, shape)
-                if dipole:
-                    dipole_regular(block, degree, factors, series, column, weight)
-                else:
-                    charge_regular(block, degree, factors, series, column, weight)
-                begin = 0
-                while begin < size:
-                    number = leaf[begin]
-                    b = leaves[number]
-                    end = min(size, last[b] - start)
-                    unit = np.float32(scales[b] * scales[b] if dipole else scales[b])
-                    _add_moments(weight, strengths, unit, start, begin, end, charge, out[b])
-                    begin = end
-                start += size
-
-    @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-    def across(
-        degree, factors, chunks, into, item_first, items, first, last, centres, scales, points, shape, strengths, out,
-        first_chunk, last_chunk,
-    ):  # fmt: skip
-        """Box into[number] is entered by the panels of the boxes items[item_first[number]: …]."""
-        for chunk in range(first_chunk, last_chunk):
-            block, series, column, weight = _work(degree, 1)
-            charge = np.empty((len(strengths), BLOCK), np.float32)
-            for number in range(chunks[chunk], chunks[chunk + 1]):
-                b = into[number]
-                unit = np.float32(scales[b] * scales[b] if dipole else scales[b])
-                for item in range(item_first[number], item_first[number + 1]):
-                    source = items[item]
-                    for start in range(first[source], last[source], BLOCK):
-                        size = min(BLOCK, last[source] - start)
-                        _load_box(block, start, size, centres[b], scales[b], points, shape)
-                        if dipole:
-                            dipole_irregular(block, degree, factors, series, column, weight)
-                        else:
-                            charge_irregular(block, degree, factors, series, column, weight)
-                        _add_moments(weight, strengths, unit, start, 0, size, charge, out[b])
-
-    return up, across
-
-
-charges_up, charges_across = _from_panels(dipole=False)
-dipoles_up, dipoles_across = _from_panels(dipole=True)
 
 
 @njit(cache=True, fastmath=True, error_model="numpy")
@@ -261,26 +166,8 @@ def move_across(
 
 
 @njit(cache=True, fastmath=True, error_model="numpy")
-def _add_values(weight, rows, start, begin, end, out):
-    """Add to out (columns, n) the values of rows (columns, count) at the points begin … end of a block."""
-    if len(rows) == 1:
-        value = np.zeros(BLOCK, np.float32)
-        for i in range(weight.shape[1]):
-            coefficient = rows[0, i]
-            for k in range(weight.shape[2]):
-                value[k] += coefficient * weight[0, i, k]
-        for k in range(begin, end):
-            out[0, start + k] += value[k]
-    else:
-        values = np.dot(rows, weight[0])
-        for c in range(len(rows)):
-            for k in range(begin, end):
-                out[c, start + k] += values[c, k]
-
-
-@njit(cache=True, fastmath=True, error_model="numpy")
 def _add_slopes(weight, rows, scale, start, begin, end, out):
-    """As `_add_values` of four columns, then the slopes of the last three of these, then the bare value of a fifth."""
+    """Add to out (8, n) at points begin … end: values of four columns, slopes of three of them, a fifth's value."""
     values, plain = np.dot(rows[:4], weight[0]), np.dot(rows[4:5], weight[1])
     steep = np.dot(rows[1:4], weight[2])
     for k in range(begin, end):
@@ -291,65 +178,44 @@ def _add_slopes(weight, rows, scale, start, begin, end, out):
         out[7, start + k] += plain[0, k]
 
 
-def _to_points(slopes):
-    """Two compiled passes from expansions to targets: locals of their leaf, and multipoles of smaller source boxes.
-
-    They add to out (values, n), by `_add_values` or with `slopes` by `_add_slopes`.
-    """
-
-    @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-    def at_leaves(
-        degree, factors, chunks, leaves, first, last, centres, scales, points, shape, local, out,
-        first_chunk, last_chunk,
-    ):  # fmt: skip
-        for chunk in range(first_chunk, last_chunk):
-            block, series, column, weight = _work(degree, 3 if slopes else 1)
-            leaf = np.empty(BLOCK, np.int64)
-            number = chunks[chunk]
-            start, stop = first[leaves[number]], last[leaves[chunks[chunk + 1] - 1]]
-            while start < stop and number < chunks[chunk + 1]:
-                size = min(BLOCK, stop - start)
-                _load_leaves(block, start, size, leaf, number, leaves, last, centres, scales, points, shape)
-                if slopes:
-                    slopes_regular(block, degree, factors, series, column, weight)
-                else:
-                    charge_regular(block, degree, factors, series, column, weight)
-                begin = 0
-                while begin < size:
-                    number = leaf[begin]
-                    b = leaves[number]
-                    end = min(size, last[b] - start)
-                    if slopes:
-                        _add_slopes(weight, local[b], scales[b], start, begin, end, out)
-                    else:
-                        _add_values(weight, local[b], start, begin, end, out)
-                    begin = end
-                start += size
-
-    @njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
-    def from_smaller(
-        degree, factors, chunks, leaves, item_first, items, first, last, points, shape, centres, scales, multipole, out,
-        first_chunk, last_chunk,
-    ):  # fmt: skip
-        """The points of leaf leaves[number] see the boxes items[item_first[number]: …]."""
-        for chunk in range(first_chunk, last_chunk):
-            block, series, column, weight = _work(degree, 3 if slopes else 1)
-            for number in range(chunks[chunk], chunks[chunk + 1]):
-                leaf = leaves[number]
-                for item in range(item_first[number], item_first[number + 1]):
-                    b = items[item]
-                    for start in range(first[leaf], last[leaf], BLOCK):
-                        size = min(BLOCK, last[leaf] - start)
-                        _load_box(block, start, size, centres[b], scales[b], points, shape)
-                        if slopes:
-                            slopes_irregular(block, degree, factors, series, column, weight)
-                            _add_slopes(weight, multipole[b], scales[b], start, 0, size, out)
-                        else:
-                            charge_irregular(block, degree, factors, series, column, weight)
-                            _add_values(weight, multipole[b], start, 0, size, out)
-
-    return at_leaves, from_smaller
+@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
+def slopes_at_leaves(
+    degree, factors, chunks, leaves, first, last, centres, scales, points, shape, local, out, first_chunk, last_chunk
+):
+    """From the locals of their leaf to targets, as `_add_slopes`."""
+    for chunk in range(first_chunk, last_chunk):
+        block, series, column, weight = work_arrays(degree, 3)
+        leaf = np.empty(BLOCK, np.int64)
+        number = chunks[chunk]
+        start, stop = first[leaves[number]], last[leaves[chunks[chunk + 1] - 1]]
+        while start < stop and number < chunks[chunk + 1]:
+            size = min(BLOCK, stop - start)
+            _load_leaves(block, start, size, leaf, number, leaves, last, centres, scales, points, shape)
+            slopes_regular(block, degree, factors, series, column, weight)
+            begin = 0
+            while begin < size:
+                number = leaf[begin]
+                b = leaves[number]
+                end = min(size, last[b] - start)
+                _add_slopes(weight, local[b], scales[b], start, begin, end, out)
+                begin = end
+            start += size
 
 
-values_at_leaves, values_from_smaller = _to_points(slopes=False)
-slopes_at_leaves, slopes_from_smaller = _to_points(slopes=True)
+@njit(cache=True, nogil=True, fastmath=True, error_model="numpy")
+def slopes_from_smaller(
+    degree, factors, chunks, leaves, item_first, items, first, last, points, shape, centres, scales, multipole, out,
+    first_chunk, last_chunk,
+):  # fmt: skip
+    """The points of leaf leaves[number] see the multipoles of the boxes items[item_first[number]: …]."""
+    for chunk in range(first_chunk, last_chunk):
+        block, series, column, weight = work_arrays(degree, 3)
+        for number in range(chunks[chunk], chunks[chunk + 1]):
+            leaf = leaves[number]
+            for item in range(item_first[number], item_first[number + 1]):
+                b = items[item]
+                for start in range(first[leaf], last[leaf], BLOCK):
+                    size = min(BLOCK, last[leaf] - start)
+                    _load_box(block, start, size, centres[b], scales[b], points, shape)
+                    slopes_irregular(block, degree, factors, series, column, weight)
+                    _add_slopes(weight, multipole[b], scales[b], start, 0, size, out)
