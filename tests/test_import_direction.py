@@ -10,17 +10,18 @@ import bemescape
 ROOT = Path(bemescape.__file__).parent
 VIZ = ROOT.parent / "viz" if (ROOT.parent / "viz").is_dir() else ROOT / "viz"
 
-BASE = {"errors", "units", "progress", "threads", "version"}
+BASE = {"errors", "units", "progress", "threads", "version", "compiled"}
 #: Room -> rooms it may import. A room is a folder or module of the package.
 MAY_IMPORT = {
     "errors": set(),
     "progress": set(),
     "threads": {"errors"},
+    "compiled": set(),
     "version": set(),
     "units": {"errors"},
     "surface": BASE,
     "windows": BASE | {"surface"},
-    "bem": {"errors", "progress", "threads"},
+    "bem": {"errors", "progress", "threads", "compiled"},
     "results": BASE | {"surface", "windows", "bem"},
     "escape": BASE | {"surface", "windows", "bem", "results"},
     "prepared_surface": BASE | {"surface", "windows", "results", "escape"},

@@ -35,7 +35,6 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 from scipy.sparse import csr_matrix
 
@@ -45,6 +44,7 @@ from bemescape.bem.kernels import panel_integrals, spread_dipole, spread_inverse
 from bemescape.bem.panels import Panels
 from bemescape.bem.sinks import Sinks
 from bemescape.bem.tree import morton_order
+from bemescape.compiled import njit
 from bemescape.threads import over_rows
 
 __all__ = ["CompactPores", "PoreRows", "assemble_pores"]

@@ -12,7 +12,6 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.kernels import (
@@ -23,6 +22,7 @@ from bemescape.bem.kernels import (
     spread_lifted_distance,
 )
 from bemescape.bem.panels import Panels
+from bemescape.compiled import njit
 from bemescape.threads import over_rows
 
 __all__ = [

@@ -6,11 +6,11 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.kernels import panel_integrals, spread_dipole, spread_inverse, spread_lifted
 from bemescape.bem.panels import Panels
+from bemescape.compiled import njit
 from bemescape.threads import over_rows
 
 __all__ = ["FieldValues", "field_at", "triangle_distance"]

@@ -9,7 +9,8 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from numba import njit
+
+from bemescape.compiled import njit
 
 __all__ = [
     "panel_integrals",

@@ -13,7 +13,6 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 from scipy.sparse import csr_matrix
 
@@ -27,6 +26,7 @@ from bemescape.bem.kernels import (
 from bemescape.bem.operator import EscapeOperator
 from bemescape.bem.panels import Panels
 from bemescape.bem.sinks import Sinks
+from bemescape.compiled import njit
 from bemescape.threads import over_rows
 
 __all__ = ["SourcePotential", "source_potential_at", "volume_integral_of_chain"]

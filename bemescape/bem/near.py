@@ -12,7 +12,6 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.kernels import (
@@ -23,6 +22,7 @@ from bemescape.bem.kernels import (
     spread_lifted,
 )
 from bemescape.bem.panels import Panels
+from bemescape.compiled import njit
 from bemescape.threads import over_rows
 
 __all__ = ["NearField", "build_near_field", "fill_near_rows", "fill_single_rows", "near_panels", "near_pattern"]

@@ -10,11 +10,11 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.near import FINE, NearField, fill_near_rows, near_panels, near_pattern
 from bemescape.bem.panels import Panels
+from bemescape.compiled import njit
 from bemescape.threads import over_rows
 
 __all__ = ["EarlierNearField", "near_field_from"]

@@ -12,11 +12,11 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.kernels import panel_integrals
 from bemescape.bem.panels import Panels
+from bemescape.compiled import njit
 from bemescape.threads import over_rows
 
 __all__ = ["Sinks", "with_discs"]

@@ -9,8 +9,9 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
+
+from bemescape.compiled import njit
 
 __all__ = ["BoxTree", "build_box_tree", "morton_codes", "morton_order"]
 

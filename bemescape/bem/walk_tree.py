@@ -11,11 +11,11 @@ import math
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.field import triangle_distance
 from bemescape.bem.tree import build_box_tree, morton_order
+from bemescape.compiled import njit
 
 __all__ = [
     "Boxes",

@@ -31,7 +31,6 @@ from itertools import islice
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.walk_tree import (
@@ -45,6 +44,7 @@ from bemescape.bem.walk_tree import (
     reach_before_exit,
     silhouette_distance,
 )
+from bemescape.compiled import njit
 from bemescape.errors import AccuracyError
 from bemescape.progress import Progress, ProgressEvent, silent
 from bemescape.threads import thread_count

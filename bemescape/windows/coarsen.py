@@ -15,10 +15,10 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 from scipy.sparse import csr_matrix
 
+from bemescape.compiled import njit
 from bemescape.windows.mesh_edits import mesh_edges
 from bemescape.windows.rims import rim_edges, segment_distance
 

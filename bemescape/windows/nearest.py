@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
+from bemescape.compiled import njit
 from bemescape.threads import over_rows
 
 __all__ = ["NearestTriangle"]

@@ -25,8 +25,9 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
+
+from bemescape.compiled import njit
 
 __all__ = [
     "BLOCK",

@@ -11,7 +11,6 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.fmm.balance import even_chunks
@@ -24,6 +23,7 @@ from bemescape.bem.fmm.harmonics import (
     dipole_regular,
 )
 from bemescape.bem.fmm.passes import load_point, work_arrays
+from bemescape.compiled import njit
 from bemescape.threads import over_rows
 
 __all__ = ["FILLS", "KeptHarmonics", "Visits", "visits"]

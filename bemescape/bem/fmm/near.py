@@ -9,9 +9,9 @@ loads, but sixteen vector registers do not hold them: measured, slower.)
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 
 from bemescape.bem.kernels import spread_dipole, spread_inverse, spread_lifted
+from bemescape.compiled import njit
 
 __all__ = ["DOUBLE", "LIFTED", "SINGLE", "near_double", "near_double_many", "near_lifted", "near_single"]
 

@@ -13,9 +13,9 @@ find those again in its cache on disk.)
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 
 from bemescape.bem.fmm.harmonics import BLOCK, SERIES, slopes_irregular, slopes_regular
+from bemescape.compiled import njit
 from bemescape.threads import over_rows
 
 __all__ = [

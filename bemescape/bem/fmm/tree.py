@@ -18,11 +18,11 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from bemescape.bem.fmm.balance import even_chunks
 from bemescape.bem.tree import morton_codes
+from bemescape.compiled import njit
 
 __all__ = ["FAR_OFFSETS", "Lists", "Octree", "RootCube", "build_lists", "build_octree", "root_cube"]
 
