@@ -27,6 +27,9 @@ LARGEST_BLOCK = 6000
 #: Largest dense block of compact pores: they shield one another over the whole wall, so that pieces cost iterations.
 LARGEST_PORE_BLOCK = 4000
 
+#: What the recurrence says below this is rounding: a tolerance below it is never reached.
+_LEAST_RESIDUAL = 1e-13
+
 
 @dataclass(frozen=True)
 class BoundarySolution:
@@ -281,7 +284,7 @@ class BoundarySolver:
         residuals: list[float] = []
         k = 0
         while beta / scale > self.tolerance:
-            if k == most_iterations:
+            if k == most_iterations or beta / scale < _LEAST_RESIDUAL:
                 raise ConvergenceError(
                     f"the iteration reached a residual of {residuals[-1]:.1e} after {k} iterations "
                     f"(limit {self.tolerance:.0e}); the surface may have panels of very bad shape: try heal='rebuild'",
